@@ -1,0 +1,1 @@
+"""Many sites and one request: quote, allocate, order, record, settle, audit."""

@@ -1,0 +1,1 @@
+"""One building and what its plant can give: arrays first, every model broadcasts over sites."""
