@@ -1,0 +1,283 @@
+"""The only door to Parquet: exact schemas derived from the table of columns, written and read back.
+
+Owns the types in files (timestamp[us, UTC], float64, int64, bool, string, date32, decimal128(18, 4), lists)
+and the stable types in memory. What the values must be is folder.py's and records.py's business.
+
+In memory: time datetime64[us, UTC]; day datetime64[s] at midnight, no zone; number float64 (NaN = none);
+whole Int64; flag bool, or boolean where values are missing; text, decimal and lists object (None = none).
+"""
+
+import csv
+import io
+from collections.abc import Callable
+from datetime import date
+from decimal import Decimal
+from pathlib import Path
+from typing import Any, Final
+
+import numpy as np
+import pandas as pd
+import pyarrow as pa
+import pyarrow.parquet as pq
+
+from fleet.errors import FleetError
+from fleet.schema import SCHEMA_VERSION, Column, Table
+
+MONEY_DIGITS: Final = 18
+MONEY_PLACES: Final = 4
+_TYPES: Final[dict[str, Callable[[], Any]]] = {
+    "text": lambda: pa.string(),
+    "number": lambda: pa.float64(),
+    "whole": lambda: pa.int64(),
+    "flag": lambda: pa.bool_(),
+    "time": lambda: pa.timestamp("us", tz="UTC"),
+    "day": lambda: pa.date32(),
+    "decimal": lambda: pa.decimal128(MONEY_DIGITS, MONEY_PLACES),
+    "list_text": lambda: pa.list_(pa.string()),
+    "list_number": lambda: pa.list_(pa.float64()),
+}
+_MEMORY: Final = {"number": "float64", "text": "object"}
+
+
+def arrow_schema(table: Table) -> Any:
+    """The pyarrow schema of a table's files, schema version and table name in its metadata."""
+    fields = [
+        pa.field(column.name, _TYPES[column.type](), nullable=column.required != "yes")
+        for column in table.columns
+    ]
+    metadata = {"schema_version": str(SCHEMA_VERSION), "table": f"{table.folder}/{table.name}"}
+    return pa.schema(fields, metadata=metadata)
+
+
+def write_parquet(frame: pd.DataFrame, path: Path, table: Table) -> None:
+    """Write `frame` to `path` with exactly the table's schema, columns in the table's order.
+
+    Raises FleetError where a column is missing or unknown, a required value is null, or a value does not fit.
+    """
+    known = set(table.names)
+    unknown = [str(name) for name in frame.columns if name not in known]
+    missing = [name for name in table.names if name not in frame.columns]
+    if unknown or missing:
+        raise FleetError(
+            f"{path.name}: columns do not match table {table.folder}/{table.name}; "
+            f"missing: {', '.join(missing) or 'none'}; unknown: {', '.join(unknown) or 'none'}"
+        )
+    schema = arrow_schema(table)
+    arrays = [_array(frame[column.name], column, path) for column in table.columns]
+    pq.write_table(pa.Table.from_arrays(arrays, schema=schema), path, compression="zstd")
+
+
+def read_parquet(path: Path, table: Table) -> pd.DataFrame:
+    """Read a file written by `write_parquet` into the stable types in memory.
+
+    Raises FleetError where the file is missing, no Parquet, of another table or of a newer schema version.
+    """
+    found = _read(path)
+    metadata = {k.decode(): v.decode() for k, v in (found.schema.metadata or {}).items() if k != b"pandas"}
+    name = metadata.get("table", "")
+    if name != f"{table.folder}/{table.name}":
+        raise FleetError(f"{path}: holds table {name or 'unknown'}; expected {table.folder}/{table.name}")
+    version = int(metadata.get("schema_version", "0"))
+    if version > SCHEMA_VERSION:
+        raise FleetError(
+            f"{path}: written with schema version {version}; this program reads up to {SCHEMA_VERSION}; "
+            "update the program"
+        )
+    missing = [column for column in table.names if column not in found.column_names]
+    if missing:
+        raise FleetError(f"{path}: column {', '.join(missing)} is missing; the file was changed or cut")
+    frame = pd.DataFrame({column.name: _series(found[column.name], column) for column in table.columns})
+    return frame[list(table.names)]
+
+
+def read_raw(path: Path) -> pd.DataFrame:
+    """An input table as it stands: CSV as text ("" = empty), Parquet (a file or a folder) in its own types.
+
+    Headings lose spaces at their ends. CSV rows keep their file line number as index (heading = 1); Parquet
+    rows count from 1. Blank CSV lines are left out. Raises FleetError where the file cannot be read.
+    """
+    if path.is_dir():
+        parts = sorted(path.glob("*.parquet"))
+        if not parts:
+            raise FleetError(f"{path.name}: the folder holds no .parquet file; put some there or remove it")
+        frame = pd.concat([_plain(part) for part in parts], ignore_index=True)
+    elif path.suffix == ".parquet":
+        frame = _plain(path)
+    else:
+        return _read_csv(path)
+    frame.index = pd.RangeIndex(1, len(frame) + 1)
+    frame.columns = pd.Index([str(name).strip() for name in frame.columns])
+    return frame
+
+
+def empty_frame(table: Table) -> pd.DataFrame:
+    """A frame of no rows with the table's columns in the stable types."""
+    return pd.DataFrame({column.name: _empty(column) for column in table.columns})[list(table.names)]
+
+
+def stable(frame: pd.DataFrame, table: Table) -> pd.DataFrame:
+    """`frame` with the table's columns in order and in the stable types; absent columns come as missing."""
+    columns = {}
+    for column in table.columns:
+        if column.name in frame.columns:
+            columns[column.name] = _series(_array(frame[column.name], column, None), column)
+        else:
+            nothing = pa.nulls(len(frame), _TYPES[column.type]())
+            columns[column.name] = _series(nothing, column)
+    made = pd.DataFrame(columns)
+    made.index = frame.index
+    return made[list(table.names)]
+
+
+def _array(series: pd.Series, column: Column, path: Path | None) -> Any:
+    """One column as a pyarrow array; null checks only where a path is given (a record is being written)."""
+    place = f"{path.name if path else 'table'}, column {column.name}"
+    try:
+        array = _convert(series, column)
+    except (pa.ArrowInvalid, pa.ArrowTypeError, ValueError, TypeError, ArithmeticError) as error:
+        raise FleetError(f"{place}: a value is not {column.expected}: {error}") from error
+    if path is not None and column.required == "yes" and array.null_count:
+        row = int(np.flatnonzero(array.is_null().to_numpy(zero_copy_only=False))[0])
+        raise FleetError(
+            f"{place}: row {row} of {len(array)} is null; the column must have a value in each row"
+        )
+    return array
+
+
+def _convert(series: pd.Series, column: Column) -> Any:
+    kind = _TYPES[column.type]()
+    if column.type == "time":
+        return pa.array(as_utc(series), type=kind, from_pandas=True)
+    if column.type == "number":
+        numbers = series.to_numpy(dtype=np.float64, na_value=np.nan)
+        if np.isinf(numbers).any():
+            raise ValueError("infinite; leave the value empty where there is none")
+        return pa.array(numbers, type=kind, from_pandas=True)
+    if column.type == "whole":
+        return pa.array(series.astype("Int64"), type=kind, from_pandas=True)
+    if column.type == "flag":
+        return pa.array(series.astype("boolean"), type=kind, from_pandas=True)
+    if column.type == "text":
+        return pa.array(series.astype(object).to_numpy(), type=kind, from_pandas=True)
+    return pa.array([_plain_value(value, column.type) for value in series.tolist()], type=kind)
+
+
+def _plain_value(value: Any, kind: str) -> Any:
+    if kind in ("list_text", "list_number"):
+        if value is None or isinstance(value, str):
+            return value
+        convert = float if kind == "list_number" else str
+        return [convert(item) for item in value]
+    if value is None or value is pd.NaT or value is pd.NA or (isinstance(value, float) and np.isnan(value)):
+        return None
+    if kind == "day":
+        return _day(value)
+    if kind == "decimal":
+        return Decimal(str(value)).quantize(Decimal(1).scaleb(-MONEY_PLACES))
+    return value
+
+
+def _day(value: Any) -> date:
+    stamp = pd.Timestamp(value)
+    if stamp != stamp.normalize():
+        raise ValueError(f"{value} is not a date alone")
+    return stamp.date()
+
+
+def as_utc(series: pd.Series) -> pd.Series:
+    """Times in datetime64[us, UTC]; a zone is converted, none is taken as UTC (the inside is UTC)."""
+    times = series if isinstance(series.dtype, pd.DatetimeTZDtype) else pd.to_datetime(series, utc=True)
+    return times.astype("datetime64[us, UTC]")
+
+
+def _series(found: Any, column: Column) -> pd.Series:
+    """One pyarrow array or chunked array in the stable type in memory."""
+    array = found.combine_chunks() if isinstance(found, pa.ChunkedArray) else found
+    if column.type == "time":
+        return pd.Series(array.to_pandas()).astype("datetime64[us, UTC]")
+    if column.type == "day":
+        return pd.Series(array.cast(pa.timestamp("s")).to_pandas()).astype("datetime64[s]")
+    if column.type in ("number", "text"):
+        return pd.Series(array.to_numpy(zero_copy_only=False), dtype=_MEMORY[column.type])
+    if column.type in ("whole", "flag"):
+        gaps = array.is_null().to_numpy(zero_copy_only=False)
+        values = array.fill_null(0 if column.type == "whole" else False).to_numpy(zero_copy_only=False)
+        if column.type == "whole":
+            return pd.Series(pd.arrays.IntegerArray(values.copy(), gaps.copy()))
+        return pd.Series(pd.arrays.BooleanArray(values.copy(), gaps.copy()) if gaps.any() else values.copy())
+    return pd.Series(array.to_pylist(), dtype=object)
+
+
+def _empty(column: Column) -> pd.Series:
+    return _series(pa.array([], type=_TYPES[column.type]()), column)
+
+
+def _read(path: Path) -> Any:
+    try:
+        return pq.read_table(path)
+    except FileNotFoundError as error:
+        raise FleetError(
+            f"{path}: there is no such file; the record is incomplete or the path is wrong"
+        ) from error
+    except (pa.ArrowInvalid, OSError) as error:
+        raise FleetError(
+            f"{path}: is not a readable Parquet file ({error}); restore or export it again"
+        ) from error
+
+
+def _plain(path: Path) -> pd.DataFrame:
+    frame = _read(path).to_pandas()
+    return pd.DataFrame(frame)
+
+
+def _read_csv(path: Path) -> pd.DataFrame:
+    try:
+        text = path.read_bytes().decode("utf-8-sig")
+    except OSError as error:
+        raise FleetError(f"{path.name}: cannot be read ({error.strerror}); check that it is there") from error
+    except UnicodeDecodeError as error:
+        raise FleetError(f"{path.name}: is not UTF-8 text ({error.reason}); save it as CSV UTF-8") from error
+    heading, lines, rows = _csv_rows(text, path.name)
+    width = len(heading)
+    wrong = [(line, len(row)) for line, row in zip(lines, rows) if len(row) != width]
+    if wrong:
+        line, cells = wrong[0]
+        raise FleetError(
+            f"{path.name}, row {line}: came {cells} cells; expected {width} as in the heading; put quotes "
+            f"around a text that holds a comma (rows like this: {len(wrong)})"
+        )
+    columns = list(zip(*rows)) if rows else [()] * width
+    frame = pd.DataFrame(
+        {
+            place: pd.Series([cell.strip() for cell in cells], dtype=object)
+            for place, cells in enumerate(columns)
+        }
+    )
+    frame.columns = pd.Index(heading)
+    frame.index = pd.Index(lines, dtype="int64")
+    return frame
+
+
+def _csv_rows(text: str, name: str) -> tuple[list[str], list[int], list[list[str]]]:
+    """Heading, the file line each row starts on, and the rows that are not blank."""
+    reader = csv.reader(io.StringIO(text, newline=""), strict=True)
+    lines, rows, line = [], [], 1
+    heading: list[str] | None = None
+    try:
+        for row in reader:
+            if any(cell.strip() for cell in row):
+                if heading is None:
+                    heading = [cell.strip() for cell in row]
+                else:
+                    lines.append(line)
+                    rows.append(row)
+            line = reader.line_num + 1
+    except csv.Error as error:
+        raise FleetError(
+            f"{name}, row {line}: cannot be read as CSV: {error}; save it again as CSV"
+        ) from error
+    if heading is None:
+        raise FleetError(f"{name}: is empty; give it at least a heading, or remove it")
+    if len(heading) == 1 and ";" in heading[0]:
+        raise FleetError(f"{name}: cells are parted by semicolons; save it with commas (and decimal points)")
+    return heading, lines, rows
