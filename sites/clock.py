@@ -18,7 +18,9 @@ class Clock:
 
     def __post_init__(self) -> None:
         if self.step_minutes <= 0 or 60 % self.step_minutes != 0:
-            raise SitesError(f"step of {self.step_minutes} minutes does not divide the hour; use 5, 10, 15, 30 or 60")
+            raise SitesError(
+                f"step of {self.step_minutes} minutes does not divide the hour; use 5, 10, 15, 30 or 60"
+            )
         if self.count <= 0:
             raise SitesError(f"a clock of {self.count} intervals is empty; its end must lie after its start")
         object.__setattr__(self, "start", np.datetime64(self.start, "us"))
@@ -52,7 +54,10 @@ class Clock:
         whole, rest = divmod(int(offset.astype(np.int64)), int(self.step.astype(np.int64)))
         if rest:
             before = self.start + whole * self.step
-            raise SitesError(f"{time} is not on the {self.step_minutes}-minute grid; nearest are {before} and {before + self.step}")
+            after = before + self.step
+            raise SitesError(
+                f"{time} is not on the {self.step_minutes}-minute grid; nearest: {before}, {after}"
+            )
         if not 0 <= whole <= self.count:
             raise SitesError(f"{time} lies outside {self.start} to {self.end}; widen the horizon")
         return whole
@@ -62,5 +67,7 @@ def span(start: np.datetime64, end: np.datetime64, step_minutes: int) -> Clock:
     """Clock from `start` to `end`; SitesError where the end is not a whole number of steps later."""
     minutes = (np.datetime64(end, "us") - np.datetime64(start, "us")) / np.timedelta64(1, "m")
     if minutes <= 0 or minutes % step_minutes:
-        raise SitesError(f"{start} to {end} is not a whole, positive number of {step_minutes}-minute intervals")
+        raise SitesError(
+            f"{start} to {end} is not a whole, positive number of {step_minutes}-minute intervals"
+        )
     return Clock(np.datetime64(start, "us"), step_minutes, int(minutes // step_minutes))

@@ -32,7 +32,14 @@ class Outlook:
 
     def take(self, rows: Ints) -> "Outlook":
         """Same outlook with one row per entry of `rows`."""
-        names = ("dry_bulb_c", "wet_bulb_c", "cooling_load_kw_th", "rest_kw", "price_per_kwh", "billed_peak_kw")
+        names = (
+            "dry_bulb_c",
+            "wet_bulb_c",
+            "cooling_load_kw_th",
+            "rest_kw",
+            "price_per_kwh",
+            "billed_peak_kw",
+        )
         return replace(self, **{name: getattr(self, name)[rows] for name in names})
 
 

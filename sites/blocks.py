@@ -1,0 +1,84 @@
+"""Which candidates a site is quoted for: one contiguous block of the event, some machines off, the rest limited."""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from sites.candidate import Stages
+from sites.roster import Roster, Standing
+from sites.units import Bools, Floats, Ints
+
+LOAD_LIMITS = (1.0, 0.75, 0.5)
+"""Demand limits offered to the machines that stay on, as a share of what each could give."""
+
+
+@dataclass(frozen=True)
+class Terms:
+    """What the call allows each site; all (site,) but the event's two clock indices and the step."""
+
+    event_from: int
+    event_to: int
+    step_minutes: int
+    earliest: Ints
+    """First clock index at which a window may start, by notice"""
+    minimum_intervals: Ints
+    allowed: Bools
+    """False: over a call limit, or already in a call"""
+
+
+@dataclass(frozen=True)
+class Candidates:
+    """C candidates sorted by site, start, end; windows [start, end) as clock indices."""
+
+    site: Ints
+    start: Ints
+    end: Ints
+    load_limit_fraction: Floats
+    """(C,) demand limit on what stays on"""
+    stages: Stages
+
+
+def candidates(roster: Roster, standing: Standing, terms: Terms) -> Candidates:
+    """Every block of the event that a site's notice and minimum times allow, with its last k machines in
+    loading order off and a demand limit on the others, for every k."""
+    ready = roster.chillers.exists & standing.chiller_available
+    from_end = np.cumsum(ready[:, ::-1], axis=1)[:, ::-1]
+    count = ready.sum(axis=1)
+    blocks = np.arange(terms.event_from, terms.event_to + 1)
+    first, last = (grid.ravel() for grid in np.meshgrid(blocks, blocks, indexing="ij"))
+    first, last = first[first < last], last[first < last]
+    parts = []
+    for off_count in range(1, int(count.max(initial=0)) + 1):
+        off = ready & (from_end <= off_count)
+        shortest = np.maximum(terms.minimum_intervals, _least_off_intervals(roster, off, terms))
+        startable = np.where(off, roster.chillers.starts_left >= 1, True).all(axis=1)
+        for limit in LOAD_LIMITS:
+            has = terms.allowed & startable & (count >= off_count)
+            if limit < 1.0:
+                has = has & (count > off_count)
+            site, block = np.nonzero(
+                has[:, None]
+                & (first[None, :] >= terms.earliest[:, None])
+                & (last - first >= shortest[:, None])
+            )
+            machine_limit = np.where(off[site], 0.0, limit)
+            parts.append((site, first[block], last[block], np.full(len(site), limit), machine_limit))
+    return _sorted(parts, roster.chillers.exists.shape[1])
+
+
+def _least_off_intervals(roster: Roster, off: Bools, terms: Terms) -> Ints:
+    """Intervals (site,) that keep every stopped machine's minimum off time."""
+    minutes = np.where(off, roster.chillers.min_off_minutes, 0.0).max(axis=1, initial=0.0)
+    return np.ceil(minutes / terms.step_minutes).astype(np.int64)
+
+
+def _sorted(parts: list[tuple[Ints, Ints, Ints, Floats, Floats]], machines: int) -> Candidates:
+    if not parts:
+        none = np.zeros(0, dtype=np.int64)
+        empty = Stages(none[:, None], none[:, None], np.zeros((0, 1, machines)))
+        return Candidates(none, none, none, np.zeros(0), empty)
+    site, start, end, limit, machine = (np.concatenate(column) for column in zip(*parts, strict=True))
+    order = np.lexsort((-limit, (machine == 0.0).sum(axis=1), end, start, site))
+    site, start, end, limit, machine = (array[order] for array in (site, start, end, limit, machine))
+    stages = Stages(start[:, None], end[:, None], machine[:, None, :])
+    return Candidates(site, start, end, limit, stages)
