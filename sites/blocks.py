@@ -22,6 +22,8 @@ class Terms:
     earliest: Ints
     """First clock index at which a window may start, by notice"""
     minimum_intervals: Ints
+    most_intervals: Ints
+    """Longest window, by the hours left to call"""
     allowed: Bools
     """False: over a call limit, or already in a call"""
 
@@ -60,6 +62,7 @@ def candidates(roster: Roster, standing: Standing, terms: Terms) -> Candidates:
                 has[:, None]
                 & (first[None, :] >= terms.earliest[:, None])
                 & (last - first >= shortest[:, None])
+                & (last - first <= terms.most_intervals[:, None])
             )
             machine_limit = np.where(off[site], 0.0, limit)
             parts.append((site, first[block], last[block], np.full(len(site), limit), machine_limit))

@@ -14,12 +14,13 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from sites import comfort, tank
+from sites import comfort, storage, tank
 from sites.candidate import Stages
 from sites.conditions import Conditions
 from sites.dispatch import plant_power_kw, staged_load_kw_th
-from sites.roster import LAYOUTS, STRATEGIES, Roster
-from sites.units import Bools, Floats, Ints
+from sites.roster import STRATEGIES
+from sites.rows import Plants
+from sites.units import Bools, Floats
 
 START_CHARGE_BELOW = 0.95
 """Usual charging starts below this share of capacity and goes on to STOP_CHARGE_AT (common practice, no source)."""
@@ -78,34 +79,6 @@ class Moment:
     air_mean_rise_k: Floats
 
 
-@dataclass(frozen=True)
-class Plants:
-    """Rows to be simulated: the roster gathered per row, and which site of `Conditions` each row is."""
-
-    roster: Roster
-    site: Ints
-    discharge: tank.RateCurves
-    charge: tank.RateCurves
-    zone: comfort.TwoNode
-    tank_available: Bools
-    reserve_kwh_th: Floats
-    """(row,) inventory that staged intervals leave untouched"""
-
-
-def plants(roster: Roster, here: Conditions, tank_available: Bools, rows: Ints) -> Plants:
-    """Gather sites into rows, shape (row,) of site indices."""
-    taken = roster.take(rows)
-    return Plants(
-        roster=taken,
-        site=rows,
-        discharge=here.discharge.take(rows),
-        charge=here.charge.take(rows),
-        zone=comfort.two_node(taken.buildings, here.step_h),
-        tank_available=tank_available[rows] & taken.tanks.exists,
-        reserve_kwh_th=taken.buildings.held_back_kwh_th,
-    )
-
-
 @dataclass
 class _State:
     inventory_kwh_th: Floats
@@ -140,7 +113,9 @@ def _advance(
     direct_cap = here.direct_kw_th[rows.site, :, t] * limit
     load = here.load_kw_th[rows.site, t]
     wanted = _wanted_from_tank(rows, here, staged, direct_cap.sum(axis=1), load, start, t)
-    discharge, lmtd, most = _discharge(rows, here, staged, direct_cap.sum(axis=1), load, wanted, start, loss)
+    discharge, lmtd, most = storage.discharge(
+        rows, here, staged, direct_cap.sum(axis=1), load, wanted, start, loss
+    )
     drawn = discharge.sum(axis=1)
     served = np.minimum(load - drawn, direct_cap.sum(axis=1))
     unmet = np.maximum(load - drawn - served, 0.0)
@@ -148,8 +123,9 @@ def _advance(
     pull_down = _pull_down(rows, here, state, staged, extra, direct_cap.sum(axis=1) - served)
     air, mass, air_mean = comfort.advance(rows.zone, state.air_k, state.mass_k, extra - pull_down)
     charging = _charging(rows, here, staged, usual, state, t)
+    asked = _charge_asked(rows, here, usual, load, start, t)
     direct, into_tank, charge, ice_mode = _charge_and_load(
-        rows, here, charging, direct_cap, limit, served + pull_down, load, start, loss, usual, t
+        rows, here, charging, direct_cap, limit, served + pull_down, asked, start, loss, t
     )
     machine_kw, power = _power(rows, here, direct + into_tank, ice_mode, charge, discharge, t)
     inventory = start + (charge - discharge - loss) * here.step_h
@@ -168,7 +144,7 @@ def _advance(
         loss_kw_th=loss,
         inventory_start_kwh_th=start,
         inventory_kwh_th=inventory,
-        discharge_limit_kw_th=_limit_at_end(rows, inventory, lmtd),
+        discharge_limit_kw_th=storage.limit_at_end(rows, inventory, lmtd),
         lmtd_k=lmtd,
         wanted_kw_th=wanted,
         spare_direct_kw_th=direct_cap.sum(axis=1) - served - pull_down,
@@ -180,7 +156,7 @@ def _advance(
         mass_rise_k=mass,
         air_mean_rise_k=air_mean,
     )
-    return moment, _State(inventory, charging & ~_full(rows, inventory), air, mass)
+    return moment, _State(inventory, charging & _not_full(rows, inventory), air, mass)
 
 
 def _wanted_from_tank(
@@ -196,7 +172,7 @@ def _wanted_from_tank(
     strategy = rows.roster.buildings.strategy
     on_peak = here.on_peak[rows.site, t]
     left_h = np.maximum(here.on_peak_left_h[rows.site, t], here.step_h)
-    spread = np.minimum(_held(rows, start) / left_h, load)
+    spread = np.minimum(storage.held(rows, start) / left_h, load)
     level = here.level_kw_th[rows.site]
     usual = np.select(
         [strategy == _FULL, strategy == _STORAGE_FIRST, strategy == _LEVEL],
@@ -204,72 +180,6 @@ def _wanted_from_tank(
         default=0.0,
     )
     return np.where(staged, shortage, np.maximum(shortage, usual))
-
-
-def _inlet_c(rows: Plants, tank_share: Floats) -> Floats:
-    """Temperature at the tank's inlet, (row,): the loop's return in parallel; in series behind machines that
-    take the rest of the load at the same flow, supply + (return - supply) x the tank's share."""
-    buildings = rows.roster.buildings
-    series = buildings.layout == LAYOUTS.index("series")
-    rise = buildings.return_c - buildings.supply_c
-    return buildings.supply_c + rise * np.where(series, np.clip(tank_share, 0.0, 1.0), 1.0)
-
-
-def _most(
-    rows: Plants, here: Conditions, start: Floats, loss: Floats, share: Floats
-) -> tuple[Floats, Floats]:
-    """Greatest discharge of each tank (row, tank) and the LMTD (row, tank) at which its limit was taken."""
-    tanks = rows.roster.tanks
-    lmtd = tank.lmtd_k(_inlet_c(rows, share), rows.roster.buildings.supply_c)
-    lmtd_all: Floats = np.broadcast_to(np.asarray(lmtd)[:, None], start.shape)
-    knots = tank.knots_kw_th(rows.discharge, tanks.capacity_kwh_th, tanks.discharge_limit_kw_th, lmtd_all)
-    most = tank.most_discharge_kw_th(start, loss, tanks.capacity_kwh_th, knots, here.step_h)
-    return np.where(rows.tank_available, most, 0.0), lmtd_all
-
-
-def _discharge(
-    rows: Plants,
-    here: Conditions,
-    staged: Bools,
-    direct_cap: Floats,
-    load: Floats,
-    wanted: Floats,
-    start: Floats,
-    loss: Floats,
-) -> tuple[Floats, Floats, Floats]:
-    """Discharge (row, tank), its LMTD (row, tank), and the most that could have been had (row, tank).
-
-    Two passes: where the first limit leaves more load to machines upstream, the tank's inlet is colder and
-    its limit lower.
-    """
-    total = np.maximum(load, 1e-9)
-    most, lmtd = _most(rows, here, start, loss, wanted / total)
-    drawn = np.minimum(wanted, _above_reserve(rows, here, staged, start, loss, most))
-    rest = np.minimum(load - drawn, direct_cap)
-    most, lmtd = _most(rows, here, start, loss, 1.0 - rest / total)
-    usable = _above_reserve(rows, here, staged, start, loss, most)
-    drawn = np.minimum(drawn, usable)
-    sum_most = most.sum(axis=1)
-    part = np.divide(drawn, sum_most, out=np.zeros_like(drawn), where=sum_most > 0.0)
-    scale = np.divide(usable, sum_most, out=np.zeros_like(drawn), where=sum_most > 0.0)
-    return most * part[:, None], lmtd, most * scale[:, None]
-
-
-def _above_reserve(
-    rows: Plants, here: Conditions, staged: Bools, start: Floats, loss: Floats, most: Floats
-) -> Floats:
-    """Discharge (row,) that the tanks' limits allow and, in a stage, that leaves the held-back inventory."""
-    free = np.maximum((_held(rows, start) - rows.reserve_kwh_th) / here.step_h - loss.sum(axis=1), 0.0)
-    total: Floats = most.sum(axis=1)
-    return np.where(staged, np.minimum(total, free), total)
-
-
-def _limit_at_end(rows: Plants, inventory: Floats, lmtd: Floats) -> Floats:
-    """Discharge limit of each tank (row, tank) at end-of-interval inventory; 0 for one out of service."""
-    tanks = rows.roster.tanks
-    knots = tank.knots_kw_th(rows.discharge, tanks.capacity_kwh_th, tanks.discharge_limit_kw_th, lmtd)
-    limit = tank.limit_kw_th(inventory, tanks.capacity_kwh_th, knots)
-    return np.where(rows.tank_available, limit, 0.0)
 
 
 def _pull_down(
@@ -284,43 +194,49 @@ def _pull_down(
     return np.where(warm, np.clip(needed, 0.0, np.maximum(spare, 0.0)), 0.0)
 
 
-def _full(rows: Plants, inventory: Floats) -> Bools:
-    full: Bools = _held(rows, inventory) >= STOP_CHARGE_AT * _held(rows, rows.roster.tanks.capacity_kwh_th)
-    return full
-
-
-def _held(rows: Plants, inventory: Floats) -> Floats:
-    """Sum (row,) over the tanks that are in service."""
-    held: Floats = np.where(rows.tank_available, inventory, 0.0).sum(axis=1)
-    return held
-
-
 def _charging(
     rows: Plants, here: Conditions, staged: Bools, usual: Usual | None, state: _State, t: int
 ) -> Bools:
     """Rows (row,) in charging mode: in charging hours, from low enough until full; an event row also while
     its tank lies below the usual case's; load levelling whenever load is under the flat rate."""
     hours = here.charge_hours[rows.site, t]
-    held = _held(rows, state.inventory_kwh_th)
-    capacity = _held(rows, rows.roster.tanks.capacity_kwh_th)
+    held = storage.held(rows, state.inventory_kwh_th)
+    capacity = storage.held(rows, rows.roster.tanks.capacity_kwh_th)
     low = state.charging | (held < START_CHARGE_BELOW * capacity)
     if usual is not None:
-        low = low | (held < _held(rows, usual.inventory_kwh_th[rows.site, :, t]) - 1e-3 * capacity)
+        low = low | (held < storage.held(rows, usual.inventory_kwh_th[rows.site, :, t]) - 1e-3 * capacity)
     below_level = here.load_kw_th[rows.site, t] < here.level_kw_th[rows.site]
     levelling = rows.roster.buildings.strategy == _LEVEL
     charging: Bools = (
         ~staged
-        & ~_full(rows, state.inventory_kwh_th)
+        & _not_full(rows, state.inventory_kwh_th)
         & ((hours & low & ~levelling) | (levelling & (below_level | (hours & _behind(rows, usual, held, t)))))
     )
     return charging
+
+
+def _not_full(rows: Plants, inventory: Floats) -> Bools:
+    capacity = storage.held(rows, rows.roster.tanks.capacity_kwh_th)
+    below: Bools = storage.held(rows, inventory) < STOP_CHARGE_AT * capacity
+    return below
+
+
+def _charge_asked(
+    rows: Plants, here: Conditions, usual: Usual | None, load: Floats, start: Floats, t: int
+) -> Floats:
+    """Charge (row,) that the strategy asks for: all there is, or with load levelling what lies under the flat
+    rate, unless the tank is behind the usual case in its charging hours."""
+    levelling = rows.roster.buildings.strategy == _LEVEL
+    behind = here.charge_hours[rows.site, t] & _behind(rows, usual, storage.held(rows, start), t)
+    below_level = np.maximum(here.level_kw_th[rows.site] - load, 0.0)
+    return np.where(levelling & ~behind, below_level, np.inf)
 
 
 def _behind(rows: Plants, usual: Usual | None, held: Floats, t: int) -> Bools:
     """Rows whose tanks hold less than in the usual case at this interval's end."""
     if usual is None:
         return np.zeros(len(rows.site), dtype=np.bool_)
-    behind: Bools = held < _held(rows, usual.inventory_kwh_th[rows.site, :, t])
+    behind: Bools = held < storage.held(rows, usual.inventory_kwh_th[rows.site, :, t])
     return behind
 
 
@@ -331,10 +247,9 @@ def _charge_and_load(
     direct_cap: Floats,
     limit: Floats,
     cooling: Floats,
-    load: Floats,
+    asked: Floats,
     start: Floats,
     loss: Floats,
-    usual: Usual | None,
     t: int,
 ) -> tuple[Floats, Floats, Floats, Bools]:
     """Machine loads to the building and into tanks (row, machine), charge (row, tank), ice mode (row, machine).
@@ -353,7 +268,8 @@ def _charge_and_load(
     ice_site = here.ice_site[rows.site]
     chilling = np.where(ice_mode, cap, 0.0).sum(axis=1)
     spare = np.where(ice_site, np.minimum(chilling, cap.sum(axis=1) - cooling), cap.sum(axis=1) - cooling)
-    charge = _charge(rows, here, can, np.maximum(spare, 0.0), load, start, loss, usual, t)
+    offered = np.minimum(np.maximum(spare, 0.0), asked)
+    charge = storage.charge(rows, here, can, offered, start, loss)
     filled = charge.sum(axis=1)
     on_warm = np.minimum(cooling, warm_cap.sum(axis=1))
     on_ice = cooling - on_warm
@@ -366,35 +282,6 @@ def _charge_and_load(
     share_ice = np.where(ice_site, share_ice, 0.0)
     into_tank = warm_load * share_warm[:, None] + ice_load * share_ice[:, None]
     return warm_load + ice_load - into_tank, into_tank, charge, ice_mode & (ice_load > 0.0)
-
-
-def _charge(
-    rows: Plants,
-    here: Conditions,
-    can: Bools,
-    spare: Floats,
-    load: Floats,
-    start: Floats,
-    loss: Floats,
-    usual: Usual | None,
-    t: int,
-) -> Floats:
-    """Charge of each tank (row, tank) from `spare` chiller capacity (row,)."""
-    tanks = rows.roster.tanks
-    lmtd = np.broadcast_to(here.charge_lmtd_k[rows.site][:, None], start.shape)
-    knots = tank.knots_kw_th(rows.charge, tanks.capacity_kwh_th, tanks.charge_limit_kw_th, lmtd)
-    most = tank.most_charge_kw_th(start, loss, tanks.capacity_kwh_th, knots, here.step_h)
-    most = np.where(rows.tank_available & can[:, None], most, 0.0)
-    levelling = rows.roster.buildings.strategy == _LEVEL
-    below_level = np.maximum(here.level_kw_th[rows.site] - load, 0.0)
-    held = _held(rows, start)
-    catch_up = here.charge_hours[rows.site, t] & _behind(rows, usual, held, t)
-    asked = np.where(levelling & ~catch_up, below_level, np.inf)
-    total = np.minimum(np.minimum(spare, asked), most.sum(axis=1))
-    sum_most = most.sum(axis=1)
-    part = np.divide(total, sum_most, out=np.zeros_like(total), where=sum_most > 0.0)
-    result: Floats = most * part[:, None]
-    return result
 
 
 def _power(

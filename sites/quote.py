@@ -17,9 +17,10 @@ from sites.course import Course, course
 from sites.direction import Direction
 from sites.errors import SitesError
 from sites.outlook import Outlook
-from sites.plant import plants, simulate
+from sites.plant import simulate
 from sites.quotes import LIMITED_BY, DenseQuotes
 from sites.roster import Roster, Standing
+from sites.rows import plants
 from sites.tally import Tally, broken, tally, tank_cause
 from sites.units import Bools, Floats, Ints, Strings
 

@@ -11,8 +11,9 @@ import numpy as np
 from sites import comfort
 from sites.conditions import Conditions
 from sites.course import Course
-from sites.plant import Moment, Plants
+from sites.plant import Moment
 from sites.quotes import LIMITED_BY
+from sites.rows import Plants
 from sites.units import Bools, Floats, Ints
 
 UNMET_TOLERANCE_KW_TH = 1e-6

@@ -1,0 +1,36 @@
+"""Sites gathered into rows to be simulated: one row a site, or one row a candidate."""
+
+from dataclasses import dataclass
+
+from sites import comfort, tank
+from sites.conditions import Conditions
+from sites.roster import Roster
+from sites.units import Bools, Floats, Ints
+
+
+@dataclass(frozen=True)
+class Plants:
+    """Rows to be simulated: the roster gathered per row, and which site of `Conditions` each row is."""
+
+    roster: Roster
+    site: Ints
+    discharge: tank.RateCurves
+    charge: tank.RateCurves
+    zone: comfort.TwoNode
+    tank_available: Bools
+    reserve_kwh_th: Floats
+    """(row,) inventory that staged intervals leave untouched"""
+
+
+def plants(roster: Roster, here: Conditions, tank_available: Bools, rows: Ints) -> Plants:
+    """Gather sites into rows, shape (row,) of site indices."""
+    taken = roster.take(rows)
+    return Plants(
+        roster=taken,
+        site=rows,
+        discharge=here.discharge.take(rows),
+        charge=here.charge.take(rows),
+        zone=comfort.two_node(taken.buildings, here.step_h),
+        tank_available=tank_available[rows] & taken.tanks.exists,
+        reserve_kwh_th=taken.buildings.held_back_kwh_th,
+    )
