@@ -1,0 +1,292 @@
+"""Tanks: how fast each kind can be discharged and charged at what inventory, and what it loses standing.
+
+Owns the rate models, their piecewise-linear curves from below, and the greatest rate over one interval. Which
+brine temperatures a tank sees, and who gets its cooling, belongs to the plant. Axes: row or site (N), tank (K),
+knot (J). Inventory E' = E + (charge - discharge - loss) dt stays within [0, capacity]; limits are taken at the
+END of the interval, so that a coarse step never gives more than a fine one.
+"""
+
+from dataclasses import dataclass
+from functools import cache
+from typing import Final
+
+import numpy as np
+from numpy.polynomial import polynomial
+
+from sites.errors import SitesError
+from sites.roster import ICE_KINDS, TANK_KINDS, Rows, Tanks, kind_is
+from sites.units import SECONDS_PER_HOUR, FloatLike, Floats, Ints
+
+SET_A: Final = (0.0, 0.09, -0.15, 0.612, -0.324, -0.216)
+"""C1 to C6 of the rate-limited form (Strand 1992); an illustrative internal-melt tank of a public simulation
+engine's examples, the same for discharge and charge. Replace it by the maker's fit where there is one."""
+
+INTERNAL_MELT: Final = (1.3879, -7.6333, 26.3423, -47.6084, 41.8498, -14.2948)
+"""P(y) of the UA form for internal melt and for freezing on the coil (Henze & Krarti 2002)."""
+
+EXTERNAL_MELT_DISCHARGE: Final = (1.1756, -5.3689, 17.3602, -30.1077, 25.6387, -8.5102)
+"""P(y) of the UA form for external-melt discharge (Henze & Krarti 2002)."""
+
+REFERENCE_LMTD_K: Final = 10.0
+"""Both forms are written per 10 K of mean temperature difference."""
+
+FREEZING_C: Final = 0.0
+
+TOUCHING_K: Final = 1e-9
+"""Brine nearer to freezing than this has no temperature difference left."""
+
+CHILLED_WATER_HOURS: Final = 5.0
+"""A chilled-water tank with no flow limit given moves its capacity in this time (assumed, common practice)."""
+
+WATER_DENSITY_KG_PER_M3: Final = 999.78
+WATER_CP_KJ_PER_KG_K: Final = 4.1968
+"""Water at 9 degC and 1 atm (IAPWS)."""
+
+DENSEST_WATER_C: Final = 4.0
+"""Water is densest here; a stratified tank cannot be supplied colder."""
+
+KNOT_SOC: Final[Floats] = np.array([0.0, 0.01, 0.05, 0.1, 0.15, 0.25, 0.5, 0.75, 0.87, 0.95, 1.0])
+"""Charged fractions (J,) at which every limit is kept; close where a model bends."""
+KNOT_SOC.setflags(write=False)
+
+
+@dataclass(frozen=True)
+class RateCurves(Rows):
+    """Limit at knot j, as a share of capacity per hour: base + slope x LMTD / 10 K, each (N, K, J).
+
+    Straight lines between the knots lie nowhere above the model. Below 0 the limit is 0: the line is kept
+    below 0 so that its zero, too, lies where the straight line has it and not where a knot happens to be.
+    """
+
+    base: Floats
+    slope: Floats
+
+
+def lmtd_k(inlet_c: FloatLike, outlet_c: FloatLike, freezing_c: float = FREEZING_C) -> Floats:
+    """Log mean temperature difference between brine and ice, K, as an absolute value; any shape.
+
+    |Tin - Tout| / |ln((Tin - Tf) / (Tout - Tf))|, which tends to |Tin - Tf| as Tout tends to Tin. 0 where the
+    two touch Tf or lie on either side of it: such a tank neither melts nor freezes. Same for charging, where
+    both lie below Tf.
+    """
+    inlet = np.asarray(inlet_c, dtype=np.float64) - freezing_c
+    outlet = np.asarray(outlet_c, dtype=np.float64) - freezing_c
+    works = (inlet * outlet > 0.0) & (np.minimum(np.abs(inlet), np.abs(outlet)) > TOUCHING_K)
+    ratio_less_1 = np.divide(inlet - outlet, outlet, out=np.zeros(works.shape), where=works)
+    log = np.log1p(ratio_less_1)
+    mean = np.array(np.broadcast_to(inlet, works.shape))
+    np.divide(inlet - outlet, log, out=mean, where=works & (log != 0.0))
+    return np.where(works, np.abs(mean), 0.0)
+
+
+def strand_fraction_per_h(
+    depth: FloatLike, lmtd_k: FloatLike, coefficients: tuple[float, ...] = SET_A
+) -> Floats:
+    """Most rate of an ice tank, share of capacity per hour, never below 0; any shape.
+
+    C1 + C2 d + C3 d^2 + (C4 + C5 d + C6 d^2) LMTD / 10 K (Strand 1992), d in 0 to 1: discharged fraction when
+    discharging, charged fraction when charging.
+    """
+    base, slope = coefficients[:3], coefficients[3:]
+    rate = polynomial.polyval(depth, base) + polynomial.polyval(depth, slope) * (lmtd_k / REFERENCE_LMTD_K)
+    return np.maximum(rate, 0.0)
+
+
+def ua_fraction_per_h(y: FloatLike, lmtd_k: FloatLike, coefficients: tuple[float, ...]) -> Floats:
+    """Most rate of an ice tank, share of capacity per hour; any shape.
+
+    q = UA LMTD, UA = P(y) capacity / (1 h 10 K) (Henze & Krarti 2002), y in 0 to 1: discharged fraction when
+    discharging, charged fraction when charging. P(1) > 0, so hold the rate to E / dt besides.
+    """
+    return np.asarray(polynomial.polyval(y, coefficients) * (lmtd_k / REFERENCE_LMTD_K), dtype=np.float64)
+
+
+def minorant(coefficients: tuple[float, ...], knots: Floats) -> Floats:
+    """Knot values (J,) whose straight lines lie nowhere above the polynomial between the knots.
+
+    On the curve where it is concave; where a chord comes to lie above, both its ends are lowered by the most
+    it does. Exact: the most lies at a root of the derivative.
+    """
+    value = polynomial.polyval(knots, coefficients)
+    derivative = polynomial.polyder(coefficients)
+    over = np.zeros(len(knots) + 1)
+    for j in range(len(knots) - 1):
+        left, right = knots[j], knots[j + 1]
+        gradient = (value[j + 1] - value[j]) / (right - left)
+        turn = polynomial.polyroots(polynomial.polysub(derivative, [gradient])).real
+        turn = turn[(turn > left) & (turn < right)]
+        chord = value[j] + gradient * (turn - left)
+        over[j + 1] = (chord - polynomial.polyval(turn, coefficients)).max(initial=0.0)
+    lowered: Floats = value - np.maximum(over[:-1], over[1:])
+    return lowered
+
+
+def discharge_curves(tanks: Tanks) -> RateCurves:
+    """Discharge limits, rising with inventory.
+
+    Internal melt: SET_A in the discharged fraction. External melt: EXTERNAL_MELT_DISCHARGE. Chilled water:
+    flat, its discharge limit, or capacity over CHILLED_WATER_HOURS where none is given.
+    """
+    return _curves(tanks, "discharge", tanks.discharge_limit_kw_th)
+
+
+def charge_curves(tanks: Tanks) -> RateCurves:
+    """Charge limits, falling with inventory; a full tank takes nothing (see most_charge_kw_th).
+
+    Internal melt: SET_A in the charged fraction. External melt: INTERNAL_MELT in the charged fraction, for ice
+    grows on the coil. Chilled water: flat until full, its charge limit, or capacity over CHILLED_WATER_HOURS.
+    """
+    return _curves(tanks, "charge", tanks.charge_limit_kw_th)
+
+
+def knots_kw_th(
+    curves: RateCurves, capacity_kwh_th: Floats, ceiling_kw_th: Floats, lmtd_k: FloatLike
+) -> Floats:
+    """Limits at the knots, (..., J), for the functions below; capacity, ceiling and lmtd_k broadcast to (N, K).
+
+    capacity x (base + slope LMTD / 10 K), not above `ceiling_kw_th`. May lie below 0, which those functions
+    read as 0. At small LMTD (under 2.78 K for SET_A) a model turns back near one end; no knot is above the
+    better of the two ends, which keeps the curve monotone and below the model.
+    """
+    scaled = np.asarray(lmtd_k, dtype=np.float64)[..., None] / REFERENCE_LMTD_K
+    rate: Floats = np.asarray(curves.slope * scaled, dtype=np.float64)
+    rate += curves.base
+    np.minimum(rate, np.maximum(rate[..., :1], rate[..., -1:]), out=rate)
+    rate *= capacity_kwh_th[..., None]
+    np.minimum(rate, ceiling_kw_th[..., None], out=rate)
+    return rate
+
+
+def limit_kw_th(inventory_kwh_th: Floats, capacity_kwh_th: Floats, knots_kw_th: Floats) -> Floats:
+    """The limit at an inventory, on the straight lines between the knots, not below 0; 0 without capacity."""
+    empty = capacity_kwh_th <= 0.0
+    soc = np.divide(
+        inventory_kwh_th,
+        capacity_kwh_th,
+        out=np.zeros(np.broadcast(inventory_kwh_th, empty).shape),
+        where=~empty,
+    )
+    limit = np.array(np.broadcast_to(knots_kw_th[..., 0], soc.shape))
+    for j in range(len(KNOT_SOC) - 1):
+        share = np.clip((soc - KNOT_SOC[j]) * (1.0 / (KNOT_SOC[j + 1] - KNOT_SOC[j])), 0.0, 1.0)
+        share *= knots_kw_th[..., j + 1] - knots_kw_th[..., j]
+        limit += share
+    return np.where(empty, 0.0, np.maximum(limit, 0.0))
+
+
+def most_discharge_kw_th(
+    inventory_kwh_th: Floats, loss_kw_th: Floats, capacity_kwh_th: Floats, knots_kw_th: Floats, step_h: float
+) -> Floats:
+    """Greatest steady discharge over one interval: at most the limit at the inventory it ends with, which is >= 0.
+
+    Solves E_end + limit(E_end) dt = E - loss dt, whose left side is piecewise linear and rising, exactly. Loss
+    must not exceed E / dt. `knots_kw_th` from discharge curves, (..., J); all else broadcasts to (...).
+    """
+    start = inventory_kwh_th - loss_kw_th * step_h
+    end = _end_inventory(start, capacity_kwh_th, knots_kw_th * step_h)
+    return np.maximum(start - end, 0.0) / step_h
+
+
+def most_charge_kw_th(
+    inventory_kwh_th: Floats, loss_kw_th: Floats, capacity_kwh_th: Floats, knots_kw_th: Floats, step_h: float
+) -> Floats:
+    """Greatest steady charge over one interval: at most the limit at the inventory it ends with, never over full.
+
+    Solves E_end - limit(E_end) dt = E - loss dt, as most_discharge_kw_th; `knots_kw_th` from charge curves.
+    """
+    start = inventory_kwh_th - loss_kw_th * step_h
+    end = _end_inventory(start, capacity_kwh_th, knots_kw_th * -step_h)
+    return np.maximum(end - start, 0.0) / step_h
+
+
+def standing_loss_kw_th(
+    kind: Ints, inventory_kwh_th: Floats, capacity_kwh_th: Floats, loss_fraction_per_h: Floats, step_h: float
+) -> Floats:
+    """Standing loss over one interval, kW_th; all but step_h broadcast.
+
+    Ice sits at 0 degC to the last, UA (T_ambient - 0): a share of CAPACITY per hour while any ice is left.
+    Chilled water: a share of inventory. At most what is there, E / dt.
+    """
+    of_capacity = kind_is(kind, TANK_KINDS, ICE_KINDS)
+    held = np.where(of_capacity, capacity_kwh_th, inventory_kwh_th)
+    return np.minimum(held * loss_fraction_per_h, inventory_kwh_th / step_h)
+
+
+def usable_water_kwh_th(
+    volume_m3: FloatLike,
+    supply_c: FloatLike,
+    return_c: FloatLike,
+    figure_of_merit: FloatLike = 0.9,
+    density_kg_per_m3: float = WATER_DENSITY_KG_PER_M3,
+    cp_kj_per_kg_k: float = WATER_CP_KJ_PER_KG_K,
+) -> Floats:
+    """Usable cooling in a stratified chilled-water tank, V rho cp (T_return - T_supply) FOM / 3600; any shape.
+
+    Figure of merit 0.85 to 0.95 (ASHRAE Handbook, HVAC Applications, Thermal Storage, from memory). A warmer or
+    colder return than design changes it in proportion. Raises SitesError for a supply below 4 degC, a return
+    not above the supply or a figure of merit outside 0 to 1.
+    """
+    supply, warm, merit = (
+        np.asarray(value, dtype=np.float64) for value in (supply_c, return_c, figure_of_merit)
+    )
+    if np.any(supply < DENSEST_WATER_C):
+        raise SitesError(
+            f"supply_c: came {supply.min():g} degC; expected {DENSEST_WATER_C:g} degC or more; a stratified tank "
+            "turns over below that"
+        )
+    if np.any(warm <= supply):
+        raise SitesError(
+            f"return_c: came {(warm - supply).min():g} K above supply_c; expected above 0; check both"
+        )
+    if np.any((merit <= 0.0) | (merit > 1.0)):
+        raise SitesError(f"figure_of_merit: came {merit}; expected above 0 to 1; 0.85 to 0.95 is usual")
+    mass_kg = np.asarray(volume_m3, dtype=np.float64) * density_kg_per_m3
+    usable: Floats = mass_kg * cp_kj_per_kg_k * (warm - supply) * merit / SECONDS_PER_HOUR
+    return usable
+
+
+def _end_inventory(target: Floats, capacity: Floats, gain: Floats) -> Floats:
+    """The E_end in [0, capacity] for which E_end + gain(E_end) = target, gain given at the knots, (..., J).
+
+    E + gain must rise with E. Inverted as a sum over segments, each filled from 0 to 1: no search, no gather.
+    """
+    shape = np.broadcast_shapes(np.shape(target), np.shape(capacity), gain.shape[:-1])
+    end = np.zeros(shape)
+    below = KNOT_SOC[0] * capacity + gain[..., 0]
+    for j in range(len(KNOT_SOC) - 1):
+        above = KNOT_SOC[j + 1] * capacity + gain[..., j + 1]
+        width = np.maximum(above - below, np.finfo(np.float64).tiny)
+        share = np.clip((target - below) / width, 0.0, 1.0)
+        share *= (KNOT_SOC[j + 1] - KNOT_SOC[j]) * capacity
+        end += share
+        below = above
+    return end
+
+
+def _curves(tanks: Tanks, way: str, limit_kw_th: Floats) -> RateCurves:
+    """Curves of every tank in one direction: ice from the table of its kind, water from its own flat limit."""
+    base, slope = (table[tanks.kind] for table in _ice_tables(way))
+    real = np.isfinite(limit_kw_th) & (tanks.capacity_kwh_th > 0.0)
+    flat = np.full(limit_kw_th.shape, 1.0 / CHILLED_WATER_HOURS)
+    np.divide(limit_kw_th, tanks.capacity_kwh_th, out=flat, where=real)
+    water = ~kind_is(tanks.kind, TANK_KINDS, ICE_KINDS)
+    return RateCurves(
+        np.where(water[..., None], flat[..., None], base), np.where(water[..., None], 0.0, slope)
+    )
+
+
+@cache
+def _ice_tables(way: str) -> tuple[Floats, Floats]:
+    """Base and slope at the knots, each (tank kind, J), rows in the order of TANK_KINDS; zeros for water."""
+    external = EXTERNAL_MELT_DISCHARGE if way == "discharge" else INTERNAL_MELT
+    pairs = {"ice_internal_melt": (SET_A[:3], SET_A[3:]), "ice_external_melt": ((0.0, 0.0), external)}
+    # A model of discharge is written in the discharged fraction: mirror the knots, then the values back.
+    mirrored = way == "discharge"
+    knots = (1.0 - KNOT_SOC)[::-1] if mirrored else KNOT_SOC
+    tables = np.zeros((2, len(TANK_KINDS), len(KNOT_SOC)))
+    for kind, pair in pairs.items():
+        for table, coefficients in zip(tables, pair, strict=True):
+            values = minorant(coefficients, knots)
+            table[TANK_KINDS.index(kind)] = values[::-1] if mirrored else values
+    tables.setflags(write=False)
+    return tables[0], tables[1]
