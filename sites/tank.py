@@ -117,8 +117,7 @@ def minorant(coefficients: tuple[float, ...], knots: Floats) -> Floats:
         turn = turn[(turn > left) & (turn < right)]
         chord = value[j] + gradient * (turn - left)
         over[j + 1] = (chord - polynomial.polyval(turn, coefficients)).max(initial=0.0)
-    lowered: Floats = value - np.maximum(over[:-1], over[1:])
-    return lowered
+    return np.asarray(value - np.maximum(over[:-1], over[1:]), dtype=np.float64)
 
 
 def discharge_curves(tanks: Tanks) -> RateCurves:
@@ -149,7 +148,10 @@ def knots_kw_th(
     better of the two ends, which keeps the curve monotone and below the model.
     """
     scaled = np.asarray(lmtd_k, dtype=np.float64)[..., None] / REFERENCE_LMTD_K
-    rate: Floats = np.asarray(curves.slope * scaled, dtype=np.float64)
+    shape = np.broadcast_shapes(curves.base.shape[:-1], scaled.shape[:-1])
+    # One knot of all tanks lies together in memory: the loops over knots below run twice as fast.
+    rate: Floats = np.moveaxis(np.empty((len(KNOT_SOC), *shape)), 0, -1)
+    np.multiply(curves.slope, scaled, out=rate)
     rate += curves.base
     np.minimum(rate, np.maximum(rate[..., :1], rate[..., -1:]), out=rate)
     rate *= capacity_kwh_th[..., None]
@@ -166,11 +168,13 @@ def limit_kw_th(inventory_kwh_th: Floats, capacity_kwh_th: Floats, knots_kw_th: 
         out=np.zeros(np.broadcast(inventory_kwh_th, empty).shape),
         where=~empty,
     )
-    limit = np.array(np.broadcast_to(knots_kw_th[..., 0], soc.shape))
+    limit = np.array(np.broadcast_to(knots_kw_th[..., 0], np.broadcast(soc, knots_kw_th[..., 0]).shape))
     for j in range(len(KNOT_SOC) - 1):
-        share = np.clip((soc - KNOT_SOC[j]) * (1.0 / (KNOT_SOC[j + 1] - KNOT_SOC[j])), 0.0, 1.0)
-        share *= knots_kw_th[..., j + 1] - knots_kw_th[..., j]
-        limit += share
+        share = np.asarray(soc - KNOT_SOC[j])
+        share /= KNOT_SOC[j + 1] - KNOT_SOC[j]
+        np.maximum(share, 0.0, out=share)
+        np.minimum(share, 1.0, out=share)
+        limit += share * (knots_kw_th[..., j + 1] - knots_kw_th[..., j])
     return np.where(empty, 0.0, np.maximum(limit, 0.0))
 
 
@@ -250,17 +254,18 @@ def _end_inventory(target: Floats, capacity: Floats, gain: Floats) -> Floats:
 
     E + gain must rise with E. Inverted as a sum over segments, each filled from 0 to 1: no search, no gather.
     """
-    shape = np.broadcast_shapes(np.shape(target), np.shape(capacity), gain.shape[:-1])
-    end = np.zeros(shape)
+    end = np.zeros(np.broadcast_shapes(np.shape(target), np.shape(capacity), gain.shape[:-1]))
     below = KNOT_SOC[0] * capacity + gain[..., 0]
     for j in range(len(KNOT_SOC) - 1):
         above = KNOT_SOC[j + 1] * capacity + gain[..., j + 1]
-        width = np.maximum(above - below, np.finfo(np.float64).tiny)
-        share = np.clip((target - below) / width, 0.0, 1.0)
-        share *= (KNOT_SOC[j + 1] - KNOT_SOC[j]) * capacity
+        share = np.asarray(target - below)
+        share /= np.maximum(above - below, np.finfo(np.float64).tiny)
+        np.maximum(share, 0.0, out=share)
+        np.minimum(share, 1.0, out=share)
+        share *= KNOT_SOC[j + 1] - KNOT_SOC[j]
         end += share
         below = above
-    return end
+    return end * capacity
 
 
 def _curves(tanks: Tanks, way: str, limit_kw_th: Floats) -> RateCurves:
