@@ -43,18 +43,16 @@ class Streams:
     """(row, interval) index into QUALITIES"""
     counts: Mapping[str, int]
 
-    def pick(self, site_ids: Sequence[str], stream: str) -> "Streams":
-        """One row per site for one stream; a site without such a meter is missing throughout."""
+    def pick(self, site_ids: Sequence[str], stream: Sequence[str]) -> "Streams":
+        """One row per pair of site and stream; a site without such a meter is missing throughout."""
         place = {key: row for row, key in enumerate(zip(self.site_id.tolist(), self.stream.tolist()))}
-        rows = np.array([place.get((site, stream), -1) for site in site_ids], dtype=np.int64)
-        none = (rows < 0)[:, None]
-        shape = (len(rows), self.clock.count)
-        kw, quality = np.full(shape, np.nan), np.full(shape, MISSING, dtype=np.int64)
-        if len(self.site_id):
-            kw = np.where(none, np.nan, self.kw[rows])
-            quality = np.where(none, MISSING, self.quality[rows])
-        names = np.array([stream] * len(rows), dtype=object)
-        return replace(self, site_id=np.array(site_ids, dtype=object), stream=names, kw=kw, quality=quality)
+        rows = np.array([place.get(key, -1) for key in zip(site_ids, stream)], dtype=np.int64)
+        # One more row, all missing, which -1 finds.
+        nothing = np.full((1, self.clock.count), np.nan)
+        kw = np.concatenate([self.kw, nothing])[rows]
+        quality = np.concatenate([self.quality, np.full(nothing.shape, MISSING, dtype=np.int64)])[rows]
+        sites, names = np.array(site_ids, dtype=object), np.array(stream, dtype=object)
+        return replace(self, site_id=sites, stream=names, kw=kw, quality=quality)
 
 
 @dataclass(frozen=True)

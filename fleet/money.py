@@ -1,0 +1,160 @@
+"""Money of a settlement: performance, the share of pay it earns, and lines in the currency's minor unit.
+
+Owns decimals and rounding. All arithmetic of money is decimal and is rounded once, on the line; the total is the
+exact sum of its lines. Leaves delivered energy to settle.py.
+"""
+
+from collections.abc import Sequence
+from dataclasses import dataclass
+from decimal import ROUND_FLOOR, ROUND_HALF_UP, Decimal
+from typing import Final
+
+import numpy as np
+
+from fleet.rules import SettlementRule
+from sites.units import AnyArray, Bools, Floats
+
+_TWO: Final = (
+    "AED AFN ALL AMD AOA ARS AUD AWG AZN BAM BBD BDT BGN BMD BND BOB BRL BSD BTN BWP BYN BZD CAD CDF CHF CNY "
+    "COP CRC CUP CVE CZK DKK DOP DZD EGP ERN ETB EUR FJD FKP GBP GEL GHS GIP GMD GTQ GYD HKD HNL HTG HUF IDR "
+    "ILS INR IRR JMD KES KGS KHR KPW KYD KZT LAK LBP LKR LRD LSL MAD MDL MGA MKD MMK MNT MOP MRU MUR MVR MWK "
+    "MXN MYR MZN NAD NGN NIO NOK NPR NZD PAB PEN PGK PHP PKR PLN QAR RON RSD RUB SAR SBD SCR SDG SEK SGD SHP "
+    "SLE SOS SRD SSP STN SVC SYP SZL THB TJS TMT TOP TRY TTD TWD TZS UAH USD UYU UZS VES WST XCD YER ZAR ZMW"
+)
+_OTHER: Final = {
+    0: "BIF CLP DJF GNF ISK JPY KMF KRW PYG RWF UGX VND VUV XAF XOF XPF",
+    3: "BHD IQD JOD KWD LYD OMR TND",
+    4: "CLF UYW",
+}
+"""Minor units of ISO 4217, from memory."""
+
+
+@dataclass(frozen=True)
+class Prices:
+    """What a kWh earns and costs a site, and the limits of the paid share."""
+
+    currency: str
+    capacity_payment_per_kwh: float = 0.0
+    energy_payment_per_kwh: float = 0.0
+    penalty_per_kwh: float = 0.0
+    performance_floor: float = 0.0
+    performance_cap: float = 1.0
+
+
+@dataclass(frozen=True)
+class Lines:
+    """Lines of each site's statement, arrays of Decimal of shape (site,), from the site's side."""
+
+    capacity_payment: AnyArray
+    energy_payment: AnyArray
+    penalty: AnyArray
+    total: AnyArray
+
+
+def minor_digits(currency: str) -> tuple[int, str | None]:
+    """Decimals of the currency's minor unit (ISO 4217), and a note where the code is unknown and 2 is taken."""
+    if currency in _TWO.split():
+        return 2, None
+    for digits, codes in _OTHER.items():
+        if currency in codes.split():
+            return digits, None
+    return 2, f"currency {currency} is not in the table of minor units; amounts have 2 decimals"
+
+
+def exact(number: float) -> Decimal:
+    """A float as the decimal it was meant to be: 12 significant digits, so that binary dust moves no cent."""
+    return Decimal(f"{number:.12g}")
+
+
+def to_minor(amount: Decimal, currency: str) -> Decimal:
+    """Rounded half-up (away from zero at the half) to the currency's minor unit."""
+    digits, _ = minor_digits(currency)
+    return amount.quantize(Decimal(1).scaleb(-digits), rounding=ROUND_HALF_UP)
+
+
+def largest_remainder(
+    parts: Sequence[float], site_ids: Sequence[str], total: Decimal, currency: str
+) -> AnyArray:
+    """`total` shared out in proportion to `parts` (none negative) in whole minor units that add up to it.
+
+    Each gets its share rounded down; the units left over go to the largest remainders, ties by site id. Parts
+    that are all zero share evenly. Returns Decimals of shape (part,).
+    """
+    digits, _ = minor_digits(currency)
+    unit = Decimal(1).scaleb(-digits)
+    weights = [exact(part) for part in parts]
+    if not any(weights):
+        weights = [Decimal(1)] * len(weights)
+    whole = sum(weights, Decimal(0))
+    ideal = [total * weight / whole / unit for weight in weights]
+    floor = [share.to_integral_value(rounding=ROUND_FLOOR) for share in ideal]
+    left = int(total / unit - sum(floor, Decimal(0)))
+    order = sorted(range(len(parts)), key=lambda at: (floor[at] - ideal[at], site_ids[at]))
+    extra = set(order[:left])
+    return np.array([(floor[at] + (at in extra)) * unit for at in range(len(parts))], dtype=object)
+
+
+def performance_factor(
+    delivered_kw: Floats, committed_kw: Floats, counted: Bools, step_h: float, rule: SettlementRule
+) -> Floats:
+    """Delivered over committed energy (site,), by the rule's order of floor, cap and rounding; NaN if undefined.
+
+    Shapes (site, interval); counted: the site's own window. An interval with no value adds nothing. Undefined
+    where nothing was committed, or no interval has a value.
+    """
+    known = counted & ~np.isnan(delivered_kw)
+    value = np.where(known, delivered_kw, 0.0)
+    if rule.floor_intervals:
+        value = np.maximum(value, 0.0)
+    if rule.cap_intervals:
+        value = np.minimum(value, committed_kw)
+    committed = np.where(counted, committed_kw, 0.0).sum(axis=1) * step_h
+    defined = (committed > 0.0) & known.any(axis=1)
+    factor = value.sum(axis=1) * step_h / np.where(defined, committed, 1.0)
+    if rule.performance_decimals is not None:
+        scale = 10.0**rule.performance_decimals
+        factor = np.sign(factor) * np.floor(np.round(np.abs(factor) * scale, 6) + 0.5) / scale
+    return np.where(defined, factor, np.nan)
+
+
+def paid_share(factor: Floats, rule: SettlementRule, prices: Prices) -> Floats:
+    """Share of the capacity payment that a performance factor earns (site,); NaN stays NaN.
+
+    proportional: the factor; linear: max(0, 1 - slope (target - factor)); ladder: the rung whose lower bound,
+    inclusive, is the highest reached, 0 below the first. Nothing at or below the gate. Then floor and cap.
+    """
+    known = ~np.isnan(factor)
+    value = np.round(np.where(known, factor, 0.0), 12)
+    share = value
+    if rule.performance_formula == "linear":
+        share = np.maximum(0.0, 1.0 - rule.performance_slope * (rule.performance_target - value))
+    if rule.performance_formula == "ladder":
+        bounds, shares = np.array(rule.ladder).T
+        rung = np.searchsorted(bounds, value, side="right") - 1
+        share = np.where(rung >= 0, shares[np.maximum(rung, 0)], 0.0)
+    floor = prices.performance_floor if rule.performance_floor is None else rule.performance_floor
+    cap = prices.performance_cap if rule.performance_cap is None else rule.performance_cap
+    share = np.clip(share, floor, cap)
+    if rule.performance_gate is not None:
+        share = np.where(value > rule.performance_gate, share, 0.0)
+    return np.where(known, share, np.nan)
+
+
+def lines(committed_kwh: Floats, delivered_kwh: Floats, share: Floats, prices: Prices) -> Lines:
+    """Statement lines of every site; arrays of shape (site,), delivered and share NaN where undefined.
+
+    capacity = price x committed x share; energy = price x max(delivered, 0); penalty = -price x max(committed -
+    delivered, 0), nothing where nothing was committed. Undefined makes the line zero: nothing is paid or
+    charged on a value that is not there. Each line is rounded half-up; total is their sum.
+    """
+    undefined = np.isnan(delivered_kwh)
+    delivered = np.where(undefined, 0.0, delivered_kwh)
+    lack = np.where(undefined | (committed_kwh <= 0.0), 0.0, np.maximum(committed_kwh - delivered, 0.0))
+    earned = np.where(np.isnan(share), 0.0, share)
+    decimal = np.frompyfunc(exact, 1, 1)
+    rounded = np.frompyfunc(lambda amount: to_minor(amount, prices.currency), 1, 1)
+    capacity = rounded(decimal(committed_kwh) * decimal(earned) * exact(prices.capacity_payment_per_kwh))
+    energy = rounded(decimal(np.maximum(delivered, 0.0)) * exact(prices.energy_payment_per_kwh))
+    # Subtracted from zero, so that no penalty is 0 and not -0.
+    penalty = Decimal(0) - rounded(decimal(lack) * exact(prices.penalty_per_kwh))
+    return Lines(capacity, energy, penalty, capacity + energy + penalty)
