@@ -128,9 +128,9 @@ def _restarts(off: pd.DataFrame, sites: pd.DataFrame) -> pd.DataFrame:
     place = rows.groupby("site_id").cumcount()
     lead = pd.to_timedelta(place * rows["restart_gap_minutes"], unit="min")
     at = (rows["ready_at"] - lead).groupby(rows["site_id"]).cummax() + lead
-    minutes = rows["min_off_minutes"].map("{:g}".format)
+    minutes = _said(rows["min_off_minutes"], "{:g}")
     held = "after its minimum off time of " + minutes + " min"
-    free = "at least " + rows["restart_gap_minutes"].map("{:g}".format) + " min after the machine before it"
+    free = "at least " + _said(rows["restart_gap_minutes"], "{:g}") + " min after the machine before it"
     first = pd.Series("first machine back", index=rows.index)
     detail = held.where(rows["held"], first.where(place == 0, free))
     return rows.assign(at=at.dt.ceil("min"), action="restart", detail=detail, value=np.nan)
@@ -149,7 +149,7 @@ def _held(inside: pd.DataFrame) -> list[pd.DataFrame]:
     each = each[each["lowest"] > 0.0].rename(columns={"chiller_id": "unit_id"})
     runs = (each["direct"] > RUNS_KW_TH) | (each["charge"] > RUNS_KW_TH)
     idle, limited = each[~runs], each[runs & (each["lowest"] < 1.0)]
-    percent = (100.0 * limited["lowest"]).map("{:g}".format)
+    percent = _said(100.0 * limited["lowest"], "{:g}")
     return [
         idle.assign(
             at=idle["start"], action="inhibit", detail="lag start inhibited: must not start", value=np.nan
@@ -185,7 +185,7 @@ def _tank_steps(windows: pd.DataFrame, tanks: pd.DataFrame, step_minutes: int) -
         at=("interval_start", "min"), value=("charge_kw_th", "max"), loading_order=("loading_order", "first")
     )
     start["action"] = "recharge_may_start"
-    start["detail"] = "at most " + start["value"].map("{:.0f}".format) + " kW_th into the tank"
+    start["detail"] = "at most " + _said(start["value"], "{:.0f}") + " kW_th into the tank"
     horizon_end = rows.groupby(["site_id", "unit_id"])["end"].transform("max")
     full = rows[rows["end"] == rows["full_again_at"].fillna(horizon_end)].copy()
     off_grid = sorted(set(rows["site_id"]) - set(full["site_id"]))
@@ -193,10 +193,15 @@ def _tank_steps(windows: pd.DataFrame, tanks: pd.DataFrame, step_minutes: int) -
         raise FleetError(
             f"windows: full_again_at of site {', '.join(off_grid)} is no interval's end in tanks"
         )
-    level = full["inventory_kwh_th"].map("{:.0f}".format) + " kWh_th"
+    level = _said(full["inventory_kwh_th"], "{:.0f}") + " kWh_th"
     back = "back at its usual level of " + level
     full["detail"] = back.where(full["full_again_at"].notna(), NOT_FULL + "; " + level + " then")
     return [start, full.assign(at=full["end"], action="full_by", value=full["inventory_kwh_th"])]
+
+
+def _said(numbers: pd.Series, form: str) -> pd.Series:
+    """Numbers as text; object also where there are none, which `map` alone would leave a number."""
+    return numbers.map(form.format).astype(object)
 
 
 def _sorted(parts: list[pd.DataFrame], windows: pd.DataFrame) -> pd.DataFrame:

@@ -1,0 +1,167 @@
+"""What an order says besides its steps: conditions, levels to stop at, restart, recharge, cautions, phrases.
+
+Owns the standing words of an order; the values in them come from the record through called.py. The numbers
+below are the trade's common practice, from memory; the machine's maker, local codes and the licensed operator
+come before them, and every page says so.
+"""
+
+from typing import Final
+
+import pandas as pd
+
+from fleet.called import CalledSite
+from fleet.words import plain
+
+SUPPLY_MARGIN_K: Final = 2.0
+"""Supply water this far over its set-point for SUPPLY_MINUTES ends the event (common practice, no source)."""
+SUPPLY_MINUTES: Final = 10
+COLD_BRINE_C: Final = (1.0, 2.0)
+"""Leaving brine must be above this before a plant that made ice cools again (common practice, no source)."""
+RESTART_LIMIT_FRACTION: Final = 0.5
+RESTART_MINUTES: Final = 15
+
+BANNERS: Final = {
+    "real": "REAL EVENT",
+    "test": "TEST - THIS IS A TEST EVENT - carry it out as you would a real one - TEST",
+    "rehearsal": "REHEARSAL - DO NOT ACT ON THIS ORDER - nothing is to be switched - REHEARSAL",
+}
+PHRASES: Final = {
+    "inhibit": (
+        "Inhibit the start of {tags}",
+        "controller shows start inhibited",
+        "hold it off at the controller and ring",
+    ),
+    "demand_limit": (
+        "Set the demand limit of {tags}",
+        "% load at or under the limit",
+        "ring; change no protection",
+    ),
+    "off": (
+        "Stop {tags} by the plant controller, never the disconnect, and keep it off",
+        "amps to zero, pump off after its delay, valve shut; tower stays if shared",
+        "leave it running and ring",
+    ),
+    "demand_limit_removed": (
+        "Remove the demand limit: {tags}",
+        "panel shows the limit gone",
+        "ring",
+    ),
+    "inhibit_removed": (
+        "Remove the start inhibit of {tags}",
+        "controller shows it ready",
+        "ring",
+    ),
+    "restart": (
+        "Let {tags} restart, load limited (see RESTART)",
+        "flow proven, amps rise, leaving water falls",
+        "let its own timer run out, force nothing, ring",
+    ),
+    "recharge_may_start": (
+        "Recharge may start: {tags}",
+        "tank level rises",
+        "ring",
+    ),
+    "full_by": (
+        "Back at its usual level: {tags}",
+        "tank's own level signal",
+        "ring",
+    ),
+    "not_full": (
+        "NOT full by the end of the plan: {tags} then",
+        "tank level about there",
+        "ring",
+    ),
+}
+
+
+def before(site: CalledSite) -> tuple[str, ...]:
+    """Conditions before the start."""
+    low, asked = float(site.window.inventory_low_start_kwh_th), []
+    if site.tanks:
+        tags = ", ".join(plain(tank.tank_id) for tank in site.tanks)
+        whole = site.words.energy(site.capacity_kwh_th)
+        asked.append(f"{tags}: at least {site.level(low)}, of {whole}")
+    asked.append("no alarm standing on any machine, pump or tank")
+    if site.has_ice:
+        asked.append("brine flow proven")
+    elif site.tanks:
+        asked.append("water flow through the tank proven")
+    return tuple(asked)
+
+
+def stop(site: CalledSite) -> tuple[str, ...]:
+    """Levels and temperatures at which the operator ends the event early."""
+    say, facts, levels = site.words, site.facts, []
+    if site.tanks and facts.held_back_kwh_th > 0.0:
+        levels.append(f"tanks down to {site.level(facts.held_back_kwh_th)}: that much is held back")
+    elif site.tanks:
+        levels.append("tanks used up")
+    levels.append(f"supply over {say.temperature(facts.supply_c + SUPPLY_MARGIN_K)} for {SUPPLY_MINUTES} min")
+    levels.append(f"a zone more than {say.rise(facts.rise_limit_k)} over its set-point")
+    if facts.critical_kw_th > 0.0:
+        levels.append(f"critical cooling ({say.cooling(facts.critical_kw_th)}) not fully served")
+    if site.has_ice:
+        levels.append(f"leaving brine under {say.temperature(COLD_BRINE_C[0])} while the building is served")
+    return (*levels, "any alarm")
+
+
+def restart(site: CalledSite) -> str:
+    """How the machines come back, after the event and after an early end alike."""
+    stopped = {step.unit_id for step in site.steps if step.action == "off"}
+    if not stopped:
+        return "No machine is stopped by this order."
+    kept = ", ".join(
+        f"{plain(machine.chiller_id)} {machine.min_off_minutes:g} min"
+        for machine in site.chillers
+        if machine.chiller_id in stopped
+    )
+    gap = f"{site.facts.restart_gap_minutes:g} min apart, " if len(stopped) > 1 else ""
+    return (
+        f"One machine at a time, {gap}none before its least off time ({kept}). Load limit "
+        f"{100 * RESTART_LIMIT_FRACTION:.0f} % for {RESTART_MINUTES} min, then ramp; lower the leaving-water "
+        "set-point in steps from the loop's temperature."
+    )
+
+
+def recharge(site: CalledSite) -> str:
+    """When the tanks may be filled again, how fast, by when, and what if not."""
+    if not site.tanks:
+        return "No tank on this site."
+    starts = [step for step in site.steps if step.action == "recharge_may_start"]
+    by = sorted(step.at for step in site.steps if step.action == "full_by")
+    if starts:
+        caps = ", ".join(f"{plain(step.unit_id)} {site.words.cooling(step.value or 0.0)}" for step in starts)
+        said = f"From {site.words.time(min(step.at for step in starts))}, not before; at most {caps}."
+    else:
+        said = "No recharge in the plan."
+    if by:
+        again = site.words.time(by[-1])
+        whole = not pd.isna(site.window.full_again_at)
+        said += (
+            f" Back at its usual level by {again}." if whole else f" Not full within the plan (to {again})."
+        )
+    if site.has_ice:
+        said += " If late: ring; never lower the low-brine trip to charge faster."
+        return said + " Full is the plant's own signal."
+    return said + " If late: ring before the next day's cooling starts."
+
+
+def cautions(site: CalledSite) -> tuple[str, ...]:
+    """Cautions of every order, and those of ice plants."""
+    above = " to ".join(site.words.temperature(c).split(" ")[0] for c in COLD_BRINE_C)
+    unit = site.words.temperature(0.0).split(" ")[1]
+    ice = (
+        f"From making ice to cooling: hold the bypass until leaving brine is above +{above} {unit} and "
+        "building flow is proven.",
+        "External-melt ice is never charged past full.",
+    )
+    return (
+        "Life-safety, process and critical cooling stay on.",
+        "Machine protections are never bypassed.",
+        "Keep the minimum evaporator flow of what stays on; run no pump against closed valves.",
+        "Keep freeze protection on.",
+        *(ice if site.has_ice else ()),
+        "Lock out before service.",
+        "Refrigerant and glycol as the site's safety plan says.",
+        "Local codes, the maker's instructions and the licensed operator's judgement come first.",
+    )

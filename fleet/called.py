@@ -1,0 +1,104 @@
+"""What a record knows of each called site: its window, frozen rows, steps and words, gathered once.
+
+Owns reading a CallRecord site by site for orders.py and advice.py; it computes nothing.
+"""
+
+from collections.abc import Iterator
+from dataclasses import dataclass
+from datetime import datetime
+from typing import Any
+from zoneinfo import ZoneInfo
+
+import pandas as pd
+
+from fleet.errors import FleetError
+from fleet.records import CallRecord
+from fleet.words import Words, words
+from sites.roster import ICE_KINDS
+
+
+@dataclass(frozen=True)
+class Step:
+    """One row of table call/steps."""
+
+    at: datetime
+    unit_id: str
+    action: str
+    value: float | None
+
+
+@dataclass(frozen=True)
+class CalledSite:
+    """What the record knows of one called site."""
+
+    window: Any
+    facts: Any
+    chillers: tuple[Any, ...]
+    tanks: tuple[Any, ...]
+    steps: tuple[Step, ...]
+    words: Words
+
+    @property
+    def capacity_kwh_th(self) -> float:
+        """All tanks together, full."""
+        return float(sum(tank.capacity_kwh_th for tank in self.tanks))
+
+    @property
+    def has_ice(self) -> bool:
+        """Whether any tank holds ice, so that brine below freezing goes round."""
+        return any(tank.kind in ICE_KINDS for tank in self.tanks)
+
+    def level(self, kwh_th: float) -> str:
+        """An inventory of all tanks together in the site's unit and as a share of their capacity."""
+        return f"{self.words.energy(kwh_th)} ({100.0 * kwh_th / self.capacity_kwh_th:.0f} % full)"
+
+
+def called_sites(record: CallRecord) -> list[CalledSite]:
+    """The called sites with their rows, sorted by site_id."""
+    zone = ZoneInfo(str(_setting(record, "timezone")))
+    facts = {row.site_id: row for row in _rows(record.frozen["sites"])}
+    chillers = _by_site(record.frozen["chillers"].sort_values("loading_order", kind="stable"))
+    tanks = _by_site(record.frozen["tanks"])
+    steps = _by_site(record.frames["steps"])
+    windows = record.frames["windows"].sort_values("site_id", kind="stable")
+    lost = sorted(set(windows["site_id"]) - set(facts))
+    if lost:
+        raise FleetError(
+            f"{record.path}: frozen sites has no row of {', '.join(lost)}; the record is incomplete"
+        )
+    return [
+        CalledSite(
+            window=window,
+            facts=facts[window.site_id],
+            chillers=chillers.get(window.site_id, ()),
+            tanks=tanks.get(window.site_id, ()),
+            steps=tuple(_step(row) for row in steps.get(window.site_id, ())),
+            words=words(_text(facts[window.site_id].site_words), zone, window.window_start.to_pydatetime()),
+        )
+        for window in _rows(windows)
+    ]
+
+
+def _step(row: Any) -> Step:
+    value = None if pd.isna(row.value) else float(row.value)
+    return Step(row.at.to_pydatetime(), str(row.unit_id), str(row.action), value)
+
+
+def _rows(frame: pd.DataFrame) -> Iterator[Any]:
+    """Rows as named tuples; their fields have the columns' types, which no checker can know."""
+    return iter(frame.itertuples(index=False))
+
+
+def _by_site(frame: pd.DataFrame) -> dict[str, tuple[Any, ...]]:
+    return {str(site_id): tuple(_rows(rows)) for site_id, rows in frame.groupby("site_id", sort=False)}
+
+
+def _text(value: Any) -> str | None:
+    return None if value is None or pd.isna(value) else str(value)
+
+
+def _setting(record: CallRecord, name: str) -> Any:
+    found = record.frozen_json.get("settings", {}).get(name)
+    if found is None:
+        raise FleetError(f"{record.path}: frozen/settings.json has no {name}; the record is incomplete")
+    return found
