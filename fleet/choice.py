@@ -13,6 +13,7 @@ whoever asks recomputes balance, limits and cost from the chosen candidates.
 import contextlib
 import os
 import sys
+import warnings
 from collections.abc import Iterator
 from dataclasses import dataclass
 from enum import StrEnum
@@ -296,15 +297,17 @@ class _Model:
         """The solver that comes with PuLP, for where HiGHS is missing; it tells no bound."""
         for variable, value in (known or {}).items():
             variable.setInitialValue(value, check=False)
-        return pulp.PULP_CBC_CMD(
-            mip=self.whole,
-            msg=False,
-            threads=1,
-            timeLimit=max(seconds, 0.1),
-            gapAbs=gap,
-            gapRel=relative_gap,
-            warmStart=known is not None,
-        )
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore", DeprecationWarning)
+            return pulp.PULP_CBC_CMD(
+                mip=self.whole,
+                msg=False,
+                threads=1,
+                timeLimit=max(seconds, 0.1),
+                gapAbs=gap,
+                gapRel=relative_gap,
+                warmStart=known is not None,
+            )
 
     def _start_values(self, start: Ints | None) -> dict[Any, float] | None:
         """Value of every variable of a known answer; None where none is given."""
