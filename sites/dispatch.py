@@ -3,7 +3,7 @@
 import numpy as np
 
 from sites.chiller import part_load_power_kw
-from sites.units import Bools, Floats, Ints
+from sites.units import Bools, Floats, Ints, total
 
 
 def staged_load_kw_th(demand_kw_th: Floats, capacity_kw_th: Floats, stage_up_fraction: Floats) -> Floats:
@@ -17,8 +17,8 @@ def staged_load_kw_th(demand_kw_th: Floats, capacity_kw_th: Floats, stage_up_fra
     demand = demand_kw_th[:, None]
     on: Bools = (capacity_kw_th > 0.0) & (demand > stage_up_fraction[:, None] * before) & (demand > 0.0)
     running = np.where(on, capacity_kw_th, 0.0)
-    total = running.sum(axis=1)
-    share = np.divide(demand_kw_th, total, out=np.zeros_like(total), where=total > 0.0)
+    capacity = total(running)
+    share = np.divide(demand_kw_th, capacity, out=np.zeros_like(capacity), where=capacity > 0.0)
     return running * share[:, None]
 
 

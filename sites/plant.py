@@ -20,7 +20,7 @@ from sites.conditions import Conditions
 from sites.dispatch import plant_power_kw, staged_load_kw_th
 from sites.roster import STRATEGIES
 from sites.rows import Plants
-from sites.units import Bools, Floats
+from sites.units import Bools, Floats, total
 
 START_CHARGE_BELOW = 0.95
 """Usual charging starts below this share of capacity and goes on to STOP_CHARGE_AT (common practice, no source)."""
@@ -95,14 +95,21 @@ def simulate(
     inventory_kwh_th (row, tank) at the start; `usual` None means that these rows are the usual case.
     """
     count = len(rows.site)
+    series = storage.behind(rows)
     state = _State(inventory_kwh_th, np.zeros(count, dtype=np.bool_), np.zeros(count), np.zeros(count))
     for interval in range(here.load_kw_th.shape[1]):
-        moment, state = _advance(rows, here, stages, usual, state, interval)
+        moment, state = _advance(rows, series, here, stages, usual, state, interval)
         yield moment
 
 
 def _advance(
-    rows: Plants, here: Conditions, stages: Stages, usual: Usual | None, state: _State, t: int
+    rows: Plants,
+    series: storage.Behind,
+    here: Conditions,
+    stages: Stages,
+    usual: Usual | None,
+    state: _State,
+    t: int,
 ) -> tuple[Moment, _State]:
     tanks = rows.roster.tanks
     start = state.inventory_kwh_th
@@ -111,16 +118,16 @@ def _advance(
     )
     staged, limit = stages.at(t)
     direct_cap = here.direct_kw_th[rows.site, :, t] * limit
+    ready = total(direct_cap)
     load = here.load_kw_th[rows.site, t]
-    wanted = _wanted_from_tank(rows, here, staged, direct_cap.sum(axis=1), load, start, t)
-    discharge, lmtd, most = storage.discharge(
-        rows, here, staged, direct_cap.sum(axis=1), load, wanted, start, loss
-    )
-    drawn = discharge.sum(axis=1)
-    served = np.minimum(load - drawn, direct_cap.sum(axis=1))
+    wanted = _wanted_from_tank(rows, here, staged, ready, load, start, t)
+    tanks_gave = storage.discharge(rows, series, here.step_h, staged, ready, load, wanted, start, loss)
+    discharge = tanks_gave.drawn_kw_th
+    drawn = total(discharge)
+    served = np.minimum(load - drawn, ready)
     unmet = np.maximum(load - drawn - served, 0.0)
     extra = unmet - usual.unmet_kw_th[rows.site, t] if usual else np.zeros_like(unmet)
-    pull_down = _pull_down(rows, here, state, staged, extra, direct_cap.sum(axis=1) - served)
+    pull_down = _pull_down(rows, here, state, staged, extra, ready - served)
     air, mass, air_mean = comfort.advance(rows.zone, state.air_k, state.mass_k, extra - pull_down)
     charging = _charging(rows, here, staged, usual, state, t)
     asked = _charge_asked(rows, here, usual, load, start, t)
@@ -129,7 +136,7 @@ def _advance(
     )
     machine_kw, power = _power(rows, here, direct + into_tank, ice_mode, charge, discharge, t)
     inventory = start + (charge - discharge - loss) * here.step_h
-    largest = np.where(direct_cap > 0.0, direct_cap, 0.0).max(axis=1, initial=0.0)
+    largest = direct_cap.max(axis=1, initial=0.0)
     moment = Moment(
         interval=t,
         staged=staged,
@@ -144,11 +151,11 @@ def _advance(
         loss_kw_th=loss,
         inventory_start_kwh_th=start,
         inventory_kwh_th=inventory,
-        discharge_limit_kw_th=storage.limit_at_end(rows, inventory, lmtd),
-        lmtd_k=lmtd,
+        discharge_limit_kw_th=storage.limit_at_end(rows, inventory, tanks_gave.knots_kw_th),
+        lmtd_k=tanks_gave.lmtd_k,
         wanted_kw_th=wanted,
-        spare_direct_kw_th=direct_cap.sum(axis=1) - served - pull_down,
-        firm_kw_th=direct_cap.sum(axis=1) - largest + most.sum(axis=1),
+        spare_direct_kw_th=ready - served - pull_down,
+        firm_kw_th=ready - largest + total(tanks_gave.most_kw_th),
         load_kw_th=load,
         unmet_kw_th=unmet,
         pull_down_kw_th=pull_down,
@@ -261,17 +268,17 @@ def _charge_and_load(
     makes_ice = rows.roster.chillers.makes_ice & here.ice_site[rows.site][:, None] & charging[:, None]
     ice_cap = here.ice_kw_th[rows.site, :, t] * limit
     mixed_cap = np.where(makes_ice, ice_cap, direct_cap)
-    can = charging & (mixed_cap.sum(axis=1) >= cooling)
+    can = charging & (total(mixed_cap) >= cooling)
     ice_mode = makes_ice & can[:, None]
     cap = np.where(ice_mode, ice_cap, direct_cap)
     warm_cap = np.where(ice_mode, 0.0, cap)
     ice_site = here.ice_site[rows.site]
-    chilling = np.where(ice_mode, cap, 0.0).sum(axis=1)
-    spare = np.where(ice_site, np.minimum(chilling, cap.sum(axis=1) - cooling), cap.sum(axis=1) - cooling)
+    chilling = total(np.where(ice_mode, cap, 0.0))
+    spare = np.where(ice_site, np.minimum(chilling, total(cap) - cooling), total(cap) - cooling)
     offered = np.minimum(np.maximum(spare, 0.0), asked)
-    charge = storage.charge(rows, here, can, offered, start, loss)
-    filled = charge.sum(axis=1)
-    on_warm = np.minimum(cooling, warm_cap.sum(axis=1))
+    charge = storage.charge(rows, here.step_h, can, offered, start, loss)
+    filled = total(charge)
+    on_warm = np.minimum(cooling, total(warm_cap))
     on_ice = cooling - on_warm
     stage_up = rows.roster.buildings.stage_up_fraction
     into = np.where(ice_site, 0.0, filled)
@@ -298,8 +305,8 @@ def _power(
     available = np.where(ice_mode, here.ice_kw_th[rows.site, :, t], here.direct_kw_th[rows.site, :, t])
     full = np.where(ice_mode, here.ice_full_kw[rows.site, :, t], here.direct_full_kw[rows.site, :, t])
     machine_kw = plant_power_kw(machine_load, available, full, chillers.kind, chillers.dedicated_aux_kw)
-    through_tank = charge.sum(axis=1) + discharge.sum(axis=1)
-    working = (machine_load.sum(axis=1) + through_tank) > 0.0
+    through_tank = total(charge) + total(discharge)
+    working = (total(machine_load) + through_tank) > 0.0
     shared = np.where(working, buildings.shared_aux_kw, 0.0)
     pump = np.where(through_tank > 0.0, buildings.tank_pump_kw, 0.0)
-    return machine_kw, machine_kw.sum(axis=1) + shared + pump
+    return machine_kw, total(machine_kw) + shared + pump

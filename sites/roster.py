@@ -6,7 +6,7 @@ that one site is the same call with n = 1. Reading a fleet folder into these arr
 """
 
 from dataclasses import dataclass, fields
-from typing import Final, Self
+from typing import Any, Final, Self
 
 from sites.units import AnyArray, Bools, Floats, Ints, Strings
 
@@ -17,14 +17,17 @@ STRATEGIES: Final = ("full_storage", "load_levelling", "chiller_priority", "stor
 LAYOUTS: Final = ("parallel", "series")
 
 
+def _taken(value: Any, rows: Ints) -> Any:
+    return value.take(rows) if isinstance(value, Rows) else value[rows]
+
+
 @dataclass(frozen=True)
 class Rows:
     """A frozen set of arrays that share their first axis."""
 
     def take(self, rows: Ints) -> Self:
         """Same arrays gathered along the first axis by `rows`, shape (row,)."""
-        gathered = {field.name: getattr(self, field.name)[rows] for field in fields(self)}
-        return type(self)(**gathered)
+        return type(self)(**{field.name: _taken(getattr(self, field.name), rows) for field in fields(self)})
 
 
 @dataclass(frozen=True)
@@ -132,10 +135,6 @@ class Roster(Rows):
     buildings: Buildings
     chillers: Chillers
     tanks: Tanks
-
-    def take(self, rows: Ints) -> Self:
-        """The roster with one row per entry of `rows`, shape (row,)."""
-        return type(self)(self.buildings.take(rows), self.chillers.take(rows), self.tanks.take(rows))
 
     @property
     def count(self) -> int:

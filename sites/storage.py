@@ -4,19 +4,19 @@ tank.py knows one tank; here a row's tanks act as one, in proportion to what eac
 temperatures by layout and the held-back inventory. Unless said otherwise, arrays are (row, tank).
 """
 
+from dataclasses import dataclass
+
 import numpy as np
 
 from sites import tank
-from sites.conditions import Conditions
 from sites.roster import LAYOUTS
 from sites.rows import Plants
-from sites.units import Bools, Floats
+from sites.units import Bools, Floats, Ints, total
 
 
 def held(rows: Plants, inventory: Floats) -> Floats:
     """Sum (row,) over the tanks that are in service."""
-    total: Floats = np.where(rows.tank_available, inventory, 0.0).sum(axis=1)
-    return total
+    return total(np.where(rows.tank_available, inventory, 0.0))
 
 
 def _inlet_c(rows: Plants, tank_share: Floats) -> Floats:
@@ -28,74 +28,103 @@ def _inlet_c(rows: Plants, tank_share: Floats) -> Floats:
     return buildings.supply_c + rise * np.where(series, np.clip(tank_share, 0.0, 1.0), 1.0)
 
 
-def most_discharge(
-    rows: Plants, here: Conditions, start: Floats, loss: Floats, share: Floats
-) -> tuple[Floats, Floats]:
-    """Greatest discharge of each tank (row, tank) and the LMTD (row, tank) at which its limit was taken."""
+@dataclass(frozen=True)
+class Discharged:
+    """What the tanks gave in one interval, (row, tank), and the curve (row, tank, knot) that limited it."""
+
+    drawn_kw_th: Floats
+    most_kw_th: Floats
+    """What could have been had"""
+    lmtd_k: Floats
+    knots_kw_th: Floats
+
+
+def _knots(rows: Plants, share: Floats) -> tuple[Floats, Floats]:
+    """Discharge curve (row, tank, knot) at the inlet that the tanks' `share` (row,) of the load makes, and the
+    LMTD (row, tank) it was taken at."""
     tanks = rows.roster.tanks
-    lmtd = tank.lmtd_k(_inlet_c(rows, share), rows.roster.buildings.supply_c)
-    lmtd_all: Floats = np.broadcast_to(np.asarray(lmtd)[:, None], start.shape)
+    lmtd = np.asarray(tank.lmtd_k(_inlet_c(rows, share), rows.roster.buildings.supply_c))[:, None]
+    lmtd_all: Floats = np.repeat(lmtd, tanks.capacity_kwh_th.shape[1], axis=1)
     knots = tank.knots_kw_th(rows.discharge, tanks.capacity_kwh_th, tanks.discharge_limit_kw_th, lmtd_all)
-    most = tank.most_discharge_kw_th(start, loss, tanks.capacity_kwh_th, knots, here.step_h)
-    return np.where(rows.tank_available, most, 0.0), lmtd_all
+    return knots, lmtd_all
+
+
+def _most(rows: Plants, step_h: float, start: Floats, loss: Floats, knots: Floats) -> Floats:
+    most = tank.most_discharge_kw_th(start, loss, rows.roster.tanks.capacity_kwh_th, knots, step_h)
+    return np.where(rows.tank_available, most, 0.0)
+
+
+@dataclass(frozen=True)
+class Behind:
+    """The rows whose tank stands in series behind the machines: their indices, and themselves gathered."""
+
+    index: Ints
+    rows: Plants
+
+
+def behind(rows: Plants) -> Behind:
+    """Gather the rows in series once, for all intervals."""
+    index = np.flatnonzero(rows.roster.buildings.layout == LAYOUTS.index("series"))
+    return Behind(index, rows.take(index))
 
 
 def discharge(
     rows: Plants,
-    here: Conditions,
+    series: Behind,
+    step_h: float,
     staged: Bools,
     direct_cap: Floats,
     load: Floats,
     wanted: Floats,
     start: Floats,
     loss: Floats,
-) -> tuple[Floats, Floats, Floats]:
-    """Discharge (row, tank), its LMTD (row, tank), and the most that could have been had (row, tank).
+) -> Discharged:
+    """What the tanks give of what is `wanted` (row,) beside machines that can do `direct_cap` (row,).
 
-    Two passes: where the first limit leaves more load to machines upstream, the tank's inlet is colder and
-    its limit lower.
+    Two passes in series: where the first limit leaves more load to machines upstream, the tank's inlet is
+    colder and its limit lower. In parallel the inlet is the loop's return and one pass is exact.
     """
-    total = np.maximum(load, 1e-9)
-    most, lmtd = most_discharge(rows, here, start, loss, wanted / total)
-    drawn = np.minimum(wanted, _above_reserve(rows, here, staged, start, loss, most))
-    rest = np.minimum(load - drawn, direct_cap)
-    most, lmtd = most_discharge(rows, here, start, loss, 1.0 - rest / total)
-    usable = _above_reserve(rows, here, staged, start, loss, most)
-    drawn = np.minimum(drawn, usable)
-    sum_most = most.sum(axis=1)
-    part = np.divide(drawn, sum_most, out=np.zeros_like(drawn), where=sum_most > 0.0)
-    scale = np.divide(usable, sum_most, out=np.zeros_like(drawn), where=sum_most > 0.0)
-    return most * part[:, None], lmtd, most * scale[:, None]
+    share_of = 1.0 / np.maximum(load, 1e-9)
+    knots, lmtd = _knots(rows, wanted * share_of)
+    most = _most(rows, step_h, start, loss, knots)
+    usable = _above_reserve(rows, step_h, staged, start, loss, most)
+    drawn = np.minimum(wanted, usable)
+    pick = series.index
+    if len(pick):
+        rest = np.minimum(load - drawn, direct_cap)[pick]
+        knots[pick], lmtd[pick] = _knots(series.rows, 1.0 - rest * share_of[pick])
+        most[pick] = _most(series.rows, step_h, start[pick], loss[pick], knots[pick])
+        part = (start[pick], loss[pick], most[pick])
+        usable[pick] = _above_reserve(series.rows, step_h, staged[pick], *part)
+        drawn = np.minimum(drawn, usable)
+    sum_most = total(most)
+    given = np.divide(drawn, sum_most, out=np.zeros_like(drawn), where=sum_most > 0.0)
+    could = np.divide(usable, sum_most, out=np.zeros_like(drawn), where=sum_most > 0.0)
+    return Discharged(most * given[:, None], most * could[:, None], lmtd, knots)
 
 
 def _above_reserve(
-    rows: Plants, here: Conditions, staged: Bools, start: Floats, loss: Floats, most: Floats
+    rows: Plants, step_h: float, staged: Bools, start: Floats, loss: Floats, most: Floats
 ) -> Floats:
     """Discharge (row,) that the tanks' limits allow and, in a stage, that leaves the held-back inventory."""
-    free = np.maximum((held(rows, start) - rows.reserve_kwh_th) / here.step_h - loss.sum(axis=1), 0.0)
-    total: Floats = most.sum(axis=1)
-    return np.where(staged, np.minimum(total, free), total)
+    free = np.maximum((held(rows, start) - rows.reserve_kwh_th) / step_h - total(loss), 0.0)
+    every = total(most)
+    return np.where(staged, np.minimum(every, free), every)
 
 
-def limit_at_end(rows: Plants, inventory: Floats, lmtd: Floats) -> Floats:
+def limit_at_end(rows: Plants, inventory: Floats, knots: Floats) -> Floats:
     """Discharge limit of each tank (row, tank) at end-of-interval inventory; 0 for one out of service."""
-    tanks = rows.roster.tanks
-    knots = tank.knots_kw_th(rows.discharge, tanks.capacity_kwh_th, tanks.discharge_limit_kw_th, lmtd)
-    limit = tank.limit_kw_th(inventory, tanks.capacity_kwh_th, knots)
+    limit = tank.limit_kw_th(inventory, rows.roster.tanks.capacity_kwh_th, knots)
     return np.where(rows.tank_available, limit, 0.0)
 
 
-def charge(
-    rows: Plants, here: Conditions, can: Bools, offered: Floats, start: Floats, loss: Floats
-) -> Floats:
+def charge(rows: Plants, step_h: float, can: Bools, offered: Floats, start: Floats, loss: Floats) -> Floats:
     """Charge of each tank (row, tank) from `offered` machine cooling (row,), where the row `can` charge."""
-    tanks = rows.roster.tanks
-    lmtd = np.broadcast_to(here.charge_lmtd_k[rows.site][:, None], start.shape)
-    knots = tank.knots_kw_th(rows.charge, tanks.capacity_kwh_th, tanks.charge_limit_kw_th, lmtd)
-    most = tank.most_charge_kw_th(start, loss, tanks.capacity_kwh_th, knots, here.step_h)
+    capacity = rows.roster.tanks.capacity_kwh_th
+    most = tank.most_charge_kw_th(start, loss, capacity, rows.charge_knots_kw_th, step_h)
     most = np.where(rows.tank_available & can[:, None], most, 0.0)
-    sum_most = most.sum(axis=1)
-    total = np.minimum(offered, sum_most)
-    part = np.divide(total, sum_most, out=np.zeros_like(total), where=sum_most > 0.0)
+    sum_most = total(most)
+    taken = np.minimum(offered, sum_most)
+    part = np.divide(taken, sum_most, out=np.zeros_like(taken), where=sum_most > 0.0)
     result: Floats = most * part[:, None]
     return result

@@ -14,7 +14,7 @@ from sites.course import Course
 from sites.plant import Moment
 from sites.quotes import LIMITED_BY
 from sites.rows import Plants
-from sites.units import Bools, Floats, Ints
+from sites.units import Bools, Floats, Ints, total
 
 UNMET_TOLERANCE_KW_TH = 1e-6
 NEAR_EMPTY_FRACTION = 0.02
@@ -95,9 +95,9 @@ def _add(
     sums: _Sums, moment: Moment, rows: Plants, here: Conditions, usual: Course, start: Ints, end: Ints
 ) -> None:
     t = moment.interval
-    capacity = rows.roster.tanks.capacity_kwh_th.sum(axis=1)
-    held = moment.inventory_kwh_th.sum(axis=1)
-    usual_held = usual.inventory_kwh_th[rows.site, :, t].sum(axis=1)
+    capacity = total(rows.roster.tanks.capacity_kwh_th)
+    held = total(moment.inventory_kwh_th)
+    usual_held = total(usual.inventory_kwh_th[rows.site, :, t])
     extra = moment.unmet_kw_th - usual.unmet_kw_th[rows.site, t]
     inside = (start <= t) & (t < end)
     sums.power_kw[:, t] = moment.power_kw
@@ -107,14 +107,15 @@ def _add(
     critical = np.minimum(rows.roster.buildings.critical_kw_th, moment.load_kw_th)
     lack = np.maximum(critical - moment.firm_kw_th, critical - (moment.load_kw_th - moment.unmet_kw_th))
     np.maximum(sums.critical_short_kw_th, np.where(inside, lack, 0.0), out=sums.critical_short_kw_th)
-    short = inside & (moment.wanted_kw_th > moment.discharge_kw_th.sum(axis=1) + UNMET_TOLERANCE_KW_TH)
+    drawn = total(moment.discharge_kw_th)
+    short = inside & (capacity > 0.0) & (moment.wanted_kw_th > drawn + UNMET_TOLERANCE_KW_TH)
     reserve = rows.reserve_kwh_th
     at_reserve = (reserve > 0.0) & (held <= reserve + NEAR_EMPTY_FRACTION * capacity)
     empty = held <= NEAR_EMPTY_FRACTION * capacity
     sums.reserve_bound |= short & at_reserve
     sums.stock_bound |= short & empty & ~at_reserve
     sums.rate_bound |= short & ~empty & ~at_reserve
-    sums.at_start = np.where(t == start, moment.inventory_start_kwh_th.sum(axis=1), sums.at_start)
+    sums.at_start = np.where(t == start, total(moment.inventory_start_kwh_th), sums.at_start)
     sums.at_end = np.where(t == end - 1, held, sums.at_end)
     back = (t >= end) & (sums.full_again < 0) & (held >= usual_held - FULL_AGAIN_FRACTION * capacity)
     sums.full_again[back] = t

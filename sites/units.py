@@ -57,3 +57,9 @@ def c_to_f(celsius: FloatLike) -> FloatLike:
 def f_to_c(fahrenheit: FloatLike) -> FloatLike:
     """Degrees Celsius from degrees Fahrenheit; any shape."""
     return (fahrenheit - 32.0) / 1.8
+
+
+def total(per_unit: Floats) -> Floats:
+    """Sum over the last axis, (..., unit) -> (...): machines or tanks of a row (einsum, fast on short axes)."""
+    summed: Floats = np.einsum("...u->...", per_unit)
+    return summed
