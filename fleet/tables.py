@@ -18,10 +18,12 @@ from typing import Any, Final
 import numpy as np
 import pandas as pd
 import pyarrow as pa
+import pyarrow.compute as pc
 import pyarrow.parquet as pq
 
 from fleet.errors import FleetError
 from fleet.schema import SCHEMA_VERSION, Column, Table
+from sites.units import AnyArray
 
 MONEY_DIGITS: Final = 18
 MONEY_PLACES: Final = 4
@@ -90,24 +92,27 @@ def read_parquet(path: Path, table: Table) -> pd.DataFrame:
     return frame[list(table.names)]
 
 
-def read_raw(path: Path) -> pd.DataFrame:
+def read_raw(path: Path, span: tuple[pd.Timestamp, pd.Timestamp] | None = None) -> pd.DataFrame:
     """An input table as it stands: CSV as text ("" = empty), Parquet (a file or a folder) in its own types.
 
     Headings lose spaces at their ends. CSV rows keep their file line number as index (heading = 1); Parquet
-    rows count from 1. Blank CSV lines are left out. Raises FleetError where the file cannot be read.
+    rows count from 1. Blank CSV lines are left out. With `span`, Parquet rows whose interval_start carries a zone
+    and lies outside [from, to) are left out too. Raises FleetError where the file cannot be read.
     """
     if path.is_dir():
         parts = sorted(path.glob("*.parquet"))
         if not parts:
             raise FleetError(f"{path.name}: the folder holds no .parquet file; put some there or remove it")
-        frame = pd.concat([_plain(part) for part in parts], ignore_index=True)
     elif path.suffix == ".parquet":
-        frame = _plain(path)
+        parts = [path]
     else:
         return _read_csv(path)
-    frame.index = pd.RangeIndex(1, len(frame) + 1)
-    frame.columns = pd.Index([str(name).strip() for name in frame.columns])
-    return frame
+    frames, before = [], 1
+    for part in parts:
+        frame, count = _plain(part, span, before)
+        frames.append(frame)
+        before += count
+    return pd.concat(frames)
 
 
 def empty_frame(table: Table) -> pd.DataFrame:
@@ -225,9 +230,27 @@ def _read(path: Path) -> Any:
         ) from error
 
 
-def _plain(path: Path) -> pd.DataFrame:
-    frame = _read(path).to_pandas()
-    return pd.DataFrame(frame)
+def _plain(
+    path: Path, span: tuple[pd.Timestamp, pd.Timestamp] | None, first: int
+) -> tuple[pd.DataFrame, int]:
+    """Rows of a Parquet file (of a span), numbered from `first`, and how many the file holds."""
+    found = _read(path)
+    found = found.rename_columns([name.strip() for name in found.column_names])
+    rows = np.arange(first, first + found.num_rows)
+    times = found["interval_start"] if span and "interval_start" in found.column_names else None
+    if span and times is not None and pa.types.is_timestamp(times.type) and times.type.tz:
+        low, high = (pa.scalar(edge.to_pydatetime(), times.type) for edge in span)
+        within = pc.and_(pc.greater_equal(times, low), pc.less(times, high))
+        kept = np.flatnonzero(pc.fill_null(within, True).to_numpy())
+        return _numbered(found.take(kept), rows[kept]), found.num_rows
+    return _numbered(found, rows), found.num_rows
+
+
+def _numbered(found: Any, rows: AnyArray) -> pd.DataFrame:
+    """An arrow table as a frame without its saved index; `rows` becomes the index."""
+    frame = pd.DataFrame(found.replace_schema_metadata(None).to_pandas())
+    frame.index = pd.Index(rows)
+    return frame
 
 
 def _read_csv(path: Path) -> pd.DataFrame:

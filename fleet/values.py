@@ -194,7 +194,8 @@ def _times(
     why = pd.Series(found.fault, index=given.index)
     if column.name == "interval_start":
         astray = off_grid(found.utc, reading.interval_minutes)
-        why = why.mask(astray, f"a time on the fleet's {reading.interval_minutes}-minute grid")
+        grid = f"a time on the fleet's {reading.interval_minutes}-minute grid"
+        why = pd.Series(np.where(astray, grid, why), index=given.index, dtype=object)
     bad = (why != "").to_numpy()
     if found.repeated_hour:
         notes.append(
