@@ -6,12 +6,12 @@ delivered kW and money to settle.py. sign is +1 for shed, -1 for absorb: "highes
 """
 
 from dataclasses import dataclass
-from typing import Final
+from typing import Any, Final
 
 import numpy as np
 
 from fleet.rules import SettlementRule
-from sites.units import AnyArray, Bools, Floats, Ints, Strings
+from sites.units import Bools, Floats, Ints, Strings
 
 REASONS: Final = (
     "used",
@@ -208,7 +208,7 @@ def _first_reasons(day_kw: Floats, days: DayFacts, rule: SettlementRule, event: 
     holiday = days.holiday & (rule.holidays == "excluded" and rule.day_classes == "weekday_weekend")
     age = np.arange(1, day_kw.shape[1] + 1)
     shape = day_kw.shape[:2]
-    tests: list[tuple[AnyArray, str]] = [
+    tests: list[tuple[Any, str]] = [
         (age > rule.look_back_days, "beyond_look_back"),
         (other, "other_day_type"),
         (holiday, "holiday"),

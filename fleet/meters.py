@@ -353,3 +353,15 @@ def _like_day_mean(read_kw: Floats, day_class: Ints, event_day: Bools) -> Floats
             shifted = np.concatenate([read_kw[None, :, day], recent[:-1]])
             recent = np.where(new, shifted, recent)
     return mean
+
+
+def spikes(day_kw: Floats) -> Bools:
+    """Rows (row, slot) of which (highest - third highest) / third highest is above 1.80: flagged, never edited.
+
+    From memory of utility validation rules; a chiller's restart or ice charging can trip it.
+    """
+    ranked = np.sort(np.where(np.isnan(day_kw), -np.inf, day_kw), axis=1)
+    highest, third = ranked[:, -1], ranked[:, -3]
+    usable = third > 0.0
+    found: Bools = usable & (np.where(usable, highest, 0.0) - np.where(usable, third, 0.0) > 1.8 * third)
+    return found

@@ -1,0 +1,232 @@
+"""The tables of a settlement revision, built from arrays; nothing is computed here but sums over sites.
+
+Owns the shape of the six tables (see the table of columns, folder settlement) and the postings between revisions.
+"""
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from decimal import Decimal
+from typing import Any
+
+import numpy as np
+import pandas as pd
+
+from fleet.baseline import METHODS, REASONS, USED, Baseline
+from fleet.callfacts import Plan, microseconds
+from fleet.meters import QUALITIES, LocalGrid
+from fleet.money import Lines
+from sites.units import AnyArray, Bools, Floats, Ints, Strings, Times
+
+STATES = ("final", "provisional", "no_baseline", "meter_missing", "excused")
+
+
+@dataclass(frozen=True)
+class SiteResult:
+    """What each site delivered and earns; arrays over (site,) or (site, shown interval)."""
+
+    metered_kw: Floats
+    quality: Ints
+    delivered_kw: Floats
+    in_event: Bools
+    """(interval,)"""
+    in_window: Bools
+    """(site, interval)"""
+    committed_kwh: Floats
+    delivered_kwh: Floats
+    factor: Floats
+    state: Strings
+    money: Lines
+
+
+@dataclass(frozen=True)
+class Trace:
+    """The days that were considered: readings by local day, modes, and what the event day showed."""
+
+    grid: LocalGrid
+    event_day: int
+    kw: Floats
+    """(site, day, slot)"""
+    quality: Ints
+    modes: Strings
+    """(site, day)"""
+    window_kw: Floats
+    """(site,) the event day's mean over the adjustment window; NaN where there is none"""
+
+
+@dataclass(frozen=True)
+class Settlement:
+    """One revision: six tables in the columns of the settlement folder, a summary and notes in words."""
+
+    intervals: pd.DataFrame
+    days: pd.DataFrame
+    day_intervals: pd.DataFrame
+    sites: pd.DataFrame
+    fleet: pd.DataFrame
+    postings: pd.DataFrame
+    summary: Mapping[str, object]
+    notes: tuple[str, ...]
+
+    @property
+    def frames(self) -> dict[str, pd.DataFrame]:
+        """The tables by name, as a record writes them."""
+        names = ("intervals", "days", "day_intervals", "sites", "fleet", "postings")
+        return {name: getattr(self, name) for name in names}
+
+
+def interval_table(
+    event_id: str, revision: int, plan: Plan, found: Baseline, result: SiteResult
+) -> pd.DataFrame:
+    """Event and recovery of every called site, sorted by site and time."""
+    shape = result.metered_kw.shape
+    return pd.DataFrame(
+        {
+            **_head(event_id, revision, np.repeat(_objects(plan.site_ids), shape[1])),
+            "stream": np.repeat(_streams(plan), shape[1]),
+            "interval_start": _utc(np.tile(plan.clock.starts, shape[0])),
+            "in_event": np.tile(result.in_event, shape[0]),
+            "in_window": result.in_window.ravel(),
+            "baseline_kw": found.baseline_kw.ravel(),
+            "adjusted_baseline_kw": found.adjusted_kw.ravel(),
+            "metered_kw": result.metered_kw.ravel(),
+            "delivered_kw": result.delivered_kw.ravel(),
+            "committed_kw": plan.committed_kw.ravel(),
+            "quality": _objects(QUALITIES)[result.quality.ravel()],
+        }
+    )
+
+
+def day_table(event_id: str, revision: int, plan: Plan, found: Baseline, trace: Trace) -> pd.DataFrame:
+    """Every day considered, oldest first, and the event's own day; see baseline.REASONS."""
+    site, day = np.nonzero(_considered(plan, trace))
+    age = trace.event_day - day
+    own = age == 0
+    at = np.maximum(age - 1, 0)
+    reason = np.where(own, REASONS.index("event_day"), found.reason[site, at])
+    return pd.DataFrame(
+        {
+            **_head(event_id, revision, _objects(plan.site_ids)[site]),
+            "day": trace.grid.days[day].astype("datetime64[s]"),
+            "used": reason == USED,
+            "reason": _objects(REASONS)[reason],
+            "mode": trace.modes[site, day],
+            "rank_value": np.where(own, np.nan, found.rank_value[site, at]),
+            "window_base_kw": np.where(own, trace.window_kw[site], found.day_window_kw[site, at]),
+        }
+    )
+
+
+def day_interval_table(
+    event_id: str, revision: int, plan: Plan, found: Baseline, trace: Trace
+) -> pd.DataFrame:
+    """Slot by slot the days whose readings were looked at, and the event's day; slots that exist that day."""
+    unread = [REASONS.index(name) for name in ("other_day_type", "holiday")]
+    looked = _considered(plan, trace)
+    looked[:, : trace.event_day] &= ~np.isin(found.reason, unread)[:, ::-1]
+    site, day, slot = np.nonzero(looked[:, :, None] & (trace.grid.times > 0)[None])
+    return pd.DataFrame(
+        {
+            **_head(event_id, revision, _objects(plan.site_ids)[site]),
+            "day": trace.grid.days[day].astype("datetime64[s]"),
+            "slot": slot,
+            "kw": trace.kw[site, day, slot],
+            "quality": _objects(QUALITIES)[trace.quality[site, day, slot]],
+        }
+    )
+
+
+def _considered(plan: Plan, trace: Trace) -> Bools:
+    """(site, day): within the rule's look-back, or the event's own day."""
+    back = np.array([0 if rule.kind == "before_after" else rule.look_back_days for rule in plan.rules])
+    age = trace.event_day - np.arange(len(trace.grid.days))
+    considered: Bools = (age >= 0) & (age <= back[:, None])
+    return considered
+
+
+def site_table(event_id: str, revision: int, plan: Plan, found: Baseline, result: SiteResult) -> pd.DataFrame:
+    """One row per called site, over its own window."""
+    money = result.money
+    return pd.DataFrame(
+        {
+            **_head(event_id, revision, _objects(plan.site_ids)),
+            "stream": _streams(plan),
+            "rule": _objects([rule.name for rule in plan.rules]),
+            "method": _objects(METHODS)[found.method],
+            "state": result.state,
+            "committed_kwh": result.committed_kwh,
+            "delivered_kwh": result.delivered_kwh,
+            "performance_factor": result.factor,
+            "adjustment": found.adjustment,
+            "adjustment_raw": found.adjustment_raw,
+            "adjustment_kind": found.kind,
+            "capacity_payment": money.capacity_payment,
+            "energy_payment": money.energy_payment,
+            "penalty": money.penalty,
+            "total": money.total,
+        }
+    )
+
+
+def fleet_table(
+    event_id: str, revision: int, plan: Plan, request: pd.DataFrame, result: SiteResult
+) -> pd.DataFrame:
+    """Sums over sites at the requested node in every event interval; a site outside its window nets in."""
+    asked = request.assign(_at=microseconds(request["interval_start"])).sort_values("_at")
+    at = result.in_event
+    delivered = result.delivered_kw[:, at]
+    known = ~np.isnan(delivered)
+    factor = plan.delivery_factor[:, None]
+    return pd.DataFrame(
+        {
+            "event_id": event_id,
+            "revision": revision,
+            "interval_start": _utc(asked["_at"].to_numpy("datetime64[us]")),
+            "requested_kw": asked["requested_kw"].to_numpy(dtype=np.float64),
+            "expected_kw": asked["expected_kw"].to_numpy(dtype=np.float64),
+            "committed_kw": (factor * plan.committed_kw[:, at]).sum(axis=0),
+            "delivered_kw": (factor * np.where(known, delivered, 0.0)).sum(axis=0),
+            "sites_settled": known.sum(axis=0),
+            "sites_missing": (~known).sum(axis=0),
+        }
+    )
+
+
+def posting_table(
+    event_id: str, revision: int, sites: pd.DataFrame, before: pd.DataFrame | None
+) -> pd.DataFrame:
+    """What this revision posts: its totals less those of the revision before, also of sites no longer called."""
+    total = pd.Series(sites["total"].to_numpy(dtype=object), index=sites["site_id"].astype(str))
+    if before is None:
+        earlier = pd.Series(dtype=object)
+        from_revision = pd.array([pd.NA] * len(total), dtype="Int64")
+        ids = total.index
+    else:
+        earlier = pd.Series(before["total"].to_numpy(dtype=object), index=before["site_id"].astype(str))
+        ids = total.index.union(earlier.index)
+        from_revision = pd.array([int(before["revision"].max())] * len(ids), dtype="Int64")
+    zero: Any = Decimal(0)
+    new, old = (part.reindex(ids, fill_value=zero).to_numpy(dtype=object) for part in (total, earlier))
+    return pd.DataFrame(
+        {
+            "event_id": event_id,
+            "site_id": ids.to_numpy(dtype=object),
+            "from_revision": from_revision,
+            "to_revision": revision,
+            "amount": new - old,
+        }
+    )
+
+
+def _head(event_id: str, revision: int, site_id: AnyArray) -> dict[str, object]:
+    return {"event_id": event_id, "revision": revision, "site_id": site_id}
+
+
+def _streams(plan: Plan) -> Strings:
+    return _objects([rule.stream for rule in plan.rules])
+
+
+def _objects(names: object) -> Strings:
+    return np.array(names, dtype=object)
+
+
+def _utc(times: Times) -> pd.DatetimeIndex:
+    return pd.DatetimeIndex(times).as_unit("us").tz_localize("UTC")
