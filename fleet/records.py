@@ -25,6 +25,7 @@ from fleet.tables import empty_frame, read_parquet, write_parquet
 __all__ = [
     "CallRecord",
     "SettlementRecord",
+    "check_free",
     "event_folder",
     "events",
     "lock",
@@ -96,11 +97,7 @@ def write_call(
     _check_tables("call", frames)
     final = fleet_path / EVENTS / event_id
     with lock(fleet_path):
-        if final.exists():
-            raise FleetError(
-                f"{final}: there is an event {event_id} already, and an event is never written over; "
-                "choose another id with --event"
-            )
+        check_free(fleet_path, event_id)
         with whole(final) as making:
             call = making / "call-001"
             (call / "frozen").mkdir(parents=True)
@@ -230,6 +227,17 @@ def event_folder(fleet_path: Path, event_id: str) -> Path:
         )
     near = difflib.get_close_matches(event_id, known, n=3, cutoff=0.4) or known[-3:]
     raise FleetError(f"{fleet_path}: no event {event_id!r}; nearest of {len(known)}: {', '.join(near)}")
+
+
+def check_free(fleet_path: Path, event_id: str) -> None:
+    """FleetError where the id cannot name an event's folder, or an event of that id exists."""
+    _check_event_id(event_id)
+    final = fleet_path / EVENTS / event_id
+    if final.exists():
+        raise FleetError(
+            f"{final}: there is an event {event_id} already, and an event is never written over; "
+            "choose another id with --event"
+        )
 
 
 def next_revision(fleet_path: Path, event_id: str, kind: str) -> int:

@@ -1,0 +1,165 @@
+"""From a fleet folder to quotes: reads what a request needs and quotes every site under it.
+
+Owns the order of the steps and the horizon. Every figure comes from the rooms below; what is done with the
+quotes (show them, call on them) is quoting's and calling's business.
+"""
+
+from collections.abc import Callable
+from dataclasses import dataclass
+from pathlib import Path
+
+import numpy as np
+import pandas as pd
+
+from fleet import feeders as network
+from fleet import limits, records
+from fleet.assemble import Fleet, assemble
+from fleet.errors import FleetError
+from fleet.folder import FleetFolder, open_folder
+from fleet.wall_time import local_day, local_day_start, on_grid, up_to_grid, utc_timestamp
+from sites.blocks import Terms
+from sites.candidate import Stages
+from sites.direction import Direction
+from sites.quote import Ground, Quoted, ground, quote
+from sites.units import Bools, Floats
+
+Progress = Callable[[str], None]
+
+
+@dataclass(frozen=True)
+class Ask:
+    """When and where something is asked of a fleet; times UTC, datetime64[us]."""
+
+    node_id: str | None
+    """None: the whole fleet"""
+    direction: Direction
+    at: np.datetime64
+    event_from: np.datetime64
+    event_to: np.datetime64
+
+
+@dataclass(frozen=True)
+class Survey:
+    """What every site of a fleet can give to an ask, with all that it rests on."""
+
+    folder: FleetFolder
+    fleet: Fleet
+    ask: Ask
+    node_id: str
+    feeders: network.Feeders
+    headroom: network.Headroom
+    terms: Terms
+    eligible: limits.Eligible
+    past: pd.DataFrame
+    quoted: Quoted
+
+    @property
+    def under_node(self) -> Bools:
+        """(site,) below the requested node."""
+        return self.feeders.sites_below(self.node_id)
+
+    @property
+    def rated_kw(self) -> float:
+        """Rated electric total of the chillers under the node."""
+        chillers = self.fleet.roster.chillers
+        kw = np.divide(
+            chillers.capacity_kw_th,
+            chillers.rated_cop,
+            out=np.zeros_like(chillers.rated_cop),
+            where=chillers.exists,
+        )
+        return float(kw[self.under_node].sum())
+
+
+def survey(path: Path, ask: Ask, progress: Progress = lambda text: None) -> Survey:
+    """Read a fleet folder and quote every site for an ask.
+
+    Raises Refused and FleetError for anything wrong with folder or ask.
+    """
+    progress("reading the fleet")
+    folder = open_folder(path, without=("meters",))
+    settings = folder.settings
+    for time in (ask.event_from, ask.event_to):
+        on_grid(time, settings.interval_minutes, settings.timezone)
+    _check_order(ask)
+    start = up_to_grid(ask.at, settings.interval_minutes)
+    last_day = local_day(ask.event_to - np.timedelta64(1, "us"), settings.timezone)
+    end = local_day_start(last_day + np.timedelta64(2, "D"), settings.timezone)
+    fleet = assemble(folder, start, end)
+    buildings = fleet.roster.buildings
+    tree = network.feeders(
+        folder.frames["nodes"],
+        folder.frames["node_loads"],
+        buildings.node_id,
+        fleet.outlook.clock,
+        buildings.site_id,
+    )
+    node_id = tree.root if ask.node_id is None else ask.node_id
+    tree.index(node_id)
+    past = records.events(path)
+    resolved = fleet.resolved["sites"]
+    event = (utc_timestamp(ask.event_from), utc_timestamp(ask.event_to))
+    eligible = limits.eligible_sites(resolved, past, utc_timestamp(ask.at), event, settings.timezone)
+    clock = fleet.outlook.clock
+    terms = limits.terms(
+        resolved, eligible, clock, ask.at, (clock.index(ask.event_from), clock.index(ask.event_to))
+    )
+    progress(f"quoting {fleet.roster.count} sites")
+    base = ground(fleet.roster, fleet.outlook, fleet.standing, _in_force(path, fleet, past, start))
+    quoted = quote(base, terms, ask.direction)
+    headroom = network.headroom_kw(tree, _building_kw(base))
+    return Survey(folder, fleet, ask, node_id, tree, headroom, terms, eligible, past, quoted)
+
+
+def _building_kw(base: Ground) -> Floats:
+    building: Floats = base.usual.power_kw + base.outlook.rest_kw
+    return building
+
+
+def _check_order(ask: Ask) -> None:
+    if ask.event_to <= ask.event_from:
+        raise FleetError(
+            "--to is not after --from: an event ends after it starts; exchange them or move the end"
+        )
+    if ask.event_from < ask.at:
+        raise FleetError(
+            "--from lies before --at: an event cannot start before it is called; move --from, "
+            "or give --at the time of the call"
+        )
+
+
+def _in_force(path: Path, fleet: Fleet, past: pd.DataFrame, start: np.datetime64) -> Stages | None:
+    """Stages (site, call) of other calls whose windows reach into the horizon: part of the usual case."""
+    real = past[past["purpose"].isin(limits.COUNTED)]
+    running = real[real["window_end"] > utc_timestamp(start)]
+    calls = list(dict.fromkeys(running["event_id"]))
+    if not calls:
+        return None
+    parts = [_stages_of(path, event_id, fleet) for event_id in calls]
+    return Stages(*(np.concatenate(column, axis=1) for column in zip(*parts, strict=True)))
+
+
+def _stages_of(path: Path, event_id: str, fleet: Fleet) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """One stage per site from a call's record: its window and each machine's load limit within it."""
+    record = records.read_call(path, event_id, only=("windows", "machines"))
+    windows = record.frames["windows"].set_index("site_id")
+    machines = record.frames["machines"]
+    low = machines.groupby(["site_id", "chiller_id"])["load_limit_fraction"].min()
+    roster, clock = fleet.roster, fleet.outlook.clock
+    site_id = pd.Index(roster.buildings.site_id)
+    edges = [_clock_index(windows[name].reindex(site_id), clock.start, clock.step) for name in _EDGES]
+    keys = pd.MultiIndex.from_arrays(
+        [np.repeat(site_id, roster.chillers.exists.shape[1]), roster.chillers.chiller_id.ravel()]
+    )
+    limit = low.reindex(keys).fillna(1.0).to_numpy().reshape(roster.chillers.exists.shape)
+    return edges[0][:, None], edges[1][:, None], limit[:, None, :]
+
+
+_EDGES = ("window_start", "window_end")
+
+
+def _clock_index(times: pd.Series, start: np.datetime64, step: np.timedelta64) -> np.ndarray:
+    """Clock index of each time, 0 where there is none or it lies before the horizon."""
+    offset = (times.dt.tz_convert("UTC").dt.tz_localize(None) - pd.Timestamp(start)) / pd.Timedelta(step)
+    index: np.ndarray = np.maximum(offset.fillna(0.0).to_numpy(), 0.0).astype(np.int64)
+    return index
