@@ -1,0 +1,94 @@
+"""The invented fleet's fixed calendar: zone, history, event day, call time, holidays.
+
+Owns the dates and the passage between local wall time and UTC. Everything else asks here.
+"""
+
+from dataclasses import dataclass
+from typing import Final
+
+import numpy as np
+import pandas as pd
+
+from sites.units import Bools, Floats, Ints, Times
+
+ZONE: Final = "Europe/Athens"
+HISTORY_FROM: Final = "2026-02-12"
+EVENT_DAY: Final = "2026-07-15"
+"""A hot Wednesday."""
+CALL_HOUR: Final = 13
+EVENT_FROM_HOUR: Final = 16
+EVENT_TO_HOUR: Final = 19
+STEP_MINUTES: Final = 15
+CYCLE_START: Final = "2026-07-01"
+CYCLE_END: Final = "2026-07-31"
+HOLIDAYS: Final = (
+    ("2026-02-23", "Lanterns' Day"),
+    ("2026-03-25", "Founders' Day"),
+    ("2026-04-13", "Orchard Monday"),
+    ("2026-05-01", "First of May"),
+    ("2026-06-01", "Harbour Day"),
+    ("2026-08-15", "Midsummer Rest"),
+)
+TANK_OUT_FROM: Final = "2026-07-06"
+TANK_OUT_DAYS: Final = 7
+
+
+@dataclass(frozen=True)
+class Local:
+    """Local wall time of instants, each array of the instants' shape."""
+
+    hour: Floats
+    """0 to under 24, with fractions"""
+    weekday: Ints
+    """0 = Monday"""
+    day: Ints
+    """days since 1970-01-01"""
+    holiday: Bools
+
+    @property
+    def resting(self) -> Bools:
+        """Weekend or holiday."""
+        result: Bools = (self.weekday >= 5) | self.holiday
+        return result
+
+
+def midnight(day: str | pd.Timestamp, zone: str = ZONE) -> np.datetime64:
+    """UTC instant of local midnight at the start of `day`."""
+    stamp = pd.Timestamp(day).normalize().tz_localize(zone).tz_convert("UTC").tz_localize(None)
+    return np.datetime64(stamp, "us")
+
+
+def moment(day: str, hour: float, zone: str = ZONE) -> np.datetime64:
+    """UTC instant of a local hour on `day` (no clock change between midnight and that hour)."""
+    return np.datetime64(midnight(day, zone) + np.timedelta64(round(hour * 3600), "s"), "us")
+
+
+def next_day(day: str, days: int = 1) -> str:
+    """The date `days` later."""
+    return str((pd.Timestamp(day) + pd.Timedelta(days=days)).date())
+
+
+def quarters(start: np.datetime64, end: np.datetime64, minutes: int = STEP_MINUTES) -> Times:
+    """Interval starts from `start` to before `end`, UTC."""
+    return np.arange(start, end, np.timedelta64(minutes, "m")).astype("datetime64[us]")
+
+
+def local(times: Times, zone: str = ZONE, holidays: tuple[str, ...] | None = None) -> Local:
+    """Local wall time of UTC instants, shape (interval,); holidays are dates, default those of this file."""
+    dates = tuple(date for date, _ in HOLIDAYS) if holidays is None else holidays
+    stamps = pd.DatetimeIndex(times).tz_localize("UTC").tz_convert(zone)
+    day = stamps.tz_localize(None).normalize().to_numpy().astype("datetime64[D]")
+    return Local(
+        hour=np.asarray(stamps.hour + stamps.minute / 60.0, dtype=np.float64),
+        weekday=np.asarray(stamps.weekday, dtype=np.int64),
+        day=day.astype(np.int64),
+        holiday=np.isin(day, np.array(dates, dtype="datetime64[D]")),
+    )
+
+
+def within(hour: Floats, from_hour: Floats, to_hour: Floats) -> Bools:
+    """Local hour within [from, to), over midnight where from > to, never where equal; arrays broadcast."""
+    inside = (hour >= from_hour) & (hour < to_hour)
+    across = (hour >= from_hour) | (hour < to_hour)
+    result: Bools = np.where(from_hour <= to_hour, inside, across)
+    return result
