@@ -10,7 +10,7 @@ from sites.units import Bools, FloatLike, Floats
 STANDARD_PRESSURE_PA: Final = 101325.0
 KELVIN: Final = 273.15
 TRIPLE_POINT_C: Final = 0.01
-"""Below it saturation and wet bulb are over ice, at and above it over water."""
+"""Up to it saturation is over ice; a wet bulb is over ice below it, over water from it on."""
 
 MASS_RATIO: Final = 0.621945
 """Molar mass of water over that of dry air (ASHRAE Handbook, Fundamentals, ch. 1)."""
@@ -64,10 +64,15 @@ def wet_bulb_c(
     """
     dry, humidity, pressure = _checked(dry_bulb_c, "rh_pct", rh_pct, 0.0, 100.0, pressure_pa)
     ratio = _humidity_ratio(humidity / 100.0 * saturation_pa(dry), pressure)
-    low, high = dry - WIDEST_DEPRESSION_K, dry.copy()
+    # Between the two lines near freezing some air has a wet bulb over ice and one over water: water is taken.
+    frozen = ratio < _ratio_at_wet_bulb(
+        dry, np.full_like(dry, TRIPLE_POINT_C), pressure, np.zeros(dry.shape, np.bool_)
+    )
+    low = np.where(frozen, dry - WIDEST_DEPRESSION_K, np.maximum(dry - WIDEST_DEPRESSION_K, TRIPLE_POINT_C))
+    high = np.where(frozen, np.minimum(dry, TRIPLE_POINT_C), dry)
     for _ in range(BISECTIONS):
         middle = 0.5 * (low + high)
-        wetter = _ratio_at_wet_bulb(dry, middle, pressure) > ratio
+        wetter = _ratio_at_wet_bulb(dry, middle, pressure, frozen) > ratio
         high = np.where(wetter, middle, high)
         low = np.where(wetter, low, middle)
     return 0.5 * (low + high)
@@ -82,7 +87,7 @@ def relative_humidity_pct(
     """
     dry, wet, pressure = _checked(dry_bulb_c, "wet_bulb_c", wet_bulb_c, -105.0, 60.0, pressure_pa)
     _refuse(wet > dry, "wet_bulb_c", wet, "at most dry_bulb_c", "check which is which")
-    ratio = _ratio_at_wet_bulb(dry, wet, pressure)
+    ratio = _ratio_at_wet_bulb(dry, wet, pressure, wet < TRIPLE_POINT_C)
     vapour_pa = pressure * ratio / (MASS_RATIO + ratio)
     _refuse(
         ratio < -1e-9, "wet_bulb_c", wet, "no less than that of dry air at dry_bulb_c", "check the reading"
@@ -95,13 +100,13 @@ def _humidity_ratio(vapour_pa: Floats, pressure_pa: Floats) -> Floats:
     return MASS_RATIO * vapour_pa / (pressure_pa - vapour_pa)
 
 
-def _ratio_at_wet_bulb(dry_c: Floats, wet_c: Floats, pressure_pa: Floats) -> Floats:
-    """Humidity ratio of air at `dry_c` with that wet bulb; below 0 where no air can have it."""
+def _ratio_at_wet_bulb(dry_c: Floats, wet_c: Floats, pressure_pa: Floats, frozen: Bools) -> Floats:
+    """Humidity ratio of air at `dry_c` with that wet bulb, over ice or water; below 0 where no air can have it."""
     saturated = _humidity_ratio(saturation_pa(wet_c), pressure_pa)
     depression = 1.006 * (dry_c - wet_c)
     over_water = ((2501.0 - 2.326 * wet_c) * saturated - depression) / (2501.0 + 1.86 * dry_c - 4.186 * wet_c)
     over_ice = ((2830.0 - 0.24 * wet_c) * saturated - depression) / (2830.0 + 1.86 * dry_c - 2.1 * wet_c)
-    return np.where(wet_c <= TRIPLE_POINT_C, over_ice, over_water)
+    return np.where(frozen, over_ice, over_water)
 
 
 def _checked(
