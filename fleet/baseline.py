@@ -256,11 +256,13 @@ def _take(pool: Bools, score: Floats, rule: SettlementRule) -> Bools:
     recent_first = _place(np.argsort(-key, axis=1, kind="stable"))
     if rule.rank == "highest":
         return pool & (recent_first < rule.take_days)
-    # Middle: the highest go first where an odd number has to go. Falling order, older first, from the top.
-    size = pool.sum(axis=1)[:, None]
-    spare = np.maximum(size - rule.take_days, 0)
-    older = _place(np.argsort(-key[:, ::-1], axis=1, kind="stable"))[:, ::-1]
-    middle: Bools = pool & (older >= (spare + 1) // 2) & (recent_first < size - spare // 2)
+    # Middle: from the top (falling order, older first), then from the bottom of what is left; the highest goes
+    # where an odd number has to.
+    spare = np.maximum(pool.sum(axis=1) - rule.take_days, 0)[:, None]
+    older_first = _place(np.argsort(-key[:, ::-1], axis=1, kind="stable"))[:, ::-1]
+    left = pool & (older_first >= (spare + 1) // 2)
+    falling = _place(np.argsort(-np.where(left, key, -np.inf), axis=1, kind="stable"))
+    middle: Bools = left & (falling < left.sum(axis=1)[:, None] - spare // 2)
     return middle
 
 
@@ -287,8 +289,8 @@ def _adjust(
         return raw_kw, none, np.ones(len(base)), nan, base, np.zeros(len(base), dtype=np.bool_)
     level = _plain_mean(event.window_kw)
     known = ~np.isnan(level) & ~np.isnan(base)
-    peak = np.where(used[:, :, None] & ~np.isnan(day_kw), day_kw, -np.inf).max(axis=(1, 2), initial=-np.inf)
-    small = base <= np.maximum(rule.small_base_fraction * peak, 0.0)
+    peak = np.where(used[:, :, None] & ~np.isnan(day_kw), day_kw, 0.0).max(axis=(1, 2), initial=0.0)
+    small = base <= rule.small_base_fraction * peak
     additive = small if rule.adjustment == "ratio" else np.ones(len(base), dtype=np.bool_)
     ratio = level / np.where(known & ~additive, base, 1.0)
     raw = np.where(known, np.where(additive, level - base, ratio), np.nan)

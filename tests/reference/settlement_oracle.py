@@ -1,0 +1,325 @@
+"""A settlement written a second time, in plain loops over sites, days and intervals; imports nothing of the fleet.
+
+Times are aware datetimes in UTC, local time comes from zoneinfo, money is left out. Rules are plain dictionaries.
+"""
+
+from datetime import date, datetime, timedelta
+from zoneinfo import ZoneInfo
+
+GOOD = ("measured", "edited")
+
+
+def settle_site(case: dict, site: str) -> dict:
+    """Intervals, days and energy of one site; case holds plain values, see test_settlement_oracle.py."""
+    rule, step = case["rules"][site], timedelta(minutes=case["step_minutes"])
+    series = case["series"][site]
+    filled = fill(case, site)
+    days, method, used = choose_days(case, site)
+    shown = []
+    at = min(case["event_start"], case["windows"][site][0])
+    while at < case["horizon_end"]:
+        shown.append(at)
+        at += step
+    base = {
+        at: like_value(case, site, rule, used, at) if method in ("like_days", "event_days") else None
+        for at in shown
+    }
+    kind, applied = "none", 1.0
+    doubtful = False
+    adjusted = dict(base)
+    if method == "before_after":
+        values, doubtful = around(case, site, rule)
+        level = sum(values) / len(values) if values else None
+        base = dict.fromkeys(shown, level)
+        adjusted = dict(base)
+        method = "before_after" if values else "none"
+    elif method != "none" and rule["adjustment"] != "none":
+        kind, applied, doubtful = adjustment(case, site, rule, used)
+        for at in shown:
+            if base[at] is not None and kind == "ratio":
+                adjusted[at] = base[at] * applied
+            if base[at] is not None and kind == "additive":
+                adjusted[at] = base[at] + applied
+    rows = {}
+    energy, count, committed = 0.0, 0, 0.0
+    unsure, any_reading, any_base = doubtful, False, False
+    start, end = case["windows"][site]
+    hours = case["step_minutes"] / 60
+    for at in shown:
+        kw, quality = filled.get(at, (None, "missing"))
+        watched = case["event_start"] <= at < case["event_end"] or start <= at < end
+        delivered = None
+        if kw is not None and adjusted[at] is not None:
+            delivered = adjusted[at] - kw if case["direction"] == "shed" else kw - adjusted[at]
+            if watched and quality not in GOOD and delivered > 0:
+                delivered = None
+        unsure = unsure or (watched and quality not in GOOD)
+        if start <= at < end:
+            committed += case["committed"][site] * hours
+            any_reading = any_reading or kw is not None
+            any_base = any_base or adjusted[at] is not None
+            unsure = unsure or adjusted[at] is None
+            if delivered is not None:
+                energy += delivered * hours
+                count += 1
+        rows[at] = (base[at], adjusted[at], kw, delivered, quality)
+    state = "provisional" if unsure else "final"
+    if not any_base:
+        state = "no_baseline"
+    if not any_reading:
+        state = "meter_missing"
+    assert series is not None
+    return {
+        "rows": rows,
+        "days": days,
+        "method": method,
+        "kind": kind,
+        "adjustment": applied,
+        "delivered_kwh": energy if count else None,
+        "committed_kwh": committed,
+        "state": state,
+    }
+
+
+def local(case: dict, at: datetime) -> tuple[date, int]:
+    return case["local"][at]
+
+
+def local_time(case: dict, at: datetime) -> tuple[date, int]:
+    there = at.astimezone(ZoneInfo(case["timezone"]))
+    return there.date(), (there.hour * 60 + there.minute) // case["step_minutes"]
+
+
+def good_value(case: dict, site: str, at: datetime) -> float | None:
+    kw, quality = case["series"][site].get(at, (None, "missing"))
+    return kw if quality in GOOD else None
+
+
+def slot_value(case: dict, site: str, day: date, slot: int) -> tuple[bool, float | None]:
+    """Whether the slot exists on the day, and its measured value (the mean where it comes twice)."""
+    found = case["by_slot"].get((day, slot), [])
+    values = [good_value(case, site, at) for at in found]
+    if not values:
+        return False, None
+    if None in values:
+        return True, None
+    return True, sum(values) / len(values)
+
+
+def is_free(case: dict, day: date) -> bool:
+    return day.weekday() >= 5 or day in case["holidays"]
+
+
+def in_hours(case: dict, start: datetime, end: datetime) -> list[datetime]:
+    step, at, found = timedelta(minutes=case["step_minutes"]), start, []
+    # The windows of the cases lie on the grid.
+    while at + step <= end:
+        found.append(at)
+        at += step
+    return found
+
+
+def window_times(case: dict, rule: dict) -> list[datetime]:
+    start = case["event_start"]
+    first = start - timedelta(hours=rule["adjustment_from_h"])
+    return in_hours(case, first, start - timedelta(hours=rule["adjustment_to_h"]))
+
+
+def complete_mean(case: dict, site: str, day: date, moments: list[datetime]) -> float | None:
+    """Mean of the day's values at the slots of these moments; None if one is lost or none exists."""
+    values = []
+    for at in moments:
+        exists, value = slot_value(case, site, day, local(case, at)[1])
+        if exists and value is None:
+            return None
+        if exists:
+            values.append(value)
+    return sum(values) / len(values) if values else None
+
+
+def complaint(case: dict, site: str, rule: dict, day: date, ignore_events: bool = False) -> str | None:
+    """What keeps a day out of the pool."""
+    event_day = local(case, case["event_start"])[0]
+    split = rule["day_classes"] == "weekday_weekend"
+    if split and is_free(case, event_day):
+        if not is_free(case, day):
+            return "other_day_type"
+    elif split and (day.weekday() >= 5 or (rule["holidays"] == "as_weekend" and day in case["holidays"])):
+        return "other_day_type"
+    if split and day in case["holidays"] and rule["holidays"] == "excluded":
+        return "holiday"
+    if day in case["past"][site] and rule["exclude_event_days"] and not ignore_events:
+        return "event_past"
+    after = day + timedelta(days=1)
+    if rule["exclude_day_before_event"] and (after == event_day or after in case["past"][site]):
+        return "day_before_event"
+    if rule["exclude_unusual_modes"] and case["modes"][site].get(day, "usual") != "usual":
+        return "outage"
+    moments = in_hours(case, case["event_start"], case["event_end"])
+    if complete_mean(case, site, day, moments) is None:
+        return "missing_data"
+    if rule["adjustment"] != "none":
+        for at in window_times(case, rule):
+            exists, value = slot_value(case, site, day, local(case, at)[1])
+            if exists and value is None:
+                return "missing_data"
+    return None
+
+
+def choose_days(case: dict, site: str) -> tuple[dict, str, list[date]]:
+    """Reason per day, the method and the days averaged."""
+    rule = case["rules"][site]
+    if rule["kind"] == "before_after":
+        return {}, "before_after", []
+    event_day = local(case, case["event_start"])[0]
+    moments = in_hours(case, case["event_start"], case["event_end"])
+    sign = 1 if case["direction"] == "shed" else -1
+    reasons, eligible, rank = {}, [], {}
+    for back in range(1, rule["look_back_days"] + 1):
+        day = event_day - timedelta(days=back)
+        reasons[day] = complaint(case, site, rule, day)
+        rank[day] = complete_mean(case, site, day, moments)
+        if reasons[day] is None:
+            eligible.append(day)
+    if rule["low_usage_fraction"] is not None:
+        again = True
+        while again:
+            pool = eligible[: rule["pool_days"]]
+            mean = sum(rank[day] for day in pool) / max(len(pool), 1)
+            low = [day for day in pool if rank[day] < rule["low_usage_fraction"] * mean]
+            for day in low:
+                reasons[day] = "low_usage"
+                eligible.remove(day)
+            again = bool(low)
+    pool = eligible[: rule["pool_days"]]
+    for day in eligible[rule["pool_days"] :]:
+        reasons[day] = "enough_days"
+    method = "like_days"
+    lack = rule["minimum_days"] - len(pool)
+    if lack > 0 and rule["when_too_few"] == "highest_event_days":
+        spare = [
+            day
+            for day in reasons
+            if reasons[day] == "event_past" and complaint(case, site, rule, day, ignore_events=True) is None
+        ]
+        spare.sort(key=lambda day: -sign * rank[day])
+        if len(spare) >= lack:
+            pool, method, lack = sorted(pool + spare[:lack], reverse=True), "event_days", 0
+    if lack > 0:
+        for day in pool:
+            reasons[day] = "too_few_days"
+        return reasons, "before_after" if rule["when_too_few"] == "before_after" else "none", []
+    used = take(pool, {day: sign * rank[day] for day in pool}, rule)
+    for day in pool:
+        reasons[day] = "used" if day in used else "not_ranked"
+    return reasons, method, used
+
+
+def take(pool: list[date], score: dict, rule: dict) -> list[date]:
+    """X days; of equals the more recent one stays."""
+    take_days = rule["take_days"]
+    if rule["rank"] == "recent":
+        return pool[:take_days]
+    if rule["rank"] == "highest":
+        return sorted(pool, key=lambda day: (-score[day], -day.toordinal()))[:take_days]
+    left = list(pool)
+    spare = max(len(pool) - take_days, 0)
+    for turn in range(spare):
+        wanted = (
+            max(score[day] for day in left) if turn < (spare + 1) // 2 else min(score[day] for day in left)
+        )
+        left.remove(min(day for day in left if score[day] == wanted))
+    return left
+
+
+def like_value(case: dict, site: str, rule: dict, used: list[date], at: datetime) -> float | None:
+    """Mean of the used days at this slot; none on a day of another class."""
+    event_day = local(case, case["event_start"])[0]
+    day, slot = local(case, at)
+    if rule["day_classes"] == "weekday_weekend" and is_free(case, day) != is_free(case, event_day):
+        return None
+    return average(case, site, used, slot)
+
+
+def average(case: dict, site: str, used: list[date], slot: int) -> float | None:
+    values = [slot_value(case, site, day, slot)[1] for day in used]
+    values = [value for value in values if value is not None]
+    return sum(values) / len(values) if values else None
+
+
+def adjustment(case: dict, site: str, rule: dict, used: list[date]) -> tuple[str, float, bool]:
+    """Kind, factor or kW applied, and whether the window could not be used."""
+    times = window_times(case, rule)
+    level = [good_value(case, site, at) for at in times]
+    base = [average(case, site, used, local(case, at)[1]) for at in times]
+    if None in level or None in base or not times:
+        return "none", 1.0, True
+    a, b = sum(level) / len(level), sum(base) / len(base)
+    peak = -1e99
+    for day in used:
+        for slot in range(1440 // case["step_minutes"]):
+            value = slot_value(case, site, day, slot)[1]
+            if value is not None:
+                peak = max(peak, value)
+    additive = rule["adjustment"] == "additive" or b <= max(rule["small_base_fraction"] * peak, 0.0)
+    cap = rule["cap_fraction"]
+    if additive:
+        change = a - b
+        if cap is not None:
+            hours = in_hours(case, case["event_start"], case["event_end"])
+            mean = [average(case, site, used, local(case, at)[1]) for at in hours]
+            bound = cap * abs(sum(mean) / len(mean))
+            change = max(-bound, min(bound, change))
+        return "additive", change, False
+    ratio = a / b
+    if cap is not None:
+        low = 1 - cap if rule["cap_form"] == "difference" else 1 / (1 + cap)
+        ratio = max(low, min(1 + cap, ratio))
+    return "ratio", ratio, False
+
+
+def around(case: dict, site: str, rule: dict) -> tuple[list[float], bool]:
+    """Measured values before and after, and whether one is not."""
+    before_end = case["event_start"] - timedelta(hours=rule["before_buffer_h"])
+    after_start = case["event_end"] + timedelta(hours=rule["after_buffer_h"])
+    times = in_hours(case, before_end - timedelta(hours=rule["before_h"]), before_end)
+    times += in_hours(case, after_start, after_start + timedelta(hours=rule["after_h"]))
+    values = [good_value(case, site, at) for at in times]
+    return [value for value in values if value is not None], None in values
+
+
+def fill(case: dict, site: str) -> dict:
+    """The site's readings with gaps estimated: straight lines, then like days."""
+    step = timedelta(minutes=case["step_minutes"])
+    series, filled = case["series"][site], {}
+    start, end = case["windows"][site]
+    edges = [case["event_start"], case["event_end"], start, end]
+    longest = 120 // case["step_minutes"]
+    event_days = {*case["past"][site], local(case, case["event_start"])[0]}
+    for at in case["grid"]:
+        kw, quality = series.get(at, (None, "missing"))
+        if kw is not None:
+            filled[at] = (kw, quality)
+            continue
+        left, right = at - step, at + step
+        while left >= case["grid"][0] and good_value(case, site, left) is None:
+            left -= step
+        while right <= case["grid"][-1] and good_value(case, site, right) is None:
+            right += step
+        inside = left >= case["grid"][0] and right <= case["grid"][-1]
+        crosses = any(left < edge <= right for edge in edges)
+        if inside and not crosses and (right - left) // step - 1 <= longest:
+            a, b = good_value(case, site, left), good_value(case, site, right)
+            filled[at] = (a + (b - a) * ((at - left) / (right - left)), "estimated_line")
+            continue
+        shut = case["event_start"] <= at < case["event_end"] or start <= at < end
+        day, slot = local(case, at)
+        values, back = [], day - timedelta(days=1)
+        while len(values) < 3 and back >= case["first_day"]:
+            value = slot_value(case, site, back, slot)[1]
+            if is_free(case, back) == is_free(case, day) and back not in event_days and value is not None:
+                values.append(value)
+            back -= timedelta(days=1)
+        if len(values) == 3 and not shut:
+            filled[at] = (sum(values) / 3, "estimated_like_day")
+    return filled
