@@ -45,7 +45,8 @@ def lock(fleet_path: Path, seconds: float = 10.0) -> Iterator[list[str]]:
         ) from error
     except OSError as error:
         raise FleetError(
-            f"{fleet_path}: cannot be locked for writing ({error.strerror or error}); mend the permissions"
+            f"{fleet_path}: cannot be locked for writing ({error.strerror or error}); "
+            "free some space or mend the permissions"
         ) from error
     try:
         if first:

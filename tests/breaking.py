@@ -1,0 +1,147 @@
+"""Breaks a run at its k-th write operation: raises an OSError, or kills the process with SIGKILL.
+
+A broken write leaves half of its content behind, as a full disk or a dead machine would. Run as a script it
+forks one child for each k, so that the real SIGKILL is seen with nothing imported anew:
+`python breaking.py DIR call|settlement` prints one JSON list of what each killed run left.
+"""
+
+import errno
+import json
+import os
+import shutil
+import signal
+import sys
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from pathlib import Path
+from typing import Any
+from unittest import mock
+
+from made_record import call_frames, frozen_frames, settlement_frames
+
+from fleet import records
+
+EVENT = "EV-1"
+
+
+class Breaker:
+    """Counts write operations and breaks the one numbered `at` (from 1); 0 never breaks."""
+
+    def __init__(self, at: int, act: Callable[[], None]) -> None:
+        self.at, self.act, self.count = at, act, 0
+
+    def passes(self) -> bool:
+        self.count += 1
+        return self.count != self.at
+
+
+def full_disk() -> None:
+    raise OSError(errno.ENOSPC, os.strerror(errno.ENOSPC), "somewhere")
+
+
+def killed() -> None:
+    os.kill(os.getpid(), signal.SIGKILL)
+
+
+@contextmanager
+def breaking(breaker: Breaker) -> Iterator[Breaker]:
+    """Every write operation of a record passes the breaker first."""
+    real_mkdir, real_bytes, real_text = Path.mkdir, Path.write_bytes, Path.write_text
+    real_rename, real_fsync, real_parquet = os.rename, os.fsync, records.write_parquet
+
+    def mkdir(self: Path, *rest: Any, **named: Any) -> None:
+        if not breaker.passes():
+            breaker.act()
+        real_mkdir(self, *rest, **named)
+
+    def write_bytes(self: Path, data: bytes) -> int:
+        if not breaker.passes():
+            real_bytes(self, data[: len(data) // 2])
+            breaker.act()
+        return real_bytes(self, data)
+
+    def write_text(self: Path, data: str, *rest: Any, **named: Any) -> int:
+        if not breaker.passes():
+            real_text(self, data[: len(data) // 2], *rest, **named)
+            breaker.act()
+        return real_text(self, data, *rest, **named)
+
+    def parquet(frame: Any, path: Path, table: Any) -> None:
+        if not breaker.passes():
+            real_bytes(path, b"PAR1half")
+            breaker.act()
+        real_parquet(frame, path, table)
+
+    def rename(source: Any, target: Any) -> None:
+        if not breaker.passes():
+            breaker.act()
+        real_rename(source, target)
+
+    def fsync(handle: int) -> None:
+        if not breaker.passes():
+            breaker.act()
+        real_fsync(handle)
+
+    with (
+        mock.patch.object(Path, "mkdir", mkdir),
+        mock.patch.object(Path, "write_bytes", write_bytes),
+        mock.patch.object(Path, "write_text", write_text),
+        mock.patch.object(records, "write_parquet", parquet),
+        mock.patch("os.rename", rename),
+        mock.patch("os.fsync", fsync),
+    ):
+        yield breaker
+
+
+def write(fleet: Path, kind: str, made: dict[str, Any]) -> Path:
+    """Write a call, or the next settlement of the event, from frames made beforehand."""
+    if kind == "call":
+        settings = {"settings": {"timezone": "Europe/Athens"}}
+        return records.write_call(fleet, EVENT, made["call"], {"status": "proven"}, made["frozen"], settings)
+    return records.write_settlement(fleet, EVENT, made["settlement"], {"statement.txt": "Paid: 0.00\n"})
+
+
+def made_frames() -> dict[str, Any]:
+    return {"call": call_frames(EVENT), "frozen": frozen_frames(), "settlement": settlement_frames(EVENT)}
+
+
+def _kill_each(base: Path, kind: str) -> list[dict[str, Any]]:
+    """One forked run per k until a run ends unharmed; what it left, and what the next run made of it."""
+    made, found, start = made_frames(), [], base / "start"
+    start.mkdir(parents=True)
+    if kind == "settlement":
+        _forked(lambda: write(start, "call", made))
+    for at in range(1, 1000):
+        fleet = base / f"{at:03d}"
+        shutil.copytree(start, fleet)
+        died = _forked(lambda fleet=fleet, at=at: _break(fleet, kind, made, at))
+        left = sorted(str(path.relative_to(fleet)) for path in fleet.glob("events/*"))
+        left += sorted(str(path.relative_to(fleet)) for path in fleet.glob("events/*/*"))
+        whole = f"events/{EVENT}/{kind}-001" in left
+        again = 0 if whole else _forked(lambda fleet=fleet: write(fleet, kind, made))
+        found.append({"at": at, "killed": died == -signal.SIGKILL, "left": left, "again": again})
+        if died == 0:
+            break
+    return found
+
+
+def _break(fleet: Path, kind: str, made: dict[str, Any], at: int) -> None:
+    with breaking(Breaker(at, killed)):
+        write(fleet, kind, made)
+
+
+def _forked(run: Callable[[], Any]) -> int:
+    """Exit code of `run` in a child process; minus the signal where one ended it."""
+    child = os.fork()
+    if child == 0:
+        code = 1
+        try:
+            run()
+            code = 0
+        finally:
+            os._exit(code)
+    return os.waitstatus_to_exitcode(os.waitpid(child, 0)[1])
+
+
+if __name__ == "__main__":
+    print(json.dumps(_kill_each(Path(sys.argv[1]), sys.argv[2])))
