@@ -60,7 +60,8 @@ def midnight(day: str | pd.Timestamp, zone: str = ZONE) -> np.datetime64:
 
 def moment(day: str, hour: float, zone: str = ZONE) -> np.datetime64:
     """UTC instant of a local hour on `day` (no clock change between midnight and that hour)."""
-    return np.datetime64(midnight(day, zone) + np.timedelta64(round(hour * 3600), "s"), "us")
+    at: np.datetime64 = midnight(day, zone) + np.timedelta64(round(hour * 3600), "s")
+    return at
 
 
 def next_day(day: str, days: int = 1) -> str:

@@ -40,7 +40,7 @@ class Course:
 
 def city_noise(count: int, rng: np.random.Generator) -> Floats:
     """Noise of load that all sites share, (T,), as a fraction."""
-    return ar1(rng, 1, count, KEEP, CITY_DEVIATION)[0]
+    return np.asarray(ar1(rng, 1, count, KEEP, CITY_DEVIATION)[0])
 
 
 def course(
@@ -79,7 +79,7 @@ def forecast(sites: pd.DataFrame, local: Local, dry_bulb_c: Floats, rng: np.rand
     """What the sites' forecasts say, (N, T): forecast weather, and an error of each forecaster's own."""
     bias = rng.normal(1.0, 0.025, (len(sites), 1)).clip(0.94, 1.06)
     drift = 1.0 + ar1(rng, len(sites), len(local.hour), 0.985, 0.02)
-    return expected_load(sites, local, dry_bulb_c) * bias * drift
+    return np.asarray(expected_load(sites, local, dry_bulb_c) * bias * drift)
 
 
 def level_kw_th(load_kw_th: Floats, local: Local) -> Floats:

@@ -92,13 +92,16 @@ def _timed(frame: pd.DataFrame, folder: Path, name: str) -> pd.DataFrame:
 
 
 def _to_utc(column: "pd.Series[Any]", declared: str, zone: str) -> "pd.Series[Any]":
+    moments: pd.Series[Any]
     if isinstance(column.dtype, pd.DatetimeTZDtype):
-        return column.dt.tz_convert("UTC")
+        moments = column.dt.tz_convert("UTC")
+        return moments
     if declared in ("utc", "offset"):
         return pd.to_datetime(column, utc=True, format="ISO8601")
     plain = pd.to_datetime(column, format="ISO8601")
     if declared == "standard":
-        winter = pd.Timestamp(plain.iloc[0].year, 1, 1).tz_localize(zone).utcoffset()
-        return (plain - winter).dt.tz_localize("UTC")
+        winter = pd.Timestamp(plain.iloc[0].year, 1, 1)
+        ahead = winter - winter.tz_localize(zone).tz_convert("UTC").tz_localize(None)
+        return (plain - ahead).dt.tz_localize("UTC")
     # one clock change at most twice a year, spread over many sites: the first reading of the repeated hour
-    return plain.dt.tz_localize(zone, ambiguous=True, nonexistent="shift_forward").dt.tz_convert("UTC")  # type: ignore[arg-type]
+    return plain.dt.tz_localize(zone, ambiguous=True, nonexistent="shift_forward").dt.tz_convert("UTC")

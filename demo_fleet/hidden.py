@@ -251,7 +251,7 @@ def outages(made: Made, status: pd.DataFrame | None, at: np.datetime64 | None = 
     out = newest[newest["available"].astype(str).str.lower().isin(["false", "0", "no"])]
     index = pd.Index(made.sites["site_id"])
     for site_id, unit in zip(out["site_id"], out["unit_id"]):
-        row = int(index.get_loc(site_id))  # type: ignore[arg-type]
+        row = int(index.get_loc(site_id))
         machine[row] &= made.chiller_id[row] != unit
         tank[row] &= made.tank_id[row] != unit
     return machine, tank

@@ -51,8 +51,8 @@ def history(plant: Plant, driven: truth.Drive, days: int, tank_out: Bools, machi
     rows = replace(rows, machine_up=rows.machine_up & up)
     end, _ = truth.run(rows, driven, rested(rows, 0.9), STEP_MINUTES)
     before = np.arange(count * days).reshape(count, days)
-    before = np.concatenate([before[:, :1], before[:, :-1]], axis=1).ravel()
-    end, kept = truth.run(rows, driven, end.take(before), STEP_MINUTES)
+    yesterday = np.concatenate([before[:, :1], before[:, :-1]], axis=1).ravel()
+    end, kept = truth.run(rows, driven, end.take(yesterday), STEP_MINUTES)
     shape = (count, days * QUARTERS_A_DAY)
     return History(
         plant_kw=kept["power_kw"].reshape(shape),

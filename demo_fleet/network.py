@@ -34,7 +34,7 @@ def feeder_of(peak_kw_th: Floats, rng: np.random.Generator) -> Ints:
 
 
 def other_kw(local: Local, dry_bulb_c: Floats, fleet_peak_kw: Floats) -> Floats:
-    """Homes and shops on each feeder, (F, T): about 1.5 times the fleet's peak there, an evening hump, air conditioners."""
+    """Homes and shops on each feeder, (F, T): an evening hump, and air conditioners on hot days."""
     hour = local.hour
     evening = np.exp(-(((hour - 19.5) / 3.0) ** 2))
     day = 0.45 + 0.2 * np.clip(np.sin(np.pi * (hour - 6.0) / 15.0), 0.0, 1.0) + 0.3 * evening

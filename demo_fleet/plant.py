@@ -85,14 +85,13 @@ class Plant(Gathered):
     @cached_property
     def ice_site(self) -> Bools:
         """(R,) charging needs machines in ice making."""
-        result: Bools = ((self.tank_kind < 2) & (self.tank_kwh_th > 0.0)).any(axis=1)
-        return result
+        return np.asarray(((self.tank_kind < 2) & (self.tank_kwh_th > 0.0)).any(axis=1))
 
     @cached_property
     def loop_kw_per_k(self) -> Floats:
         """Each tank's share of the loop's full flow as m cp, (R, K): a tenth over the design flow."""
         share = self.tank_kwh_th / np.maximum(self.tank_kwh_th.sum(axis=1, keepdims=True), 1e-9)
-        return share * (1.1 * self.design_kw_th / (self.return_c - self.supply_c))[:, None]
+        return np.asarray(share * (1.1 * self.design_kw_th / (self.return_c - self.supply_c))[:, None])
 
     @cached_property
     def tank_is_ice(self) -> Bools:

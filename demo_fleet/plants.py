@@ -13,6 +13,7 @@ import pandas as pd
 
 from demo_fleet import truth
 from demo_fleet.buildings import design_day
+from demo_fleet.calendar import within
 from demo_fleet.plant import STRATEGIES, Plant, rested
 from demo_fleet.store import KINDS
 from sites.units import KW_TH_PER_TON, Floats
@@ -22,7 +23,7 @@ MARGIN: Final = 1.11
 LEAST_TANK_H: Final = 1.1
 """Smallest tank tried, in hours of the peak load."""
 LEAST_MIDDAY_TANK_H: Final = 2.0
-TANK_STEPS: Final = 16
+TANK_STEPS: Final = 19
 MACHINE_STEPS: Final = 12
 DESIGN_WET_BULB_C: Final = 23.5
 SHARE: Final = {
@@ -68,7 +69,11 @@ def habits(plan: pd.DataFrame) -> pd.DataFrame:
 
 def single(sites: pd.DataFrame, plan: pd.DataFrame, machines_kw_th: Floats, tanks_kwh_th: Floats) -> Plant:
     """Each site as one machine and one tank, for sizing."""
-    count, column = len(sites), (lambda values: np.asarray(values, dtype=np.float64)[:, None])
+    count = len(sites)
+
+    def column(values: Floats) -> Floats:
+        return np.asarray(values, dtype=np.float64)[:, None]
+
     peak = sites["peak_cooling_kw_th"].to_numpy(dtype=np.float64)
     air = (plan["chiller_kind"] == AIR).to_numpy()[:, None]
     kind = np.array([KINDS.index(name) if name else 0 for name in plan["tank_kind"]])[:, None]
@@ -96,7 +101,8 @@ _HOURS: Final = ("peak_from_hour", "peak_to_hour", "charge_from_hour", "charge_t
 def try_design_day(sites: pd.DataFrame, plant: Plant, load_kw_th: Floats) -> tuple[Floats, Floats]:
     """Worst unmet load over peak, and inventory over capacity at the end of the charging hours, each (N,).
 
-    Starts full when the charging hours end and runs 24 h from there.
+    For full storage what machines must carry on peak counts as unmet, too. Starts full when the charging
+    hours end and runs 24 h from there.
     """
     local, dry, _ = design_day(sites)
     start = np.round(plant.charge_to_hour * 4.0).astype(np.int64)
@@ -112,7 +118,10 @@ def try_design_day(sites: pd.DataFrame, plant: Plant, load_kw_th: Floats) -> tup
     _, kept = truth.run(plant, drive, rested(plant), 15)
     held = np.maximum(plant.held_kwh_th, 1e-9)
     filled = np.where(plant.held_kwh_th > 0.0, kept["inventory"][:, -1] / held, 1.0)
-    return kept["unmet"].max(axis=1) / plant.design_kw_th, filled
+    on_peak = within(drive.hour, plant.peak_from_hour[:, None], plant.peak_to_hour[:, None])
+    never = on_peak & (plant.strategy == STRATEGIES.index("full_storage"))[:, None]
+    lacking = kept["unmet"] + np.where(never, kept["direct"], 0.0)
+    return lacking.max(axis=1) / plant.design_kw_th, filled
 
 
 def size(sites: pd.DataFrame, plan: pd.DataFrame, rng: np.random.Generator) -> Sized:
@@ -129,7 +138,12 @@ def size(sites: pd.DataFrame, plan: pd.DataFrame, rng: np.random.Generator) -> S
     tank_h = LEAST_TANK_H * MARGIN ** np.arange(TANK_STEPS)
     machine = 1.05 ** np.arange(MACHINE_STEPS)
     blocks = [
-        _try_grid(sites.iloc[i : i + 100], plan.iloc[i : i + 100], share[i : i + 100, None] * machine, tank_h)
+        _try_grid(
+            sites.iloc[i : i + 100],
+            plan.iloc[i : i + 100],
+            np.asarray(share[i : i + 100, None] * machine),
+            np.asarray(tank_h),
+        )
         for i in range(0, len(sites), 100)
     ]
     unmet, filled = (np.concatenate([block[part] for block in blocks]) for part in (0, 1))

@@ -21,7 +21,8 @@ def meter_map(site_ids: "pd.Series[Any]") -> pd.DataFrame:
     second = main[number % 13 == 9].assign(meter_id=lambda rows: rows["meter_id"] + "-2", part=0.35)
     main["part"] = np.where(number % 13 == 9, 0.65, 1.0)
     plant = main[number % 3 == 0].assign(meter_id=lambda rows: "P-" + rows["site_id"], role="plant", part=1.0)
-    return pd.concat([main, second, plant], ignore_index=True)
+    every: pd.DataFrame = pd.concat([main, second, plant], ignore_index=True)
+    return every
 
 
 def meters(

@@ -124,7 +124,8 @@ def _world(count: int, seed: int) -> tuple[_World, dict[str, pd.DataFrame]]:
     stored = np.flatnonzero(
         (plan["strategy"] == "chiller_priority") & (plan["tanks"] > 0) & ~sites["no_unmet"]
     )
-    twins = np.flatnonzero((plan["chillers"] > 1) & ~sites["no_unmet"])
+    spare = sized.machines_kw_th * (1.0 - 1.0 / plan["chillers"].to_numpy()) / peak
+    spare = np.where(sites["no_unmet"], 0.0, spare)
     world = _World(
         seed=seed, times=times, local=calendar.local(times),
         called=int((called_at - start) / np.timedelta64(15, "m")), finer=finer,
@@ -132,7 +133,7 @@ def _world(count: int, seed: int) -> tuple[_World, dict[str, pd.DataFrame]]:
         weather=weather_file.weather(times, called_at, np.random.default_rng([seed, 2])),
         city=course.city_noise(len(times), np.random.default_rng([seed, 3])),
         tank_out=int(stored[min(5, len(stored) - 1)]) if len(stored) else 0,
-        machine_out=int(twins[min(8, len(twins) - 1)]) if len(twins) else 0,
+        machine_out=int(np.argmax(spare)),
     )  # fmt: skip
     return world, {"chillers": machines, "tanks": vessels}
 
@@ -150,7 +151,7 @@ def _contracts(
         station_id=np.array(weather_file.STATIONS)[station],
         held_back_kwh_th=np.where(number % 9 == 5, np.round(0.1 * peak, -1), 0.0),
         notice_minutes=np.where(number % 10 == 6, 60, 120),
-        calls_per_season=np.where(number % 6 == 2, 10.0, np.nan),
+        calls_per_season=pd.array(np.where(number % 6 == 2, 10.0, np.nan)).astype("Int64"),
         hours_per_season=np.where(number % 7 == 4, 40.0, np.nan),
         call_fee=rng.choice([0.0, 25.0, 40.0], len(sites)),
         comfort_payment_per_kwh_th=rng.choice([0.0, 0.05, 0.10], len(sites)),

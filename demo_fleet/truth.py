@@ -158,7 +158,7 @@ def _wanted(plant: Plant, now: Now, orders: Orders, held: Floats, demand: Floats
     usual = np.where(plant.strategy == _STORAGE, spread, demand) * now.on_peak
     usual = np.where(plant.strategy == _LEVEL, np.maximum(demand - now.level, 0.0), usual)
     usual = np.where((plant.strategy == _CHILLER) | orders.staged, 0.0, usual)
-    return np.maximum(short, usual)
+    return np.asarray(np.maximum(short, usual))
 
 
 def _discharge(

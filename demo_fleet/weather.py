@@ -99,14 +99,14 @@ def table(made: Weather, forecast: bool) -> pd.DataFrame:
 
 
 def _ar1(rng: np.random.Generator, count: int, keep: float, deviation: float) -> Floats:
-    return ar1(rng, 1, count, keep, deviation)[0]
+    return np.asarray(ar1(rng, 1, count, keep, deviation)[0])
 
 
 def ar1(rng: np.random.Generator, rows: int, count: int, keep: float, deviation: float) -> Floats:
     """Stationary first-order noise, (row, interval), of standard deviation `deviation`."""
     shocks = rng.standard_normal((rows, count)) * deviation * np.sqrt(1.0 - keep * keep)
     shocks[:, 0] = rng.standard_normal(rows) * deviation
-    made = np.empty_like(shocks)
+    made: Floats = np.empty_like(shocks)
     made[:, 0] = shocks[:, 0]
     for t in range(1, count):
         made[:, t] = keep * made[:, t - 1] + shocks[:, t]
