@@ -1,6 +1,250 @@
-"""The command line: parses, calls one function, prints, chooses the exit code."""
+"""The command line: parses, calls one function, prints, chooses the exit code.
+
+Exit codes: 0 done; 2 wrong usage or refused input; 3 the request cannot be met as asked; 4 an audit found a
+fault; 1 is a defect. Rooms are imported inside the commands, so that help needs none of them.
+"""
+
+import sys
+from datetime import UTC, datetime
+from pathlib import Path
+from typing import Annotated
+
+import typer
+
+from fleet.errors import CannotBeMet, FleetError, Refused
+from fleet.terminal import Terminal
+from sites.errors import SitesError
+
+REFUSED, NOT_MET, FAULT = 2, 3, 4
+
+app = typer.Typer(
+    no_args_is_help=True,
+    add_completion=True,
+    pretty_exceptions_enable=False,
+    rich_markup_mode=None,
+    help="Call, order and settle demand-response events on buildings with cool thermal storage.",
+)
+
+FleetDir = Annotated[Path, typer.Argument(metavar="FLEET", help="The fleet folder.")]
+EventId = Annotated[str, typer.Argument(metavar="EVENT", help="The event's id.")]
+Json = Annotated[bool, typer.Option("--json", help="Print one JSON document on stdout and nothing else.")]
+From = Annotated[str, typer.Option("--from", help="Start of the event: ISO 8601 with offset, or local time.")]
+To = Annotated[str, typer.Option("--to", help="End of the event.")]
+Node = Annotated[str | None, typer.Option("--node", help="Where the request is held; default the whole fleet.")]
+At = Annotated[str | None, typer.Option("--at", help="When the call is made; default now.")]
+Way = Annotated[str, typer.Option("--direction", help="shed or absorb.")]
+
+
+@app.command()
+def rehearse(
+    directory: Annotated[
+        Path | None, typer.Argument(metavar="[DIR]", help="A fleet folder; none: an invented fleet.")
+    ] = None,
+    seed: Annotated[int, typer.Option(help="Seed of the invented fleet and of the simulated meters.")] = 1,
+    json: Json = False,
+) -> None:
+    """Play a whole practice event: quote, call, orders, simulated meters, settlement, audit.
+
+    Example: shedwright rehearse
+    """
+    from fleet import rehearsal, show
+
+    terminal = Terminal(json)
+    played = (
+        rehearsal.rehearse_new(Path("rehearsal"), seed, terminal.progress)
+        if directory is None
+        else rehearsal.rehearse_own(directory, seed, terminal.progress)
+    )
+    terminal.put(show.rehearsal_lines(played), show.rehearsal_json(played))
+    if not played.audit.holds:
+        raise typer.Exit(FAULT)
+
+
+@app.command()
+def sample(
+    directory: Annotated[Path, typer.Argument(metavar="DIR", help="Folder to be made; it must not exist.")],
+    sites: Annotated[int, typer.Option("--sites", min=1, max=100_000, help="Number of sites.")] = 40,
+    seed: Annotated[int, typer.Option("--seed", help="Seed; the same seed gives the same fleet.")] = 1,
+    json: Json = False,
+) -> None:
+    """Write an invented fleet folder.
+
+    Example: shedwright sample invented --sites 40 --seed 1
+    """
+    from fleet import rehearsal, show
+
+    terminal = Terminal(json)
+    facts = rehearsal.new_sample(directory, sites, seed, terminal.progress)
+    terminal.put(show.sample_lines(facts), show.sample_json(facts))
+
+
+@app.command()
+def columns(
+    table: Annotated[str | None, typer.Argument(metavar="[TABLE]", help="One table; none: all of them.")] = None,
+    json: Json = False,
+) -> None:
+    """Print the table of columns: type, unit, range, meaning, required, default, where to find the value.
+
+    Example: shedwright columns tanks
+    """
+    from fleet import show
+
+    terminal = Terminal(json)
+    terminal.put(show.columns_lines(table), show.columns_json(table))
+
+
+@app.command()
+def check(fleet: FleetDir, json: Json = False) -> None:
+    """Check a fleet folder: all problems at once, what can be done with it, every assumed value.
+
+    Example: shedwright check rehearsal
+    """
+    from fleet import show
+    from fleet.check import report
+
+    terminal = Terminal(json)
+    found = report(fleet)
+    terminal.put(show.check_lines(found), show.check_json(found))
+    if found.problems:
+        raise typer.Exit(REFUSED)
+
+
+@app.command()
+def quote(
+    fleet: FleetDir,
+    start: From,
+    end: To,
+    node: Node = None,
+    at: At = None,
+    direction: Way = "shed",
+    tons: Annotated[bool, typer.Option("--tons", help="Cooling in tons and ton-hours.")] = False,
+    json: Json = False,
+) -> None:
+    """Tell what each site and the fleet can give, what limits it, what recovery costs.
+
+    Example: shedwright quote rehearsal --from 2026-07-15T16:00 --to 2026-07-15T19:00 --at 2026-07-15T13:00
+    """
+    from fleet import desk, quoting, show
+
+    terminal = Terminal(json)
+    survey = desk.survey(fleet, _ask(fleet, start, end, node, at, direction), terminal.progress)
+    terminal.progress("working out what the fleet can give together")
+    told = quoting.offer(survey)
+    terminal.put(show.quote_lines(survey, told, tons), show.quote_json(survey, told))
+
+
+@app.command()
+def call(
+    fleet: FleetDir,
+    kw: Annotated[float, typer.Option("--kw", help="kW asked in every interval of the event.")],
+    start: From,
+    end: To,
+    node: Node = None,
+    event: Annotated[str | None, typer.Option("--event", help="Id of the event; default from time and node.")] = None,
+    at: At = None,
+    direction: Way = "shed",
+    purpose: Annotated[str, typer.Option("--purpose", help="real, test or rehearsal.")] = "real",
+    accept_less: Annotated[
+        bool, typer.Option("--accept-less", help="Where it cannot be met, take the best answer.")
+    ] = False,
+    json: Json = False,
+) -> None:
+    """Allocate a request over the sites and write the event record.
+
+    Example: shedwright call rehearsal --kw 1500 --from 2026-07-15T16:00 --to 2026-07-15T19:00
+    --node North --at 2026-07-15T13:00 --event practice-2 --purpose rehearsal
+    """
+    from fleet import calling, desk, show
+
+    terminal = Terminal(json)
+    survey = desk.survey(fleet, _ask(fleet, start, end, node, at, direction), terminal.progress)
+    made = calling.call(survey, kw, event, purpose, fleet, accept_less, progress=terminal.progress)
+    terminal.put(show.call_lines(survey, made), show.call_json(survey, made))
+
+
+@app.command()
+def orders(fleet: FleetDir, event: EventId, json: Json = False) -> None:
+    """Write what each called site's operator gets, as text and JSON.
+
+    Example: shedwright orders rehearsal practice-2
+    """
+    from fleet import ordering, show
+
+    terminal = Terminal(json)
+    written = ordering.write(fleet, event)
+    terminal.put(show.orders_lines(written), show.orders_json(written))
+
+
+@app.command()
+def settle(
+    fleet: FleetDir,
+    event: EventId,
+    meter: Annotated[
+        Path | None, typer.Option("--meter", help="Readings that replace the folder's for the same intervals.")
+    ] = None,
+    json: Json = False,
+) -> None:
+    """Settle an event on its meters: a new settlement revision.
+
+    Example: shedwright settle rehearsal practice
+    """
+    from fleet import settling, show
+
+    terminal = Terminal(json)
+    settled = settling.settle_event(fleet, event, meter, terminal.progress)
+    terminal.put(show.settle_lines(settled), show.settle_json(settled))
+
+
+@app.command()
+def audit(fleet: FleetDir, event: EventId, json: Json = False) -> None:
+    """Check an event's record again, from the record alone, against every limit and sum.
+
+    Example: shedwright audit rehearsal practice
+    """
+    from fleet import show
+    from fleet.audit import audit as audit_event
+
+    terminal = Terminal(json)
+    terminal.progress("auditing")
+    found = audit_event(fleet, event)
+    terminal.put(show.audit_lines(found), show.audit_json(found))
+    if not found.holds:
+        raise typer.Exit(FAULT)
+
+
+def _ask(fleet: Path, start: str, end: str, node: str | None, at: str | None, direction: str):  # type: ignore[no-untyped-def]
+    """The ask of a command line: times in the fleet's zone, on its grid."""
+    from fleet.desk import Ask
+    from fleet.folder import open_folder, parse_time
+    from sites.direction import Direction
+
+    settings = open_folder(fleet, names=(), needed=()).settings
+    zone, step = settings.timezone, settings.interval_minutes
+    known = [str(way) for way in Direction]
+    if direction not in known:
+        raise FleetError(f"--direction: came {direction!r}; expected one of {', '.join(known)}; choose one")
+    now = datetime.now(UTC).replace(second=0, microsecond=0).isoformat()
+    return Ask(
+        node_id=node,
+        direction=Direction(direction),
+        at=parse_time(at or now, zone),
+        event_from=parse_time(start, zone, step),
+        event_to=parse_time(end, zone, step),
+    )
 
 
 def main() -> None:
-    """Entry point of `shedwright`."""
-    raise SystemExit("not ready")
+    """Entry point of `shedwright`: known errors become a message on stderr and an exit code."""
+    try:
+        app()
+    except CannotBeMet as error:
+        _fail(str(error), {"cannot_be_met": error.detail}, NOT_MET)
+    except Refused as error:
+        _fail(str(error), {"refused": [vars(problem) for problem in error.problems]}, REFUSED)
+    except (FleetError, SitesError) as error:
+        _fail(str(error), {"refused": [{"message": str(error)}]}, REFUSED)
+
+
+def _fail(message: str, document: dict[str, object], code: int) -> None:
+    Terminal("--json" in sys.argv).fail(message, document)
+    raise SystemExit(code)

@@ -123,7 +123,7 @@ def _advance(
     wanted = _wanted_from_tank(rows, here, staged, ready, load, start, t)
     tanks_gave = storage.discharge(rows, series, here.step_h, staged, ready, load, wanted, start, loss)
     discharge = tanks_gave.drawn_kw_th
-    drawn = total(discharge)
+    drawn = tanks_gave.total_kw_th
     served = np.minimum(load - drawn, ready)
     unmet = np.maximum(load - drawn - served, 0.0)
     extra = unmet - usual.unmet_kw_th[rows.site, t] if usual else np.zeros_like(unmet)

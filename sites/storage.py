@@ -33,6 +33,8 @@ class Discharged:
     """What the tanks gave in one interval, (row, tank), and the curve (row, tank, knot) that limited it."""
 
     drawn_kw_th: Floats
+    total_kw_th: Floats
+    """(row,) sum of the drawn, free of the rounding of the shares"""
     most_kw_th: Floats
     """What could have been had"""
     lmtd_k: Floats
@@ -100,7 +102,7 @@ def discharge(
     sum_most = total(most)
     given = np.divide(drawn, sum_most, out=np.zeros_like(drawn), where=sum_most > 0.0)
     could = np.divide(usable, sum_most, out=np.zeros_like(drawn), where=sum_most > 0.0)
-    return Discharged(most * given[:, None], most * could[:, None], lmtd, knots)
+    return Discharged(most * given[:, None], drawn, most * could[:, None], lmtd, knots)
 
 
 def _above_reserve(

@@ -4,14 +4,32 @@ import numpy as np
 
 from sites.clock import Clock
 from sites.outlook import Outlook
-from sites.roster import CHILLER_KINDS, LAYOUTS, STRATEGIES, TANK_KINDS, Buildings, Chillers, Roster, Standing, Tanks
+from sites.roster import (
+    CHILLER_KINDS,
+    LAYOUTS,
+    STRATEGIES,
+    TANK_KINDS,
+    Buildings,
+    Chillers,
+    Roster,
+    Standing,
+    Tanks,
+)
 
 SITES = (
     # strategy, layout, tank kinds, peak load kW_th, machines (kW_th), tank kWh_th, water-cooled, no unmet
     ("full_storage", "parallel", ("ice_internal_melt",), 500.0, (350.0, 350.0), 4000.0, True),
     ("chiller_priority", "series", ("ice_internal_melt",), 900.0, (300.0, 300.0), 2400.0, False),
     ("storage_priority", "parallel", ("ice_external_melt",), 800.0, (300.0, 300.0, 300.0), 2600.0, True),
-    ("storage_priority", "series", ("ice_internal_melt", "ice_internal_melt"), 800.0, (500.0, 400.0), 2500.0, False),
+    (
+        "storage_priority",
+        "series",
+        ("ice_internal_melt", "ice_internal_melt"),
+        800.0,
+        (500.0, 400.0),
+        2500.0,
+        False,
+    ),
     ("load_levelling", "parallel", ("chilled_water",), 700.0, (550.0,), 3500.0, True),
     ("chiller_priority", "parallel", (), 400.0, (250.0, 250.0), 0.0, False),
 )
@@ -112,10 +130,14 @@ def made_roster(rows: tuple[int, ...] = tuple(range(len(SITES))), **changes: obj
     return Roster(buildings, chillers, tanks)
 
 
-def made_outlook(roster: Roster, step_minutes: int = 15, hours: float = 35.0, start_hour: float = 13.0) -> Outlook:
+def made_outlook(
+    roster: Roster, step_minutes: int = 15, hours: float = 35.0, start_hour: float = 13.0
+) -> Outlook:
     """A hot day and the next from `start_hour`, loads peaking at 15:00, a flat evening, cheap nights."""
     count = round(hours * 60 / step_minutes)
-    clock = Clock(np.datetime64("2026-07-15T00:00") + np.timedelta64(int(start_hour * 60), "m"), step_minutes, count)
+    clock = Clock(
+        np.datetime64("2026-07-15T00:00") + np.timedelta64(int(start_hour * 60), "m"), step_minutes, count
+    )
     hour = (start_hour + np.arange(count) * step_minutes / 60.0) % 24.0
     day = 20649 + (start_hour + np.arange(count) * step_minutes / 60.0) // 24
     shape = 0.30 + 0.70 * np.exp(-(((hour - 15.0) / 4.0) ** 2))

@@ -1,0 +1,57 @@
+"""What a fleet can give: the most in each interval, in all of them together, and each site's best.
+
+Owns the summary of a survey's quotes that `shedwright quote` shows.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from fleet.desk import Survey
+from fleet.most import Available, most
+from sites.units import Floats, Ints
+
+
+@dataclass(frozen=True)
+class Offer:
+    """What the sites under the node can give; per-site arrays (site,)."""
+
+    available: Available
+    best: Ints
+    """(site,) candidate of most energy over the event, -1 = none"""
+    candidates: Ints
+    """(site,) number of candidates quoted"""
+    usual_kw: Floats
+    """(site,) mean plant power over the event with no event"""
+    cheapest_per_kwh: Floats
+    """(site,) least net cost per kWh shed among the site's candidates, NaN = none"""
+
+
+def offer(survey: Survey, seconds: float = 5.0) -> Offer:
+    """Summarise a survey; the figures hold feeder limits and call limits."""
+    quotes, buildings = survey.quoted.quotes, survey.fleet.roster.buildings
+    available = most(
+        quotes,
+        survey.feeders,
+        survey.headroom.kw,
+        survey.node_id,
+        buildings.delivery_factor,
+        survey.eligible.allowed,
+        seconds,
+    )
+    energy = quotes.expected_kw.sum(axis=1) * quotes.clock.step_h
+    order = np.lexsort((-energy, quotes.site))
+    found, first = np.unique(quotes.site[order], return_index=True)
+    best = np.full(quotes.site_count, -1, dtype=np.int64)
+    best[found] = order[first]
+    per_kwh = np.divide(quotes.net_cost, energy, out=np.full_like(energy, np.inf), where=energy > 0.0)
+    cheapest = np.full(quotes.site_count, np.inf)
+    np.minimum.at(cheapest, quotes.site, per_kwh)
+    event = slice(quotes.event_from, quotes.event_to)
+    return Offer(
+        available=available,
+        best=best,
+        candidates=np.bincount(quotes.site, minlength=quotes.site_count),
+        usual_kw=survey.quoted.ground.usual.power_kw[:, event].mean(axis=1),
+        cheapest_per_kwh=np.where(np.isfinite(cheapest), cheapest, np.nan),
+    )
