@@ -226,9 +226,9 @@ def _without_doubles(rows: _Rows, ids: pd.Index, clock: Clock, problems: list[Pr
     """
     key = rows.meter * clock.count + rows.step
     order = np.lexsort((-rows.quality, key))
-    same = np.append(False, np.diff(key[order]) == 0)
+    same = np.append(False, np.diff(key[order]) == 0)[: len(key)]
     kw = rows.kw[order]
-    before = np.append(np.nan, kw[:-1])
+    before = np.append(np.nan, kw)[: len(key)]
     wrong = same & (kw != before) & ~(np.isnan(kw) & np.isnan(before))
     problems += [
         Problem(

@@ -1,0 +1,79 @@
+"""Rules as data: presets, search by name, refusals as text, JSON round trip."""
+
+import pytest
+
+from fleet.errors import Refused
+from fleet.rules import PRESETS, SettlementRule, rule
+
+
+def test_presets_carry_the_terms_of_the_trade() -> None:
+    assert set(PRESETS) == {
+        f"{name}{stream}"
+        for name in ("ten_of_ten", "high_five_of_ten", "meter_before_after")
+        for stream in ("", "_plant")
+    }
+    ten, high = PRESETS["ten_of_ten"], PRESETS["high_five_of_ten"]
+    assert (ten.pool_days, ten.take_days, ten.adjustment, ten.cap_fraction) == (10, 10, "ratio", 0.2)
+    # The first three of the four hours before; a two-hour window that starts four hours before.
+    assert (ten.adjustment_from_h, ten.adjustment_to_h) == (4.0, 1.0)
+    assert (high.adjustment_from_h, high.adjustment_to_h) == (4.0, 2.0)
+    assert (high.pool_days, high.take_days, high.rank) == (10, 5, "highest")
+    plant = PRESETS["ten_of_ten_plant"]
+    assert (plant.stream, plant.adjustment) == ("plant", "additive")
+
+
+@pytest.mark.parametrize("name", PRESETS)
+def test_every_preset_survives_json(name: str) -> None:
+    again = SettlementRule.model_validate_json(PRESETS[name].model_dump_json())
+    assert again == PRESETS[name]
+    assert rule(name) is PRESETS[name]
+
+
+def test_a_rule_of_ones_own_starts_from_a_preset() -> None:
+    own = rule("mine", {"mine": {"based_on": "high_five_of_ten", "adjustment": "additive"}})
+    assert (own.name, own.adjustment, own.take_days, own.source) == ("mine", "additive", 5, "")
+    ladder = rule("steps", {"steps": {"performance_formula": "ladder", "ladder": [[0.6, 0.25], [0.7, 0.5]]}})
+    assert SettlementRule.model_validate_json(ladder.model_dump_json()) == ladder
+
+
+def test_an_unknown_name_is_refused_with_the_nearest() -> None:
+    with pytest.raises(Refused) as caught:
+        rule("ten-of-tn")
+    assert str(caught.value) == (
+        "fleet.toml or sites, column settlement_rule: came 'ten-of-tn'; expected the name of a settlement rule; "
+        "nearest: ten_of_ten, ten_of_ten_plant"
+    )
+
+
+def test_every_fault_of_a_rule_is_named_at_once() -> None:
+    with pytest.raises(Refused) as caught:
+        rule("mine", {"mine": {"based_on": "ten_of_ten", "take_dys": 4, "pool_days": 0}})
+    assert str(caught.value).splitlines() == [
+        "fleet.toml, column rules.mine.pool_days: came 0; expected Input should be greater than or equal to 1; "
+        "correct it in fleet.toml",
+        "fleet.toml, column rules.mine.take_dys: came an unknown field; expected a field of a settlement rule; "
+        "nearest: take_days",
+    ]
+
+
+def test_fields_that_contradict_each_other_are_refused() -> None:
+    with pytest.raises(Refused, match=r"expected take_days is above pool_days; correct it"):
+        rule("mine", {"mine": {"pool_days": 5, "take_days": 6}})
+    with pytest.raises(Refused, match="more hours before the event than adjustment_to_h"):
+        rule("mine", {"mine": {"adjustment": "ratio", "adjustment_from_h": 1.0, "adjustment_to_h": 2.0}})
+    with pytest.raises(Refused, match="a ladder with no rungs"):
+        rule("mine", {"mine": {"performance_formula": "ladder"}})
+
+
+def test_a_presets_name_is_not_taken_and_a_base_must_exist() -> None:
+    with pytest.raises(Refused, match="came a preset's name; expected a name of its own"):
+        rule("other", {"ten_of_ten": {}, "other": {}})
+    with pytest.raises(Refused, match=r"rules.mine.based_on: came 'ten_of_tne'; .* nearest: ten_of_ten"):
+        rule("mine", {"mine": {"based_on": "ten_of_tne"}})
+
+
+def test_the_order_of_rounding_follows_the_fields() -> None:
+    plain = PRESETS["ten_of_ten"].order_of_rounding
+    assert "performance factor unrounded" in plain and "capped at their commitment" not in plain
+    other = rule("mine", {"mine": {"cap_intervals": True, "performance_decimals": 2}}).order_of_rounding
+    assert other.index("capped at their commitment") < other.index("performance factor rounded half-up to 2")
