@@ -11,6 +11,7 @@ from typing import Final
 
 import numpy as np
 
+from sites.errors import SitesError
 from sites.roster import Buildings, Rows
 from sites.units import Bools, Floats
 
@@ -46,7 +47,9 @@ def two_node(buildings: Buildings, step_h: float) -> TwoNode:
 
     with C_a, C_m [kWh/K], K air to mass and H air to outdoors [kW/K]. Both eigenvalues are real and not above 0, so
     exp(A t) = e^(slow t) P_slow + e^(fast t) P_fast; inputs and means are integrals of the same. H = 0 is allowed.
+    Raises SitesError for a heat capacity or coupling that is not above 0, or an envelope below 0.
     """
+    _refuse_bad_zones(buildings)
     air, mass = buildings.air_kwh_per_k, buildings.mass_kwh_per_k
     coupling, envelope = buildings.coupling_kw_per_k, buildings.envelope_kw_per_k
     a, b = -(envelope + coupling) / air, coupling / air
@@ -117,6 +120,20 @@ def drift_excess_k(rise_k: Floats, counted: Bools, step_h: float) -> Floats:
             drift = np.maximum((high + low).max(axis=1), 0.0)
             np.maximum(excess[block], drift - limit, out=excess[block])
     return excess
+
+
+def _refuse_bad_zones(buildings: Buildings) -> None:
+    """SitesError naming the first building whose zone cannot be solved."""
+    air, mass = buildings.air_kwh_per_k, buildings.mass_kwh_per_k
+    coupling, envelope = buildings.coupling_kw_per_k, buildings.envelope_kw_per_k
+    bad = ~((air > 0.0) & (mass > 0.0) & (coupling > 0.0) & (envelope >= 0.0))
+    if bad.any():
+        row = int(np.flatnonzero(bad)[0])
+        raise SitesError(
+            f"zone, index {row}: came air {air[row]:g} and mass {mass[row]:g} kWh/K, coupling {coupling[row]:g} and "
+            f"envelope {envelope[row]:g} kW/K; expected the first three above 0 and the last not below; correct them "
+            f"({int(bad.sum())} such in all)"
+        )
 
 
 def _mean_exponential(z: Floats) -> Floats:

@@ -8,6 +8,7 @@ from model_arrays import buildings
 from scipy.linalg import expm
 
 from sites import comfort
+from sites.errors import SitesError
 
 # 5000 m2 at 165 kJ/m2K = 229.167 kWh/K, H 5 kW/K; all cooling of a load of 5 x 12 + 150 = 210 kW lost.
 CAPACITY_KWH_PER_K = 5000.0 * 165.0 / 3600.0
@@ -147,6 +148,15 @@ def test_many_zones_equal_each_alone():
         one = comfort.advance(alone, np.array([1.0]), np.array([0.5]), np.array([20.0]))
         all_of_them = comfort.advance(together, np.full(6, 1.0), np.full(6, 0.5), np.full(6, 20.0))
         np.testing.assert_array_equal([value[n] for value in all_of_them], [value[0] for value in one])
+
+
+def test_a_zone_that_cannot_be_is_refused():
+    with pytest.raises(SitesError) as refused:
+        zone_of(np.array([30.0, 30.0]), 100.0, np.array([45.0, 0.0]), 5.0, 0.25, count=2)
+    assert str(refused.value) == (
+        "zone, index 1: came air 30 and mass 100 kWh/K, coupling 0 and envelope 5 kW/K; expected the first three "
+        "above 0 and the last not below; correct them (1 such in all)"
+    )
 
 
 def excess(rises, counted=None, step_h=0.25):
