@@ -208,6 +208,8 @@ def _site_limits(base: Ground, terms: blocks.Terms, site: Ints, verdict: Ints, e
 
 def _quote_ids(roster: Roster, site: Ints) -> Strings:
     """Id of each candidate: the site's id and the candidate's number within the site, from 1."""
+    if not len(site):
+        return np.zeros(0, dtype=np.object_)
     first = np.searchsorted(site, site, side="left")
     number = np.strings.zfill((np.arange(len(site)) - first + 1).astype(np.str_), 4)
     named = np.strings.add(np.strings.add(roster.buildings.site_id.astype(np.str_)[site], "."), number)
