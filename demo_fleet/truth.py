@@ -123,7 +123,13 @@ def now_of(plant: Plant, drive: Drive, quarter: int) -> Now:
 
 def _held(plant: Plant, state: State) -> Floats:
     """Inventory in service, (R,)."""
-    total: Floats = (state.inventory_kwh_th * plant.tank_up).sum(axis=1)
+    total: Floats = _across(state.inventory_kwh_th * plant.tank_up)
+    return total
+
+
+def _across(values: Floats) -> Floats:
+    """Sum over machines or tanks, (R,): as a product with ones, ten times faster over so short an axis."""
+    total: Floats = values @ np.ones(values.shape[1])
     return total
 
 
@@ -172,9 +178,9 @@ def _discharge(
     share = np.minimum(_ratio(wanted, demand), 1.0)
     most = _most_from_tank(plant, state, ua, left, share)
     if bool(plant.series.any()):
-        share = np.minimum(_ratio(np.minimum(wanted, most.sum(axis=1)), demand), 1.0)
+        share = np.minimum(_ratio(np.minimum(wanted, _across(most)), demand), 1.0)
         most = _most_from_tank(plant, state, ua, left, share)
-    total = most.sum(axis=1)
+    total = _across(most)
     free = np.maximum(_held(plant, state) - plant.held_back_kwh_th, 0.0) / step_h
     drawn = np.minimum(wanted, np.where(orders.staged, np.minimum(total, free), total))
     return most * _ratio(drawn, total)[:, None]
@@ -204,7 +210,7 @@ def _stage(plant: Plant, state: State, orders: Orders, target: Floats, capacity:
     may = state.on | ((state.still_minutes >= plant.min_off_minutes) & ~orders.inhibit)
     needed = (target[:, None] > threshold * before) & (target > 0.0)[:, None]
     running = capacity * (may & needed)
-    share = np.minimum(_ratio(target, running.sum(axis=1)), 1.0)
+    share = np.minimum(_ratio(target, _across(running)), 1.0)
     return running * share[:, None]
 
 
@@ -213,10 +219,10 @@ def _power_kw(plant: Plant, now: Now, load: Floats, ice_mode: Bools, through_tan
     part = _ratio(load, np.where(ice_mode, now.ice_kw_th, now.direct_kw_th))
     full = np.where(ice_mode, now.ice_full_kw, now.direct_full_kw)
     machines = full * machine.part_load_fraction(plant.air_cooled, part) + plant.dedicated_kw * (load > 0.0)
-    cooling = load.sum(axis=1) + through_tank
+    cooling = _across(load) + through_tank
     flow = np.minimum(cooling / plant.design_kw_th, 1.2)
     shared = plant.shared_aux_kw * (0.85 + 0.2 * flow) * (cooling > 0.0)
-    result: Floats = machines.sum(axis=1) + shared + plant.tank_pump_kw * (through_tank > 0.0)
+    result: Floats = _across(machines) + shared + plant.tank_pump_kw * (through_tank > 0.0)
     return result
 
 
@@ -227,7 +233,7 @@ def _modes(plant: Plant, now: Now, wants: Bools, limit: Floats) -> tuple[Bools, 
     """
     ice_mode = plant.makes_ice & (wants & plant.ice_site)[:, None]
     mixed = np.where(ice_mode, now.ice_kw_th, now.direct_kw_th) * limit
-    enough = mixed.sum(axis=1) >= now.load
+    enough = _across(mixed) >= now.load
     ice_mode &= enough[:, None]
     charging = wants & enough & (~plant.ice_site | ice_mode.any(axis=1))
     return charging, ice_mode, np.where(ice_mode, now.ice_kw_th, now.direct_kw_th) * limit
@@ -242,27 +248,27 @@ def step(plant: Plant, now: Now, state: State, orders: Orders, step_h: float) ->
     demand = now.load + room.pull_down_kw_th(state.air_k, plant.air_kwh_per_k, plant.coupling_kw_per_k)
     wants = _wants_charge(plant, now, state, orders, held)
     charging, ice_mode, capacity = _modes(plant, now, wants, orders.limit)
-    usable = (capacity * (state.on | ~orders.inhibit)).sum(axis=1)
+    usable = _across(capacity * (state.on | ~orders.inhibit))
     wanted = np.where(charging, 0.0, _wanted(plant, now, orders, held, demand, usable))
     drawn = _discharge(plant, state, orders, demand, wanted, loss, step_h)
-    discharge = drawn.sum(axis=1)
+    discharge = _across(drawn)
     direct = np.minimum(demand - discharge, usable)
     into = _most_into_tank(plant, state, step_h) * charging[:, None]
-    asked = np.minimum(into.sum(axis=1), _asked_charge(plant, now, orders, held))
+    asked = np.minimum(_across(into), _asked_charge(plant, now, orders, held))
     load, charge = _machine_loads(plant, state, orders, capacity, ice_mode, direct, asked)
-    served = load.sum(axis=1) - charge + discharge
+    served = _across(load) - charge + discharge
     air, mass = room.advance(
         state.air_k, state.mass_k, now.load - served, plant.air_kwh_per_k, plant.mass_kwh_per_k,
         plant.coupling_kw_per_k, plant.envelope_kw_per_k, step_h,
     )  # fmt: skip
-    charged = into * _ratio(charge, into.sum(axis=1))[:, None]
+    charged = into * _ratio(charge, _across(into))[:, None]
     inventory = state.inventory_kwh_th + (charged - drawn - loss) * step_h
     on = load > 0.0
     still = np.where(on == state.on, state.still_minutes, 0.0) + step_h * 60.0
     power = _power_kw(plant, now, load, ice_mode, charge + discharge)
     flows = Flows(
-        power, load.sum(axis=1) - charge, charge, discharge, demand - served, loss.sum(axis=1), demand,
-        inventory.sum(axis=1), air, mass,
+        power, _across(load) - charge, charge, discharge, demand - served, _across(loss), demand,
+        _across(inventory), air, mass,
     )  # fmt: skip
     return State(inventory, air, mass, on, still, charging), flows
 
@@ -282,15 +288,15 @@ def _machine_loads(
     and the charge. Where a machine may not start yet, the charge gives way before the building.
     """
     warm = np.where(ice_mode, 0.0, capacity)
-    on_warm = np.minimum(direct, warm.sum(axis=1))
+    on_warm = np.minimum(direct, _across(warm))
     on_ice = direct - on_warm
-    spare = np.where(plant.ice_site, (capacity - warm).sum(axis=1) - on_ice, warm.sum(axis=1) - on_warm)
+    spare = np.where(plant.ice_site, _across(capacity - warm) - on_ice, _across(warm) - on_warm)
     asked = np.minimum(asked, np.maximum(spare, 0.0))
     with_water = np.where(plant.ice_site, 0.0, asked)
     load = _stage(plant, state, orders, on_warm + with_water, warm)
     if bool(ice_mode.any()):
         load = load + _stage(plant, state, orders, on_ice + asked - with_water, capacity - warm)
-    charge = np.clip(load.sum(axis=1) - direct, 0.0, asked)
+    charge = np.clip(_across(load) - direct, 0.0, asked)
     return load, charge
 
 
