@@ -29,7 +29,7 @@ PHRASES: Final = {
     "inhibit": (
         "Inhibit the start of {tags}",
         "controller shows start inhibited",
-        "hold it off at the controller and ring",
+        "hold it off and ring",
     ),
     "demand_limit": (
         "Set the demand limit of {tags}",
@@ -37,8 +37,8 @@ PHRASES: Final = {
         "ring; change no protection",
     ),
     "off": (
-        "Stop {tags} by the plant controller, never the disconnect, and keep it off",
-        "amps to zero, pump off after its delay, valve shut; tower stays if shared",
+        "Stop {tags} by the controller, never the disconnect",
+        "amps to zero, pump off after its delay, valve shut; off until its restart",
         "leave it running and ring",
     ),
     "demand_limit_removed": (
@@ -53,8 +53,8 @@ PHRASES: Final = {
     ),
     "restart": (
         "Let {tags} restart, load limited (see RESTART)",
-        "flow proven, amps rise, leaving water falls",
-        "let its own timer run out, force nothing, ring",
+        "flow and amps up",
+        "wait for its timer; never force it",
     ),
     "recharge_may_start": (
         "Recharge may start: {tags}",
@@ -148,17 +148,17 @@ def recharge(site: CalledSite) -> str:
 
 def cautions(site: CalledSite) -> tuple[str, ...]:
     """Cautions of every order, and those of ice plants."""
-    above = " to ".join(site.words.temperature(c).split(" ")[0] for c in COLD_BRINE_C)
-    unit = site.words.temperature(0.0).split(" ")[1]
+    above = " to ".join(site.words.temperature(celsius) for celsius in COLD_BRINE_C)
     ice = (
-        f"From making ice to cooling: hold the bypass until leaving brine is above +{above} {unit} and "
+        f"From making ice to cooling: hold the bypass until leaving brine is above {above} and "
         "building flow is proven.",
         "External-melt ice is never charged past full.",
     )
     return (
         "Life-safety, process and critical cooling stay on.",
         "Machine protections are never bypassed.",
-        "Keep the minimum evaporator flow of what stays on; run no pump against closed valves.",
+        "Keep the minimum evaporator flow of what stays on; run no pump against closed valves; "
+        "shared pumps and towers stay on.",
         "Keep freeze protection on.",
         *(ice if site.has_ice else ()),
         "Lock out before service.",

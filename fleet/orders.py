@@ -215,7 +215,7 @@ def row(line: Line) -> str:
 def _template() -> jinja2.Template:
     """The page, read once; a name it does not know is an error, never an empty space."""
     environment = jinja2.Environment(
-        undefined=jinja2.StrictUndefined, trim_blocks=True, lstrip_blocks=True, autoescape=False
+        undefined=jinja2.StrictUndefined, trim_blocks=True, lstrip_blocks=True, keep_trailing_newline=True
     )
     helpers: dict[str, Callable[..., str]] = {"wrapped": wrapped, "row": row}
     environment.filters.update(helpers)

@@ -125,6 +125,11 @@ def _restarts(off: pd.DataFrame, sites: pd.DataFrame) -> pd.DataFrame:
     rows = rows.sort_values(
         ["site_id", "ready_at", "loading_order", "unit_id"], kind="stable", ignore_index=True
     )
+    lost = sorted(set(rows.loc[rows["restart_gap_minutes"].isna(), "site_id"]))
+    if lost:
+        raise FleetError(
+            f"sites: no row with restart_gap_minutes for {', '.join(lost)}; the call is incomplete"
+        )
     place = rows.groupby("site_id").cumcount()
     lead = pd.to_timedelta(place * rows["restart_gap_minutes"], unit="min")
     at = (rows["ready_at"] - lead).groupby(rows["site_id"]).cummax() + lead

@@ -81,6 +81,7 @@ def call_frames(
     limits: dict[tuple[str, str], float] | None = None,
     idle: tuple[str, ...] = (),
     direction: str = "shed",
+    facts: Any = SITE_FACTS,
 ) -> dict[str, pd.DataFrame]:
     """All tables of a call. limits: load limit in the window by (site, machine); idle: machines never running."""
     limits = {("harbour-court", "CH-1"): 0.75} if limits is None else limits
@@ -95,7 +96,7 @@ def call_frames(
     frames = {
         name: filled(of, rows.get(name, empty)) for name, of in tables("call").items() if name != "steps"
     }
-    frozen = frozen_frames(chillers)
+    frozen = frozen_frames(chillers, facts)
     frames["steps"] = steps(
         frames["windows"], frozen["chillers"], frozen["sites"], frames["machines"], frames["tanks"], 15
     )
@@ -112,7 +113,7 @@ def made_call(
     facts: Any = SITE_FACTS, revision: int = 1, supersedes: int | None = None, **changes: Any
 ) -> CallRecord:
     """A CallRecord as if it had been read."""
-    frames = call_frames(**changes)
+    frames = call_frames(facts=facts, **changes)
     frames["request"]["supersedes"] = pd.array([supersedes] * len(frames["request"]), dtype="Int64")
     return CallRecord(
         path=Path("events/EV-1/call-001"),

@@ -175,6 +175,31 @@ def test_a_machine_that_is_named_off_but_runs_is_refused():
     )
 
 
+def test_a_called_site_with_no_row_of_its_own_is_refused():
+    frames, frozen = call_frames(), frozen_frames()
+    given = (
+        frames["windows"],
+        frozen["chillers"],
+        frozen["sites"].iloc[1:],
+        frames["machines"],
+        frames["tanks"],
+    )
+    with pytest.raises(FleetError) as refused:
+        steps(*given, 15)
+    assert str(refused.value) == (
+        "sites: no row with restart_gap_minutes for harbour-court; the call is incomplete"
+    )
+
+
+def test_a_machine_with_no_row_or_no_course_is_refused():
+    frames, frozen = call_frames(), frozen_frames()
+    w, m, t = frames["windows"], frames["machines"], frames["tanks"]
+    with pytest.raises(FleetError, match="no row with min_off_minutes for harbour-court CH-1; the call is"):
+        steps(w, frozen["chillers"].iloc[1:], frozen["sites"], m, t, 15)
+    with pytest.raises(FleetError, match="no rows inside the window of site mill-school; the call is"):
+        steps(w, frozen["chillers"], frozen["sites"], m[m["site_id"] != "mill-school"], t, 15)
+
+
 def test_full_again_off_the_grid_is_refused():
     frames, frozen = call_frames(), frozen_frames()
     frames["windows"]["full_again_at"] = pd.Timestamp("2026-07-17 03:07", tz="UTC")
