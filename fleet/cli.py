@@ -30,7 +30,9 @@ EventId = Annotated[str, typer.Argument(metavar="EVENT", help="The event's id.")
 Json = Annotated[bool, typer.Option("--json", help="Print one JSON document on stdout and nothing else.")]
 From = Annotated[str, typer.Option("--from", help="Start of the event: ISO 8601 with offset, or local time.")]
 To = Annotated[str, typer.Option("--to", help="End of the event.")]
-Node = Annotated[str | None, typer.Option("--node", help="Where the request is held; default the whole fleet.")]
+Node = Annotated[
+    str | None, typer.Option("--node", help="Where the request is held; default the whole fleet.")
+]
 At = Annotated[str | None, typer.Option("--at", help="When the call is made; default now.")]
 Way = Annotated[str, typer.Option("--direction", help="shed or absorb.")]
 
@@ -80,7 +82,9 @@ def sample(
 
 @app.command()
 def columns(
-    table: Annotated[str | None, typer.Argument(metavar="[TABLE]", help="One table; none: all of them.")] = None,
+    table: Annotated[
+        str | None, typer.Argument(metavar="[TABLE]", help="One table; none: all of them.")
+    ] = None,
     json: Json = False,
 ) -> None:
     """Print the table of columns: type, unit, range, meaning, required, default, where to find the value.
@@ -140,7 +144,9 @@ def call(
     start: From,
     end: To,
     node: Node = None,
-    event: Annotated[str | None, typer.Option("--event", help="Id of the event; default from time and node.")] = None,
+    event: Annotated[
+        str | None, typer.Option("--event", help="Id of the event; default from time and node.")
+    ] = None,
     at: At = None,
     direction: Way = "shed",
     purpose: Annotated[str, typer.Option("--purpose", help="real, test or rehearsal.")] = "real",
@@ -180,7 +186,8 @@ def settle(
     fleet: FleetDir,
     event: EventId,
     meter: Annotated[
-        Path | None, typer.Option("--meter", help="Readings that replace the folder's for the same intervals.")
+        Path | None,
+        typer.Option("--meter", help="Readings that replace the folder's for the same intervals."),
     ] = None,
     json: Json = False,
 ) -> None:

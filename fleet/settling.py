@@ -39,15 +39,20 @@ class Settled:
 
 
 def settle_event(
-    home: Path, event_id: str, meter_file: Path | None = None, progress: Progress = lambda text: None
+    home: Path,
+    event_id: str,
+    meter_file: Path | None = None,
+    progress: Progress = lambda text: None,
+    meters_of: Path | None = None,
 ) -> Settled:
     """Settle the newest call of an event on the folder's readings and write the next revision below `home`.
 
     meter_file: readings that take the place of the folder's own for the same meter and interval (counted in
-    the notes). Raises Refused and FleetError for readings or a record that cannot be used; nothing is written.
+    the notes); meters_of: the fleet folder whose readings are used where that is not `home`. Raises Refused
+    and FleetError for readings or a record that cannot be used; nothing is written then.
     """
     record = records.read_call(home, event_id, only=("request", "windows", "intervals"))
-    frozen = frozen_folder(home, record)
+    frozen = frozen_folder(meters_of or home, record)
     progress("reading meters")
     facts = call_facts(record)
     readings, notes = _readings(frozen, facts, meter_file)

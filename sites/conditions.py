@@ -13,7 +13,7 @@ from sites.outlook import Outlook, in_hours
 from sites.roster import ICE_KINDS, STRATEGIES, TANK_KINDS, Roster, Standing, kind_is
 from sites.units import Bools, Floats
 
-RETURN_GLIDE_K = 3.0
+RETURN_GLIDE_K = 2.0
 """Brine warms by this much through an ice tank while charging (common practice, no source)."""
 
 

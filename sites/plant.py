@@ -23,8 +23,9 @@ from sites.rows import Plants
 from sites.units import Bools, Floats, total
 
 START_CHARGE_BELOW = 0.95
-"""Usual charging starts below this share of capacity and goes on to STOP_CHARGE_AT (common practice, no source)."""
-STOP_CHARGE_AT = 0.9995
+"""Usual charging starts below this share of capacity and goes on to STOP_CHARGE_AT,
+where the last of the ice freezes too slowly to be worth cold brine (common practice, no source)."""
+STOP_CHARGE_AT = 0.985
 PULL_DOWN_H = 1.0
 """Time constant of the ramp that brings a warm zone back; a step would rebound above the normal peak
 (Xu, Haves, Piette, Braun 2004 recommend a ramp; its length is common practice, no source)."""

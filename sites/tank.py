@@ -132,8 +132,9 @@ def discharge_curves(tanks: Tanks) -> RateCurves:
 def charge_curves(tanks: Tanks) -> RateCurves:
     """Charge limits, falling with inventory; a full tank takes nothing (see most_charge_kw_th).
 
-    Internal melt: SET_A in the charged fraction. External melt: INTERNAL_MELT in the charged fraction, for ice
-    grows on the coil. Chilled water: flat until full, its charge limit, or capacity over CHILLED_WATER_HOURS.
+    Ice: INTERNAL_MELT in the charged fraction, for ice grows on the coil whichever side it melts from. SET_A
+    would stop short of full at usual brine (0.96 at an LMTD of 5 K), which a tank in daily use does not.
+    Chilled water: flat until full, its charge limit, or capacity over CHILLED_WATER_HOURS.
     """
     return _curves(tanks, "charge", tanks.charge_limit_kw_th)
 
@@ -283,8 +284,13 @@ def _curves(tanks: Tanks, way: str, limit_kw_th: Floats) -> RateCurves:
 @cache
 def _ice_tables(way: str) -> tuple[Floats, Floats]:
     """Base and slope at the knots, each (tank kind, J), rows in the order of TANK_KINDS; zeros for water."""
-    external = EXTERNAL_MELT_DISCHARGE if way == "discharge" else INTERNAL_MELT
-    pairs = {"ice_internal_melt": (SET_A[:3], SET_A[3:]), "ice_external_melt": ((0.0, 0.0), external)}
+    freezing = ((0.0, 0.0), INTERNAL_MELT)
+    pairs = {"ice_internal_melt": freezing, "ice_external_melt": freezing}
+    if way == "discharge":
+        pairs = {
+            "ice_internal_melt": (SET_A[:3], SET_A[3:]),
+            "ice_external_melt": ((0.0, 0.0), EXTERNAL_MELT_DISCHARGE),
+        }
     # A model of discharge is written in the discharged fraction: mirror the knots, then the values back.
     mirrored = way == "discharge"
     knots = (1.0 - KNOT_SOC)[::-1] if mirrored else KNOT_SOC

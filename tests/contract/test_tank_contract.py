@@ -189,22 +189,3 @@ def test_a_last_remnant_never_goes_faster_than_it_is_there(kind):
                 )
                 most = tank.most_discharge_kw_th(now, loss, part.capacity_kwh_th, knots, step_h)
                 assert 0.0 <= most[0, 0] <= (now - loss * step_h)[0, 0] / step_h + 1e-12
-
-
-def test_ice_is_frozen_only_as_far_as_cold_brine_reaches():
-    # The rate-limited form with SET_A stops short of full: 0.306 - 0.072 s - 0.258 s^2 = 0 at s = 0.9584 for an
-    # LMTD of 5 K. A UA form (external melt's freezing) and water do fill.
-    end = {}
-    for kind in TANK_KINDS:
-        part = tanks(kind, capacity=1.0, loss=0.0)
-        curves = knots_of(part, "charge", 5.0)
-        now = np.zeros((1, 1))
-        for _ in range(150):
-            most = tank.most_charge_kw_th(now, np.zeros((1, 1)), part.capacity_kwh_th, curves, 0.25)
-            now = now + most * 0.25
-        end[kind] = now[0, 0]
-    model = (-0.072 + np.sqrt(0.072**2 + 4.0 * 0.258 * 0.306)) / (2.0 * 0.258)
-    assert model == pytest.approx(0.9584, abs=5e-5)
-    assert model - 0.003 < end["ice_internal_melt"] <= model
-    assert end["ice_external_melt"] == pytest.approx(1.0, abs=1e-12)
-    assert end["chilled_water"] == pytest.approx(1.0, abs=1e-12)
