@@ -18,6 +18,7 @@ from fleet.audit_evidence import (
     on_clock,
     tanks_of,
 )
+from fleet.feeders import Feeders, feeders
 from sites import chiller
 from sites.outlook import in_hours
 from sites.roster import ICE_KINDS, TANK_KINDS, Chillers, Tanks, kind_is
@@ -29,6 +30,8 @@ class Case:
     """The evidence and what follows from its frozen rows. A machines and K tanks of all N sites, T intervals."""
 
     evidence: Evidence
+    tree: Feeders
+    """The network of the frozen rows"""
     price_per_kwh: Floats
     """(N, T)"""
     billed_peak_kw: Floats
@@ -38,6 +41,8 @@ class Case:
     charge_hours: Bools
     machine_site: Ints
     """(A,)"""
+    machine_up: Bools
+    """(A,) in service when the call was made"""
     chillers: Chillers
     """(A, 1)"""
     direct_kw_th: Floats
@@ -96,6 +101,7 @@ def case(evidence: Evidence) -> Case:
     off, demand_limit = _orders(evidence, machine_row)
     return Case(
         evidence=evidence,
+        tree=_tree(evidence),
         price_per_kwh=on_clock(
             frozen["tariffs"], "tariff_id", evidence.text("tariff_id"), "price_per_kwh", clock
         ),
@@ -103,6 +109,7 @@ def case(evidence: Evidence) -> Case:
         occupied=_occupied(evidence, hours, hour),
         charge_hours=in_hours(hour, evidence.fact("charge_from_hour"), evidence.fact("charge_to_hour")),
         machine_site=machine_site,
+        machine_up=up[:, 0],
         chillers=chillers,
         direct_kw_th=direct.available_kw_th[:, 0, :] * up,
         direct_full_kw=direct.full_load_kw[:, 0, :] * up,
@@ -126,6 +133,12 @@ def over_sites(site: Ints, values: Floats, count: int) -> Floats:
     total = np.zeros((count, values.shape[1]))
     np.add.at(total, site, values)
     return total
+
+
+def _tree(evidence: Evidence) -> Feeders:
+    """The network; a fleet without a table of nodes is one node."""
+    nodes, loads = (evidence.record.frozen.get(name) for name in ("nodes", "node_loads"))
+    return feeders(nodes, loads, evidence.text("node_id"), evidence.clock, evidence.site_id)
 
 
 def _rows_of(unit_site: Ints, called: Ints) -> Ints:

@@ -12,7 +12,6 @@ from fleet.audit_findings import Findings
 from sites import chiller
 from sites.units import Bools, Floats
 
-MACHINE_SUMS = {"direct_kw_th": "direct_kw_th"}
 TANK_SUMS = ("charge_kw_th", "discharge_kw_th", "loss_kw_th", "inventory_kwh_th", "discharge_limit_kw_th")
 
 
@@ -29,11 +28,18 @@ def expected_and_committed(case: Case, found: Findings) -> None:
 def cooling_balance(case: Case, found: Findings) -> None:
     """direct + discharge + unmet = cooling load + pull-down; none of them negative."""
     book, sheet = case.evidence, case.evidence.sheets["intervals"]
-    names = ("direct_kw_th", "discharge_kw_th", "unmet_kw_th", "cooling_load_kw_th", "pull_down_kw_th")
-    direct, discharge, unmet, load, pull_down = (book.grid("intervals", name) for name in names)
+    names = ("discharge_kw_th", "unmet_kw_th", "cooling_load_kw_th", "pull_down_kw_th")
+    discharge, unmet, load, pull_down = (book.grid("intervals", name) for name in names)
     made = (load + pull_down - discharge - unmet).ravel()
     found.equal("cooling balance", sheet, "direct_kw_th", made, load.ravel())
-    for name in (*names, "charge_kw_th", "loss_kw_th", "usual_chiller_kw_th", "usual_unmet_kw_th"):
+    for name in (
+        *names,
+        "direct_kw_th",
+        "charge_kw_th",
+        "loss_kw_th",
+        "usual_chiller_kw_th",
+        "usual_unmet_kw_th",
+    ):
         found.least("not negative", sheet, name, 0.0, load.ravel())
     found.most("unmet within the load", sheet, "unmet_kw_th", load.ravel())
 
@@ -151,8 +157,8 @@ def before_the_window(case: Case, found: Findings) -> None:
 
 def _capability(case: Case) -> tuple[Floats, Floats, Bools]:
     """What each machine could give and draw at full load in its mode, and the mode, (U, T)."""
-    ice = case.evidence.sheets["machines"].frame["making_ice"].to_numpy(dtype=np.bool_)
-    ice = ice.reshape(-1, case.evidence.clock.count)
+    flags = case.evidence.sheets["machines"].frame["making_ice"].to_numpy(dtype=np.bool_)
+    ice: Bools = flags.reshape(-1, case.evidence.clock.count)
     own = case.own_machines
     able = np.where(ice, case.ice_kw_th[own], case.direct_kw_th[own])
     full = np.where(ice, case.ice_full_kw[own], case.direct_full_kw[own])

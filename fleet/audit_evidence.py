@@ -38,6 +38,7 @@ class Evidence:
     """One call's record on arrays. Tables are asked by `grid(table, column)`: (row, interval)."""
 
     record: CallRecord
+    folder: str
     sheets: Mapping[str, Sheet]
     settings: Mapping[str, Any]
     clock: Clock
@@ -155,6 +156,7 @@ def evidence(record: CallRecord, folder: str, found: Findings) -> Evidence | Non
     tank_facts = _units_of(record.frozen["tanks"], sites, [])
     made = Evidence(
         record=record,
+        folder=folder,
         sheets=sheets,
         settings=settings,
         clock=clock,

@@ -9,7 +9,7 @@ from typing import Final
 import numpy as np
 
 from fleet.audit_case import Case
-from fleet.audit_findings import Findings, Sheet, allowed
+from fleet.audit_findings import Findings, allowed
 from sites import tank
 from sites.units import Floats
 
@@ -116,7 +116,10 @@ def held_back(case: Case, found: Findings) -> None:
 
 
 def conservation(case: Case, found: Findings) -> None:
-    """Over the horizon, event less usual: sum d(chiller) dt = dE_end + sum d(loss) dt - sum C D_end - H sum mean D_air dt."""
+    """Over the horizon, event less usual, with D the zone's rise:
+
+    sum d(chiller) dt = dE_end + sum d(loss) dt - sum C D_end - H sum mean D_air dt.
+    """
     book, sheet = case.evidence, case.evidence.sheets["windows"]
     step_h = book.clock.step_h
     made = book.grid("intervals", "direct_kw_th") + book.grid("intervals", "charge_kw_th")

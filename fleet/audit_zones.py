@@ -4,6 +4,8 @@ The rise is stepped again from what goes unmet because of the event, each interv
 before, so that a wrong number shows in its own row. Shapes: R called sites, T intervals.
 """
 
+from typing import Any
+
 import numpy as np
 
 from fleet.audit_case import Case
@@ -79,8 +81,8 @@ def _buildings(case: Case) -> Buildings:
     """The zone parameters of the called sites as the model reads them; all else is empty."""
     book = case.evidence
     names = ("air_kwh_per_k", "mass_kwh_per_k", "coupling_kw_per_k", "envelope_kw_per_k")
-    zone = {name: book.fact(name, book.called) for name in names}
-    other = dict.fromkeys(
+    zone: dict[str, Any] = {name: book.fact(name, book.called) for name in names}
+    other: dict[str, Any] = dict.fromkeys(
         (n for n in Buildings.__dataclass_fields__ if n not in zone), np.zeros(book.called.size)
     )
     return Buildings(**(other | zone))

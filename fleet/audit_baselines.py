@@ -1,0 +1,385 @@
+"""Rules on baselines: which days were used and why, and the baseline from their readings alone.
+
+The frozen rule is applied again to the recorded days. An estimate is no reading: it never enters a baseline. Shapes:
+S called sites, T shown intervals, D local days (the event's last), L slots a day.
+"""
+
+from dataclasses import dataclass
+from typing import Final
+
+import numpy as np
+import pandas as pd
+
+from fleet.audit_evidence import utc_naive
+from fleet.audit_findings import Findings
+from fleet.audit_settled import Days, Settled, days_of, local_day, slots_of
+from fleet.rules import SettlementRule
+from sites.units import AnyArray, Bools, Floats, Ints
+
+READ: Final = ("other_day_type", "holiday")
+"""Reasons for which a day's readings are not looked at, and not recorded."""
+LIKE: Final = ("like_days", "event_days")
+
+
+@dataclass(frozen=True)
+class Slots:
+    """Local slots of the event (E,) and of a rule's adjustment window (W,), with the window's place in time."""
+
+    event: Ints
+    window: Ints
+    window_days_before: Ints
+    """(W,) 0 where the window's interval lies on the event's day"""
+
+
+def days_read(made: Settled, found: Findings) -> None:
+    """rank_value and window_base_kw of each day from its own readings; nothing where one was not measured."""
+    days, sheet = days_of(made), made.sheet("days")
+    readings = days.readings
+    rank, base = np.full(len(sheet.frame), np.nan), np.full(len(sheet.frame), np.nan)
+    there = np.zeros(len(sheet.frame), dtype=np.bool_)
+    for rule in dict.fromkeys(made.rules):
+        rows = _sites_of(made, rule)
+        slots = _slots(made, rule)
+        for values, at in ((rank, slots.event), (base, slots.window)):
+            mean = _mean(readings[rows][:, :, at], days.exists[:, at])
+            own = days.row[rows]
+            values[own[own >= 0]] = mean[own >= 0]
+        own = days.row[rows]
+        there[own[own >= 0]] = days.recorded[rows][own >= 0]
+    event_day = sheet.frame["day"].to_numpy().astype("datetime64[D]") == days.day[-1]
+    rank = np.where(event_day, np.nan, rank)
+    asked = event_day & _without_window(made, sheet.frame["site_id"])
+    base = np.where(asked, np.nan, base)
+    for name, values in (("rank_value", rank), ("window_base_kw", base)):
+        kept = np.where(there, values, sheet.numbers(name))
+        found.equal("means of a day", sheet, name, kept)
+
+
+def days_chosen(made: Settled, found: Findings) -> None:
+    """Reason, mode and use of every day by the frozen rule, holidays, plant days and earlier calls."""
+    days, sheet = days_of(made), made.sheet("days")
+    wanted = np.full(len(sheet.frame), "", dtype=object)
+    rank = _by_day(sheet.numbers("rank_value"), days.row)
+    base = _by_day(sheet.numbers("window_base_kw"), days.row)
+    told = _by_day(sheet.frame["reason"].to_numpy(dtype=object), days.row)
+    method = made.sites("method")
+    for rule in dict.fromkeys(made.rules):
+        rows = _sites_of(made, rule)
+        reason = _reasons(made, days, rule, rows, rank[rows], base[rows], told[rows], method[rows])
+        own = days.row[rows]
+        wanted[own[own >= 0]] = reason[own >= 0]
+    found.same("days chosen", sheet, "reason", wanted)
+    found.same("days chosen", sheet, "used", wanted == "used")
+    found.same("days chosen", sheet, "mode", _modes(made, sheet.frame))
+    count = pd.Series(wanted != "", index=sheet.frame.index)
+    wrong = sheet.frame.duplicated(["site_id", "day"], keep=False).to_numpy() | ~count.to_numpy()
+    found.wrong(
+        "days chosen", sheet, "day", wrong, sheet.frame["day"].to_numpy(), "each day of the look-back once"
+    )
+
+
+def baseline(made: Settled, found: Findings) -> None:
+    """baseline_kw: slot by slot the mean of the used days' readings, or of the readings before and after."""
+    if not made.whole:
+        return
+    days, sheet = days_of(made), made.sheet("intervals")
+    method = made.sites("method")
+    like = np.isin(method.astype(str), LIKE)[:, None]
+    flat = (method == "before_after")[:, None]
+    around = np.stack([_around(made, days, rule, row) for row, rule in enumerate(made.rules)])
+    by_slot = _average(days)
+    expected = np.where(like, _shown(made, days, by_slot), np.where(flat, around[:, None], np.nan))
+    # An event at night has its windows on days that are not recorded: those values are not looked at.
+    known = ~flat | ~np.isnan(expected)
+    expected = np.where(known, expected, made.grid("baseline_kw"))
+    found.equal("baseline", sheet, "baseline_kw", expected.ravel())
+
+
+def adjustment(made: Settled, found: Findings) -> None:
+    """The adjustment before and after its cap, from the window's means; the adjusted baseline from it."""
+    days, sheet = days_of(made), made.sheet("sites")
+    by_slot, readings = _average(days), days.readings
+    level = _by_day(made.sheet("days").numbers("window_base_kw"), days.row)[:, -1]
+    raw, applied = np.full(level.shape, np.nan), np.ones(level.shape)
+    kind = np.full(level.shape, "none", dtype=object)
+    like = np.isin(made.sites("method").astype(str), LIKE)
+    for rule in dict.fromkeys(made.rules):
+        rows = _sites_of(made, rule)
+        rows = rows[like[rows]]
+        if rule.adjustment == "none" or not rows.size:
+            continue
+        slots = _slots(made, rule)
+        base = _plain_mean(by_slot[rows][:, slots.window])
+        peak = np.where(days.used[rows][:, :, None], np.nan_to_num(readings[rows], nan=-np.inf), -np.inf).max(
+            axis=(1, 2)
+        )
+        additive = (base <= np.maximum(rule.small_base_fraction * peak, 0.0)) | (
+            rule.adjustment == "additive"
+        )
+        known = ~np.isnan(level[rows]) & ~np.isnan(base)
+        ratio = level[rows] / np.where(known & ~additive, base, 1.0)
+        one = np.where(known, np.where(additive, level[rows] - base, ratio), np.nan)
+        limit = np.abs(_plain_mean(by_slot[rows][:, slots.event]))
+        capped = _capped(np.where(known, one, 1.0), additive, limit, rule)
+        raw[rows], applied[rows] = one, np.where(known, capped, 1.0)
+        kind[rows] = np.where(known, np.where(additive, "additive", "ratio"), "none")
+    place = pd.Index(made.site_id).get_indexer(pd.Index(sheet.frame["site_id"]))
+    found.equal("adjustment", sheet, "adjustment_raw", raw[place])
+    found.equal("adjustment", sheet, "adjustment", applied[place])
+    found.same("adjustment", sheet, "adjustment_kind", kind[place])
+
+
+def adjusted(made: Settled, found: Findings) -> None:
+    """adjusted_baseline_kw = baseline x factor, or baseline + kW if additive."""
+    if not made.whole:
+        return
+    kind = made.sites("adjustment_kind")[:, None]
+    by = made.site_numbers("adjustment")[:, None]
+    raw = made.grid("baseline_kw")
+    value = np.where(kind == "ratio", raw * by, np.where(kind == "additive", raw + by, raw))
+    found.equal("adjusted baseline", made.sheet("intervals"), "adjusted_baseline_kw", value.ravel())
+
+
+def event_day_readings(made: Settled, found: Findings) -> None:
+    """The event day's readings in day_intervals are the metered ones of intervals, where both show the interval."""
+    if not made.whole:
+        return
+    days, sheet = days_of(made), made.sheet("intervals")
+    zone, step = str(made.settings["timezone"]), made.clock.step_minutes
+    starts = made.clock.starts
+    slot = slots_of(starts, zone, step)
+    today = local_day(starts, zone) == days.day[-1]
+    twice = pd.Series(slot).where(today).duplicated(keep=False).to_numpy() & today
+    metered = made.grid("metered_kw")
+    expected = np.where(today & ~twice, days.kw[:, -1][:, slot], metered)
+    found.equal("readings of the event's day", sheet, "metered_kw", expected.ravel())
+
+
+def _sites_of(made: Settled, rule: SettlementRule) -> Ints:
+    return np.array([row for row, other in enumerate(made.rules) if other == rule], dtype=np.int64)
+
+
+def _slots(made: Settled, rule: SettlementRule) -> Slots:
+    """Slots of the event and of the adjustment window of a rule."""
+    zone, clock = str(made.settings["timezone"]), made.clock
+    event = np.arange(made.event[0], made.event[1], clock.step)
+    start, end = (made.event[0] - _hours(h) for h in (rule.adjustment_from_h, rule.adjustment_to_h))
+    # On the grid of the fleet, whole intervals only.
+    before = (
+        made.event[0] - np.arange(1, int(_hours(rule.adjustment_from_h) // clock.step) + 2)[::-1] * clock.step
+    )
+    window = before[(before >= start) & (before + clock.step <= end)]
+    own = local_day(made.event[:1], zone)[0]
+    ago = (own - local_day(window, zone)).astype(np.int64) if window.size else np.zeros(0, dtype=np.int64)
+    return Slots(slots_of(event, zone, clock.step_minutes), slots_of(window, zone, clock.step_minutes), ago)
+
+
+def _hours(hours: float) -> np.timedelta64:
+    return np.timedelta64(round(hours * 3_600_000_000), "us")
+
+
+def _without_window(made: Settled, site_id: pd.Series) -> Bools:
+    """Rows of sites whose rule looks at no adjustment window on the event's day, or not only on that day."""
+    none = {
+        site: rule.kind != "like_days" or bool(_slots(made, rule).window_days_before.any())
+        for site, rule in zip(made.site_id.tolist(), made.rules, strict=True)
+    }
+    mask: Bools = site_id.map(none).fillna(True).to_numpy(dtype=np.bool_)
+    return mask
+
+
+def _mean(kw: Floats, exists: Bools) -> Floats:
+    """Mean over the slots that exist; NaN if one of them is not measured, or none exists."""
+    count = exists.sum(axis=-1)
+    total = np.where(exists, kw, 0.0).sum(axis=-1)
+    return np.where(count > 0, total / np.maximum(count, 1), np.nan)
+
+
+def _plain_mean(kw: Floats) -> Floats:
+    return kw.mean(axis=-1) if kw.shape[-1] else np.full(kw.shape[:-1], np.nan)
+
+
+def _average(days: Days) -> Floats:
+    """(S, L) slot-by-slot mean over the used days, of those that have a reading there."""
+    held = days.used[:, :, None] & ~np.isnan(days.readings)
+    count = held.sum(axis=1)
+    total = np.where(held, days.kw, 0.0).sum(axis=1)
+    return np.where(count > 0, total / np.maximum(count, 1), np.nan)
+
+
+def _by_day(values: AnyArray, row: Ints) -> AnyArray:
+    """A column of table days as (S, D); NaN or "" where there is no row."""
+    none = "" if values.dtype == object else np.nan
+    padded = np.append(values, none) if values.dtype != object else np.array([*values, none], dtype=object)
+    return padded[row]
+
+
+def _shown(made: Settled, days: Days, by_slot: Floats) -> Floats:
+    """The slots' means on the shown intervals (S, T); nothing on days of another class than the event's."""
+    zone = str(made.settings["timezone"])
+    starts = made.clock.starts
+    day = local_day(starts, zone)
+    free = _free_days(made, day)
+    own = _free_days(made, days.day[-1:])[0]
+    like = np.stack([(free == own) | (rule.day_classes == "all_days") for rule in made.rules])
+    return np.where(like, by_slot[:, slots_of(starts, zone, made.clock.step_minutes)], np.nan)
+
+
+def _free_days(made: Settled, day: AnyArray) -> Bools:
+    """Weekends and holidays."""
+    holidays = made.call.frozen.get("holidays")
+    dates = np.zeros(0, dtype="datetime64[D]")
+    if holidays is not None:
+        dates = holidays["date"].to_numpy().astype("datetime64[D]")
+    free: Bools = ((day.astype(np.int64) + 3) % 7 >= 5) | np.isin(day, dates)
+    return free
+
+
+def _around(made: Settled, days: Days, rule: SettlementRule, row: int) -> float:
+    """Mean reading before and after the event, from the event's day; NaN where a part lies on another day."""
+    clock, zone = made.clock, str(made.settings["timezone"])
+    start, end = made.event[0] - _hours(rule.before_buffer_h), made.event[1] + _hours(rule.after_buffer_h)
+    before = np.arange(start - _hours(rule.before_h), start, clock.step)
+    after = np.arange(end, end + _hours(rule.after_h), clock.step)
+    times = np.concatenate([before, after])
+    if not times.size or (local_day(times, zone) != days.day[-1]).any():
+        return float("nan")
+    kw = days.readings[row, -1, slots_of(times, zone, clock.step_minutes)]
+    return float(np.nanmean(kw)) if (~np.isnan(kw)).any() else float("nan")
+
+
+def _capped(raw: Floats, additive: Bools, limit_kw: Floats, rule: SettlementRule) -> Floats:
+    """The adjustment within the rule's cap."""
+    if rule.cap_fraction is None:
+        return raw
+    cap = rule.cap_fraction
+    low = 1.0 - cap if rule.cap_form == "difference" else 1.0 / (1.0 + cap)
+    most = cap * np.where(np.isnan(limit_kw), np.inf if cap else 0.0, limit_kw)
+    return np.where(additive, np.clip(raw, -most, most), np.clip(raw, low, 1.0 + cap))
+
+
+def _modes(made: Settled, frame: pd.DataFrame) -> AnyArray:
+    """How each plant ran on each day of table days; no frozen row = usual."""
+    plant = made.call.frozen.get("plant_days")
+    if plant is None or plant.empty:
+        return np.full(len(frame), "usual", dtype=object)
+    known = plant.drop_duplicates(["site_id", "day"], keep="last").set_index(["site_id", "day"])["mode"]
+    keys = pd.MultiIndex.from_frame(frame[["site_id", "day"]])
+    return known.reindex(keys).fillna("usual").to_numpy(dtype=object)
+
+
+def _reasons(
+    made: Settled,
+    days: Days,
+    rule: SettlementRule,
+    rows: Ints,
+    rank: Floats,
+    base: Floats,
+    told: AnyArray,
+    method: AnyArray,
+) -> AnyArray:
+    """Reason of every (site of the rule, day) by the rule, days newest last and the event's own at the end.
+
+    Low usage and event days that fill the pool are taken as told; what is chosen among the others is not.
+    """
+    reason = _first_reasons(made, days, rule, rows, rank, base)
+    reason[:, -1] = "event_day"
+    eligible = reason == "used"
+    if rule.kind == "before_after":
+        return np.where(eligible, "not_ranked", reason)
+    low = eligible & (told == "low_usage") & (rule.low_usage_fraction is not None)
+    reason, eligible = np.where(low, "low_usage", reason), eligible & ~low
+    newest = np.cumsum(eligible[:, ::-1], axis=1)[:, ::-1]
+    pool = eligible & (newest <= rule.pool_days)
+    reason = np.where(eligible & ~pool, "enough_days", reason)
+    short = pool.sum(axis=1) < rule.minimum_days
+    added = (method == "event_days")[:, None] & (told == "used") & (reason == "event_past")
+    short &= ~added.any(axis=1)
+    taken = _taken(pool | added, made.sign * rank, rule) & ~short[:, None]
+    reason = np.where(pool | added, np.where(taken, "used", "not_ranked"), reason)
+    return np.where(short[:, None] & pool, "too_few_days", reason)
+
+
+def _first_reasons(
+    made: Settled, days: Days, rule: SettlementRule, rows: Ints, rank: Floats, base: Floats
+) -> AnyArray:
+    """ "used" for every day that may enter the pool, else the first thing that speaks against it (site, day)."""
+    age = len(days.day) - 1 - np.arange(len(days.day))
+    free_event = bool(_free_days(made, days.day[-1:])[0])
+    other = np.zeros(len(days.day), dtype=np.bool_)
+    if rule.day_classes != "all_days":
+        free = days.weekend | days.holiday
+        other = ~free if free_event else days.weekend if rule.holidays == "excluded" else free
+    excluded = rule.holidays == "excluded" and rule.day_classes == "weekday_weekend"
+    past = _past_days(made, days)[rows]
+    after = np.concatenate([past[:, 1:], np.ones((len(rows), 1), dtype=np.bool_)], axis=1)
+    after[:, -2:-1] = True
+    needs_window = rule.kind == "like_days" and rule.adjustment != "none"
+    lost = np.isnan(rank) | (needs_window & np.isnan(base))
+    usual = _mode_usual(made, days)[rows]
+    tests = [
+        (age > rule.look_back_days, "beyond_look_back"),
+        (other, "other_day_type"),
+        (days.holiday & excluded, "holiday"),
+        (past & rule.exclude_event_days, "event_past"),
+        (after & rule.exclude_day_before_event, "day_before_event"),
+        (~usual & rule.exclude_unusual_modes, "outage"),
+        (lost, "missing_data"),
+    ]
+    shape = (len(rows), len(days.day))
+    masks = [np.broadcast_to(mask, shape) for mask, _ in tests]
+    return np.select(masks, [name for _, name in tests], "used").astype(object)
+
+
+def _taken(pool: Bools, score: Floats, rule: SettlementRule) -> Bools:
+    """X of the pool by rank, days newest last; of equal days the more recent stays."""
+    if rule.rank == "recent":
+        return pool & (np.cumsum(pool[:, ::-1], axis=1)[:, ::-1] <= rule.take_days)
+    size = pool.sum(axis=1)[:, None]
+    newest = pool.shape[1] - 1 - np.arange(pool.shape[1])[None, :]
+    key = np.where(pool, score, -np.inf)
+    order = np.lexsort((np.broadcast_to(newest, key.shape), -key), axis=1)
+    place = np.empty_like(order)
+    np.put_along_axis(place, order, np.broadcast_to(np.arange(order.shape[1]), order.shape), axis=1)
+    if rule.rank == "highest":
+        return pool & (place < rule.take_days)
+    spare = np.maximum(size - rule.take_days, 0)
+    older = np.lexsort((np.broadcast_to(-newest, key.shape), -key), axis=1)
+    from_top = np.empty_like(older)
+    np.put_along_axis(from_top, older, np.broadcast_to(np.arange(older.shape[1]), older.shape), axis=1)
+    middle: Bools = pool & (from_top >= (spare + 1) // 2) & (place < size - spare // 2)
+    return middle
+
+
+def _past_days(made: Settled, days: Days) -> Bools:
+    """(S, D) local days of a site's earlier real and test calls, by the frozen list."""
+    zone = str(made.settings["timezone"])
+    calls = pd.DataFrame(made.call.frozen_json.get("calls", {}).get("calls", []))
+    mask = np.zeros((len(made.site_id), len(days.day)), dtype=np.bool_)
+    if calls.empty:
+        return mask
+    calls = calls[calls["purpose"].isin(("real", "test"))]
+    day = local_day(utc_naive(pd.to_datetime(calls["window_start"], utc=True)), zone)
+    return _mark(mask, made, calls["site_id"], day, days)
+
+
+def _mode_usual(made: Settled, days: Days) -> Bools:
+    """(S, D) the plant ran as usual."""
+    plant = made.call.frozen.get("plant_days")
+    mask = np.zeros((len(made.site_id), len(days.day)), dtype=np.bool_)
+    if plant is None or plant.empty:
+        return ~mask
+    odd = plant[plant["mode"] != "usual"]
+    return ~_mark(mask, made, odd["site_id"], odd["day"].to_numpy().astype("datetime64[D]"), days)
+
+
+def _mark(mask: Bools, made: Settled, site_id: pd.Series, day: AnyArray, days: Days) -> Bools:
+    """Sets (site, day) in a mask; the event's own day and later ones stay out."""
+    site = pd.Index(made.site_id).get_indexer(pd.Index(site_id))
+    at = (day - days.day[0]).astype(np.int64)
+    held = (site >= 0) & (at >= 0) & (at < len(days.day) - 1)
+    mask[site[held], at[held]] = True
+    return mask
+
+
+RULES = (days_read, days_chosen, baseline, adjustment, adjusted, event_day_readings)

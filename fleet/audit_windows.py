@@ -1,0 +1,318 @@
+"""Rules on who is called when: tables request and windows.
+
+Notice, length, call limits and machines of each window; and every number of a window from the courses and from the
+quote it names. Shapes: R called sites, T intervals.
+"""
+
+from typing import Any, Final
+
+import numpy as np
+import pandas as pd
+
+from fleet.audit_case import Case
+from fleet.audit_evidence import utc_naive
+from fleet.audit_findings import Findings, allowed
+from fleet.audit_quotes import lists
+from fleet.schema import choices
+from sites.units import Floats
+
+COUNTED: Final = ("real", "test")
+WEEK: Final = pd.Timedelta(days=7)
+FULL_AGAIN_FRACTION: Final = 1e-3
+"""Full again: within this share of capacity of the usual case, or above it."""
+QUOTED: Final = (
+    "window_start",
+    "window_end",
+    "net_cost",
+    "cost_before",
+    "cost_during",
+    "cost_recovery",
+    "cost_demand",
+    "cost_fee",
+    "cost_comfort",
+    "end_lack_kwh_th",
+    "end_lack_price_per_kwh_th",
+    "unmet_kwh_th",
+    "limited_by",
+    "inventory_low_start_kwh_th",
+)
+"""Columns a window has from its quote."""
+
+
+def request(case: Case, found: Findings) -> None:
+    """One node, direction, purpose and time of call; the intervals one after the other on the grid."""
+    book, sheet = case.evidence, case.evidence.sheets["request"]
+    frame = sheet.frame
+    for name in ("node_id", "direction", "purpose", "called_at", "effective_from", "supersedes"):
+        found.same("request", sheet, name, frame[name].mode(dropna=False).iloc[0])
+    for name in ("direction", "purpose"):
+        unknown = ~frame[name].isin(choices("call", "request", name)).to_numpy()
+        found.wrong("request", sheet, name, unknown, frame[name].to_numpy(), "a word of the closed list")
+    starts = book.clock.starts[book.event]
+    stamps = pd.DatetimeIndex(starts).tz_localize("UTC")
+    if len(starts) != len(frame):
+        found.tell(
+            "request", sheet.file, "interval_start", f"{len(frame)} rows", f"{len(starts)} event intervals"
+        )
+        return
+    found.same("request", sheet, "interval_start", stamps)
+    found.same("request", sheet, "interval_end", stamps + pd.Timedelta(minutes=book.clock.step_minutes))
+    called, effective = utc_naive(frame["called_at"]), utc_naive(frame["effective_from"])
+    found.wrong("request", sheet, "called_at", called > starts[0], called, f"{starts[0]} or earlier")
+    found.wrong("request", sheet, "effective_from", effective < called, effective, called)
+    first = book.record.revision == 1
+    if first:
+        found.wrong("request", sheet, "effective_from", effective != called, effective, called)
+    supersedes = pd.array([pd.NA if first else book.record.revision - 1] * len(frame), dtype="Int64")
+    found.same("request", sheet, "supersedes", supersedes)
+    node = ~frame["node_id"].isin(book.record.frames["nodes"]["node_id"]).to_numpy()
+    found.wrong("request", sheet, "node_id", node, frame["node_id"].to_numpy(), "a node of nodes.parquet")
+
+
+def delivered_as_asked(case: Case, found: Findings) -> None:
+    """expected_kw = sum of delivery_factor x expected_kw of the called sites; it meets the request, or says not."""
+    book, sheet = case.evidence, case.evidence.sheets["request"]
+    factor = book.fact("delivery_factor", book.called)
+    expected = factor @ book.grid("intervals", "expected_kw")[:, book.event]
+    found.equal("expected at the node", sheet, "expected_kw", expected, np.abs(expected).max(initial=0.0))
+    asked, given = sheet.numbers("requested_kw"), sheet.numbers("promised_kw")
+    given = np.where(np.isnan(given), sheet.numbers("expected_kw"), given)
+    gap = np.maximum(asked - given, 0.0)
+    gap = np.where(gap > 1e-6, gap, 0.0)
+    told = book.record.proof.get("shortfall_kwh", 0.0)
+    total = gap.sum() * book.clock.step_h
+    if not total and not told:
+        return
+    found.value("shortfall", f"{book.folder}/proof.json", "shortfall_kwh", told, total, asked.max())
+    if book.record.proof.get("met", True) != (total == 0.0):
+        found.wrong("request met", sheet, "expected_kw", gap > 0.0, given, asked)
+
+
+def promised(case: Case, found: Findings) -> None:
+    """Where no probability is asked nothing is promised; where one is, never more than expected."""
+    sheet = case.evidence.sheets["request"]
+    value = sheet.numbers("promised_kw")
+    if case.evidence.record.proof.get("probability") is None:
+        found.equal("promised kW", sheet, "promised_kw", np.full(len(value), np.nan))
+    else:
+        found.wrong("promised kW", sheet, "promised_kw", np.isnan(value), value, "a number")
+        found.most("promised kW", sheet, "promised_kw", sheet.numbers("expected_kw"))
+
+
+def window_terms(case: Case, found: Findings) -> None:
+    """Windows on the grid, inside the event, after the site's notice, as long as site and machines need."""
+    book, sheet = case.evidence, case.evidence.sheets["windows"]
+    start, end = (utc_naive(sheet.frame[name]) for name in ("window_start", "window_end"))
+    for name, times in (("window_start", start), ("window_end", end)):
+        off_grid = (times - book.clock.start) % book.clock.step != np.timedelta64(0)
+        found.wrong("window on the grid", sheet, name, off_grid, times, "a time on the grid")
+    edges = np.append(book.clock.starts, book.clock.end)
+    early, late = start < edges[book.event_from], end > edges[book.event_to]
+    found.wrong(
+        "window in the event",
+        sheet,
+        "window_start",
+        early,
+        start,
+        edges[book.event_from : book.event_from + 1].repeat(len(start)),
+    )
+    found.wrong(
+        "window in the event",
+        sheet,
+        "window_end",
+        late,
+        end,
+        edges[book.event_to : book.event_to + 1].repeat(len(end)),
+    )
+    called_at = utc_naive(book.record.frames["request"]["called_at"]).max()
+    notice = called_at + _minutes(book.fact("notice_minutes", book.called))
+    found.wrong("notice", sheet, "window_start", start < notice, start, notice)
+    least = book.fact("minimum_window_minutes", book.called)
+    off_min = np.zeros(book.called.size)
+    minutes = case.chillers.min_off_minutes[case.own_machines, 0]
+    np.maximum.at(off_min, case.machine_row[case.off], minutes[case.off])
+    for rule, needed in (("minimum window", least), ("minimum off time", off_min)):
+        soonest = start + _minutes(needed)
+        found.wrong(rule, sheet, "window_end", end < soonest, end, soonest)
+    starts_left = case.chillers.starts_left[case.own_machines, 0]
+    none_left = np.bincount(case.machine_row[case.off & (starts_left < 1)], minlength=book.called.size) > 0
+    found.wrong(
+        "starts left", sheet, "chiller_ids", none_left, "a machine with no start left", "one start each"
+    )
+
+
+def machines_named(case: Case, found: Findings) -> None:
+    """chiller_ids are the machines at load limit 0 in the window; all of them are the site's own, in service."""
+    book, sheet = case.evidence, case.evidence.sheets["windows"]
+    limit = book.grid("machines", "load_limit_fraction")
+    zero = ((limit == 0.0) & book.inside()[case.machine_row]).any(axis=1)
+    named = sheet.frame["chiller_ids"].map(lambda tags: sorted(map(str, tags))).tolist()
+    stopped: list[list[str]] = [[] for _ in named]
+    for row, tag in zip(case.machine_row[zero].tolist(), book.machines.unit_id[zero].tolist(), strict=True):
+        stopped[row].append(str(tag))
+    wrong = np.array([a != sorted(b) for a, b in zip(named, stopped, strict=True)], dtype=np.bool_)
+    found.wrong("machines off", sheet, "chiller_ids", wrong, named, stopped)
+
+
+def call_limits(case: Case, found: Findings) -> None:
+    """Calls and hours of the season, calls of any seven days, and one window at a time; rehearsals bind nobody."""
+    book, sheet = case.evidence, case.evidence.sheets["windows"]
+    frame = book.record.frames["request"]
+    at = frame["called_at"].max()
+    past = _past(book.record.frozen_json.get("calls", {}))
+    own = past[past["site_id"].isin(sheet.frame["site_id"]) & (past["event_id"] != book.record.event_id)]
+    site = sheet.frame["site_id"]
+    event_start = frame["interval_start"].min()
+    zone = str(book.settings["timezone"])
+    season = own[own["window_start"].dt.tz_convert(zone).dt.year == event_start.tz_convert(zone).year]
+    calls = site.map(season.groupby("site_id").size()).fillna(0).to_numpy(dtype=np.float64)
+    hours = pd.Series(_hours(season["window_end"] - season["window_start"]), index=season.index)
+    used = site.map(hours.groupby(season["site_id"]).sum()).fillna(0.0).to_numpy(dtype=np.float64)
+    length = _hours(sheet.frame["window_end"] - sheet.frame["window_start"])
+    week = site.map(_most_in_a_week(own, event_start)).fillna(0).to_numpy(dtype=np.float64)
+    limits = {"calls_per_season": calls + 1, "calls_per_week": week + 1, "hours_per_season": used + length}
+    for name, count in limits.items():
+        most = book.fact(name, book.called)
+        over = count > np.where(np.isnan(most), np.inf, most) + 1e-9
+        found.wrong(
+            "call limits", sheet, "window_start", over, [f"{name} {value:g}" for value in count], most
+        )
+    running = site.isin(own.loc[own["window_end"] > at, "site_id"]).to_numpy()
+    found.wrong("one window at a time", sheet, "window_start", running, "a site with a call in force", "none")
+
+
+def window_numbers(case: Case, found: Findings) -> None:
+    """Energies, inventories and temperatures of a window from its course."""
+    book, sheet = case.evidence, case.evidence.sheets["windows"]
+    start, end = book.window()
+    row, step_h = np.arange(book.called.size), book.clock.step_h
+    change = book.grid("intervals", "event_kw") - book.grid("intervals", "usual_kw")
+    after = np.arange(book.clock.count)[None, :] >= end[:, None]
+    held = book.grid("intervals", "inventory_kwh_th")
+    before = book.per_called(book.tanks, book.grid("tanks", "inventory_start_kwh_th"))
+    usual = book.grid("intervals", "usual_inventory_kwh_th")
+    extra = book.grid("intervals", "unmet_kw_th") - book.grid("intervals", "usual_unmet_kw_th")
+    committed = book.grid("intervals", "committed_kw").sum(axis=1) * step_h
+    found.equal("window energy", sheet, "committed_kwh", committed)
+    recovery = np.where(after, change, 0.0).sum(axis=1) * step_h
+    found.equal("window energy", sheet, "recovery_energy_kwh", recovery, np.abs(change).sum(axis=1))
+    first = np.minimum(start, book.clock.count - 1)
+    found.equal("window inventory", sheet, "inventory_start_kwh_th", before[row, first])
+    found.equal("window inventory", sheet, "inventory_end_kwh_th", held[row, np.maximum(end - 1, 0)])
+    lack = np.maximum(usual[:, -1] - held[:, -1], 0.0)
+    found.equal("lack at the end", sheet, "end_lack_kwh_th", lack, held[:, -1])
+    found.equal("unmet energy", sheet, "unmet_kwh_th", np.maximum(extra, 0.0).sum(axis=1) * step_h)
+    peak = book.grid("intervals", "zone_rise_k").max(axis=1, initial=0.0)
+    found.equal("peak rise", sheet, "peak_zone_rise_k", peak)
+    found.equal("delivery factor", sheet, "delivery_factor", book.fact("delivery_factor", book.called))
+    full_again(case, found, held, usual)
+
+
+def full_again(case: Case, found: Findings, held: Floats, usual: Floats) -> None:
+    """full_again_at: the first interval end after the window at which the inventory is back; none if never."""
+    book, sheet = case.evidence, case.evidence.sheets["windows"]
+    _, end = book.window()
+    capacity = np.zeros(book.called.size)
+    np.add.at(capacity, case.tank_row, case.tanks.capacity_kwh_th[case.own_tanks, 0])
+    line = usual - FULL_AGAIN_FRACTION * capacity[:, None]
+    after = np.arange(book.clock.count)[None, :] >= end[:, None]
+    slack = allowed(held, line, capacity[:, None])
+    ends = np.append(
+        utc_naive(book.record.frames["intervals"]["interval_start"])[: book.clock.count] + book.clock.step,
+        np.datetime64("NaT", "us"),
+    )
+    first = [_first(after & (held >= line + sign * slack)) for sign in (-1.0, 1.0)]
+    told = utc_naive(sheet.frame["full_again_at"])
+    times = [ends[at] for at in first]
+    alike = [(told == time) | (np.isnat(told) & np.isnat(time)) for time in times]
+    found.wrong("full again", sheet, "full_again_at", ~(alike[0] | alike[1]), told, times[0])
+
+
+def from_its_quote(case: Case, found: Findings) -> None:
+    """A window equals the quote it names, and its change of load is that quote's."""
+    book, sheet = case.evidence, case.evidence.sheets["windows"]
+    quotes = book.record.frames["quotes"]
+    by_id = quotes.drop_duplicates("quote_id").set_index("quote_id")
+    named = sheet.frame["quote_id"]
+    unknown = ~named.isin(by_id.index).to_numpy()
+    found.wrong(
+        "window of its quote", sheet, "quote_id", unknown, named.to_numpy(), "a row of quotes.parquet"
+    )
+    if unknown.any():
+        return
+    own = by_id.loc[named].reset_index()
+    found.same("window of its quote", sheet, "site_id", own["site_id"].to_numpy())
+    for name in QUOTED:
+        if name not in own.columns:
+            continue
+        if own[name].dtype.kind == "f":
+            found.equal("window of its quote", sheet, name, own[name].to_numpy(dtype=np.float64))
+        else:
+            found.same("window of its quote", sheet, name, own[name].to_numpy())
+    tags = zip(sheet.frame["chiller_ids"], own["chiller_ids"], strict=True)
+    apart = np.array([list(a) != list(b) for a, b in tags], dtype=np.bool_)
+    found.wrong(
+        "window of its quote",
+        sheet,
+        "chiller_ids",
+        apart,
+        sheet.frame["chiller_ids"].tolist(),
+        own["chiller_ids"].tolist(),
+    )
+    change = lists(own["change_kw"], book.clock.count)
+    if not np.isnan(change).any():
+        intervals = book.sheets["intervals"]
+        usual = book.grid("intervals", "usual_kw")
+        found.equal("change of its quote", intervals, "event_kw", (usual + change).ravel(), usual.ravel())
+
+
+def _hours(length: pd.Series) -> Floats:
+    hours: Floats = length.dt.total_seconds().to_numpy(dtype=np.float64) / 3600.0
+    return hours
+
+
+def _minutes(minutes: Floats) -> Any:
+    return np.round(np.nan_to_num(minutes) * 60e6).astype(np.int64).astype("timedelta64[us]")
+
+
+def _first(mask: np.ndarray) -> np.ndarray:
+    """First True along the last axis, -1 where there is none."""
+    return np.where(mask.any(axis=1), mask.argmax(axis=1), -1)
+
+
+def _past(calls: Any) -> pd.DataFrame:
+    """Past calls of the frozen list that count, times in UTC."""
+    columns = ["event_id", "purpose", "site_id", "window_start", "window_end"]
+    rows = pd.DataFrame(calls.get("calls", []), columns=None)
+    past = rows.reindex(columns=columns)
+    for name in ("window_start", "window_end"):
+        past[name] = pd.to_datetime(past[name], utc=True)
+    return past[past["purpose"].isin(COUNTED)]
+
+
+def _most_in_a_week(past: pd.DataFrame, start: pd.Timestamp) -> pd.Series:
+    """Most earlier calls of each site in any seven days that also hold `start`.
+
+    The seven days may begin at `start` or at any call up to it; calls after `start` count as much as those before.
+    """
+    near = past.loc[(past["window_start"] - start).abs() < WEEK, ["site_id", "window_start"]]
+    begins = pd.concat([near, near.assign(window_start=start)])
+    begins = (
+        begins[begins["window_start"] <= start].rename(columns={"window_start": "begin"}).drop_duplicates()
+    )
+    both = begins.merge(near, on="site_id")
+    late = both["window_start"] - both["begin"]
+    counted = both[(late >= pd.Timedelta(0)) & (late < WEEK)]
+    return counted.groupby(["site_id", "begin"]).size().groupby("site_id").max()
+
+
+RULES = (
+    request,
+    delivered_as_asked,
+    promised,
+    window_terms,
+    machines_named,
+    call_limits,
+    window_numbers,
+    from_its_quote,
+)
