@@ -32,6 +32,7 @@ __all__ = [
     "next_revision",
     "read_call",
     "read_settlement",
+    "revisions",
     "verify_seals",
     "write_call",
     "write_folder",
@@ -240,9 +241,14 @@ def check_free(fleet_path: Path, event_id: str) -> None:
         )
 
 
+def revisions(fleet_path: Path, event_id: str, kind: str) -> list[int]:
+    """Revision numbers there are of an event's "call", "orders" or "settlement", rising."""
+    return sorted(_revisions(event_folder(fleet_path, event_id), kind))
+
+
 def next_revision(fleet_path: Path, event_id: str, kind: str) -> int:
     """The next free revision number of an event's "call", "orders" or "settlement"."""
-    return max(_revisions(event_folder(fleet_path, event_id), kind), default=0) + 1
+    return max(revisions(fleet_path, event_id, kind), default=0) + 1
 
 
 def verify_seals(event_path: Path) -> list[str]:
