@@ -61,6 +61,7 @@ class Meters:
     """Readings of a time span: the meters table, digests of its files, notes."""
 
     frame: pd.DataFrame
+    """Index: row of the file, so that later messages can name it."""
     digests: dict[str, str]
     notes: list[str]
 
@@ -159,7 +160,7 @@ def read_meters(
     if faults:
         raise Refused(faults)
     base = folder.path if source.is_relative_to(folder.path) else source.parent
-    return Meters(frame.reset_index(drop=True), _digests(source, base), read.notes)
+    return Meters(frame, _digests(source, base), read.notes)
 
 
 def _settings_text(path: Path) -> tuple[str, dict[str, str]]:

@@ -174,11 +174,11 @@ def _check_offset(timezone: str, interval_minutes: int) -> None:
 
 
 def _check_country(country: str | None, subdivision: str | None) -> None:
-    supported = holidays.list_supported_countries(include_aliases=True)
     if country is None:
         if subdivision is not None:
             raise ValueError("country together with subdivision; add country, or remove subdivision")
         return
+    supported = holidays.list_supported_countries(include_aliases=True)
     if country not in supported:
         raise ValueError("country as a two-letter ISO 3166 code with known holidays; give a holidays table")
     if subdivision is not None and subdivision not in supported[country]:

@@ -40,6 +40,8 @@ MOST_NAMED: Final = 20
 
 _TRUE: Final = ("true", "1", "yes")
 _FALSE: Final = ("false", "0", "no")
+_NUMBER_SIGNS: Final = frozenset("0123456789.+-eE")
+_NUMBER_PATTERN: Final = r"[+-]?(\d+\.?\d*|\.\d+)([eE][+-]?\d+)?"
 _TYPO_LIKENESS: Final = 0.8
 _DAY_PATTERN: Final = r"\d{4}-\d{2}-\d{2}(?:[T ]00:00(?::00(?:\.0+)?)?)?"
 
@@ -70,12 +72,13 @@ def typed(raw: pd.DataFrame, table: Table, reading: Reading) -> Typed:
     columns: dict[str, pd.Series] = {}
     for column in (c for c in table.columns if c.name in raw.columns):
         given = raw[column.name]
+        empty = _empty(given)
         if column.type == "time":
             values, bad, why = _times(given, raw, column, table, reading, notes)
         else:
-            values, bad = _cells(given, column)
+            values, good = _cells(given, column)
+            bad = ~(good | empty)
             why = pd.Series(column.expected, index=given.index)
-        empty = _empty(given)
         problems += _named(reading.file, column.name, given[bad], why[bad], _advice(column))
         if column.required == "yes":
             wanted = pd.Series(column.expected, index=given.index)
@@ -107,7 +110,7 @@ def _headings(raw: pd.DataFrame, table: Table, file: str) -> tuple[list[Problem]
 
 
 def _cells(given: pd.Series, column: Column) -> tuple[pd.Series, Bools]:
-    """Values in a plain type and the mask of the bad ones; a bad or empty cell is missing."""
+    """Values in a plain type and the mask of the good ones; a bad or empty cell is missing."""
     if column.type == "text":
         return _texts(given, column)
     if column.type == "flag":
@@ -120,13 +123,9 @@ def _cells(given: pd.Series, column: Column) -> tuple[pd.Series, Bools]:
 def _texts(given: pd.Series, column: Column) -> tuple[pd.Series, Bools]:
     codes, uniques = pd.factorize(given.astype(object), use_na_sentinel=True)
     texts = [_text(value) for value in uniques]
-    wrong = np.array([text is None for text in texts] + [False], dtype=bool)
-    if column.choices:
-        wrong[:-1] |= np.array([text not in (*column.choices, "") for text in texts], dtype=bool)
-    known = np.array(
-        [None if bad or not text else text for text, bad in zip(texts, wrong)] + [None], dtype=object
-    )
-    return pd.Series(known[codes], index=given.index), wrong[codes]
+    fits = [bool(text) and (not column.choices or text in column.choices) for text in texts]
+    known = np.array([text if fit else None for text, fit in zip(texts, fits)] + [None], dtype=object)
+    return pd.Series(known[codes], index=given.index), np.array([*fits, False])[codes]
 
 
 def _text(value: object) -> str | None:
@@ -142,14 +141,14 @@ def _flags(given: pd.Series) -> tuple[pd.Series, Bools]:
     lower = given.astype(object).map(lambda value: str(value).lower(), na_action="ignore")
     yes, no = lower.isin(_TRUE).to_numpy(), lower.isin(_FALSE).to_numpy()
     values = pd.Series(pd.array(np.where(yes, True, False), dtype="boolean"), index=given.index)
-    return values.mask(~(yes | no)), ~(yes | no | _empty(given))
+    return values.mask(~(yes | no)), yes | no
 
 
 def _days(given: pd.Series) -> tuple[pd.Series, Bools]:
     texts = given.astype(object).map(str, na_action="ignore")
     shaped = texts.str.fullmatch(_DAY_PATTERN).fillna(False).to_numpy(dtype=bool)
     days = pd.to_datetime(texts.where(shaped).str[:10], format="%Y-%m-%d", errors="coerce")
-    return days.astype("datetime64[s]"), days.isna().to_numpy() & ~_empty(given)
+    return days.astype("datetime64[s]"), days.notna().to_numpy()
 
 
 def _numbers(given: pd.Series, column: Column) -> tuple[pd.Series, Bools]:
@@ -165,20 +164,18 @@ def _numbers(given: pd.Series, column: Column) -> tuple[pd.Series, Bools]:
     if column.type == "whole":
         good &= numbers == np.round(numbers)
     values = pd.Series(np.where(good, numbers, np.nan), index=given.index)
-    return values, ~good & ~_empty(given)
+    return values, good
 
 
 def _number_cells(given: pd.Series) -> AnyArray:
     """Decimal numbers with a point; NaN for anything else ("nan", "1_000", "1,5", true)."""
-    cells = given.astype(object)
-    plain = (
-        cells.map(lambda v: not isinstance(v, (bool, np.bool_)), na_action="ignore")
-        .fillna(False)
-        .astype(bool)
-    )
-    texts = cells.where(plain).map(str, na_action="ignore")
-    shaped = texts.str.fullmatch(r"[+-]?(\d+\.?\d*|\.\d+)([eE][+-]?\d+)?").fillna(False).astype(bool)
-    numbers: AnyArray = pd.to_numeric(texts.where(shaped), errors="coerce").to_numpy(dtype=np.float64)
+    texts = given.astype(object)
+    if pd.api.types.infer_dtype(texts, skipna=True) not in ("string", "empty"):
+        plain = ~texts.map(lambda value: isinstance(value, (bool, np.bool_))).astype(bool)
+        texts = texts.where(plain).map(str, na_action="ignore")
+    if not _NUMBER_SIGNS.issuperset("".join(texts.dropna())):
+        texts = texts.where(texts.str.fullmatch(_NUMBER_PATTERN).fillna(False).astype(bool))
+    numbers: AnyArray = pd.to_numeric(texts, errors="coerce").to_numpy(dtype=np.float64)
     return numbers
 
 
@@ -262,6 +259,8 @@ def _duplicates(frame: pd.DataFrame, table: Table, file: str) -> list[Problem]:
     again = frame[full & frame.duplicated(key)]
     if again.empty:
         return []
-    came = pd.Series(list(again[key].astype(str).agg(", ".join, axis=1)), index=again.index, dtype=object)
+    named = again.head(MOST_NAMED)
+    came = named[key].astype(str).agg(", ".join, axis=1).to_list() + [""] * (len(again) - len(named))
     wanted = pd.Series(f"each {', '.join(key)} once", index=again.index)
-    return _named(file, key[-1], came, wanted, "remove one of the rows, or correct its key")
+    advice = "remove one of the rows, or correct its key"
+    return _named(file, key[-1], pd.Series(came, index=again.index, dtype=object), wanted, advice)
