@@ -217,6 +217,6 @@ def _template() -> jinja2.Template:
     environment = jinja2.Environment(
         undefined=jinja2.StrictUndefined, trim_blocks=True, lstrip_blocks=True, keep_trailing_newline=True
     )
-    helpers: dict[str, Callable[..., str]] = {"wrapped": wrapped, "row": row}
-    environment.filters.update(helpers)
+    filters: dict[str, Callable[..., str]] = {"wrapped": wrapped, "row": row}
+    environment.filters.update(filters)
     return environment.from_string(files("fleet").joinpath("order.txt.j2").read_text(encoding="utf-8"))

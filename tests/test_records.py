@@ -169,7 +169,7 @@ def test_settlements_count_up_and_each_is_read_by_its_number(tmp_path):
         assert path.name == f"settlement-00{revision}"
     assert records.revisions(tmp_path, "EV-1", "settlement") == [1, 2]
     assert records.revisions(tmp_path, "EV-1", "orders") == []
-    with pytest.raises(FleetError, match="^no kind of record 'bill'; there are call, orders, settlement$"):
+    with pytest.raises(FleetError, match=r"^no kind of record 'bill'; there are call, orders, settlement$"):
         records.revisions(tmp_path, "EV-1", "bill")
     newest, first = records.read_settlement(tmp_path, "EV-1"), records.read_settlement(tmp_path, "EV-1", 1)
     assert (newest.revision, first.revision) == (2, 1)
