@@ -49,7 +49,7 @@ class _History:
     weekend: Bools
     holiday: Bools
     past: Bools
-    """(site, day) earlier event days"""
+    """(site, day) other event days"""
     modes: AnyArray
 
 
@@ -104,7 +104,6 @@ def _history(call: CallFacts, plan: Plan, readings: pd.DataFrame) -> _History:
     grid = local_grid(raw.clock, call.timezone)
     event_day = int(grid.day[raw.clock.index(plan.event_start)])
     past = marked(call.past_event_days, plan.site_ids, grid.days)
-    past[:, event_day:] = False
     no_days = call.holidays.empty
     holiday = np.zeros(len(grid.days), dtype=np.bool_)
     if not no_days:

@@ -186,6 +186,19 @@ def test_no_line_is_drawn_over_the_events_start() -> None:
     assert result.fleet["delivered_kw"].tolist() == pytest.approx([0.0, 0.0] + [160.0] * 10)
 
 
+@pytest.mark.parametrize("edge", ["15:00", "16:00", "17:00", "18:00"])
+def test_no_line_is_drawn_over_an_edge_of_the_event_or_the_own_window(edge: str) -> None:
+    frame, facts = quarter_hours()
+    at = utc(f"2025-07-10 {edge}")
+    gap = with_value(with_value(frame, at - pd.Timedelta(minutes=15), np.nan), at, np.nan)
+    own = {"a": (utc("2025-07-10 16:00"), utc("2025-07-10 17:00"))}
+    rows = settle(call(**facts, windows=own), gap).intervals.set_index("interval_start")  # type: ignore[arg-type]
+    # At 18:00 the event is over: a like day may stand in, a line may not.
+    assert rows.loc[at, "quality"] == ("estimated_like_day" if edge == "18:00" else "missing")
+    if edge != "15:00":
+        assert rows.loc[at - pd.Timedelta(minutes=15), "quality"] == "missing"
+
+
 def test_an_estimate_in_the_event_counts_only_against_the_site() -> None:
     frame, facts = quarter_hours()
     gap = with_value(frame, utc("2025-07-10 16:00"), np.nan)
