@@ -184,6 +184,12 @@ class _Tables:
     station: Ints
     """(site,) row of weather"""
     tariff: Ints
+    """(site,) row of tariffs"""
+
+    @property
+    def named_by_sites(self) -> tuple[tuple[Series, Ints], tuple[Series, Ints]]:
+        """The series that sites refer to, each with the row of every site."""
+        return (self.weather, self.station), (self.tariffs, self.tariff)
 
 
 def _outlook(
@@ -252,32 +258,24 @@ def _check_cover(folder: FleetFolder, found: _Tables, clock: Clock) -> Bools:
     loads = folder.frames["loads"]
     measured = loads.loc[loads["cooling_load_kw_th"].notna(), "site_id"].unique()
     profiled = ~np.isin(found.loads.key.astype(str), np.asarray(measured, dtype=str))
-    used = [np.isin(np.arange(len(s.key)), at) for s, at in _used(found)]
+    used = [np.isin(np.arange(len(series.key)), at) for series, at in found.named_by_sites]
     no_load = np.isnan(found.loads.values["cooling_load_kw_th"]) & ~profiled[:, None]
     no_row = ~found.loads.covered & (found.loads.has_rows & profiled)[:, None]
     zone = folder.settings.timezone
+    lacking = (
+        (found.weather, ~found.weather.covered & used[0][:, None], "weather", "dry_bulb_c"),
+        (found.tariffs, ~found.tariffs.covered & used[1][:, None], "tariffs", "price_per_kwh"),
+        (found.loads, no_load, "loads", "cooling_load_kw_th"),
+        (found.loads, no_row, "loads", "rest_kw"),
+    )
     problems = [
-        *gaps(
-            ~found.weather.covered & used[0][:, None], found.weather.key, clock, "weather", "dry_bulb_c", zone
-        ),
-        *gaps(
-            ~found.tariffs.covered & used[1][:, None],
-            found.tariffs.key,
-            clock,
-            "tariffs",
-            "price_per_kwh",
-            zone,
-        ),
-        *gaps(no_load, found.loads.key, clock, "loads", "cooling_load_kw_th", zone),
-        *gaps(no_row, found.loads.key, clock, "loads", "rest_kw", zone),
+        problem
+        for series, mask, name, column in lacking
+        for problem in gaps(mask, series.key, clock, folder.file(name), column, zone)
     ]
     if problems:
         raise Refused(problems)
     return profiled
-
-
-def _used(found: _Tables) -> tuple[tuple[Series, Ints], tuple[Series, Ints]]:
-    return (found.weather, found.station), (found.tariffs, found.tariff)
 
 
 def _wet_bulb_c(weather: Series) -> Floats:

@@ -49,11 +49,15 @@ class FleetFolder:
     settings: Settings
     frames: dict[str, pd.DataFrame]
     """Every input table by name; an absent or left-out table has its columns and no rows."""
-    present: frozenset[str]
-    """Tables that have a file."""
+    files: dict[str, str]
+    """Name of the file or folder of every table that has one."""
     digests: dict[str, str]
     """sha256 of every file that was read, by name relative to the folder."""
     notes: list[str]
+
+    def file(self, table_name: str) -> str:
+        """Name of a table's file as messages say it; of the CSV it would have, where it has none."""
+        return self.files.get(table_name, f"{table_name}.csv")
 
 
 @dataclass(frozen=True)
@@ -132,8 +136,9 @@ def survey_folder(
     ordered = [FILE, *(_file(sources, name) for name in tables("fleet"))]
     faults.sort(key=lambda problem: ordered.index(problem.file) if problem.file in ordered else len(ordered))
     frames = {name: frame.reset_index(drop=True) for name, frame in frames.items()}
+    files = {name: source.name for name, source in sources.items()}
     notes += _with_public_days(frames, settings, sources)
-    return Survey(FleetFolder(path, settings, frames, frozenset(sources), digests, notes), faults)
+    return Survey(FleetFolder(path, settings, frames, files, digests, notes), faults)
 
 
 def read_meters(

@@ -144,9 +144,8 @@ Fill = Callable[[str, Any, str | None], None]
 
 def _filler(name: str, frame: pd.DataFrame, assumed: list[Assumption]) -> Fill:
     """A function that fills a column's empty cells in `frame` and, where a reason is given, lists each of them."""
-    keys = (
-        frame[list(_KEYS[name])].astype(str).agg("/".join, axis=1) if len(frame) else pd.Series(dtype=object)
-    )
+    first, *rest = (frame[part].astype(object) for part in _KEYS[name])
+    keys = first + "/" + rest[0] if rest else first
 
     def fill(column: str, values: Any, why: str | None) -> None:
         empty = frame[column].isna()
