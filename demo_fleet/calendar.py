@@ -81,7 +81,7 @@ def local(times: Times, zone: str = ZONE, holidays: tuple[str, ...] | None = Non
     day = stamps.tz_localize(None).normalize().to_numpy().astype("datetime64[D]")
     return Local(
         hour=np.asarray(stamps.hour + stamps.minute / 60.0, dtype=np.float64),
-        weekday=np.asarray(stamps.weekday, dtype=np.int64),
+        weekday=np.asarray(stamps.day_of_week, dtype=np.int64),
         day=day.astype(np.int64),
         holiday=np.isin(day, np.array(dates, dtype="datetime64[D]")),
     )

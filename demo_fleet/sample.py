@@ -76,15 +76,27 @@ class _World:
         return self.finer // history.QUARTERS_A_DAY
 
 
-def sample(path: Path, sites: int = 40, seed: int = 1, progress: Progress | None = None) -> SampleFacts:
-    """Write a fleet folder of `sites` invented sites to `path`; DemoError where it is not empty."""
+def sample(
+    path: Path,
+    sites: int = 40,
+    seed: int = 1,
+    progress: Progress | None = None,
+    history_days: int | None = None,
+) -> SampleFacts:
+    """Write a fleet folder of `sites` invented sites to `path`; DemoError where it is not empty.
+
+    The history starts on calendar.HISTORY_FROM, or `history_days` before the event (at least 3).
+    """
     if path.exists() and any(path.iterdir()):
         raise DemoError(f"{path} is not empty; name a new folder, nothing was written")
     if sites < 1:
         raise DemoError(f"a fleet of {sites} sites cannot be made; ask for 1 or more")
+    first = calendar.HISTORY_FROM
+    if history_days is not None:
+        first = calendar.next_day(calendar.EVENT_DAY, -max(history_days, 3))
     tell = progress or (lambda text, share: None)
     tell("buildings and plants", 0.0)
-    world, tables = _world(sites, seed)
+    world, tables = _world(sites, seed, first)
     billed, rows, peak, last = _histories(path, world, tell)
     tell("the last hours in minutes", 0.85)
     late = _finer(path, world, last)
@@ -102,7 +114,7 @@ def sample(path: Path, sites: int = 40, seed: int = 1, progress: Progress | None
     )  # fmt: skip
 
 
-def _world(count: int, seed: int) -> tuple[_World, dict[str, pd.DataFrame]]:
+def _world(count: int, seed: int, first: str) -> tuple[_World, dict[str, pd.DataFrame]]:
     rng = np.random.default_rng([seed, 1])
     plan = mix(count)
     sites = pd.concat([buildings(plan, rng), habits(plan)], axis=1)
@@ -113,7 +125,7 @@ def _world(count: int, seed: int) -> tuple[_World, dict[str, pd.DataFrame]]:
     station = np.arange(count) % len(weather_file.STATIONS)
     sites = _contracts(sites, plan, feeder, station, rng)
     hidden = hidden_file.draw(sites["site_id"], seed)
-    start = calendar.midnight(calendar.HISTORY_FROM)
+    start = calendar.midnight(first)
     end = calendar.midnight(calendar.next_day(calendar.EVENT_DAY, 2))
     times = calendar.quarters(start, end)
     called_at = calendar.moment(calendar.EVENT_DAY, calendar.CALL_HOUR)
@@ -177,8 +189,7 @@ def _block_course(world: _World, block: Ints) -> tuple[course.Course, Floats, Fl
 
 def _outages(world: _World, block: Ints) -> tuple[Bools, Bools]:
     """Tanks (N, D) and machines (N, M, D) that stood still in the history."""
-    first = np.datetime64(calendar.HISTORY_FROM, "D")
-    day = first + np.arange(world.days)
+    day = world.local.day[0].astype("datetime64[D]") + np.arange(world.days)
     out_from = np.datetime64(calendar.TANK_OUT_FROM, "D")
     week = (day >= out_from) & (day < out_from + calendar.TANK_OUT_DAYS)
     lately = day >= np.datetime64(calendar.next_day(calendar.EVENT_DAY, -1), "D")

@@ -81,7 +81,8 @@ def weather(times: Times, called_at: np.datetime64, rng: np.random.Generator) ->
 
 
 def table(made: Weather, forecast: bool) -> pd.DataFrame:
-    """The weather table of a fleet folder, forecast or truth."""
+    """The weather table of a fleet folder: the forecast to two decimals, or the truth as it is."""
+    digits = 2 if forecast else 12
     dry = made.forecast_dry_bulb_c if forecast else made.dry_bulb_c
     wet = made.forecast_wet_bulb_c if forecast else made.wet_bulb_c
     frames = [
@@ -89,8 +90,8 @@ def table(made: Weather, forecast: bool) -> pd.DataFrame:
             {
                 "station_id": station,
                 "interval_start": utc(made.times),
-                "dry_bulb_c": dry[i].round(2),
-                "wet_bulb_c": np.minimum(wet[i], dry[i]).round(2),
+                "dry_bulb_c": dry[i].round(digits),
+                "wet_bulb_c": np.minimum(wet[i], dry[i]).round(digits),
             }
         )
         for i, station in enumerate(STATIONS)
