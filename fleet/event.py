@@ -14,7 +14,7 @@ from fleet.request import Request
 from sites.course import Course
 from sites.quote import Quoted, detail, windows_of
 from sites.quotes import COST_PARTS, LIMITED_BY
-from sites.units import AnyArray, Bools, Floats, Ints, Strings, Times
+from sites.units import AnyArray, Floats, Ints, Strings, Times
 
 
 @dataclass(frozen=True)
@@ -162,7 +162,7 @@ def windows_frame(call: Chosen) -> pd.DataFrame:
 def _machines_off(call: Chosen, pick: Ints) -> list[list[str]]:
     """Tags of every machine off at any time, per candidate."""
     quotes, chillers = call.quoted.quotes, call.quoted.ground.roster.chillers
-    off: Bools = (quotes.stages.load_limit_fraction[pick] <= 0.0).any(axis=1)
+    off = np.asarray((quotes.stages.load_limit_fraction[pick] <= 0.0).any(axis=1), dtype=np.bool_)
     tags = chillers.chiller_id[quotes.site[pick]]
     return [list(row[mask]) for row, mask in zip(tags, off & chillers.exists[quotes.site[pick]], strict=True)]
 

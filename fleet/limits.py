@@ -9,7 +9,7 @@ import numpy as np
 import pandas as pd
 
 from sites.blocks import Terms
-from sites.clock import Clock
+from sites.clock import Clock, as_us
 from sites.units import Bools, Floats
 
 COUNTED = ("real", "test")
@@ -90,7 +90,7 @@ def terms(
     A window starts no earlier than `called_at` plus the site's notice, on the grid.
     """
     step = clock.step_minutes
-    wait = (clock.start - np.datetime64(called_at, "us")) / np.timedelta64(1, "m")
+    wait = (clock.start - as_us(called_at)) / np.timedelta64(1, "m")
     notice = sites["notice_minutes"].to_numpy(dtype=np.float64)
     least = sites["minimum_window_minutes"].to_numpy(dtype=np.float64)
     longest = np.floor(np.minimum(who.hours_left, 1e6) * 60.0 / step)

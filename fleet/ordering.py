@@ -1,4 +1,4 @@
-"""Orders of an event written beside its call: one text and one JSON file a site."""
+"""Orders of an event written beside its call: one text a site and one JSON file of all."""
 
 from dataclasses import dataclass
 from pathlib import Path

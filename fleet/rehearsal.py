@@ -21,6 +21,7 @@ from fleet.desk import Ask, Progress
 from fleet.errors import FleetError
 from fleet.folder import open_folder
 from fleet.wall_time import local_day, local_day_start
+from sites.clock import as_us
 from sites.direction import Direction
 
 EVENT_ID = "practice"
@@ -90,7 +91,7 @@ def rehearse_own(fleet: Path, seed: int, progress: Progress) -> Rehearsed:
 
 
 def _at_hour(day: np.datetime64, hour: int, zone: str) -> np.datetime64:
-    return np.datetime64(local_day_start(day, zone) + np.timedelta64(hour, "h"), "us")
+    return as_us(local_day_start(day, zone) + np.timedelta64(hour, "h"))
 
 
 def _next_home(fleet: Path) -> Path:

@@ -23,6 +23,7 @@ from fleet.settle import settle
 from fleet.settlement import Settlement
 from fleet.statement import statements
 from fleet.wall_time import local_day_start
+from sites.clock import as_us
 from sites.direction import Direction
 
 KEY = ["meter_id", "interval_start"]
@@ -68,7 +69,9 @@ def settle_event(
 def frozen_folder(home: Path, record: CallRecord) -> FleetFolder:
     """The fleet folder as the call froze it: settings, sites and meter map of that day."""
     settings = Settings.model_validate(record.frozen_json["settings"])
-    return FleetFolder(home, settings, dict(record.frozen), frozenset(record.frozen), {}, [])
+    return FleetFolder(
+        home, settings, dict(record.frozen), {name: f"{name}.parquet" for name in record.frozen}, {}, []
+    )
 
 
 def call_facts(record: CallRecord) -> CallFacts:
@@ -114,7 +117,7 @@ def past_event_days(record: CallRecord, zone: str) -> pd.DataFrame:
 
 
 def _utc(time: pd.Timestamp) -> np.datetime64:
-    return np.datetime64(time.tz_convert("UTC").tz_localize(None).to_datetime64(), "us")
+    return as_us(time.tz_convert("UTC").tz_localize(None).to_datetime64())
 
 
 def _readings(

@@ -15,6 +15,7 @@ from fleet.desk import Survey
 from fleet.ordering import Written
 from fleet.quoting import Offer
 from fleet.rehearsal import Rehearsed
+from fleet.schema import describe
 from fleet.settling import Settled
 from fleet.wall_time import local_text
 from sites.quotes import COST_PARTS, LIMITED_BY
@@ -166,8 +167,9 @@ def call_lines(survey: Survey, made: Call) -> list[str]:
         _event_line(survey),
         f"asked {allocation.requested_kw.max():,.1f} kW; expected {allocation.expected_kw.min():,.1f} to "
         f"{allocation.expected_kw.max():,.1f} kW from {windows} of {int(survey.under_node.sum())} sites",
-        f"net cost {_money(proof['money'], survey)}; bound {_money(proof['bound'], survey)} by "
-        f"{proof['bound_by']}; gap {gap} of gross cost; {proof['status'].replace('_', ' ')}",
+        f"net cost {_money(proof['money'], survey)}; with over-delivery priced {proof['objective']:,.2f}, which no "
+        f"choice can bring below {proof['bound']:,.2f} (by {proof['bound_by']}); gap {gap} of gross cost; "
+        f"{proof['status'].replace('_', ' ')}",
     ]
     if not allocation.met:
         lines.append(f"SHORT by {proof['shortfall_kwh']:,.1f} kWh, accepted as asked")
@@ -305,26 +307,29 @@ def sample_json(facts: Any) -> dict[str, Any]:
 def columns_lines(name: str | None) -> list[str]:
     """The table of columns, a block a table."""
     lines: list[str] = []
-    for key, rows in columns_json(name).items():
-        lines += [f"{key}", *[_column_line(row) for row in rows], ""]
+    heading = ""
+    for row in describe(name):
+        here = f"{row['folder']}/{row['table']}"
+        lines += [*([""] if heading else []), here] if here != heading else []
+        heading = here
+        lines.append(_column_line(row))
     return lines
 
 
-def _column_line(row: dict[str, Any]) -> str:
-    span = "" if row["low"] is None and row["high"] is None else f" {row['low']} to {row['high']}"
+def _column_line(row: dict[str, str]) -> str:
+    low, high = row["low"], row["high"]
+    span = f" {low or 'any'} to {high or 'any'}" if low or high else ""
     unit = f" {row['unit']}" if row["unit"] else ""
     default = f", default {row['default']}" if row["default"] else ""
-    closed = f" [{', '.join(row['choices'])}]" if row["choices"] else ""
+    closed = f" [{', '.join(row['choices'].split())}]" if row["choices"] else ""
     where = f" (found in: {row['where']})" if row["where"] else ""
     need = {"yes": "required", "size": "one size required", "no": "optional"}[row["required"]]
     return f"  {row['name']}: {row['type']}{unit}{span}, {need}{default}. {row['meaning']}{closed}{where}"
 
 
-def columns_json(name: str | None) -> dict[str, list[dict[str, Any]]]:
-    """Tables by folder and name, each a list of its columns."""
-    from fleet.schema import columns_of
-
-    return columns_of(name)
+def columns_json(name: str | None) -> list[dict[str, str]]:
+    """One object a column, all as text."""
+    return describe(name)
 
 
 def check_lines(found: Any) -> Iterable[str]:

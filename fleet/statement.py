@@ -4,7 +4,9 @@ Owns the layout only; every figure is a row of the settlement's tables.
 """
 
 import json
+from collections.abc import Hashable, Mapping
 from decimal import Decimal
+from typing import Any
 
 import pandas as pd
 
@@ -53,10 +55,10 @@ def statement_text(settlement: Settlement, facts: CallFacts) -> str:
     return "\n".join(lines) + "\n"
 
 
-def _site_line(row: dict[str, object]) -> str:
+def _site_line(row: Mapping[Hashable, Any]) -> str:
     def number(name: str, width: int, digits: int) -> str:
         value = row[name]
-        return f"{'-':>{width}}" if pd.isna(value) else f"{value:>{width},.{digits}f}"  # type: ignore[call-overload]
+        return f"{'-':>{width}}" if pd.isna(value) else f"{value:>{width},.{digits}f}"
 
     return (
         f"{plain(str(row['site_id']))[:13]:<14}{str(row['rule'])[:19]:<20}{row['state']!s:<13}"

@@ -72,7 +72,7 @@ def candidates(roster: Roster, standing: Standing, terms: Terms) -> Candidates:
 def _least_off_intervals(roster: Roster, off: Bools, terms: Terms) -> Ints:
     """Intervals (site,) that keep every stopped machine's minimum off time."""
     minutes = np.where(off, roster.chillers.min_off_minutes, 0.0).max(axis=1, initial=0.0)
-    return np.ceil(minutes / terms.step_minutes).astype(np.int64)
+    return np.asarray(np.ceil(minutes / terms.step_minutes), dtype=np.int64)
 
 
 def _sorted(parts: list[tuple[Ints, Ints, Ints, Floats, Floats]], machines: int) -> Candidates:

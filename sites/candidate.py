@@ -25,8 +25,7 @@ class Stages(Rows):
         """Rows that are in a stage in this interval (row,), and each machine's limit then (row, machine)."""
         inside = (self.start <= interval) & (interval < self.end)
         limit = np.where(inside[:, :, None], self.load_limit_fraction, 1.0).min(axis=1, initial=1.0)
-        active: Bools = inside.any(axis=1)
-        return active, limit
+        return np.asarray(inside.any(axis=1), dtype=np.bool_), limit
 
     def join(self, other: Self) -> Self:
         """Both rows' stages together; where they overlap the lower limit holds."""

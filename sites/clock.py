@@ -8,6 +8,12 @@ from sites.errors import SitesError
 from sites.units import Times
 
 
+def as_us(time: np.datetime64) -> np.datetime64:
+    """The same time in microseconds, the one resolution used inside."""
+    in_us: np.datetime64 = time.astype("datetime64[us]")
+    return in_us
+
+
 @dataclass(frozen=True)
 class Clock:
     """Equal intervals from `start` (UTC, microseconds), each `step_minutes` long, `count` of them."""
@@ -23,7 +29,7 @@ class Clock:
             )
         if self.count <= 0:
             raise SitesError(f"a clock of {self.count} intervals is empty; its end must lie after its start")
-        object.__setattr__(self, "start", np.datetime64(self.start, "us"))
+        object.__setattr__(self, "start", as_us(self.start))
 
     @property
     def step(self) -> np.timedelta64:
@@ -50,7 +56,7 @@ class Clock:
 
         Raises SitesError where `time` is off the grid or outside it.
         """
-        offset = np.datetime64(time, "us") - self.start
+        offset = as_us(time) - self.start
         whole, rest = divmod(int(offset.astype(np.int64)), int(self.step.astype(np.int64)))
         if rest:
             before = self.start + whole * self.step
@@ -65,9 +71,9 @@ class Clock:
 
 def span(start: np.datetime64, end: np.datetime64, step_minutes: int) -> Clock:
     """Clock from `start` to `end`; SitesError where the end is not a whole number of steps later."""
-    minutes = (np.datetime64(end, "us") - np.datetime64(start, "us")) / np.timedelta64(1, "m")
+    minutes = (as_us(end) - as_us(start)) / np.timedelta64(1, "m")
     if minutes <= 0 or minutes % step_minutes:
         raise SitesError(
             f"{start} to {end} is not a whole, positive number of {step_minutes}-minute intervals"
         )
-    return Clock(np.datetime64(start, "us"), step_minutes, int(minutes // step_minutes))
+    return Clock(as_us(start), step_minutes, int(minutes // step_minutes))

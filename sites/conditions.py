@@ -72,7 +72,7 @@ def conditions(roster: Roster, outlook: Outlook, standing: Standing) -> Conditio
         discharge=tank.discharge_curves(tanks),
         charge=tank.charge_curves(tanks),
         charge_lmtd_k=np.asarray(tank.lmtd_k(-brine, np.maximum(-brine - RETURN_GLIDE_K, 0.5))),
-        ice_site=ice_tank.any(axis=1),
+        ice_site=np.asarray(ice_tank.any(axis=1), dtype=np.bool_),
         step_h=outlook.clock.step_h,
     )
 

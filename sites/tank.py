@@ -285,7 +285,10 @@ def _curves(tanks: Tanks, way: str, limit_kw_th: Floats) -> RateCurves:
 def _ice_tables(way: str) -> tuple[Floats, Floats]:
     """Base and slope at the knots, each (tank kind, J), rows in the order of TANK_KINDS; zeros for water."""
     freezing = ((0.0, 0.0), INTERNAL_MELT)
-    pairs = {"ice_internal_melt": freezing, "ice_external_melt": freezing}
+    pairs: dict[str, tuple[tuple[float, ...], tuple[float, ...]]] = {
+        "ice_internal_melt": freezing,
+        "ice_external_melt": freezing,
+    }
     if way == "discharge":
         pairs = {
             "ice_internal_melt": (SET_A[:3], SET_A[3:]),
