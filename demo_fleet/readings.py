@@ -15,14 +15,10 @@ from sites.units import Floats, Times
 def meter_map(site_ids: "pd.Series[Any]") -> pd.DataFrame:
     """A building meter at every site, a second incomer at every thirteenth, a plant meter at every third."""
     number = np.arange(len(site_ids))
-    main = pd.DataFrame(
-        {"meter_id": "B-" + site_ids, "site_id": site_ids, "role": "building", "sign": 1, "part": 1.0}
-    )
-    second = main[number % 13 == 9].assign(meter_id=lambda rows: rows["meter_id"] + "-2", part=0.35)
-    main["part"] = np.where(number % 13 == 9, 0.65, 1.0)
-    plant = main[number % 3 == 0].assign(meter_id=lambda rows: "P-" + rows["site_id"], role="plant", part=1.0)
-    every: pd.DataFrame = pd.concat([main, second, plant], ignore_index=True)
-    return every
+    main = pd.DataFrame({"meter_id": "B-" + site_ids, "site_id": site_ids, "role": "building", "sign": 1})
+    second = main[number % 13 == 9].assign(meter_id=lambda rows: rows["meter_id"] + "-2")
+    plant = main[number % 3 == 0].assign(meter_id=lambda rows: "P-" + rows["site_id"], role="plant")
+    return parts(pd.concat([main, second, plant], ignore_index=True))
 
 
 def meters(
@@ -47,7 +43,7 @@ def meters(
 
 
 def parts(table: pd.DataFrame) -> pd.DataFrame:
-    """A folder's own meter map with the share of its stream that each meter carries: equal shares."""
+    """A meter map with the share of its stream that each meter carries: equal shares."""
     streams = table.assign(role=table.get("role", "building"), sign=table.get("sign", 1))
     streams["sign"] = pd.to_numeric(streams["sign"]).fillna(1).astype(np.int64)
     streams["role"] = streams["role"].fillna("building")

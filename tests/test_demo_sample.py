@@ -190,8 +190,9 @@ def test_the_event_day_is_hot_and_the_forecast_a_little_wrong() -> None:
     error = (both["dry_bulb_c_true"] - both["dry_bulb_c"]).where(
         both["interval_start"] > called + pd.Timedelta("6h")
     )
-    assert (both.loc[both["interval_start"] <= called, "dry_bulb_c_true"] == both["dry_bulb_c"].where(
-        both["interval_start"] <= called).dropna()).all()  # fmt: skip
+    past = both[both["interval_start"] <= called]
+    assert len(past) > 200
+    np.testing.assert_allclose(past["dry_bulb_c"], past["dry_bulb_c_true"], atol=0.00501)
     assert 0.3 < abs(error.mean()) < 0.75
     local = weather["interval_start"].dt.tz_convert(calendar.ZONE)
     today = weather[local.dt.strftime("%Y-%m-%d") == calendar.EVENT_DAY]
