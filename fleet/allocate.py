@@ -9,7 +9,7 @@ candidate c costs at least bound + regret_c, so above the best answer known c ca
 """
 
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from typing import Final
 
@@ -18,18 +18,20 @@ import numpy as np
 from fleet.bound import Offers, Prices, Terms, steering
 from fleet.choice import Status, integer
 from fleet.feeders import Feeders
-from fleet.improve import Score, improve, score
+from fleet.improve import Score, improve, repaired, score
 from fleet.most import most_of
 from fleet.offers import allowance_kw, check_fit, offered, offers_of
-from fleet.prices import FEASIBLE_KW, Searched, as_choices, can_bind, search
+from fleet.prices import FEASIBLE_KW, Searched, as_choices, can_bind, cheapest, search
 from fleet.request import Request
 from sites.quotes import COST_PARTS, DenseQuotes
 from sites.units import Bools, Floats, Ints, Strings
 
-WHOLE_MODEL: Final = 2500
+WHOLE_MODEL: Final = 6000
 """Candidates up to which all that fixing leaves goes into one model."""
 FIRST_MODEL: Final = 600
 SEARCH_SHARE: Final = 0.35
+LEAST_SHARE: Final = 0.15
+ABLE_SHARE: Final = 0.4
 FIRM_FACTOR: Final = 1000.0
 
 
@@ -123,8 +125,8 @@ def allocate(
 ) -> Allocation:
     """The cheapest set of candidates found that meets the request, with its proof.
 
-    headroom_kw (J, T), delivery_factor, allowed and site_ids (N,). Only allowed sites at or below the request's node are
-    called. Where the shortfall price would leave kW undelivered that the fleet can give, it is raised by
+    headroom_kw (J, T); delivery_factor, allowed and site_ids (N,). Only allowed sites at or below the request's
+    node are called. Where the shortfall price would leave kW undelivered that the fleet can give, it is raised by
     FIRM_FACTOR and the choice made again; the price used stands in the proof. A request that cannot be met comes
     back short (`met` False). Raises FleetError where quotes and request do not fit together.
     """
@@ -141,12 +143,7 @@ def allocate(
         headroom_kw=headroom_kw,
     )
     gross = _gross_costs(quotes, kept)
-    answer = _solve(offers, terms, gross, seconds, target_gap, None, stopwatch)
-    if not answer.score.met:
-        able = most_of(offers, headroom_kw, request.requested_kw)
-        if able.kw >= float(request.requested_kw.max()) - FEASIBLE_KW:
-            firm = replace(terms, shortfall_price_per_kw=terms.shortfall_price_per_kw * FIRM_FACTOR)
-            answer = _solve(offers, firm, gross, seconds, target_gap, able.chosen, stopwatch)
+    answer = _answer(offers, terms, gross, seconds, target_gap, stopwatch)
     proof = _proof(quotes, kept, offers, answer, gross, target_gap, stopwatch() - started)
     return _allocation(quotes, kept, answer, proof)
 
@@ -180,33 +177,85 @@ class _Incumbent:
             self.chosen, self.score = chosen, trial
 
 
-def _solve(
+def _answer(
     offers: Offers,
     terms: Terms,
     gross: Floats,
     seconds: float,
     target_gap: float,
-    known: Ints | None,
     stopwatch: Callable[[], float],
 ) -> _Answer:
-    """Prices, then answers from ever smaller open sets until the gap is small or time is out."""
+    """The best choice at the given prices, or at firm ones where only the price would leave the request short.
+
+    A bound at the given prices holds at firm ones too: a dearer shortfall makes no choice cheaper.
+    """
     end = stopwatch() + seconds
-    searched = search(offers, terms, SEARCH_SHARE * seconds, _tolerance(gross), stopwatch)
+    searched = search(offers, terms, cheapest(terms), SEARCH_SHARE * seconds, _tolerance(gross), stopwatch)
+    able = _able(offers, terms, ABLE_SHARE * seconds, stopwatch)
+    if able is None:
+        return _solve(offers, terms, gross, searched, end, target_gap, (), -np.inf, stopwatch)
+    known, bound = [able], -np.inf
+    at_cap = bool((searched.prices.shed >= 0.999 * terms.shortfall_price_per_kw).any())
+    if not at_cap:
+        answer = _solve(offers, terms, gross, searched, end, target_gap, known, bound, stopwatch)
+        if answer.score.met:
+            return answer
+        known, bound = [able, answer.chosen], answer.bound_solver
+        end = stopwatch() + 0.25 * seconds
+    firm = replace(terms, shortfall_price_per_kw=terms.shortfall_price_per_kw * FIRM_FACTOR)
+    left = max(end - stopwatch(), 0.0)
+    searched = search(offers, firm, cheapest(firm), SEARCH_SHARE * left, _tolerance(gross), stopwatch)
+    return _solve(offers, firm, gross, searched, end, target_gap, known, bound, stopwatch)
+
+
+def _able(offers: Offers, terms: Terms, seconds: float, stopwatch: Callable[[], float]) -> Ints | None:
+    """Candidates that meet the request whatever they cost; None where none were found.
+
+    Local moves first, which mostly do; else the very model that tells the most, stopped where it is enough.
+    """
+    end = stopwatch() + 0.3 * seconds
+    count = terms.request_kw.size
+    free = replace(offers, cost=np.zeros(offers.site.size))
+    only = replace(terms, shortfall_price_per_kw=np.ones(count), over_price_per_kw=np.zeros(count))
+    searched = search(free, only, cheapest(only), 0.3 * seconds, FEASIBLE_KW, stopwatch)
+    if searched.bound.value > FEASIBLE_KW * count:
+        return None
+    order = np.argsort(searched.bound.regret(offers.site), kind="stable").astype(np.int64)
+    start = repaired(offers, terms, _rounded(offers, searched.x))
+    near = improve(free, only, start, order, can_bind(offers, terms), lambda: stopwatch() > end)
+    if score(free, only, near).met:
+        return near
+    asked = float(terms.request_kw.max())
+    able = most_of(offers, terms.headroom_kw, terms.request_kw, seconds, enough=asked)
+    return able.chosen if able.kw >= asked - FEASIBLE_KW else None
+
+
+def _solve(
+    offers: Offers,
+    terms: Terms,
+    gross: Floats,
+    searched: Searched,
+    end: float,
+    target_gap: float,
+    known: Sequence[Ints],
+    bound_solver: float,
+    stopwatch: Callable[[], float],
+) -> _Answer:
+    """Answers from ever smaller open sets of candidates until the gap is small or the time `end` has come."""
     regret = searched.bound.regret(offers.site)
     order = np.argsort(regret, kind="stable").astype(np.int64)
     coupled = can_bind(offers, terms)
+    began = stopwatch()
     best = _Incumbent(offers, terms)
 
     def better(chosen: Ints) -> None:
         """Takes an answer and what local improvement makes of it."""
-        best.offer(chosen)
-        stop = stopwatch() + 0.25 * max(end - stopwatch(), 0.0)
+        best.offer(repaired(offers, terms, chosen))
+        stop = stopwatch() + 0.1 * max(end - stopwatch(), 0.0)
         best.offer(improve(offers, terms, best.chosen, order, coupled, lambda: stopwatch() > stop))
 
-    for start in (known, _rounded(offers, searched.x)):
-        if start is not None:
-            better(start)
-    bound_solver = -np.inf
+    for start in (*known, _rounded(offers, searched.x)):
+        better(start)
     rows = searched.rows
     for attempt in range(6):
         bound = max(searched.bound.value, bound_solver)
@@ -216,11 +265,13 @@ def _solve(
         whole = open_columns.size <= (FIRST_MODEL if attempt == 0 else WHOLE_MODEL)
         columns = np.union1d(open_columns if whole else open_columns[:FIRST_MODEL], best.chosen)
         left = max(end - stopwatch(), 0.0)
+        if attempt > 0 and left < LEAST_SHARE * (end - began):
+            break
         before = best.score.objective
         told = integer(
-            as_choices(offers, terms, columns, rows),
+            as_choices(offers, terms, columns, rows if whole else _rows_of(offers, terms, columns)),
             gap=0.5 * target_gap * float(gross[best.chosen].sum()),
-            seconds=left if whole else 0.4 * left,
+            seconds=left if whole else 0.5 * left,
             start=np.searchsorted(columns, best.chosen),
         )
         broken = np.zeros((0, 2), dtype=np.int64)
@@ -245,6 +296,18 @@ def _rounded(offers: Offers, x: Floats) -> Ints:
     columns = np.flatnonzero(x >= 0.5)
     _, first = np.unique(offers.site[columns], return_index=True)
     return columns[first].astype(np.int64)
+
+
+def _rows_of(offers: Offers, terms: Terms, columns: Ints) -> Ints:
+    """Feeder rows (L, 2: node, interval) that some choice of these candidates alone could break."""
+    part = replace(
+        offers,
+        site=offers.site[columns],
+        cost=offers.cost[columns],
+        kw=offers.kw[columns],
+        change_kw=offers.change_kw[columns],
+    )
+    return np.argwhere(can_bind(part, terms)).astype(np.int64)
 
 
 def _broken(offers: Offers, terms: Terms, chosen: Ints, coupled: Bools) -> Ints:

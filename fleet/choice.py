@@ -29,8 +29,8 @@ HIGHS_OPTIONS: Final = frozenset(
         "log_to_console",
         "mip_abs_gap",
         "mip_feasibility_tolerance",
-        "mip_max_nodes",
         "mip_rel_gap",
+        "objective_target",
         "primal_feasibility_tolerance",
         "random_seed",
         "threads",
@@ -107,12 +107,14 @@ class Most:
     chosen: Ints
 
 
-def relaxation(choices: Choices, solver: str = "highs") -> Relaxed:
+def relaxation(choices: Choices, solver: str = "highs", profile: Floats | None = None) -> Relaxed:
     """Linear relaxation with its prices (duals); sum of the parts below equals the objective:
 
     objective = price_shed.request - price_over.(request + allowance) - price_rows.room + sum_i min(0, best value)
+
+    With a profile: the model of most_kw, objective = -factor, and a site's best value is min(0, -price_shed.kw + ...).
     """
-    model = _Model(choices, whole=False)
+    model = _Model(choices, whole=False, profile=profile)
     status, _ = model.solve(solver, seconds=60.0, gap=0.0)
     none = np.zeros(0)
     if status is not Status.PROVEN:
@@ -139,27 +141,36 @@ def integer(
     return Chosen(status, _picked(choices, model.x), model.objective(), bound * model.money_scale)
 
 
-def most_kw(choices: Choices, profile: Floats, seconds: float = 5.0, solver: str = "highs") -> Most:
+def most_kw(
+    choices: Choices, profile: Floats, seconds: float = 5.0, enough: float = np.inf, solver: str = "highs"
+) -> Most:
     """Largest factor f with sum kw x >= f profile in all intervals with profile > 0, coupling rows kept.
 
     With a profile of ones f is the largest flat kW of all intervals together. Costs and prices are not read.
     f is taken from the chosen columns in numpy, never from the solver, and rounded down to 0.001. Columns that
-    break a row by numpy are no answer: then f is 0 with nothing chosen.
+    break a row by numpy are no answer: then f is 0 with nothing chosen. Stops where f reaches `enough` (HiGHS).
     """
-    asked = np.flatnonzero(profile > 0.0)
-    nothing = Most(Status.PROVEN, 0.0, np.zeros(0, dtype=np.int64))
-    if choices.site.size == 0 or asked.size == 0:
-        return nothing
+    nothing = np.zeros(0, dtype=np.int64)
+    if choices.site.size == 0 or not (profile > 0.0).any():
+        return Most(Status.PROVEN, 0.0, nothing)
     model = _Model(choices, whole=True, profile=profile)
-    status, _ = model.solve(solver, seconds, gap=0.0, relative_gap=1e-4)
+    status, _ = model.solve(solver, seconds, 0.0, relative_gap=1e-4, target=-enough / model.money_scale)
     if not status.is_ok:
-        return Most(status, 0.0, nothing.chosen)
+        return Most(status, 0.0, nothing)
     chosen = _picked(choices, model.x)
     kept = bool(np.all(choices.rows[:, chosen].sum(axis=1) <= choices.room + 1e-6))
-    factor = float((choices.kw[chosen].sum(axis=0)[asked] / profile[asked]).min())
-    if factor <= 0.0 or not kept:
-        return Most(status if kept else Status.FAILED, 0.0, nothing.chosen)
-    return Most(status, float(np.floor(factor * 1000.0 + 1e-9) / 1000.0), chosen)
+    return (
+        Most(status, factor_of(choices.kw[chosen], profile), chosen)
+        if kept
+        else Most(Status.FAILED, 0.0, nothing)
+    )
+
+
+def factor_of(kw: Floats, profile: Floats) -> float:
+    """The multiple of a profile (E,) that candidates of kw (chosen, E) give, rounded down to 0.001; 0 or more."""
+    asked = profile > 0.0
+    factor = float((kw.sum(axis=0)[asked] / profile[asked]).min())
+    return max(float(np.floor(factor * 1000.0 + 1e-9) / 1000.0), 0.0)
 
 
 def _power_of_two(value: float) -> float:
@@ -237,8 +248,10 @@ class _Model:
         """Objective is the factor of the profile, to be made large."""
         factor = self.problem.add_variable("factor", 0)
         self.problem.setObjective(pulp.LpAffineExpression([(factor, -1.0)]))
-        for e in np.flatnonzero(profile > 0.0):
-            self._row(self.kw[:, e], [(factor, -float(profile[e]))], 1, 0.0)
+        self.shed_rows = [
+            self._row(self.kw[:, e], [(factor, -float(profile[e]))], 1, 0.0) if profile[e] > 0.0 else None
+            for e in range(profile.size)
+        ]
 
     def _row(self, row: Floats, more: list[tuple[Any, float]], sense: int, right: float) -> Any:
         used = np.flatnonzero(row)
@@ -269,7 +282,13 @@ class _Model:
         return np.array(values, dtype=np.float64)
 
     def solve(
-        self, solver: str, seconds: float, gap: float, start: Ints | None = None, relative_gap: float = 0.0
+        self,
+        solver: str,
+        seconds: float,
+        gap: float,
+        start: Ints | None = None,
+        relative_gap: float = 0.0,
+        target: float = -np.inf,
     ) -> tuple[Status, float]:
         """Runs a solver; its state and the bound it claims, both in scaled units."""
         if not self.possible:
@@ -285,6 +304,7 @@ class _Model:
                 "time_limit": max(seconds, 0.1),
                 "mip_abs_gap": gap,
                 "mip_rel_gap": relative_gap,
+                "objective_target": target,
             }
             self.problem.solve(_highs(self.whole, options, known))
             bound = float(self.problem.solverModel.getInfo().mip_dual_bound) if self.whole else -np.inf

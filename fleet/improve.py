@@ -57,6 +57,23 @@ def score(offers: Offers, terms: Terms, chosen: Ints) -> Score:
     return Score(cost + priced, cost, short, over, given, node, kept)
 
 
+def repaired(offers: Offers, terms: Terms, chosen: Ints) -> Ints:
+    """A choice without the candidates that add most where a feeder row is broken worst, until none is."""
+    while chosen.size:
+        weight = np.zeros(offers.site.size)
+        weight[chosen] = 1.0
+        excess = node_change_kw(offers, weight) - terms.headroom_kw
+        node, interval = np.unravel_index(int(excess.argmax()), excess.shape)
+        if excess[node, interval] <= FEASIBLE_KW:
+            break
+        added = offers.change_kw[chosen, interval] * offers.below[node, offers.site[chosen]]
+        enough = added >= excess[node, interval]
+        cost_of_loss = offers.kw[chosen].sum(axis=1)
+        drop = int(np.where(enough, cost_of_loss, np.inf).argmin()) if enough.any() else int(added.argmax())
+        chosen = np.delete(chosen, drop)
+    return chosen
+
+
 @dataclass(frozen=True)
 class _Moves:
     """Moves (M): a candidate, or -1 = the site stays out; the feeder rows that could matter (R intervals)."""

@@ -3,20 +3,21 @@
 Owns what a quote tells of the fleet. Costs are not read: this is what could be had, at whatever price.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Final
 
 import numpy as np
 
 from fleet.bound import Offers, Terms
-from fleet.choice import Most, Status, most_kw
+from fleet.choice import Most, Status, factor_of, most_kw
 from fleet.feeders import Feeders
+from fleet.improve import repaired
 from fleet.offers import offered, offers_of
-from fleet.prices import FEASIBLE_KW, as_choices, can_bind, node_change_kw
+from fleet.prices import FEASIBLE_KW, as_choices, largest, node_change_kw, search
 from sites.quotes import DenseQuotes
 from sites.units import Bools, Floats, Ints
 
-LAZY_ROUNDS: Final = 8
+MODEL_COLUMNS: Final = 1200
 
 
 @dataclass(frozen=True)
@@ -26,7 +27,7 @@ class Available:
     available_kw: Floats
     sustained_kw: float
     proven: bool
-    """No larger figure is possible beyond 0.01 %; else cut short by time, and still callable"""
+    """No larger figure is possible beyond 0.1 %; else a larger one may be, and this one can still be called"""
 
 
 def most(
@@ -45,35 +46,49 @@ def most(
     """
     kept = offered(quotes, feeders, node_id, allowed)
     offers = offers_of(quotes, feeders, delivery_factor, np.zeros(quotes.site_count), kept)
-    together = most_of(offers, headroom_kw, np.ones(offers.kw.shape[1]), seconds)
-    available, proven = _alone(offers, headroom_kw, seconds)
+    intervals = offers.kw.shape[1]
+    together = most_of(offers, headroom_kw, np.ones(intervals), seconds)
+    available, proven = _alone(offers, headroom_kw, seconds / intervals)
     return Available(available, together.kw, proven and together.status is Status.PROVEN)
 
 
-def most_of(offers: Offers, headroom_kw: Floats, profile: Floats, seconds: float = 5.0) -> Most:
-    """The most of a profile (E,) that keeps every feeder row, in units of kW of the profile's largest value.
+def most_of(
+    offers: Offers, headroom_kw: Floats, profile: Floats, seconds: float = 5.0, enough: float = np.inf
+) -> Most:
+    """The most of a profile (E,) that keeps every feeder row, in kW of the profile's largest value.
 
-    Rows come into the model when an answer breaks them. `chosen` are indices into the offers.
+    Prices first, then one model of the candidates of least regret and the feeder rows they come near; what still
+    breaks a row is taken out. `chosen` are indices into the offers. Stops where `enough` kW is reached, and
+    before any model where prices prove that it cannot be. What is
+    chosen does not depend on the time taken unless the model is cut short.
     """
-    terms = _no_terms(offers, headroom_kw)
+    nothing = np.zeros(0, dtype=np.int64)
+    if offers.site.size == 0:
+        return Most(Status.PROVEN, 0.0, nothing)
     shape = profile / profile.max()
-    every = np.arange(offers.site.size)
-    coupled = can_bind(offers, terms)
-    rows = np.zeros((0, 2), dtype=np.int64)
-    for attempt in range(LAZY_ROUNDS + 1):
-        if attempt == LAZY_ROUNDS:
-            rows = np.argwhere(coupled)
-        answer = most_kw(as_choices(offers, terms, every, rows), shape, seconds)
-        broken = np.argwhere(coupled & _breaks(offers, terms, answer.chosen))
-        if broken.size == 0:
-            return answer
-        rows = np.unique(np.concatenate([rows, broken]), axis=0)
-    return Most(Status.FAILED, 0.0, np.zeros(0, dtype=np.int64))
+    free = replace(offers, cost=np.zeros(offers.site.size))
+    terms = _no_terms(offers, headroom_kw, shape)
+    searched = search(free, terms, largest(shape), np.inf, 0.0, lambda: 0.0)
+    ceiling = -searched.bound.value
+    if np.isfinite(enough) and ceiling < enough - FEASIBLE_KW:
+        return Most(Status.INFEASIBLE, 0.0, nothing)
+    regret = searched.bound.regret(offers.site)
+    columns = np.union1d(np.argsort(regret, kind="stable")[:MODEL_COLUMNS], np.flatnonzero(searched.x > 0.0))
+    told = most_kw(
+        as_choices(free, terms, columns, searched.rows), shape, seconds, min(enough, 0.9999 * ceiling)
+    )
+    chosen = repaired(offers, terms, columns[told.chosen]) if told.chosen.size else nothing
+    kw = factor_of(offers.kw[chosen], shape)
+    proven = kw >= 0.999 * ceiling - 0.001
+    status = told.status if not told.status.is_ok else Status.PROVEN if proven else Status.FEASIBLE_CUT_SHORT
+    return Most(status, kw, chosen)
 
 
-def _no_terms(offers: Offers, headroom_kw: Floats) -> Terms:
-    none = np.zeros(offers.kw.shape[1])
-    return Terms(none, none, none, none, headroom_kw)
+def _no_terms(offers: Offers, headroom_kw: Floats, shape: Floats) -> Terms:
+    """Terms with nothing asked; a price may be as large as the profile's shape (E,) allows a weight to be."""
+    none = np.zeros(shape.size)
+    cap = np.divide(1.0, shape, out=np.zeros(shape.size), where=shape > 0.0)
+    return Terms(none, none, cap, none, headroom_kw)
 
 
 def _breaks(offers: Offers, terms: Terms, chosen: Ints) -> Bools:
@@ -89,7 +104,7 @@ def _alone(offers: Offers, headroom_kw: Floats, seconds: float) -> tuple[Floats,
     intervals = offers.kw.shape[1]
     result = np.zeros(intervals)
     proven = True
-    terms = _no_terms(offers, headroom_kw)
+    terms = _no_terms(offers, headroom_kw, np.ones(intervals))
     for e in range(intervals):
         best = _best_each(offers, e)
         if _breaks(offers, terms, best).any():

@@ -17,19 +17,55 @@ from sites.units import Bools, Floats, Ints
 
 FEASIBLE_KW: Final = 1e-6
 """A feeder row is kept, a request met, to within this."""
+NEAR_SHARE: Final = 0.8
+"""Feeder rows that the relaxation fills by more than this stand in the models of whole candidates."""
 FIRST_PRICE_SHARES: Final = (0.0, 0.01, 0.03, 0.1, 0.2, 0.4, 1.0)
 MOST_ROUNDS: Final = 200
 
 
 @dataclass(frozen=True)
+class Aim:
+    """What is relaxed, the shed prices (E,) to start from, and how told ones are brought into their range."""
+
+    relax: Callable[[Choices], Relaxed]
+    first: tuple[Floats, ...]
+    within: Callable[[Floats], Floats]
+
+
+@dataclass(frozen=True)
 class Searched:
-    """Best prices found with their bound, the feeder rows (L, 2: node, interval) met on the way, and x (C,)."""
+    """Best prices found with their bound, the relaxation's x (C,) and the feeder rows it comes near."""
 
     prices: Prices
     bound: Bound
     rows: Ints
+    """(L, 2: node, horizon interval), those that held the relaxation and those it fills by NEAR_SHARE"""
     x: Floats
     rounds: int
+
+
+def cheapest(terms: Terms) -> Aim:
+    """The aim of an allocation: least money at the prices of `terms`."""
+    cap = terms.shortfall_price_per_kw
+    return Aim(
+        relaxation, tuple(share * cap for share in FIRST_PRICE_SHARES), lambda shed: np.clip(shed, 0.0, cap)
+    )
+
+
+def largest(profile: Floats) -> Aim:
+    """The aim of the most: the largest factor of a profile (E,). Prices are weights with weights.profile = 1.
+
+    With cost 0 the bound of such prices is the negative of a factor that cannot be passed.
+    """
+
+    def within(shed: Floats) -> Floats:
+        weights = np.where(profile > 0.0, np.maximum(shed, 0.0), 0.0)
+        total = float(weights @ profile)
+        return np.asarray(
+            weights / total if total > 0.0 else (profile > 0.0) / profile.sum(), dtype=np.float64
+        )
+
+    return Aim(lambda choices: relaxation(choices, profile=profile), (within(np.ones(profile.size)),), within)
 
 
 def as_choices(offers: Offers, terms: Terms, columns: Ints, rows: Ints) -> Choices:
@@ -79,24 +115,24 @@ def node_change_kw(offers: Offers, weight: Floats) -> Floats:
 
 
 def search(
-    offers: Offers, terms: Terms, seconds: float, tolerance: float, stopwatch: Callable[[], float]
+    offers: Offers, terms: Terms, aim: Aim, seconds: float, tolerance: float, stopwatch: Callable[[], float]
 ) -> Searched:
-    """Prices whose bound is within `tolerance` (money) of the relaxation's optimum, or the best in `seconds`."""
+    """Prices whose bound is within `tolerance` of the relaxation's optimum, or the best found in `seconds`."""
     end = stopwatch() + seconds
     coupled = can_bind(offers, terms)
-    columns, best, prices = _first_columns(offers, terms)
+    columns, best, prices = _first_columns(offers, terms, aim)
     rows = np.zeros((0, 2), dtype=np.int64)
     x = np.zeros(offers.site.size)
     rounds = 0
     while rounds < MOST_ROUNDS and stopwatch() < end:
         rounds += 1
         members = np.flatnonzero(columns)
-        relaxed = relaxation(as_choices(offers, terms, members, rows))
+        relaxed = aim.relax(as_choices(offers, terms, members, rows))
         if not relaxed.status.is_ok:
             break
         x = np.zeros(offers.site.size)
         x[members] = relaxed.x
-        told = _prices(relaxed, rows, terms)
+        told = _prices(relaxed, rows, terms, aim)
         wanted = np.zeros_like(columns)
         for trial in (_between(prices, told), told):
             bound = bound_from_prices(offers, terms, trial)
@@ -110,16 +146,18 @@ def search(
             break
         columns |= new
         rows = np.concatenate([rows, np.argwhere(broken)])
-    return Searched(prices, best, rows, x, rounds)
+    near = coupled & (node_change_kw(offers, x) > NEAR_SHARE * terms.headroom_kw)
+    near[rows[:, 0], rows[:, 1]] = True
+    return Searched(prices, best, np.argwhere(near), x, rounds)
 
 
-def _first_columns(offers: Offers, terms: Terms) -> tuple[Bools, Bound, Prices]:
-    """Candidates that flat prices call for, and the best of those prices."""
+def _first_columns(offers: Offers, terms: Terms, aim: Aim) -> tuple[Bools, Bound, Prices]:
+    """Candidates that the first prices call for, and the best of those prices."""
     none = np.zeros_like(terms.headroom_kw)
     columns = np.zeros(offers.site.size, dtype=np.bool_)
     found: list[tuple[Bound, Prices]] = []
-    for share in FIRST_PRICE_SHARES:
-        prices = Prices(share * terms.shortfall_price_per_kw, np.zeros(terms.request_kw.size), none)
+    for shed in aim.first:
+        prices = Prices(shed, np.zeros(shed.size), none)
         bound = bound_from_prices(offers, terms, prices)
         columns |= (bound.candidate_value <= bound.best[offers.site]) & (bound.candidate_value < 0.0)
         found.append((bound, prices))
@@ -127,15 +165,14 @@ def _first_columns(offers: Offers, terms: Terms) -> tuple[Bools, Bound, Prices]:
     return columns, best, at
 
 
-def _prices(relaxed: Relaxed, rows: Ints, terms: Terms) -> Prices:
+def _prices(relaxed: Relaxed, rows: Ints, terms: Terms, aim: Aim) -> Prices:
     """Prices of a relaxation, brought back into their ranges where a tolerance let them out."""
     importing = np.zeros_like(terms.headroom_kw)
     importing[rows[:, 0], rows[:, 1]] = np.maximum(relaxed.price_rows, 0.0)
-    return Prices(
-        np.clip(relaxed.price_shed, 0.0, terms.shortfall_price_per_kw),
-        np.clip(relaxed.price_over, 0.0, terms.over_price_per_kw),
-        importing,
-    )
+    over = np.zeros(terms.request_kw.size)
+    if relaxed.price_over.size:
+        over = np.clip(relaxed.price_over, 0.0, terms.over_price_per_kw)
+    return Prices(aim.within(relaxed.price_shed), over, importing)
 
 
 def _between(first: Prices, second: Prices) -> Prices:

@@ -36,7 +36,11 @@ def made_quotes(
     change[:, event_from : event_from + intervals] = direction.sign * expected
     after = horizon - event_from - intervals
     if after > 0:
-        spread = rng.dirichlet(np.ones(after), count) * (inside.sum(axis=1) * level)[:, None]
+        begin = (rng.choice([0.0, 0.2, 0.5], count) * after).astype(int)
+        lasting = np.maximum((rng.choice([0.2, 0.35, 0.5], count) * after).astype(int), 1)
+        later = np.arange(after)
+        block = (later >= begin[:, None]) & (later < (begin + lasting)[:, None])
+        spread = block * (inside.sum(axis=1) * level / lasting)[:, None]
         change[:, event_from + intervals :] = -direction.sign * spread
     cost = np.zeros((count, len(COST_PARTS)))
     energy = inside.sum(axis=1) * level * 0.25
