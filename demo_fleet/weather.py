@@ -17,7 +17,7 @@ STATIONS: Final = ("Quay", "Upland")
 OFFSET_K: Final = (0.0, -0.8)
 DESIGN_C: Final = 38.0
 """Dry bulb of the design hour, by which the plants were sized."""
-EVENT_PEAK_C: Final = 37.0
+EVENT_PEAK_C: Final = 36.0
 
 
 @dataclass(frozen=True)
