@@ -237,7 +237,7 @@ def _tables(folder: FleetFolder, sites: pd.DataFrame, clock: Clock) -> _Tables:
     if empty:
         raise Refused(
             [
-                Problem(f"{n}.csv", None, None, "no rows", "rows over the horizon", "add the table")
+                Problem(folder.file(n), None, None, "no rows", "rows over the horizon", "add them")
                 for n in empty
             ]
         )

@@ -119,7 +119,7 @@ def _status_values(frames: Frames, files: Mapping[str, str]) -> list[Problem]:
     capacity = tanks["capacity_kwh_th"].fillna(tanks["capacity_ton_h"] * KW_TH_PER_TON)
     by_tank = pd.Series(capacity.to_numpy(), index=_pairs(tanks["site_id"], tanks["tank_id"]))
     by_tank = by_tank[~by_tank.index.duplicated()]
-    room = _pairs(status["site_id"], status["unit_id"]).map(by_tank)
+    room = _pairs(status["site_id"], status["unit_id"]).map(by_tank).astype(np.float64)
     low, best, high = (status[f"inventory_{part}kwh_th"] for part in ("low_", "", "high_"))
     problems = []
     for column in (low, best, high):
@@ -185,7 +185,7 @@ def _cycles(nodes: pd.DataFrame, file: str) -> list[Problem]:
         if node in path:
             ring = [str(one) for one in path[path.index(node) :]]
             row = int(nodes.index[nodes["node_id"] == node][0])
-            came = " above ".join([*reversed(ring), ring[-1]])
+            came = " above ".join([ring[0], *reversed(ring)])
             return [Problem(file, row, "parent_id", came, "a tree", "correct the parent of one of them")]
         done.update(path)
     return []

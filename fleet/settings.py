@@ -103,7 +103,7 @@ def parse_settings(text: str, file: str = FILE) -> Settings:
         given = tomllib.loads(text)
     except tomllib.TOMLDecodeError as error:
         line = re.search(r"line (\d+)", str(error))
-        row = int(line.group(1)) if line else None
+        row = int(line.group(1)) if line else len(text.splitlines())
         what = re.sub(r" \(at .*\)$", "", str(error))
         raise Refused([Problem(file, row, None, what, "a TOML file", "mend that line")]) from error
     try:
