@@ -15,7 +15,7 @@ import pandas as pd
 from fleet import event, records, rules
 from fleet.allocate import Allocation, allocate
 from fleet.desk import Progress, Survey
-from fleet.errors import CannotBeMet, FleetError
+from fleet.errors import CannotBeMet
 from fleet.request import Request, default_event_id, request
 from fleet.shortage import Shortage, explain
 from fleet.steps import steps
@@ -23,7 +23,6 @@ from fleet.wall_time import local_text
 from sites.units import Floats
 
 PACKAGES = ("shedwright", "numpy", "pandas", "pulp", "highspy", "pyarrow")
-DEAREST_FACTOR = 10.0
 
 
 @dataclass(frozen=True)
@@ -50,8 +49,7 @@ def call(
 ) -> Call:
     """Allocate a request over a survey's quotes and write the event record below `home`.
 
-    Raises Refused for a request that makes no sense, FleetError for more than the chillers' rated total or an
-    event that exists, CannotBeMet where the fleet cannot give it and `accept_less` is False; nothing is
+    Raises Refused for a request that makes no sense, FleetError for an event that exists, CannotBeMet where the fleet cannot give it and `accept_less` is False; nothing is
     written then.
     """
     ask = _request(survey, requested_kw, event_id, purpose)
@@ -81,7 +79,7 @@ def call(
 
 def _request(survey: Survey, requested_kw: float | Floats, event_id: str | None, purpose: str) -> Request:
     ask = survey.ask
-    checked = request(
+    return request(
         event_id or default_event_id(ask.at, survey.node_id),
         survey.node_id,
         ask.direction,
@@ -92,29 +90,6 @@ def _request(survey: Survey, requested_kw: float | Floats, event_id: str | None,
         requested_kw,
         survey.folder.settings.interval_minutes,
     )
-    most = float(checked.requested_kw.max())
-    if most > survey.rated_kw:
-        raise FleetError(
-            f"--kw {most:,.1f} is more than the rated electric total of all chillers under node "
-            f"{survey.node_id}, {survey.rated_kw:,.1f} kW: check the unit (kW, not W) or the node"
-        )
-    return checked
-
-
-def shortfall_price_per_kwh(survey: Survey) -> float:
-    """Price of a kWh not delivered: the settings', or ten times the dearest energy price of the horizon."""
-    given = survey.folder.settings.shortfall_price_per_kwh
-    if given is not None:
-        return given
-    return DEAREST_FACTOR * max(float(survey.fleet.outlook.price_per_kwh.max()), 0.0)
-
-
-def over_price_per_kwh(survey: Survey) -> float:
-    """Price of a kWh delivered beyond the allowance: the settings', or the horizon's mean energy price."""
-    given = survey.folder.settings.over_delivery_price_per_kwh
-    if given is not None:
-        return given
-    return max(float(survey.fleet.outlook.price_per_kwh.mean()), 0.0)
 
 
 def _allocate(survey: Survey, ask: Request, seconds: float) -> Allocation:
@@ -125,8 +100,8 @@ def _allocate(survey: Survey, ask: Request, seconds: float) -> Allocation:
         survey.headroom.kw,
         ask,
         buildings.delivery_factor,
-        shortfall_price_per_kwh(survey),
-        over_price_per_kwh(survey),
+        survey.fleet.shortfall_price_per_kwh,
+        survey.fleet.over_delivery_price_per_kwh,
         survey.eligible.allowed,
         site_ids=buildings.site_id,
         over_delivery_fraction=survey.folder.settings.over_delivery_fraction,

@@ -163,7 +163,7 @@ def call(
     from fleet import calling, desk, show
 
     terminal = Terminal(json)
-    survey = desk.survey(fleet, _ask(fleet, start, end, node, at, direction), terminal.progress)
+    survey = desk.survey(fleet, _ask(fleet, start, end, node, at, direction), terminal.progress, kw)
     made = calling.call(survey, kw, event, purpose, fleet, accept_less, progress=terminal.progress)
     terminal.put(show.call_lines(survey, made), show.call_json(survey, made))
 

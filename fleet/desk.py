@@ -58,21 +58,12 @@ class Survey:
         """(site,) below the requested node."""
         return self.feeders.sites_below(self.node_id)
 
-    @property
-    def rated_kw(self) -> float:
-        """Rated electric total of the chillers under the node."""
-        chillers = self.fleet.roster.chillers
-        kw = np.divide(
-            chillers.capacity_kw_th,
-            chillers.rated_cop,
-            out=np.zeros_like(chillers.rated_cop),
-            where=chillers.exists,
-        )
-        return float(kw[self.under_node].sum())
 
-
-def survey(path: Path, ask: Ask, progress: Progress = lambda text: None) -> Survey:
-    """Read a fleet folder and quote every site for an ask.
+def survey(
+    path: Path, ask: Ask, progress: Progress = lambda text: None, asked_kw: float | None = None
+) -> Survey:
+    """Read a fleet folder and quote every site for an ask; `asked_kw`, where given, is held against the rated
+    electric total of the chillers under the node before anything is quoted.
 
     Raises Refused and FleetError for anything wrong with folder or ask.
     """
@@ -96,6 +87,7 @@ def survey(path: Path, ask: Ask, progress: Progress = lambda text: None) -> Surv
     )
     node_id = tree.root if ask.node_id is None else ask.node_id
     tree.index(node_id)
+    _check_rated(fleet, tree, node_id, asked_kw)
     past = records.events(path)
     resolved = fleet.resolved["sites"]
     event = (utc_timestamp(ask.event_from), utc_timestamp(ask.event_to))
@@ -109,6 +101,19 @@ def survey(path: Path, ask: Ask, progress: Progress = lambda text: None) -> Surv
     quoted = quote(base, terms, ask.direction)
     headroom = network.headroom_kw(tree, _building_kw(base))
     return Survey(folder, fleet, ask, node_id, tree, headroom, terms, eligible, past, quoted)
+
+
+def _check_rated(fleet: Fleet, tree: network.Feeders, node_id: str, asked_kw: float | None) -> None:
+    """FleetError where more is asked than the chillers under the node draw at rating: a wrong unit."""
+    chillers = fleet.roster.chillers
+    none = np.zeros_like(chillers.rated_cop)
+    kw = np.divide(chillers.capacity_kw_th, chillers.rated_cop, out=none, where=chillers.exists)
+    rated_kw = float(kw[tree.sites_below(node_id)].sum())
+    if asked_kw is not None and asked_kw > rated_kw:
+        raise FleetError(
+            f"--kw {asked_kw:,.1f} is more than the rated electric total of all chillers under node "
+            f"{node_id}, {rated_kw:,.1f} kW: check the unit (kW, not W) or the node"
+        )
 
 
 def _building_kw(base: Ground) -> Floats:

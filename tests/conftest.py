@@ -1,0 +1,34 @@
+"""One rehearsal for all tests that look at what the installed command leaves behind; do not write to it."""
+
+import json
+import subprocess
+import sys
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any
+
+import pytest
+
+
+@dataclass(frozen=True)
+class Practice:
+    """Where the rehearsal ran, its fleet folder, and what the command printed."""
+
+    folder: Path
+    fleet: Path
+    told: dict[str, Any]
+
+
+def shedwright(*arguments: str, cwd: Path) -> subprocess.CompletedProcess[str]:
+    """Run the installed command."""
+    command = Path(sys.executable).with_name("shedwright")
+    return subprocess.run([str(command), *arguments], cwd=cwd, capture_output=True, text=True, check=False)
+
+
+@pytest.fixture(scope="session")
+def practice(tmp_path_factory: pytest.TempPathFactory) -> Practice:
+    """`shedwright rehearse --json` in an empty folder."""
+    folder = tmp_path_factory.mktemp("practice")
+    ran = shedwright("rehearse", "--json", cwd=folder)
+    assert ran.returncode == 0, ran.stderr
+    return Practice(folder, folder / "rehearsal", json.loads(ran.stdout))
