@@ -121,8 +121,11 @@ class Findings:
         """A column of times, texts or flags must equal `expected` (one value or (row,)); none equals none."""
         found = sheet.frame[column]
         target = pd.Series(expected, index=found.index)
-        alike = (found == target) | (found.isna() & target.isna())
-        mask = ~alike.fillna(False).to_numpy(dtype=np.bool_)
+        told, wanted = found.notna(), target.notna()
+        both = (told & wanted).to_numpy(dtype=np.bool_)
+        mask = np.array(told != wanted, dtype=np.bool_)
+        if both.any():
+            mask[both] = (found[both] != target[both]).to_numpy(dtype=np.bool_)
         self.wrong(rule, sheet, column, mask, found.to_numpy(), target.to_numpy())
 
     def most(

@@ -28,6 +28,11 @@ def frozen_digests(record: CallRecord, folder: str, found: Findings) -> None:
         found.value(RULE, f"{folder}/frozen/{name}", "sha256", there.get(name), told.get(name))
 
 
+def digests(folder: Path) -> dict[str, str]:
+    """SHA-256 of every file of a folder, by name."""
+    return {path.name: _digest(path) for path in sorted(folder.iterdir()) if path.is_file()}
+
+
 def changed_inputs(fleet_path: Path, record: CallRecord) -> list[str]:
     """One note for the input files of the fleet that are not what the call read."""
     told = dict(record.proof.get("sha256", {}))

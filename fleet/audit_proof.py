@@ -84,8 +84,8 @@ def prices(case: Case, found: Findings) -> None:
         kind: _price(case, name)
         for kind, name in (("shed", "shortfall_price_per_kwh"), ("over", "over_price_per_kwh"))
     }
-    most: Floats = frame["kind"].map(top).to_numpy(dtype=np.float64, na_value=np.inf)
-    most = most * book.clock.step_h
+    each: Floats = frame["kind"].map(top).to_numpy(dtype=np.float64, na_value=np.inf)
+    most: Floats = each * book.clock.step_h
     found.most("price in its range", sheet, "price", most)
     found.least("price in its range", sheet, "price", 0.0)
     nodes = book.record.frames["nodes"]

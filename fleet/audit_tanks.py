@@ -11,10 +11,9 @@ import numpy as np
 from fleet.audit_case import Case
 from fleet.audit_findings import Findings, allowed
 from sites import tank
+from sites.conditions import RETURN_GLIDE_K
 from sites.units import Floats
 
-RETURN_GLIDE_K: Final = 3.0
-"""Brine warms by this much through an ice tank while charging (common practice, no source)."""
 LEAST_BELOW_FREEZING_K: Final = 0.5
 
 
