@@ -49,8 +49,8 @@ def call(
 ) -> Call:
     """Allocate a request over a survey's quotes and write the event record below `home`.
 
-    Raises Refused for a request that makes no sense, FleetError for an event that exists, CannotBeMet where the fleet cannot give it and `accept_less` is False; nothing is
-    written then.
+    Raises Refused for a request that makes no sense, FleetError for an event that exists, CannotBeMet where the
+    fleet cannot give it and `accept_less` is False; nothing is written then.
     """
     ask = _request(survey, requested_kw, event_id, purpose)
     records.check_free(home, ask.event_id)

@@ -95,7 +95,7 @@ def _site_line(survey: Survey, offer: Offer, i: int, tons: bool) -> str:
     full = survey.fleet.roster.tanks.capacity_kwh_th[i].sum()
     tank = f"{usual[start - 1] / size:,.0f}/{full / size:,.0f}" if full > 0.0 else "-"
     limit = float(survey.quoted.load_limit_fraction[c])
-    rise = "-" if quotes.unmet_kwh_th[c] <= 1e-6 else "drift"
+    rise = f"{survey.quoted.peak_rise_k[c]:.1f}"
     return (
         f"{name}{mean:>8,.0f}{window:>14}{off:>5}{limit:>7.0%}{offer.cheapest_per_kwh[i]:>10.3f}"
         f"{after:>10,.0f}{tank:>16}{rise:>6}  {reason}"

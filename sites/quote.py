@@ -54,6 +54,8 @@ class Quoted:
     """(C,) demand limit on what stays on"""
     inventory_low_start_kwh_th: Floats
     """(C,) inventory at window start in the low course"""
+    peak_rise_k: Floats
+    """(C,) highest rise of the zone's air above the usual case"""
     full_again: Ints
     """(C,) clock index, -1 = not within the horizon"""
     tried: int
@@ -125,6 +127,7 @@ def quote(base: Ground, terms: blocks.Terms, direction: Direction = Direction.SH
         quotes=quotes,
         load_limit_fraction=offered.load_limit_fraction[kept],
         inventory_low_start_kwh_th=low.inventory_at_start_kwh_th[kept],
+        peak_rise_k=best.rise_k[kept].max(axis=1, initial=0.0),
         full_again=best.full_again[kept],
         tried=len(offered.site),
     )
