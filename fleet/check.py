@@ -4,10 +4,10 @@ Owns the gathering and the wording; what is wrong is found by folder.py, what is
 """
 
 from collections.abc import Iterable
-from dataclasses import dataclass
+from dataclasses import asdict, dataclass
 from itertools import groupby
 from pathlib import Path
-from typing import Final
+from typing import Any, Final
 
 import numpy as np
 import pandas as pd
@@ -82,6 +82,21 @@ def lines(found: CheckReport) -> list[str]:
     written += _section("settings not given", (f"{used.name} = {used.value}" for used in found.defaults))
     written += _section("assumed", assumed_lines(found.assumed))
     return written
+
+
+def document(found: CheckReport) -> dict[str, Any]:
+    """The report as plain values for JSON; every problem and every assumed value, none counted away."""
+    return {
+        "fleet": str(found.path),
+        "ok": found.is_ok,
+        "problems": [asdict(problem) for problem in found.problems],
+        "abilities": {
+            one.command: {"ok": one.is_ok, "reasons": list(one.reasons)} for one in found.abilities
+        },
+        "notes": list(found.notes),
+        "settings_not_given": {one.name: one.value for one in found.defaults},
+        "assumed": [asdict(one) for one in found.assumed],
+    }
 
 
 def assumed_lines(assumed: Iterable[Assumption]) -> list[str]:

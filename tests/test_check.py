@@ -1,7 +1,9 @@
+import json
+
 import pytest
 from fleet_folders import set_cell, write_small_fleet
 
-from fleet.check import lines, report
+from fleet.check import document, lines, report
 from fleet.errors import FleetError
 
 
@@ -69,3 +71,29 @@ def test_unreadable_settings_stop_everything_else(tmp_path):
 def test_no_folder_is_an_error(tmp_path):
     with pytest.raises(FleetError, match=r"there is no such fleet folder; `shedwright begin "):
         report(tmp_path / "none")
+
+
+def test_the_document_holds_all_of_it_as_plain_values(tmp_path):
+    good = document(report(write_small_fleet(tmp_path / "good", meters=None)))
+    assert json.loads(json.dumps(good)) == good
+    assert good["ok"] is True
+    assert good["abilities"]["settle"] == {"ok": False, "reasons": ["meters missing"]}
+    assert good["settings_not_given"]["season"] == "calendar year"
+    assert {
+        "table": "sites",
+        "key": "ward",
+        "column": "floor_area_m2",
+        "value": "15000",
+        "why": "0.1 kW_th of peak cooling per m2",
+    } in good["assumed"]
+    bad = document(report(write_small_fleet(tmp_path / "bad", holidays="date\nsoon\n")))
+    assert bad["problems"] == [
+        {
+            "file": "holidays.csv",
+            "row": 2,
+            "column": "date",
+            "came": "'soon'",
+            "expected": "a date (YYYY-MM-DD)",
+            "advice": "correct it",
+        }
+    ]
