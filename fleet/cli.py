@@ -103,12 +103,12 @@ def check(fleet: FleetDir, json: Json = False) -> None:
 
     Example: shedwright check rehearsal
     """
-    from fleet import show
-    from fleet.check import report
+    from fleet import check as checking
 
     terminal = Terminal(json)
-    found = report(fleet)
-    terminal.put(show.check_lines(found), show.check_json(found))
+    terminal.progress("checking")
+    found = checking.report(fleet)
+    terminal.put(checking.lines(found), checking.document(found))
     if found.problems:
         raise typer.Exit(REFUSED)
 

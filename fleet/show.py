@@ -4,7 +4,6 @@ Owns wording and layout of the terminal's text; figures are others'. Units are S
 times are local with their offset.
 """
 
-from collections.abc import Iterable
 from decimal import Decimal
 from typing import Any
 
@@ -330,17 +329,3 @@ def _column_line(row: dict[str, str]) -> str:
 def columns_json(name: str | None) -> list[dict[str, str]]:
     """One object a column, all as text."""
     return describe(name)
-
-
-def check_lines(found: Any) -> Iterable[str]:
-    """A check's report."""
-    from fleet.check import lines
-
-    return lines(found)
-
-
-def check_json(found: Any) -> dict[str, Any]:
-    """The same as a document."""
-    from fleet.check import document
-
-    return document(found)
