@@ -244,7 +244,7 @@ def _write_loads(path: Path, world: _World, block: Ints, true: course.Course) ->
     sites = world.made.sites.iloc[block].reset_index(drop=True)
     dry = world.weather.forecast_dry_bulb_c[world.station[block]]
     load = course.forecast(sites, world.local, dry, rng)
-    load[(block % 13 == 6) | (block % 13 == 11)] = np.nan
+    load[(block % 13 == 5) | (block % 13 == 12)] = np.nan
     rest = rest_kw(sites, world.local)
     recent = calendar.midnight(calendar.next_day(calendar.EVENT_DAY, -LOAD_DAYS_LARGE))
     late = world.times >= recent
