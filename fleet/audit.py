@@ -15,6 +15,7 @@ import pandas as pd
 
 from fleet import (
     audit_courses,
+    audit_limits,
     audit_network,
     audit_proof,
     audit_quotes,
@@ -28,6 +29,7 @@ from fleet.audit_case import Case, case
 from fleet.audit_evidence import evidence
 from fleet.audit_findings import Fault, Findings
 from fleet.audit_inputs import changed_inputs, frozen_digests
+from fleet.audit_orders import orders_say_the_call
 from fleet.audit_settled import Settled
 from fleet.records import CallRecord, SettlementRecord, event_folder, read_call, read_settlement, verify_seals
 from fleet.seals import record_folders
@@ -39,6 +41,7 @@ Rule = Callable[[Case, Findings], None]
 
 CALL_RULES: Sequence[Rule] = (
     *audit_windows.RULES,
+    *audit_limits.RULES,
     *audit_courses.RULES,
     *audit_tanks.RULES,
     *audit_zones.RULES,
@@ -68,7 +71,7 @@ class Audit:
 
 
 def audit(fleet_path: Path, event_id: str, meters: pd.DataFrame | None = None) -> Audit:
-    """Re-check every call and settlement of an event; with `meters`, metered values too.
+    """Re-check every call, order and settlement of an event; with `meters`, metered values too.
 
     meters: meter_id, interval_start, kw, quality. Raises FleetError where there is no such event; a record that
     cannot be read is a fault, not an error.
@@ -83,6 +86,9 @@ def audit(fleet_path: Path, event_id: str, meters: pd.DataFrame | None = None) -
     for one in calls:
         _audit_call(one, found)
         found.notes += changed_inputs(fleet_path, one)
+    for path in record_folders(folder):
+        if path.name.startswith("orders-"):
+            _tried(found, path.name, "orders", partial(orders_say_the_call, path, calls, found))
     if calls:
         _audit_settlements(fleet_path, event_id, folder, calls[-1], meters, found)
     notes = tuple(dict.fromkeys(found.notes))

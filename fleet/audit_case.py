@@ -12,6 +12,7 @@ import pandas as pd
 from fleet.audit_evidence import (
     Evidence,
     available,
+    carried,
     chillers_of,
     level_kwh_th,
     local,
@@ -22,7 +23,8 @@ from fleet.feeders import Feeders, feeders
 from sites import chiller
 from sites.outlook import in_hours
 from sites.roster import ICE_KINDS, TANK_KINDS, Chillers, Tanks, kind_is
-from sites.units import Bools, Floats, Ints
+from sites.units import Bools, Floats, Ints, Strings
+from sites.weather import wet_bulb_c
 
 
 @dataclass(frozen=True)
@@ -87,10 +89,7 @@ def case(evidence: Evidence) -> Case:
     chillers, tanks = chillers_of(facts), tanks_of(evidence.tank_facts)
     tank_site = evidence.tank_facts["site"].to_numpy(dtype=np.int64)
     stations = evidence.text("station_id")
-    dry, wet = (
-        on_clock(frozen["weather"], "station_id", stations, name, clock)
-        for name in ("dry_bulb_c", "wet_bulb_c")
-    )
+    dry, wet = _weather(evidence, stations)
     condenser = chiller.condenser_c(chillers, dry[machine_site], wet[machine_site])
     direct = chiller.direct(chillers, evidence.fact("supply_c", machine_site), condenser)
     ice = chiller.ice(chillers, evidence.fact("charge_brine_c", machine_site), condenser)
@@ -133,6 +132,17 @@ def over_sites(site: Ints, values: Floats, count: int) -> Floats:
     total = np.zeros((count, values.shape[1]))
     np.add.at(total, site, values)
     return total
+
+
+def _weather(evidence: Evidence, stations: Strings) -> tuple[Floats, Floats]:
+    """Dry and wet bulb (N, T); the wet bulb from relative humidity where that is what was given."""
+    frame, clock = evidence.record.frozen["weather"], evidence.clock
+    dry = on_clock(frame, "station_id", stations, "dry_bulb_c", clock)
+    wet, rh_pct = (carried(frame, "station_id", stations, name, clock) for name in ("wet_bulb_c", "rh_pct"))
+    missing = np.isnan(wet)
+    if missing.any():
+        wet[missing] = wet_bulb_c(dry[missing], rh_pct[missing])
+    return dry, wet
 
 
 def _tree(evidence: Evidence) -> Feeders:

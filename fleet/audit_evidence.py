@@ -20,8 +20,6 @@ from sites.roster import CHILLER_KINDS, TANK_KINDS, Chillers, Tanks
 from sites.units import AnyArray, Bools, Floats, Ints, Strings, Times
 
 ROWS: Final = "rows of the table"
-COARSEST: Final = pd.Timedelta(hours=1)
-"""A frozen weather or tariff row holds for the intervals of its own hour."""
 
 
 @dataclass(frozen=True)
@@ -268,27 +266,40 @@ def tanks_of(facts: pd.DataFrame) -> Tanks:
 def on_clock(frame: pd.DataFrame, key: str, names: Strings, column: str, clock: Clock) -> Floats:
     """Frozen rows of `key` on the clock, (name, interval): each row holds for the intervals of its hour.
 
-    An empty name means the only one there is. FleetError where an interval has no row.
+    An empty name means the only one there is. FleetError where an interval has no value.
     """
-    known = frame[key].unique()
-    wanted = [name if name else known[0] if len(known) == 1 else None for name in names.tolist()]
-    unique = sorted(set(map(str, wanted)))
-    grid = pd.DataFrame({"at": np.tile(clock.starts, len(unique)), key: np.repeat(unique, clock.count)})
-    rows = pd.DataFrame(
-        {"at": utc_naive(frame["interval_start"]), key: frame[key].astype(str), "value": frame[column]}
-    )
-    grid[key] = grid[key].astype(str)
-    rows = rows.assign(since=rows["at"]).sort_values("at", kind="stable")
-    matched = pd.merge_asof(grid.sort_values("at", kind="stable"), rows, on="at", by=key)
-    matched = matched.sort_values([key, "at"], kind="stable")
-    fresh = matched["since"].dt.floor("h") == matched["at"].dt.floor("h")
-    value: Floats = matched["value"].where(fresh).to_numpy(dtype=np.float64, na_value=np.nan)
+    value = carried(frame, key, names, column, clock)
     if np.isnan(value).any():
         raise FleetError(
-            f"frozen {column}: {int(np.isnan(value).sum())} intervals of the horizon have no row"
+            f"frozen {column}: {int(np.isnan(value).sum())} intervals of the horizon have no value"
         )
-    place = {name: row for row, name in enumerate(unique)}
-    return value.reshape(len(unique), clock.count)[[place[str(name)] for name in wanted]]
+    return value
+
+
+def carried(frame: pd.DataFrame, key: str, names: Strings, column: str, clock: Clock) -> Floats:
+    """The same with NaN where an interval has no value."""
+    known = frame[key].unique()
+    wanted = [name if name else known[0] if len(known) == 1 else None for name in names.tolist()]
+    unique = pd.Index(sorted(set(map(str, wanted))))
+    code = unique.get_indexer(pd.Index(frame[key].astype(str)))
+    at = (utc_naive(frame["interval_start"]) - clock.start) // clock.step
+    own_hour = int(np.timedelta64(1, "h") // clock.step)
+    grid = np.full((len(unique), clock.count + own_hour), np.nan)
+    held = (code >= 0) & (at >= -own_hour) & (at < clock.count)
+    grid[code[held], at[held] + own_hour] = frame[column].to_numpy(dtype=np.float64, na_value=np.nan)[held]
+    within = _place_in_hour(clock, own_hour)
+    # A value is carried on within its own hour, a step at a time.
+    for turn in range(1, own_hour):
+        before = np.roll(grid, 1, axis=1)
+        grid = np.where(np.isnan(grid) & (within >= turn)[None, :], before, grid)
+    return grid[unique.get_indexer(pd.Index(list(map(str, wanted)))), own_hour:]
+
+
+def _place_in_hour(clock: Clock, own_hour: int) -> Ints:
+    """Which interval of its hour each interval is, for the clock with an hour before it."""
+    first = int((clock.start - clock.start.astype("datetime64[h]")) // clock.step)
+    place: Ints = (first + np.arange(clock.count + own_hour)) % own_hour
+    return place
 
 
 def _column(series: pd.Series, none: float) -> Floats:

@@ -7,6 +7,7 @@ interval of the horizon. The tree is feeders.py's. Shapes: J nodes, N sites, T i
 import numpy as np
 
 from fleet.audit_case import Case
+from fleet.audit_evidence import carried
 from fleet.audit_findings import Findings
 
 KEPT_KW = 1e-6
@@ -21,6 +22,23 @@ def usual_case(case: Case, found: Findings) -> None:
         found.equal("usual case", sheet, name, book.grid("usual", name)[book.called].ravel())
     found.least("not negative", book.sheets["usual"], "usual_kw", 0.0)
     found.least("not negative", sheet, "event_kw", 0.0)
+
+
+def frozen_loads(case: Case, found: Findings) -> None:
+    """Rest of the building and cooling load are the frozen forecast's; without rows the rest is 0.
+
+    A site without forecast has its cooling load from a profile, which is not looked at here.
+    """
+    book = case.evidence
+    loads = book.record.frozen.get("loads")
+    if loads is None:
+        return
+    rest = np.nan_to_num(carried(loads, "site_id", book.site_id, "rest_kw", book.clock))
+    found.equal("frozen loads", book.sheets["usual"], "rest_kw", rest.ravel())
+    cooling = carried(loads, "site_id", book.site_id, "cooling_load_kw_th", book.clock)[book.called]
+    given = ~np.isnan(cooling).any(axis=1, keepdims=True)
+    expected = np.where(given, cooling, book.grid("intervals", "cooling_load_kw_th"))
+    found.equal("frozen loads", book.sheets["intervals"], "cooling_load_kw_th", expected.ravel())
 
 
 def sums_below(case: Case, found: Findings) -> None:
@@ -64,4 +82,4 @@ def limits_kept(case: Case, found: Findings) -> None:
         )
 
 
-RULES = (usual_case, sums_below, frozen_network, limits_kept)
+RULES = (usual_case, frozen_loads, sums_below, frozen_network, limits_kept)

@@ -84,9 +84,9 @@ def prices(case: Case, found: Findings) -> None:
         kind: _price(case, name)
         for kind, name in (("shed", "shortfall_price_per_kwh"), ("over", "over_price_per_kwh"))
     }
-    each: Floats = frame["kind"].map(top).to_numpy(dtype=np.float64, na_value=np.inf)
-    most: Floats = each * book.clock.step_h
-    found.most("price in its range", sheet, "price", most)
+    most = {kind: price * book.clock.step_h for kind, price in top.items()}
+    limit: Floats = frame["kind"].map(most).to_numpy(dtype=np.float64, na_value=np.inf)
+    found.most("price in its range", sheet, "price", limit)
     found.least("price in its range", sheet, "price", 0.0)
     nodes = book.record.frames["nodes"]
     limited = nodes.loc[nodes["import_limit_kw"].notna(), "node_id"].unique()
@@ -184,10 +184,6 @@ def horizon(case: Case, found: Findings) -> None:
     quoted = len(book.record.frames["quotes"])
     found.value("horizon", _file(case), "candidates_quoted", told["candidates_quoted"], quoted)
     found.value("horizon", _file(case), "met", told["met"], not bool(_sum(case).shortfall_kw.any()))
-    if told["candidates_tried"] < quoted:
-        found.tell(
-            "horizon", _file(case), "candidates_tried", str(told["candidates_tried"]), f"{quoted} or more"
-        )
 
 
 def _file(case: Case) -> str:

@@ -1,7 +1,7 @@
 """Rules on who is called when: tables request and windows.
 
-Notice, length, call limits and machines of each window; and every number of a window from the courses and from the
-quote it names. Shapes: R called sites, T intervals.
+Notice, length and machines of each window; and every number of a window from the courses and from the quote it
+names. Call limits are audit_limits.py's. Shapes: R called sites, T intervals.
 """
 
 from typing import Any, Final
@@ -16,8 +16,6 @@ from fleet.audit_quotes import lists
 from fleet.schema import choices
 from sites.units import Floats
 
-COUNTED: Final = ("real", "test")
-WEEK: Final = pd.Timedelta(days=7)
 FULL_AGAIN_FRACTION: Final = 1e-3
 """Full again: within this share of capacity of the usual case, or above it."""
 QUOTED: Final = (
@@ -154,33 +152,6 @@ def machines_named(case: Case, found: Findings) -> None:
     found.wrong("machines off", sheet, "chiller_ids", wrong, named, stopped)
 
 
-def call_limits(case: Case, found: Findings) -> None:
-    """Calls and hours of the season, calls of any seven days, and one window at a time; rehearsals bind nobody."""
-    book, sheet = case.evidence, case.evidence.sheets["windows"]
-    frame = book.record.frames["request"]
-    at = frame["called_at"].max()
-    past = _past(book.record.frozen_json.get("calls", {}))
-    own = past[past["site_id"].isin(sheet.frame["site_id"]) & (past["event_id"] != book.record.event_id)]
-    site = sheet.frame["site_id"]
-    event_start = frame["interval_start"].min()
-    zone = str(book.settings["timezone"])
-    season = own[own["window_start"].dt.tz_convert(zone).dt.year == event_start.tz_convert(zone).year]
-    calls = site.map(season.groupby("site_id").size()).fillna(0).to_numpy(dtype=np.float64)
-    hours = pd.Series(_hours(season["window_end"] - season["window_start"]), index=season.index)
-    used = site.map(hours.groupby(season["site_id"]).sum()).fillna(0.0).to_numpy(dtype=np.float64)
-    length = _hours(sheet.frame["window_end"] - sheet.frame["window_start"])
-    week = site.map(_most_in_a_week(own, event_start)).fillna(0).to_numpy(dtype=np.float64)
-    limits = {"calls_per_season": calls + 1, "calls_per_week": week + 1, "hours_per_season": used + length}
-    for name, count in limits.items():
-        most = book.fact(name, book.called)
-        over = count > np.where(np.isnan(most), np.inf, most) + 1e-9
-        found.wrong(
-            "call limits", sheet, "window_start", over, [f"{name} {value:g}" for value in count], most
-        )
-    running = site.isin(own.loc[own["window_end"] > at, "site_id"]).to_numpy()
-    found.wrong("one window at a time", sheet, "window_start", running, "a site with a call in force", "none")
-
-
 def window_numbers(case: Case, found: Findings) -> None:
     """Energies, inventories and temperatures of a window from its course."""
     book, sheet = case.evidence, case.evidence.sheets["windows"]
@@ -266,11 +237,6 @@ def from_its_quote(case: Case, found: Findings) -> None:
         found.equal("change of its quote", intervals, "event_kw", (usual + change).ravel(), usual.ravel())
 
 
-def _hours(length: pd.Series) -> Floats:
-    hours: Floats = length.dt.total_seconds().to_numpy(dtype=np.float64) / 3600.0
-    return hours
-
-
 def _minutes(minutes: Floats) -> Any:
     return np.round(np.nan_to_num(minutes) * 60e6).astype(np.int64).astype("timedelta64[us]")
 
@@ -280,39 +246,12 @@ def _first(mask: np.ndarray) -> np.ndarray:
     return np.where(mask.any(axis=1), mask.argmax(axis=1), -1)
 
 
-def _past(calls: Any) -> pd.DataFrame:
-    """Past calls of the frozen list that count, times in UTC."""
-    columns = ["event_id", "purpose", "site_id", "window_start", "window_end"]
-    rows = pd.DataFrame(calls.get("calls", []), columns=None)
-    past = rows.reindex(columns=columns)
-    for name in ("window_start", "window_end"):
-        past[name] = pd.to_datetime(past[name], utc=True)
-    return past[past["purpose"].isin(COUNTED)]
-
-
-def _most_in_a_week(past: pd.DataFrame, start: pd.Timestamp) -> pd.Series:
-    """Most earlier calls of each site in any seven days that also hold `start`.
-
-    The seven days may begin at `start` or at any call up to it; calls after `start` count as much as those before.
-    """
-    near = past.loc[(past["window_start"] - start).abs() < WEEK, ["site_id", "window_start"]]
-    begins = pd.concat([near, near.assign(window_start=start)])
-    begins = (
-        begins[begins["window_start"] <= start].rename(columns={"window_start": "begin"}).drop_duplicates()
-    )
-    both = begins.merge(near, on="site_id")
-    late = both["window_start"] - both["begin"]
-    counted = both[(late >= pd.Timedelta(0)) & (late < WEEK)]
-    return counted.groupby(["site_id", "begin"]).size().groupby("site_id").max()
-
-
 RULES = (
     request,
     delivered_as_asked,
     promised,
     window_terms,
     machines_named,
-    call_limits,
     window_numbers,
     from_its_quote,
 )

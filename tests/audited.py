@@ -13,7 +13,7 @@ import numpy as np
 import pandas as pd
 from made_sites import made_outlook, made_roster, made_standing
 
-from fleet import event, feeders, records
+from fleet import event, feeders, ordering, records
 from fleet.allocate import Allocation, allocate
 from fleet.audit_inputs import digests
 from fleet.calling import prices_frame
@@ -68,7 +68,11 @@ def made_event(home: Path, settlements: int = 2) -> Path:
     quoted = quote(base, _terms(outlook, roster.count))
     frozen = frozen_frames(roster, outlook)
     tree = feeders.feeders(
-        frozen["nodes"], frozen["node_loads"], roster.buildings.node_id, outlook.clock, roster.buildings.site_id
+        frozen["nodes"],
+        frozen["node_loads"],
+        roster.buildings.node_id,
+        outlook.clock,
+        roster.buildings.site_id,
     )
     room = feeders.headroom_kw(tree, base.usual.power_kw + outlook.rest_kw)
     ask = request(EVENT_ID, "grid", "shed", "real", AT, START, END, list(ASKED_KW), 15)
@@ -83,6 +87,7 @@ def made_event(home: Path, settlements: int = 2) -> Path:
     records.write_call(home, EVENT_ID, frames, _proof(quoted, found), frozen, frozen_json(roster, standing))
     path = home / "events" / EVENT_ID
     _add_digests(path / "call-001")
+    ordering.write(home, EVENT_ID)
     for revision in range(1, settlements + 1):
         _settle(home, revision)
     return path
@@ -149,7 +154,19 @@ def frozen_frames(roster: Roster, outlook: Outlook) -> dict[str, pd.DataFrame]:
         "chillers": _machines(roster),
         "tanks": _tanks(roster),
         "nodes": pd.DataFrame(
-            {"node_id": list(LIMIT_KW), "parent_id": ["", "grid", "north"], "import_limit_kw": list(LIMIT_KW.values())}
+            {
+                "node_id": list(LIMIT_KW),
+                "parent_id": ["", "grid", "north"],
+                "import_limit_kw": list(LIMIT_KW.values()),
+            }
+        ),
+        "loads": pd.DataFrame(
+            rows
+            | {
+                "site_id": names,
+                "cooling_load_kw_th": outlook.cooling_load_kw_th.ravel(),
+                "rest_kw": outlook.rest_kw.ravel(),
+            }
         ),
         "node_loads": pd.DataFrame({"node_id": "north", "interval_start": starts, "other_kw": 400.0}),
         "weather": pd.DataFrame(
@@ -160,9 +177,7 @@ def frozen_frames(roster: Roster, outlook: Outlook) -> dict[str, pd.DataFrame]:
                 "wet_bulb_c": outlook.wet_bulb_c.ravel(),
             }
         ),
-        "tariffs": pd.DataFrame(
-            rows | {"tariff_id": names, "price_per_kwh": outlook.price_per_kwh.ravel()}
-        ),
+        "tariffs": pd.DataFrame(rows | {"tariff_id": names, "price_per_kwh": outlook.price_per_kwh.ravel()}),
         "bills": pd.DataFrame(
             {
                 "site_id": buildings.site_id,
@@ -171,7 +186,9 @@ def frozen_frames(roster: Roster, outlook: Outlook) -> dict[str, pd.DataFrame]:
                 "billed_peak_kw": outlook.billed_peak_kw,
             }
         ),
-        "holidays": pd.DataFrame({"date": [pd.Timestamp("2026-07-03")], "name": "a holiday", "source": "made up"}),
+        "holidays": pd.DataFrame(
+            {"date": [pd.Timestamp("2026-07-03")], "name": "a holiday", "source": "made up"}
+        ),
         "plant_days": pd.DataFrame(
             {"site_id": ["S00"], "day": [pd.Timestamp("2026-07-08")], "mode": ["tank_out"]}
         ),
@@ -208,7 +225,8 @@ def frozen_json(roster: Roster, standing: Standing) -> dict[str, dict[str, Any]]
     found: dict[str, Any] = {name: {} for name in site_id}
     for row, unit in zip(*np.nonzero(roster.tanks.exists), strict=True):
         levels = {
-            f"{which}_kwh_th": float(getattr(standing, f"{which}_kwh_th")[row, unit]) for which in ("low", "best", "high")
+            f"{which}_kwh_th": float(getattr(standing, f"{which}_kwh_th")[row, unit])
+            for which in ("low", "best", "high")
         }
         found[site_id[row]][roster.tanks.tank_id[row, unit]] = levels | {
             "available": bool(standing.tank_available[row, unit])
@@ -244,18 +262,24 @@ def readings(home: Path, revision: int) -> pd.DataFrame:
     for site in record.frames["windows"]["site_id"]:
         own = usual.loc[site]
         building = (own["usual_kw"] + own["rest_kw"]).groupby(own.index.time).mean()
-        day = pd.Series(starts.time).map(building).to_numpy() * np.repeat(rng.uniform(0.9, 1.1, len(starts) // 96), 96)
+        day = pd.Series(starts.time).map(building).to_numpy() * np.repeat(
+            rng.uniform(0.9, 1.1, len(starts) // 96), 96
+        )
         kw = day + rng.normal(0.0, 2.0, len(starts))
         course = record.frames["intervals"]
         course = course[course["site_id"] == site]
         at = starts.get_indexer(pd.DatetimeIndex(course["interval_start"]))
         kw[at] -= course["committed_kw"].to_numpy() * 0.9
-        frames.append(pd.DataFrame({"meter_id": f"M-{site}", "interval_start": starts, "kw": kw, "quality": "measured"}))
+        frames.append(
+            pd.DataFrame({"meter_id": f"M-{site}", "interval_start": starts, "kw": kw, "quality": "measured"})
+        )
     meters = pd.concat(frames, ignore_index=True)
     gap = (meters["meter_id"] == meters["meter_id"].iloc[0]) & (
         meters["interval_start"].between(pd.Timestamp("2026-07-15 16:15Z"), pd.Timestamp("2026-07-15 16:45Z"))
     )
-    hole = meters["interval_start"].between(pd.Timestamp("2026-07-02 02:00Z"), pd.Timestamp("2026-07-02 02:30Z"))
+    hole = meters["interval_start"].between(
+        pd.Timestamp("2026-07-02 02:00Z"), pd.Timestamp("2026-07-02 02:30Z")
+    )
     meters.loc[gap | hole, "kw"] = np.nan
     if revision > 1:
         meters.loc[~gap & (meters["interval_start"] > pd.Timestamp("2026-07-15 17:00Z")), "kw"] += 3.0

@@ -34,7 +34,9 @@ class Mutation:
     now: Any
 
     def __str__(self) -> str:
-        return f"{self.file.parent.name}/{self.file.name} {self.name} row {self.row}: {self.was} -> {self.now}"
+        return (
+            f"{self.file.parent.name}/{self.file.name} {self.name} row {self.row}: {self.was} -> {self.now}"
+        )
 
 
 def columns(folder: Path, kind: str) -> Iterator[tuple[Path, Table, str]]:
@@ -90,7 +92,9 @@ def changed(value: Any, kind: str, rng: np.random.Generator) -> Any:
 
 def proof_numbers(proof: dict[str, Any]) -> list[str]:
     """Fields of the proof that hold a number or a flag."""
-    return [name for name, value in proof.items() if isinstance(value, int | float) and name not in LEFT_ALONE]
+    return [
+        name for name, value in proof.items() if isinstance(value, int | float) and name not in LEFT_ALONE
+    ]
 
 
 def mutate_proof(path: Path, name: str) -> Mutation:
