@@ -71,7 +71,7 @@ def assemble(folder: FleetFolder, horizon_start: np.datetime64, horizon_end: np.
     stands, guessed = standing(
         folder.frames["status"], roster, clock.start, float(outlook.local_hour[0]), settings.timezone
     )
-    dear, mean = float(outlook.price_per_kwh.max()), float(outlook.price_per_kwh.mean())
+    dear = float(outlook.price_per_kwh.max())
     return Fleet(
         settings,
         roster,
@@ -82,7 +82,7 @@ def assemble(folder: FleetFolder, horizon_start: np.datetime64, horizon_end: np.
         _shortfall_price(settings, dear),
         settings.over_delivery_price_per_kwh
         if settings.over_delivery_price_per_kwh is not None
-        else max(mean, 0.0),
+        else max(dear, 0.0),
         tuple(notes),
     )
 

@@ -85,7 +85,7 @@ def prices(case: Case, found: Findings) -> None:
         for kind, name in (("shed", "shortfall_price_per_kwh"), ("over", "over_price_per_kwh"))
     }
     most = {kind: price * book.clock.step_h for kind, price in top.items()}
-    limit: Floats = frame["kind"].map(most).to_numpy(dtype=np.float64, na_value=np.inf)
+    limit = frame["kind"].map(most).fillna(np.inf).to_numpy(dtype=np.float64)
     found.most("price in its range", sheet, "price", limit)
     found.least("price in its range", sheet, "price", 0.0)
     nodes = book.record.frames["nodes"]
@@ -99,7 +99,7 @@ def prices(case: Case, found: Findings) -> None:
 def price_settings(case: Case, found: Findings) -> None:
     """Shortfall and over-delivery prices of the proof are the settings', or follow from the horizon's tariffs."""
     book = case.evidence
-    dearest, mean = float(case.price_per_kwh.max()), float(case.price_per_kwh.mean())
+    dearest = float(case.price_per_kwh.max())
     short = book.settings.get("shortfall_price_per_kwh")
     short = DEAREST_FACTOR * max(dearest, 0.0) if short is None else float(short)
     told = _price(case, "shortfall_price_per_kwh")
@@ -112,7 +112,7 @@ def price_settings(case: Case, found: Findings) -> None:
         FIRM_FACTOR * short if raised else short,
     )
     over = book.settings.get("over_delivery_price_per_kwh")
-    over = max(mean, 0.0) if over is None else float(over)
+    over = max(dearest, 0.0) if over is None else float(over)
     found.value(
         "prices of the proof",
         _file(case),

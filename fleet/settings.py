@@ -39,7 +39,7 @@ class Settings(BaseModel):
     shortfall_price_per_kwh: NotNegative | None = None
     """None: ten times the dearest energy price of the horizon."""
     over_delivery_price_per_kwh: NotNegative | None = None
-    """None: the mean energy price of the horizon."""
+    """None: the dearest energy price of the horizon, so that avoided energy never pays for giving too much."""
     over_delivery_fraction: Annotated[float, Field(ge=0.0, le=1.0)] = 0.05
     capacity_payment_per_kwh: NotNegative = 0.0
     """Per committed kWh, scaled by performance."""
@@ -126,7 +126,7 @@ def defaults_used(settings: Settings) -> list[DefaultUsed]:
 
 _UNSAID: Final = {
     "shortfall_price_per_kwh": "10 x the dearest energy price of the horizon",
-    "over_delivery_price_per_kwh": "the mean energy price of the horizon",
+    "over_delivery_price_per_kwh": "the dearest energy price of the horizon",
 }
 _EXPECTED: Final = {
     "currency": "three capital letters (ISO 4217)",

@@ -115,7 +115,7 @@ def _allocated(
         ask,
         roster.buildings.delivery_factor,
         10.0 * float(outlook.price_per_kwh.max()),
-        float(outlook.price_per_kwh.mean()),
+        float(outlook.price_per_kwh.max()),
         np.ones(roster.count, dtype=np.bool_),
         site_ids=roster.buildings.site_id,
         seconds=4.0,
