@@ -19,9 +19,9 @@ from fleet.bound import Offers, Prices, Terms, steering
 from fleet.choice import Status, integer
 from fleet.feeders import Feeders
 from fleet.improve import Score, improve, repaired, score
-from fleet.most import most_of
+from fleet.most import MOST_SECONDS, most_of
 from fleet.offers import allowance_kw, check_fit, offered, offers_of
-from fleet.prices import FEASIBLE_KW, Searched, as_choices, can_bind, cheapest, search
+from fleet.prices import FEASIBLE_KW, Searched, as_choices, can_bind, cheapest, rows_that_bind, search
 from fleet.request import Request
 from sites.quotes import COST_PARTS, DenseQuotes
 from sites.units import Bools, Floats, Ints, Strings
@@ -32,6 +32,8 @@ FIRST_MODEL: Final = 600
 SEARCH_SHARE: Final = 0.35
 LEAST_SHARE: Final = 0.15
 ABLE_SHARE: Final = 0.4
+ABLE_SECONDS: Final = 2.0 * MOST_SECONDS
+"""Longer than the model that told the most had, so that a call for it follows the same path as far at least."""
 FIRM_FACTOR: Final = 1000.0
 
 
@@ -204,8 +206,10 @@ def _answer(
         end = stopwatch() + 0.25 * seconds
     firm = replace(terms, shortfall_price_per_kw=terms.shortfall_price_per_kw * FIRM_FACTOR)
     left = max(end - stopwatch(), 0.0)
-    searched = search(offers, firm, cheapest(firm), SEARCH_SHARE * left, _tolerance(gross), stopwatch)
-    return _solve(offers, firm, gross, searched, end, target_gap, known, bound, stopwatch)
+    again = search(offers, firm, cheapest(firm), SEARCH_SHARE * left, _tolerance(gross), stopwatch)
+    if searched.bound.value > again.bound.value:
+        again = replace(again, prices=searched.prices, bound=searched.bound)
+    return _solve(offers, firm, gross, again, end, target_gap, known, bound, stopwatch)
 
 
 def _able(offers: Offers, terms: Terms, seconds: float, stopwatch: Callable[[], float]) -> Ints | None:
@@ -226,8 +230,8 @@ def _able(offers: Offers, terms: Terms, seconds: float, stopwatch: Callable[[], 
     if score(free, only, near).met:
         return near
     asked = float(terms.request_kw.max())
-    able = most_of(offers, terms.headroom_kw, terms.request_kw, seconds, enough=asked)
-    return able.chosen if able.kw >= asked - FEASIBLE_KW else None
+    able = most_of(offers, terms.headroom_kw, terms.request_kw, max(seconds, ABLE_SECONDS), enough=asked)
+    return able.chosen if score(free, only, able.chosen).met else None
 
 
 def _solve(
@@ -269,7 +273,7 @@ def _solve(
             break
         before = best.score.objective
         told = integer(
-            as_choices(offers, terms, columns, rows if whole else _rows_of(offers, terms, columns)),
+            as_choices(offers, terms, columns, rows if whole else rows_that_bind(offers, terms, columns)),
             gap=0.5 * target_gap * float(gross[best.chosen].sum()),
             seconds=left if whole else 0.5 * left,
             start=np.searchsorted(columns, best.chosen),
@@ -296,18 +300,6 @@ def _rounded(offers: Offers, x: Floats) -> Ints:
     columns = np.flatnonzero(x >= 0.5)
     _, first = np.unique(offers.site[columns], return_index=True)
     return columns[first].astype(np.int64)
-
-
-def _rows_of(offers: Offers, terms: Terms, columns: Ints) -> Ints:
-    """Feeder rows (L, 2: node, interval) that some choice of these candidates alone could break."""
-    part = replace(
-        offers,
-        site=offers.site[columns],
-        cost=offers.cost[columns],
-        kw=offers.kw[columns],
-        change_kw=offers.change_kw[columns],
-    )
-    return np.argwhere(can_bind(part, terms)).astype(np.int64)
 
 
 def _broken(offers: Offers, terms: Terms, chosen: Ints, coupled: Bools) -> Ints:

@@ -13,11 +13,12 @@ from fleet.choice import Most, Status, factor_of, most_kw
 from fleet.feeders import Feeders
 from fleet.improve import repaired
 from fleet.offers import offered, offers_of
-from fleet.prices import FEASIBLE_KW, as_choices, largest, node_change_kw, search
+from fleet.prices import FEASIBLE_KW, as_choices, largest, node_change_kw, rows_that_bind, search
 from sites.quotes import DenseQuotes
 from sites.units import Bools, Floats, Ints
 
 MODEL_COLUMNS: Final = 1200
+MOST_SECONDS: Final = 5.0
 
 
 @dataclass(frozen=True)
@@ -37,7 +38,7 @@ def most(
     node_id: str,
     delivery_factor: Floats,
     allowed: Bools,
-    seconds: float = 5.0,
+    seconds: float = MOST_SECONDS,
 ) -> Available:
     """What allowed sites (N,) at or below a node can give there, feeder limits (J, T) kept.
 
@@ -53,14 +54,17 @@ def most(
 
 
 def most_of(
-    offers: Offers, headroom_kw: Floats, profile: Floats, seconds: float = 5.0, enough: float = np.inf
+    offers: Offers,
+    headroom_kw: Floats,
+    profile: Floats,
+    seconds: float = MOST_SECONDS,
+    enough: float = np.inf,
 ) -> Most:
     """The most of a profile (E,) that keeps every feeder row, in kW of the profile's largest value.
 
-    Prices first, then one model of the candidates of least regret and the feeder rows they come near; what still
-    breaks a row is taken out. `chosen` are indices into the offers. Stops where `enough` kW is reached, and
-    before any model where prices prove that it cannot be. What is
-    chosen does not depend on the time taken unless the model is cut short.
+    Prices first, then one model of the candidates of least regret and all feeder rows they could break. `chosen`
+    are indices into the offers. Stops where `enough` kW is reached, and before any model where prices prove that
+    it cannot be. What is chosen does not depend on the time taken unless the model is cut short.
     """
     nothing = np.zeros(0, dtype=np.int64)
     if offers.site.size == 0:
@@ -74,14 +78,18 @@ def most_of(
         return Most(Status.INFEASIBLE, 0.0, nothing)
     regret = searched.bound.regret(offers.site)
     columns = np.union1d(np.argsort(regret, kind="stable")[:MODEL_COLUMNS], np.flatnonzero(searched.x > 0.0))
-    told = most_kw(
-        as_choices(free, terms, columns, searched.rows), shape, seconds, min(enough, 0.9999 * ceiling)
-    )
+    rows = rows_that_bind(free, terms, columns)
+    model = as_choices(free, terms, columns, rows)
+    told = most_kw(model, shape, seconds, min(enough, 0.9999 * ceiling))
     chosen = repaired(offers, terms, columns[told.chosen]) if told.chosen.size else nothing
     kw = factor_of(offers.kw[chosen], shape)
-    proven = kw >= 0.999 * ceiling - 0.001
-    status = told.status if not told.status.is_ok else Status.PROVEN if proven else Status.FEASIBLE_CUT_SHORT
-    return Most(status, kw, chosen)
+    if not told.status.is_ok:
+        return Most(told.status, kw, chosen)
+    whole = (
+        columns.size == offers.site.size and told.status is Status.PROVEN and chosen.size == told.chosen.size
+    )
+    proven = kw >= 0.999 * ceiling - 0.001 or (whole and not np.isfinite(enough))
+    return Most(Status.PROVEN if proven else Status.FEASIBLE_CUT_SHORT, kw, chosen)
 
 
 def _no_terms(offers: Offers, headroom_kw: Floats, shape: Floats) -> Terms:

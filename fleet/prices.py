@@ -6,7 +6,7 @@ and the models to choice.py. Any prices found give a valid bound, also when time
 """
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Final
 
 import numpy as np
@@ -94,6 +94,18 @@ def can_bind(offers: Offers, terms: Terms) -> Bools:
     most = np.maximum(largest_by_site(offers.site, offers.change_kw, offers.site_count), 0.0)
     result: Bools = offers.below.astype(np.float64) @ most > terms.headroom_kw
     return result
+
+
+def rows_that_bind(offers: Offers, terms: Terms, columns: Ints) -> Ints:
+    """Feeder rows (L, 2: node, interval) that some choice of these candidates (indices) alone could break."""
+    part = replace(
+        offers,
+        site=offers.site[columns],
+        cost=offers.cost[columns],
+        kw=offers.kw[columns],
+        change_kw=offers.change_kw[columns],
+    )
+    return np.argwhere(can_bind(part, terms)).astype(np.int64)
 
 
 def largest_by_site(site: Ints, values: Floats, site_count: int) -> Floats:

@@ -72,7 +72,16 @@ def made_quotes(
 def kept(quotes, keep):
     """Quotes of the candidates in `keep` (mask or indices) alone; sites stay."""
     keep = np.flatnonzero(keep) if np.asarray(keep).dtype == np.bool_ else np.asarray(keep)
-    names = ("site", "quote_id", "window_start", "window_end", "expected_kw", "change_kw", "cost", "limited_by")
+    names = (
+        "site",
+        "quote_id",
+        "window_start",
+        "window_end",
+        "expected_kw",
+        "change_kw",
+        "cost",
+        "limited_by",
+    )
     names += ("unmet_kwh_th", "end_lack_kwh_th", "end_lack_price_per_kwh_th")
     changes = {name: getattr(quotes, name)[keep] for name in names}
     return replace(quotes, stages=quotes.stages.take(keep), **changes)

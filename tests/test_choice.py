@@ -111,6 +111,27 @@ def test_two_rows_by_hand():
     assert relaxed.price_shed == pytest.approx([0.4])
 
 
+def test_over_delivery_has_its_price():
+    """A 10 kW site that earns 3, 4 kW asked, 1 more free, 0.2 per kW beyond: taken whole for -3 + 5 x 0.2 = -2."""
+    hand = Choices(
+        site=np.array([0]),
+        cost=np.array([-3.0]),
+        kw=np.array([[10.0]]),
+        request_kw=np.array([4.0]),
+        allowance_kw=np.array([1.0]),
+        shortfall_price_per_kw=np.array([9.0]),
+        over_price_per_kw=np.array([0.2]),
+        rows=np.zeros((0, 1)),
+        room=np.zeros(0),
+    )
+    relaxed = relaxation(hand)
+    assert relaxed.objective == pytest.approx(-2.0)
+    assert relaxed.price_over == pytest.approx([0.2])
+    assert integer(hand, 0.0, 5.0).objective == pytest.approx(-2.0)
+    dear = replace(hand, over_price_per_kw=np.array([5.0]))
+    assert relaxation(dear).price_over == pytest.approx([0.3])
+
+
 def test_merit_order_is_not_optimal():
     """10 kW asked; 9 kW for 9.00, 9 kW for 9.09, 10 kW for 10.20: the last alone wins."""
     hand = Choices(
@@ -207,5 +228,7 @@ def test_nothing_is_printed():
         "from fleet.choice import integer\n"
         "assert integer(made_choices(1), 0.0, 5.0).status.is_ok"
     )
-    ran = subprocess.run([sys.executable, "-W", "error", "-c", code], capture_output=True, text=True, check=True)
+    ran = subprocess.run(
+        [sys.executable, "-W", "error", "-c", code], capture_output=True, text=True, check=True
+    )
     assert (ran.stdout, ran.stderr) == ("", "")
