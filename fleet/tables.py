@@ -10,7 +10,6 @@ whole Int64; flag bool, or boolean where values are missing; text, decimal and l
 import csv
 import io
 from collections.abc import Callable
-from datetime import date
 from decimal import Decimal
 from pathlib import Path
 from typing import Any, Final
@@ -167,6 +166,8 @@ def _convert(series: pd.Series, column: Column) -> Any:
         return pa.array(series.astype("boolean"), type=kind, from_pandas=True)
     if column.type == "text":
         return pa.array(series.astype(object).to_numpy(), type=kind, from_pandas=True)
+    if column.type == "day":
+        return _days(series, kind)
     return pa.array([_plain_value(value, column.type) for value in series.tolist()], type=kind)
 
 
@@ -178,18 +179,20 @@ def _plain_value(value: Any, kind: str) -> Any:
         return [convert(item) for item in value]
     if value is None or value is pd.NaT or value is pd.NA or (isinstance(value, float) and np.isnan(value)):
         return None
-    if kind == "day":
-        return _day(value)
     if kind == "decimal":
         return Decimal(str(value)).quantize(Decimal(1).scaleb(-MONEY_PLACES))
     return value
 
 
-def _day(value: Any) -> date:
-    stamp = pd.Timestamp(value)
-    if stamp != stamp.normalize():
-        raise ValueError(f"{value} is not a date alone")
-    return stamp.date()
+def _days(series: pd.Series, kind: Any) -> Any:
+    """Local dates, the whole column at once; dates alone, with no zone and no time of day."""
+    given = series.astype(object) if series.dtype.kind not in "MO" else series
+    days = pd.to_datetime(given) if given.dtype.kind == "O" else given
+    midnight = days.dt.normalize()
+    odd = days.notna() & (days != midnight)
+    if odd.any():
+        raise ValueError(f"{days[odd].iloc[0]} is not a date alone")
+    return pa.array(midnight.dt.tz_localize(None).to_numpy().astype("datetime64[D]"), type=kind)
 
 
 def as_utc(series: pd.Series) -> pd.Series:
