@@ -16,6 +16,7 @@ import numpy as np
 import pandas as pd
 
 from fleet.errors import FleetError, Problem, Refused
+from fleet.one_price import one_price
 from fleet.public_days import public_days
 from fleet.references import cross_problems, unmapped_meters
 from fleet.schema import table, tables
@@ -131,6 +132,9 @@ def survey_folder(
         faults += read.problems
         notes += read.notes
         digests |= _digests(source, path)
+    if "tariffs" in wanted:
+        frames["tariffs"], said = one_price(settings, frames, "tariffs" in sources)
+        notes += said
     if not unreadable and "sites" in wanted:
         faults += _checked_together(frames, sources, wanted, settings)
     ordered = [FILE, *(_file(sources, name) for name in tables("fleet"))]

@@ -36,6 +36,8 @@ class Settings(BaseModel):
     interval_minutes: Literal[5, 10, 15, 30, 60] = 15
     notice_minutes: Annotated[float, Field(ge=0.0, le=10080.0)] = 120.0
     minimum_window_minutes: Annotated[float, Field(ge=0.0, le=1440.0)] = 60.0
+    energy_price_per_kwh: Annotated[float, Field(ge=-10.0, le=100.0, allow_inf_nan=False)] | None = None
+    """One price at all times for every site, where the fleet has no tariffs table."""
     shortfall_price_per_kwh: NotNegative | None = None
     """None: ten times the dearest energy price of the horizon."""
     over_delivery_price_per_kwh: NotNegative | None = None
@@ -125,6 +127,7 @@ def defaults_used(settings: Settings) -> list[DefaultUsed]:
 
 
 _UNSAID: Final = {
+    "energy_price_per_kwh": "none, the tariffs table says it",
     "shortfall_price_per_kwh": "10 x the dearest energy price of the horizon",
     "over_delivery_price_per_kwh": "the dearest energy price of the horizon",
 }
