@@ -19,7 +19,18 @@ import pandas as pd
 from fleet.errors import FleetError
 from fleet.lock import lock
 from fleet.schema import table, tables
-from fleet.seals import KINDS, SEAL, faults, json_text, last_seal, record_folders, seal, whole, write_folder
+from fleet.seals import (
+    KINDS,
+    SEAL,
+    digest,
+    faults,
+    json_text,
+    last_seal,
+    record_folders,
+    seal,
+    whole,
+    write_folder,
+)
 from fleet.tables import empty_frame, read_parquet, write_parquet
 
 __all__ = [
@@ -104,9 +115,11 @@ def write_call(
             (call / "frozen").mkdir(parents=True)
             _write_frames(call, "call", frames)
             _write_frames(call / "frozen", "fleet", frozen)
-            _write_json(call / "proof.json", proof)
             for name, content in frozen_json.items():
                 _write_json(call / "frozen" / f"{_file_name(name)}.json", content)
+            frozen_files = sorted((call / "frozen").iterdir())
+            digests = {path.name: digest(path) for path in frozen_files}
+            _write_json(call / "proof.json", dict(proof) | {"frozen_sha256": digests})
             seal(call, call.name, None)
     return final / "call-001"
 

@@ -31,7 +31,9 @@ def test_a_call_comes_back_as_it_was_written(tmp_path):
         pd.testing.assert_frame_equal(found.frames[name], frame, check_dtype=False)
     for name, frame in frozen_frames().items():
         pd.testing.assert_frame_equal(found.frozen[name], frame)
-    assert found.proof == PROOF
+    told = dict(found.proof)
+    assert set(told.pop("frozen_sha256")) == {file.name for file in (path / "frozen").iterdir()}
+    assert told == PROOF
     assert found.frozen_json == SETTINGS
 
 
