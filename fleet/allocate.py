@@ -253,10 +253,11 @@ def _solve(
     best = _Incumbent(offers, terms)
 
     def better(chosen: Ints) -> None:
-        """Takes an answer and what local improvement makes of it."""
-        best.offer(repaired(offers, terms, chosen))
-        stop = stopwatch() + 0.1 * max(end - stopwatch(), 0.0)
-        best.offer(improve(offers, terms, best.chosen, order, coupled, lambda: stopwatch() > stop))
+        """Takes an answer, brought within the limits, and what local moves make of it."""
+        kept = repaired(offers, terms, chosen)
+        best.offer(kept)
+        stop = stopwatch() + max(0.1 * (end - stopwatch()), 0.02 * (end - began))
+        best.offer(improve(offers, terms, kept, order, coupled, lambda: stopwatch() > stop))
 
     for start in (*known, _rounded(offers, searched.x)):
         better(start)

@@ -94,7 +94,7 @@ def improve(
 
     chosen must keep the feeder rows; coupled (J, T) are the rows that can bind at all. stop() ends it early.
     """
-    columns = np.concatenate([chosen, columns[~np.isin(columns, chosen)]])
+    columns = np.concatenate([chosen, columns[~np.isin(columns, chosen)][:MOST_MOVES]])
     moves = _moves(offers, terms, columns, coupled)
     current = np.full(offers.site_count, -1, dtype=np.int64)
     current[offers.site[chosen]] = chosen
@@ -108,16 +108,15 @@ def improve(
 
 def _moves(offers: Offers, terms: Terms, columns: Ints, coupled: Bools) -> _Moves:
     nodes, intervals = np.flatnonzero(coupled.any(axis=1)), np.flatnonzero(coupled.any(axis=0))
-    columns = columns[:MOST_MOVES]
     out = np.arange(offers.site_count)
     none = np.zeros((out.size, 1))
     change = offers.change_kw[np.ix_(columns, intervals)]
     return _Moves(
-        candidate=np.r_[columns, np.full(out.size, -1)],
-        site=np.r_[offers.site[columns], out],
-        cost=np.r_[offers.cost[columns], none[:, 0]],
-        kw=np.concatenate([offers.kw[columns], np.repeat(none, offers.kw.shape[1], axis=1)]),
-        change_kw=np.concatenate([change, np.repeat(none, intervals.size, axis=1)]),
+        candidate=np.r_[np.full(out.size, -1), columns],
+        site=np.r_[out, offers.site[columns]],
+        cost=np.r_[none[:, 0], offers.cost[columns]],
+        kw=np.concatenate([np.repeat(none, offers.kw.shape[1], axis=1), offers.kw[columns]]),
+        change_kw=np.concatenate([np.repeat(none, intervals.size, axis=1), change]),
         below=offers.below[nodes],
         headroom_kw=terms.headroom_kw[np.ix_(nodes, intervals)],
     )
@@ -141,12 +140,13 @@ def _best_step(offers: Offers, terms: Terms, moves: _Moves, current: Ints) -> In
     step = _first_kept(np.argsort(single)[:PAIRS_TRIED, None], single[:, None], change, moves, room)
     if step.size:
         return step
-    pair = cost[:, None] + cost[None, :] + _pair_penalty(terms, given, kw) - now
-    pair[moves.site[:, None] == moves.site[None, :]] = np.inf
+    real = np.flatnonzero(moves.candidate != current[moves.site])[:MOST_MOVES]
+    pair = cost[real, None] + cost[None, real] + _pair_penalty(terms, given, kw[real]) - now
+    pair[moves.site[real, None] == moves.site[None, real]] = np.inf
     flat = np.flatnonzero(pair < -LEAST_GAIN)
     flat = flat[np.argsort(pair.ravel()[flat], kind="stable")][: 2 * PAIRS_TRIED]
     both = np.stack(np.unravel_index(flat, pair.shape), axis=1)
-    return _first_kept(both, None, change, moves, room)
+    return _first_kept(real[both], None, change, moves, room)
 
 
 def _present_change(offers: Offers, moves: _Moves, current: Ints, intervals: int) -> Floats:

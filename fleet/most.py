@@ -13,7 +13,7 @@ from fleet.choice import Most, Status, factor_of, most_kw
 from fleet.feeders import Feeders
 from fleet.improve import repaired
 from fleet.offers import offered, offers_of
-from fleet.prices import FEASIBLE_KW, as_choices, largest, node_change_kw, rows_that_bind, search
+from fleet.prices import FEASIBLE_KW, as_choices, largest, rows_that_bind, search
 from sites.quotes import DenseQuotes
 from sites.units import Bools, Floats, Ints
 
@@ -49,7 +49,7 @@ def most(
     offers = offers_of(quotes, feeders, delivery_factor, np.zeros(quotes.site_count), kept)
     intervals = offers.kw.shape[1]
     together = most_of(offers, headroom_kw, np.ones(intervals), seconds)
-    available, proven = _alone(offers, headroom_kw, seconds / intervals)
+    available, proven = _alone(offers, headroom_kw, seconds / intervals, together.chosen)
     return Available(available, together.kw, proven and together.status is Status.PROVEN)
 
 
@@ -99,27 +99,25 @@ def _no_terms(offers: Offers, headroom_kw: Floats, shape: Floats) -> Terms:
     return Terms(none, none, cap, none, headroom_kw)
 
 
-def _breaks(offers: Offers, terms: Terms, chosen: Ints) -> Bools:
-    """(J, T) feeder rows that a choice breaks."""
-    weight = np.zeros(offers.site.size)
-    weight[chosen] = 1.0
-    result: Bools = node_change_kw(offers, weight) > terms.headroom_kw + FEASIBLE_KW
-    return result
+def _alone(offers: Offers, headroom_kw: Floats, seconds: float, known: Ints) -> tuple[Floats, bool]:
+    """(E,) most of each interval alone: every site's best where that keeps the feeders, else by model.
 
-
-def _alone(offers: Offers, headroom_kw: Floats, seconds: float) -> tuple[Floats, bool]:
-    """(E,) most of each interval alone: every site's best where that keeps the feeders, else by model."""
+    A model cut short is never taken for nothing: every site's best less what breaks a feeder, and the choice
+    `known` for all intervals together, are answers too.
+    """
     intervals = offers.kw.shape[1]
     result = np.zeros(intervals)
     proven = True
     terms = _no_terms(offers, headroom_kw, np.ones(intervals))
     for e in range(intervals):
         best = _best_each(offers, e)
-        if _breaks(offers, terms, best).any():
-            answer = most_of(offers, headroom_kw, np.eye(intervals)[e], seconds)
-            result[e], proven = answer.kw, proven and answer.status is Status.PROVEN
-        else:
-            result[e] = np.floor(offers.kw[best, e].sum() * 1000.0 + 1e-9) / 1000.0
+        kept = repaired(offers, terms, best)
+        only = np.eye(intervals)[e]
+        result[e] = max(factor_of(offers.kw[kept], only), factor_of(offers.kw[known], only))
+        if kept.size < best.size:
+            answer = most_of(offers, headroom_kw, only, seconds)
+            result[e] = max(result[e], answer.kw)
+            proven = proven and answer.status is Status.PROVEN
     return result, proven
 
 
