@@ -6,7 +6,7 @@ Owns the passage from `.truth` to the finer model's arrays and back. Axes: site 
 from collections.abc import Callable
 from dataclasses import dataclass, replace
 from pathlib import Path
-from typing import Any
+from typing import Any, Final
 
 import numpy as np
 import pandas as pd
@@ -20,7 +20,7 @@ from demo_fleet.hidden import Made
 from demo_fleet.plant import State, rested
 from sites.units import Floats, Times
 
-STEP_MINUTES = 1
+STEP_MINUTES: Final = 1
 
 
 @dataclass(frozen=True)

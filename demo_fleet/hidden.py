@@ -242,7 +242,7 @@ def _vessels(tanks: pd.DataFrame | None, index: "pd.Index[Any]") -> tuple[dict[s
     return fields, names
 
 
-def outages(made: Made, status: pd.DataFrame | None, at: np.datetime64 | None = None) -> tuple[Bools, Bools]:
+def outages(made: Made, status: pd.DataFrame | None) -> tuple[Bools, Bools]:
     """Machines (N, M) and tanks (N, K) in service by the newest status row of each unit."""
     machine, tank = made.plant.machine_up.copy(), made.plant.tank_up.copy()
     if status is None or "available" not in status:

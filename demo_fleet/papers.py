@@ -82,26 +82,46 @@ def status(
 ) -> pd.DataFrame:
     """Newest word from the plants: tank levels by gauges of differing age and class, machines in service.
 
-    inventory_kwh_th (N, T) is the true sum over a site's tanks at interval ends; `called` indexes `times`.
+    inventory_kwh_th (N, T) is the true sum over a site's tanks at interval ends; `called` indexes `times`;
+    the last machine of site `machine_out` (-1: none) is out of service.
     """
     plant, site_ids = made.plant, made.sites["site_id"].to_numpy()
-    tank_row, tank = np.nonzero(plant.tank_kwh_th > 0.0)
-    age = rng.choice([1, 1, 2, 3, 4, 8, 12], len(tank_row)).astype(np.int64)
-    kind = rng.choice(["measured", "reported", "estimated"], len(tank_row), p=[0.5, 0.35, 0.15])
-    capacity = plant.tank_kwh_th[tank_row, tank]
-    share = capacity / plant.tank_kwh_th.sum(axis=1)[tank_row]
+    row, machine = np.nonzero(plant.capacity_kw_th > 0.0)
+    last = np.concatenate([np.diff(row) > 0, [True]]) & (row == machine_out)
+    tanks = _tank_status(made, inventory_kwh_th, times, called, rng)
+    machines = pd.DataFrame(
+        {
+            "site_id": site_ids[row],
+            "unit_id": made.chiller_id[row, machine],
+            "time": utc(times[called - rng.choice([2, 4, 20, 36], len(row))]),
+            "available": ~last,
+            "quality": "reported",
+        }
+    )
+    return pd.concat([tanks, machines], ignore_index=True)
+
+
+def _tank_status(
+    made: Made, inventory_kwh_th: Floats, times: Times, called: int, rng: np.random.Generator
+) -> pd.DataFrame:
+    plant = made.plant
+    row, tank = np.nonzero(plant.tank_kwh_th > 0.0)
+    age = rng.choice([1, 1, 2, 3, 4, 8, 12], len(row)).astype(np.int64)
+    kind = rng.choice(["measured", "reported", "estimated"], len(row), p=[0.5, 0.35, 0.15])
+    capacity = plant.tank_kwh_th[row, tank]
+    share = capacity / plant.tank_kwh_th.sum(axis=1)[row]
     blur = (
         pd.Series(kind)
         .map({"measured": 0.01, "reported": 0.02, "estimated": 0.04})
         .to_numpy(dtype=np.float64)
     )
-    true = inventory_kwh_th[tank_row, called - age - 1] * share
+    true = inventory_kwh_th[row, called - age - 1] * share
     read = np.clip(true + rng.standard_normal(len(true)) * blur * capacity, 0.0, capacity)
     gauged = kind == "measured"
-    tanks = pd.DataFrame(
+    return pd.DataFrame(
         {
-            "site_id": site_ids[tank_row],
-            "unit_id": made.tank_id[tank_row, tank],
+            "site_id": made.sites["site_id"].to_numpy()[row],
+            "unit_id": made.tank_id[row, tank],
             "time": utc(times[called - age]),
             "inventory_kwh_th": np.round(read, 0),
             "inventory_low_kwh_th": np.where(
@@ -114,18 +134,6 @@ def status(
             "quality": kind,
         }
     )
-    row, machine = np.nonzero(plant.capacity_kw_th > 0.0)
-    last = np.concatenate([np.diff(row) > 0, [True]]) & (row == machine_out)
-    machines = pd.DataFrame(
-        {
-            "site_id": site_ids[row],
-            "unit_id": made.chiller_id[row, machine],
-            "time": utc(times[called - rng.choice([2, 4, 20, 36], len(row))]),
-            "available": ~last,
-            "quality": "reported",
-        }
-    )
-    return pd.concat([tanks, machines], ignore_index=True)
 
 
 def fleet_toml() -> str:

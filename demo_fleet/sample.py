@@ -27,9 +27,10 @@ from sites.units import Bools, Floats, Ints, Times
 Progress = Callable[[str, float], None]
 BLOCK: Final = 40
 """Sites whose history is made at once."""
-LOAD_DAYS_LARGE: Final = 14
-"""Fleets over LARGE sites carry load forecasts for so many days before the event only."""
+RECENT_DAYS: Final = 14
+"""Load forecasts are quarter-hourly, and loads of nodes given, from so many days before the event."""
 LARGE: Final = 100
+"""Fleets of more sites carry no load forecasts older than RECENT_DAYS."""
 
 
 @dataclass(frozen=True)
@@ -246,7 +247,7 @@ def _write_loads(path: Path, world: _World, block: Ints, true: course.Course) ->
     load = course.forecast(sites, world.local, dry, rng)
     load[(block % 13 == 5) | (block % 13 == 12)] = np.nan
     rest = rest_kw(sites, world.local)
-    recent = calendar.midnight(calendar.next_day(calendar.EVENT_DAY, -LOAD_DAYS_LARGE))
+    recent = calendar.midnight(calendar.next_day(calendar.EVENT_DAY, -RECENT_DAYS))
     late = world.times >= recent
     hourly = ~late & (world.times.astype("datetime64[h]") == world.times)
     if len(world.sites) > LARGE:
@@ -312,7 +313,7 @@ def _write_tables(
     station = world.weather.forecast_dry_bulb_c[0]
     fleet_peak = np.zeros(len(network.FEEDERS))
     np.add.at(fleet_peak, pd.Index(network.FEEDERS).get_indexer(pd.Index(sites["node_id"])), july_kw)
-    recent = world.times >= calendar.midnight(calendar.next_day(calendar.EVENT_DAY, -2))
+    recent = world.times >= calendar.midnight(calendar.next_day(calendar.EVENT_DAY, -RECENT_DAYS))
     near = Local(**{name: values[recent] for name, values in world.local.__dict__.items()})
     others = network.other_kw(near, station[recent], fleet_peak)
     machine_out = (

@@ -231,7 +231,7 @@ def test_sites_of_one_city_err_together_at_about_a_quarter() -> None:
 
 @pytest.mark.parametrize("sites", [1, 5, 100])
 def test_other_sizes_are_whole_fleets(sites: int, tmp_path: Path) -> None:
-    facts = sample(tmp_path / "fleet", sites=sites, seed=3, history_days=4)
+    facts = sample(tmp_path / "fleet", sites=sites, seed=3, history_days=3)
     assert len(pd.read_csv(facts.path / "sites.csv")) == sites
     meters = pd.read_parquet(facts.path / "meters")
     assert len(meters) == facts.meter_rows
@@ -249,7 +249,7 @@ def digests(path: Path) -> dict[str, str]:
 
 def test_the_same_seed_writes_the_same_bytes_and_another_seed_another_fleet(tmp_path: Path) -> None:
     first, again, other = (
-        digests(sample(tmp_path / name, sites=5, seed=seed, history_days=4).path)
+        digests(sample(tmp_path / name, sites=5, seed=seed, history_days=3).path)
         for name, seed in (("a", 7), ("b", 7), ("c", 8))
     )
     assert first == again
