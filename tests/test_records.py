@@ -56,7 +56,7 @@ def test_json_in_the_record_is_sorted_utf8_with_an_end_of_line(tmp_path):
     path = called(tmp_path)
     text = (path / "proof.json").read_text(encoding="utf-8")
     assert text.endswith("}\n")
-    assert list(json.loads(text)) == ["bound_by", "gap", "status"]
+    assert list(json.loads(text)) == ["bound_by", "frozen_sha256", "gap", "status"]
 
 
 def test_an_event_is_never_written_over(tmp_path):
