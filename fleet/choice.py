@@ -13,6 +13,7 @@ whoever asks recomputes balance, limits and cost from the chosen candidates.
 import contextlib
 import os
 import sys
+import time
 import warnings
 from collections.abc import Iterator
 from dataclasses import dataclass
@@ -130,12 +131,14 @@ def relaxation(choices: Choices, solver: str = "highs", profile: Floats | None =
 def integer(
     choices: Choices, gap: float, seconds: float, start: Ints | None = None, solver: str = "highs"
 ) -> Chosen:
-    """Whole candidates; stops at `gap` (money) between answer and bound, or after `seconds`.
+    """Whole candidates; stops at `gap` (money) between answer and bound, or after `seconds`, building included.
 
     start: columns of a known feasible answer, given to the solver where it takes one.
     """
+    began = time.perf_counter()
     model = _Model(choices, whole=True)
-    status, bound = model.solve(solver, seconds, gap / model.money_scale, start)
+    left = seconds - (time.perf_counter() - began)
+    status, bound = model.solve(solver, left, gap / model.money_scale, start)
     if not status.is_ok:
         return Chosen(status, np.zeros(0, dtype=np.int64), np.nan, bound * model.money_scale)
     return Chosen(status, _picked(choices, model.x), model.objective(), bound * model.money_scale)
