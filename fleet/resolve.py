@@ -11,6 +11,7 @@ from typing import Any, Final
 import numpy as np
 import pandas as pd
 
+from fleet.building_types import USUAL_COLUMNS, usual
 from fleet.schema import table
 from fleet.settings import Settings
 from sites.chiller import RATED_COP_MINIMUM
@@ -25,7 +26,6 @@ CHILLED_WATER_HOURS: Final = 5.0
 
 _PER_M2: Final = {
     "air_kwh_per_k": 0.006,
-    "mass_kwh_per_k": 0.020,
     "coupling_kw_per_k": 0.009,
     "envelope_kw_per_k": 0.001,
 }
@@ -101,12 +101,25 @@ def _sites(frames: dict[str, pd.DataFrame], settings: Settings, assumed: list[As
     fill("peak_cooling_kw_th", sites["floor_area_m2"] * COOLING_KW_TH_PER_M2, per_m2)
     for column, share in _PER_M2.items():
         fill(column, sites["floor_area_m2"] * share, f"{share:g} per m2 of floor area")
+    _by_building_type(sites, fill)
     for column, share in _PER_PEAK.items():
         fill(column, sites["peak_cooling_kw_th"] * share, f"{share:g} kW per kW_th of peak cooling")
     fill("notice_minutes", settings.notice_minutes, None)
     fill("minimum_window_minutes", settings.minimum_window_minutes, None)
     fill("settlement_rule", settings.settlement_rule, None)
     return _plain_defaults("sites", sites, fill)
+
+
+def _by_building_type(sites: pd.DataFrame, fill: "Fill") -> None:
+    """What is usual for the building's type; the type itself comes first."""
+    fill("building_type", table("fleet", "sites").column("building_type").default, "default")
+    for name, kind in sites.groupby("building_type", sort=False).groups.items():
+        rows = sites.index.isin(kind)
+        for column in USUAL_COLUMNS:
+            fill(column, usual(sites["building_type"], column).where(rows), f"usual for type {name}")
+        per_m2 = usual(sites["building_type"], "mass_kwh_per_k_m2").where(rows)
+        why = f"{per_m2.max():g} per m2 of floor area, usual for type {name}"
+        fill("mass_kwh_per_k", sites["floor_area_m2"] * per_m2, why)
 
 
 def _chillers(given: pd.DataFrame, tanks: pd.DataFrame, assumed: list[Assumption]) -> pd.DataFrame:

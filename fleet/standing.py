@@ -109,8 +109,11 @@ def usual_fraction(roster: Roster, local_hour: float) -> Floats:
         hours: Floats = np.mod(hour - buildings.charge_to_hour, 24.0)
         return hours
 
-    now, first = since_full(local_hour), since_full(use_from)
-    last = np.maximum(since_full(use_to), first)
+    now, first, last = since_full(local_hour), since_full(use_from), since_full(use_to)
+    last = np.where(last == 0.0, 24.0, last)
+    # A use that is under way when charging ends (around the clock, say) starts there.
+    first = np.where((last <= first) & (use_from != use_to), 0.0, first)
+    last = np.maximum(last, first)
     charge = np.maximum(since_full(buildings.charge_from_hour), last)
     used = np.clip((now - first) / np.maximum(last - first, 1e-9), 0.0, 1.0)
     made = np.clip((now - charge) / np.maximum(24.0 - charge, 1e-9), 0.0, 1.0)

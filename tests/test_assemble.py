@@ -93,7 +93,7 @@ def test_hourly_prices_hold_for_their_hour_and_are_counted(fleet):
     assert fleet.outlook.price_per_kwh.tolist() == [expected.tolist()] * 3
     assert fleet.notes == ("tariffs: 105 intervals take the value of the coarser row they lie in",)
     assert fleet.shortfall_price_per_kwh == pytest.approx(2.4)
-    assert fleet.over_delivery_price_per_kwh == pytest.approx(expected.mean())
+    assert fleet.over_delivery_price_per_kwh == pytest.approx(expected.max())
 
 
 def test_a_site_without_loads_gets_a_marked_profile_within_its_peak(fleet):
@@ -117,6 +117,12 @@ def test_everything_assumed_is_listed_with_its_reason(fleet):
     )
     assert marked["chillers", "library/CH-1", "makes_ice"] == ("true", "true where the site has ice")
     assert marked["sites", "harbour", "no_unmet"] == ("false", "default")
+    assert marked["sites", "library", "occupied_to_hour"] == ("17", "usual for type courthouse")
+    assert marked["sites", "ward", "occupied_all_week"] == ("true", "usual for type hospital")
+    assert marked["sites", "library", "mass_kwh_per_k"] == (
+        "210",
+        "0.035 per m2 of floor area, usual for type courthouse",
+    )
     assert ("sites", "harbour", "floor_area_m2") not in marked
     assert ("sites", "harbour", "calls_per_week") not in marked
     assert len(marked) == len(fleet.assumed)
@@ -133,12 +139,12 @@ def test_status_the_newest_reading_ages_and_an_unavailable_machine(fleet):
 
 
 def test_a_tank_never_read_is_assumed_and_marked(fleet):
-    # load levelling: full at 06:00, used from 07:00 to 19:00; at 13:00 half is left
-    assert fleet.standing.best_kwh_th[2, 0] == pytest.approx(2500.0)
-    assert fleet.standing.low_kwh_th[2, 0] == pytest.approx(2000.0)
-    assert fleet.standing.high_kwh_th[2, 0] == pytest.approx(3000.0)
+    # load levelling: full at 06:00, used until midnight (a hospital); at 13:00 11/18 of 5000 are left
+    assert fleet.standing.best_kwh_th[2, 0] == pytest.approx(3055.5556)
+    assert fleet.standing.low_kwh_th[2, 0] == pytest.approx(0.8 * 3055.5556)
+    assert fleet.standing.high_kwh_th[2, 0] == pytest.approx(1.2 * 3055.5556)
     (one,) = [one for one in fleet.assumed if one.table == "status"]
-    assert (one.key, one.value) == ("ward/CW-1", "2500")
+    assert (one.key, one.value) == ("ward/CW-1", "3055.56")
     assert one.why == (
         "no reading at or before 2026-07-14 13:00 +03:00: full by the end of usual charging, "
         "used up over the hours of usual discharge"
@@ -148,14 +154,15 @@ def test_a_tank_never_read_is_assumed_and_marked(fleet):
 @pytest.mark.parametrize(
     ("hour", "shares"),
     [
-        # harbour, ward: 07 to 19; library (storage priority): 12 to 18; all charge from 22 to 06
+        # harbour: 07 to 19; library (storage priority): 12 to 18; both charge from 22 to 06;
+        # ward (a hospital, people around the clock): from the end of charging, 06, to midnight, charged from then
         (6.0, [1.0, 1.0, 1.0]),
-        (7.0, [1.0, 1.0, 1.0]),
-        (13.0, [0.5, 5 / 6, 0.5]),
-        (18.0, [1 / 12, 0.0, 1 / 12]),
-        (21.0, [0.0, 0.0, 0.0]),
-        (2.0, [0.5, 0.5, 0.5]),
-        (5.99, [0.99875, 0.99875, 0.99875]),
+        (7.0, [1.0, 1.0, 17 / 18]),
+        (13.0, [0.5, 5 / 6, 11 / 18]),
+        (18.0, [1 / 12, 0.0, 6 / 18]),
+        (21.0, [0.0, 0.0, 3 / 18]),
+        (2.0, [0.5, 0.5, 2 / 6]),
+        (5.99, [0.99875, 0.99875, 5.99 / 6]),
     ],
 )
 def test_assumed_course_of_a_usual_day(fleet, hour, shares):

@@ -56,7 +56,7 @@ def test_defaults_have_the_columns_own_type():
     sites = table("fleet", "sites")
     assert sites.column("no_unmet").default is False
     assert sites.column("supply_c").default == 5.0
-    assert sites.column("strategy").default == "chiller_priority"
+    assert sites.column("building_type").default == "office"
     assert sites.column("air_kwh_per_k").default is None
     assert table("fleet", "meter_map").column("sign").default == 1
 
