@@ -87,7 +87,7 @@ def audit(fleet_path: Path, event_id: str, meters: pd.DataFrame | None = None) -
         _audit_call(one, found)
         found.notes += changed_inputs(fleet_path, one)
     for path in record_folders(folder):
-        if path.name.startswith("orders-"):
+        if calls and path.name.startswith("orders-"):
             _tried(found, path.name, "orders", partial(orders_say_the_call, path, calls, found))
     if calls:
         _audit_settlements(fleet_path, event_id, folder, calls[-1], meters, found)

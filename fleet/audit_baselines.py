@@ -12,13 +12,20 @@ import pandas as pd
 
 from fleet.audit_evidence import utc_naive
 from fleet.audit_findings import Findings
+from fleet.audit_levels import guards, levels, weather
 from fleet.audit_settled import Days, Settled, days_of, local_day, slots_of
 from fleet.rules import SettlementRule
 from sites.units import AnyArray, Bools, Floats, Ints
 
 READ: Final = ("other_day_type", "holiday")
 """Reasons for which a day's readings are not looked at, and not recorded."""
-LIKE: Final = ("like_days", "event_days")
+OF_DAYS: Final = ("like_days", "event_days", "regression", "base_load")
+METHODS: Final = {
+    "like_days": ("like_days", "event_days", "before_after", "none"),
+    "temperature_regression": ("regression", "before_after", "none"),
+    "maximum_base_load": ("base_load", "before_after", "none"),
+    "before_after": ("before_after", "none"),
+}
 
 
 @dataclass(frozen=True)
@@ -53,6 +60,11 @@ def days_read(made: Settled, found: Findings) -> None:
     for name, values in (("rank_value", rank), ("window_base_kw", base)):
         kept = np.where(there, values, sheet.numbers(name))
         found.equal("means of a day", sheet, name, kept)
+    if "day_kwh" in sheet.frame.columns:
+        energy = np.full(len(sheet.frame), np.nan)
+        held = (days.row >= 0) & days.recorded
+        energy[days.row[held]] = np.nansum(days.kw, axis=2)[held] * made.clock.step_h
+        found.equal("energy of a day", sheet, "day_kwh", energy)
 
 
 def days_chosen(made: Settled, found: Findings) -> None:
@@ -79,54 +91,92 @@ def days_chosen(made: Settled, found: Findings) -> None:
 
 
 def baseline(made: Settled, found: Findings) -> None:
-    """baseline_kw: slot by slot the mean of the used days' readings, or of the readings before and after."""
+    """baseline_kw: what the used days' readings say by the rule's kind, or the mean before and after."""
     if not made.whole:
         return
     days, sheet = days_of(made), made.sheet("intervals")
     method = made.sites("method")
-    like = np.isin(method.astype(str), LIKE)[:, None]
+    wanted = [METHODS[rule.kind] for rule in made.rules]
+    odd = np.array([told not in ways for told, ways in zip(method, wanted, strict=True)])
+    found.wrong("baseline", made.sheet("sites"), "method", odd, method, "a method of the rule's kind")
+    of_days = np.isin(method.astype(str), OF_DAYS)[:, None]
     flat = (method == "before_after")[:, None]
     around = np.stack([_around(made, days, rule, row) for row, rule in enumerate(made.rules)])
-    by_slot = _average(days)
-    expected = np.where(like, _shown(made, days, by_slot), np.where(flat, around[:, None], np.nan))
+    said = np.full(made.committed_kw.shape, np.nan)
+    beyond = np.full(len(said), np.nan)
+    for rule in dict.fromkeys(made.rules):
+        rows, slots = _sites_of(made, rule), _slots(made, rule)
+        one = levels(made, days, rule, rows, slots.event, slots.window)
+        said[rows], beyond[rows] = one.shown_kw, one.beyond_k
+    said = np.where(_like(made, days), said, np.nan)
+    expected = np.where(of_days, said, np.where(flat, around[:, None], np.nan))
     # An event at night has its windows on days that are not recorded: those values are not looked at.
     known = ~flat | ~np.isnan(expected)
     expected = np.where(known, expected, made.grid("baseline_kw"))
     found.equal("baseline", sheet, "baseline_kw", expected.ravel())
+    found.equal("baseline", made.sheet("sites"), "beyond_training_k", np.where(of_days[:, 0], beyond, np.nan))
 
 
 def adjustment(made: Settled, found: Findings) -> None:
-    """The adjustment before and after its cap, from the window's means; the adjusted baseline from it."""
+    """The adjustment before and after its cap and with charging left in, from the window's means."""
     days, sheet = days_of(made), made.sheet("sites")
-    by_slot, readings = _average(days), days.readings
-    level = _by_day(made.sheet("days").numbers("window_base_kw"), days.row)[:, -1]
-    raw, applied = np.full(level.shape, np.nan), np.ones(level.shape)
-    kind = np.full(level.shape, "none", dtype=object)
-    like = np.isin(made.sites("method").astype(str), LIKE)
+    told = made.sheet("days")
+    level = _by_day(told.numbers("window_base_kw"), days.row)[:, -1]
+    charging = _by_day(told.numbers("window_charging_kw"), days.row)
+    guard = guards(made)
+    size = level.shape
+    raw, applied, charged = np.full(size, np.nan), np.ones(size), np.full(size, np.nan)
+    kind = np.full(size, "none", dtype=object)
+    of_days = np.isin(made.sites("method").astype(str), OF_DAYS)
     for rule in dict.fromkeys(made.rules):
-        rows = _sites_of(made, rule)
-        rows = rows[like[rows]]
+        rows, slots = _sites_of(made, rule), _slots(made, rule)
+        rows = rows[of_days[rows]]
         if rule.adjustment == "none" or not rows.size:
             continue
-        slots = _slots(made, rule)
-        base = _plain_mean(by_slot[rows][:, slots.window])
-        peak = np.where(days.used[rows][:, :, None], np.nan_to_num(readings[rows], nan=-np.inf), -np.inf).max(
-            axis=(1, 2)
-        )
-        additive = (base <= np.maximum(rule.small_base_fraction * peak, 0.0)) | (
-            rule.adjustment == "additive"
-        )
-        known = ~np.isnan(level[rows]) & ~np.isnan(base)
-        ratio = level[rows] / np.where(known & ~additive, base, 1.0)
-        one = np.where(known, np.where(additive, level[rows] - base, ratio), np.nan)
-        limit = np.abs(_plain_mean(by_slot[rows][:, slots.event]))
-        capped = _capped(np.where(known, one, 1.0), additive, limit, rule)
-        raw[rows], applied[rows] = one, np.where(known, capped, 1.0)
-        kind[rows] = np.where(known, np.where(additive, "additive", "ratio"), "none")
+        one = levels(made, days, rule, rows, slots.event, slots.window)
+        base, limit = _plain_mean(one.window_kw), np.abs(_plain_mean(one.event_kw))
+        peak = np.where(
+            days.used[rows][:, :, None], np.nan_to_num(days.readings[rows], nan=-np.inf), -np.inf
+        ).max(axis=(1, 2))
+        guarded = guard[rows] != "none"
+        usual = _used_mean(charging[rows], days.used[rows])
+        own_level = level[rows] - np.where(guarded, charging[rows][:, -1], 0.0)
+        own_base = base - np.where(guarded, usual, 0.0)
+        raw[rows], applied[rows], kind[rows] = _factor(own_level, own_base, peak, limit, rule)
+        charged[rows] = np.where(guarded, _factor(level[rows], base, peak, limit, rule)[1], np.nan)
     place = pd.Index(made.site_id).get_indexer(pd.Index(sheet.frame["site_id"]))
     found.equal("adjustment", sheet, "adjustment_raw", raw[place])
     found.equal("adjustment", sheet, "adjustment", applied[place])
+    found.equal("adjustment", sheet, "adjustment_charged", charged[place])
     found.same("adjustment", sheet, "adjustment_kind", kind[place])
+    found.same("adjustment", sheet, "guard", guard[place])
+    # Power taken out stands on the used days and the event's, of guarded sites only.
+    held = np.full(len(told.frame), False)
+    shown = (days.row >= 0) & (days.used | (np.arange(len(days.day)) == len(days.day) - 1))
+    held[days.row[shown & (guard != "none")[:, None]]] = True
+    value = told.numbers("window_charging_kw")
+    idle = ~held & ~np.isnan(value)
+    found.wrong("adjustment", told, "window_charging_kw", idle, value, "nothing: no charging is taken out")
+
+
+def _used_mean(values: Floats, used: Bools) -> Floats:
+    """(R,) mean over the used days that have a value."""
+    held = used & ~np.isnan(values)
+    total = np.where(held, values, 0.0).sum(axis=1)
+    return np.where(held.any(axis=1), total / np.maximum(held.sum(axis=1), 1), np.nan)
+
+
+def _factor(
+    level: Floats, base: Floats, peak: Floats, limit: Floats, rule: SettlementRule
+) -> tuple[Floats, Floats, AnyArray]:
+    """Before the cap, as applied, and the kind (R,)."""
+    additive = (base <= np.maximum(rule.small_base_fraction * peak, 0.0)) | (rule.adjustment == "additive")
+    known = ~np.isnan(level) & ~np.isnan(base)
+    ratio = level / np.where(known & ~additive, base, 1.0)
+    one = np.where(known, np.where(additive, level - base, ratio), np.nan)
+    capped = _capped(np.where(known, one, 1.0), additive, limit, rule)
+    kind = np.where(known, np.where(additive, "additive", "ratio"), "none")
+    return one, np.where(known, capped, 1.0), kind
 
 
 def adjusted(made: Settled, found: Findings) -> None:
@@ -181,7 +231,7 @@ def _hours(hours: float) -> np.timedelta64:
 def _without_window(made: Settled, site_id: pd.Series) -> Bools:
     """Rows of sites whose rule looks at no adjustment window on the event's day, or not only on that day."""
     none = {
-        site: rule.kind != "like_days" or bool(_slots(made, rule).window_days_before.any())
+        site: rule.kind == "before_after" or bool(_slots(made, rule).window_days_before.any())
         for site, rule in zip(made.site_id.tolist(), made.rules, strict=True)
     }
     mask: Bools = site_id.map(none).fillna(True).to_numpy(dtype=np.bool_)
@@ -199,14 +249,6 @@ def _plain_mean(kw: Floats) -> Floats:
     return kw.mean(axis=-1) if kw.shape[-1] else np.full(kw.shape[:-1], np.nan)
 
 
-def _average(days: Days) -> Floats:
-    """(S, L) slot-by-slot mean over the used days, of those that have a reading there."""
-    held = days.used[:, :, None] & ~np.isnan(days.readings)
-    count = held.sum(axis=1)
-    total = np.where(held, days.kw, 0.0).sum(axis=1)
-    return np.where(count > 0, total / np.maximum(count, 1), np.nan)
-
-
 def _by_day(values: AnyArray, row: Ints) -> AnyArray:
     """A column of table days as (S, D); NaN or "" where there is no row."""
     none = "" if values.dtype == object else np.nan
@@ -214,15 +256,12 @@ def _by_day(values: AnyArray, row: Ints) -> AnyArray:
     return padded[row]
 
 
-def _shown(made: Settled, days: Days, by_slot: Floats) -> Floats:
-    """The slots' means on the shown intervals (S, T); nothing on days of another class than the event's."""
-    zone = str(made.settings["timezone"])
-    starts = made.clock.starts
-    day = local_day(starts, zone)
+def _like(made: Settled, days: Days) -> Bools:
+    """(S, T) the interval's day is of the event day's class, elsewhere like days say nothing."""
+    day = local_day(made.clock.starts, str(made.settings["timezone"]))
     free = _free_days(made, day)
     own = _free_days(made, days.day[-1:])[0]
-    like = np.stack([(free == own) | (rule.day_classes == "all_days") for rule in made.rules])
-    return np.where(like, by_slot[:, slots_of(starts, zone, made.clock.step_minutes)], np.nan)
+    return np.stack([(free == own) | (rule.day_classes == "all_days") for rule in made.rules])
 
 
 def _free_days(made: Settled, day: AnyArray) -> Bools:
@@ -282,7 +321,8 @@ def _reasons(
 
     Low usage and event days that fill the pool are taken as told; what is chosen among the others is not.
     """
-    reason = _first_reasons(made, days, rule, rows, rank, base)
+    peak_c = _by_day(made.sheet("days").numbers("peak_dry_bulb_c"), days.row)[rows]
+    reason = _first_reasons(made, days, rule, rows, rank, base, peak_c)
     reason[:, -1] = "event_day"
     eligible = reason == "used"
     if rule.kind == "before_after":
@@ -295,13 +335,22 @@ def _reasons(
     short = pool.sum(axis=1) < rule.minimum_days
     added = (method == "event_days")[:, None] & (told == "used") & (reason == "event_past")
     short &= ~added.any(axis=1)
-    taken = _taken(pool | added, made.sign * rank, rule) & ~short[:, None]
+    score = made.sign * rank
+    if rule.rank == "nearest_weather":
+        score = -np.abs(peak_c - peak_c[:, -1:])
+    taken = _taken(pool | added, score, rule) & ~short[:, None]
     reason = np.where(pool | added, np.where(taken, "used", "not_ranked"), reason)
     return np.where(short[:, None] & pool, "too_few_days", reason)
 
 
 def _first_reasons(
-    made: Settled, days: Days, rule: SettlementRule, rows: Ints, rank: Floats, base: Floats
+    made: Settled,
+    days: Days,
+    rule: SettlementRule,
+    rows: Ints,
+    rank: Floats,
+    base: Floats,
+    peak_c: Floats,
 ) -> AnyArray:
     """ "used" for every day that may enter the pool, else the first thing that speaks against it (site, day)."""
     age = len(days.day) - 1 - np.arange(len(days.day))
@@ -314,7 +363,7 @@ def _first_reasons(
     past = _past_days(made, days)[rows]
     after = np.concatenate([past[:, 1:], np.ones((len(rows), 1), dtype=np.bool_)], axis=1)
     after[:, -2:-1] = True
-    needs_window = rule.kind == "like_days" and rule.adjustment != "none"
+    needs_window = rule.kind != "before_after" and rule.adjustment != "none"
     lost = np.isnan(rank) | (needs_window & np.isnan(base))
     usual = _mode_usual(made, days)[rows]
     tests = [
@@ -325,6 +374,7 @@ def _first_reasons(
         (after & rule.exclude_day_before_event, "day_before_event"),
         (~usual & rule.exclude_unusual_modes, "outage"),
         (lost, "missing_data"),
+        (np.isnan(peak_c) & rule.needs_weather, "missing_weather"),
     ]
     shape = (len(rows), len(days.day))
     masks = [np.broadcast_to(mask, shape) for mask, _ in tests]
@@ -341,7 +391,7 @@ def _taken(pool: Bools, score: Floats, rule: SettlementRule) -> Bools:
     order = np.lexsort((np.broadcast_to(newest, key.shape), -key), axis=1)
     place = np.empty_like(order)
     np.put_along_axis(place, order, np.broadcast_to(np.arange(order.shape[1]), order.shape), axis=1)
-    if rule.rank == "highest":
+    if rule.rank in ("highest", "nearest_weather"):
         return pool & (place < rule.take_days)
     spare = np.maximum(size - rule.take_days, 0)
     older = np.lexsort((np.broadcast_to(-newest, key.shape), -key), axis=1)
@@ -382,4 +432,4 @@ def _mark(mask: Bools, made: Settled, site_id: pd.Series, day: AnyArray, days: D
     return mask
 
 
-RULES = (days_read, days_chosen, baseline, adjustment, adjusted, event_day_readings)
+RULES = (weather, days_read, days_chosen, baseline, adjustment, adjusted, event_day_readings)

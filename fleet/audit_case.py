@@ -177,7 +177,7 @@ def _occupied(evidence: Evidence, hours: pd.DatetimeIndex, hour: Floats) -> Bool
     holidays = evidence.record.frozen.get("holidays")
     none = np.zeros(0, dtype="datetime64[D]")
     dates = none if holidays is None else holidays["date"].to_numpy().astype("datetime64[D]")
-    workday = (hours.weekday.to_numpy() < 5) & ~np.isin(day, dates)
+    workday = (hours.day_of_week.to_numpy() < 5) & ~np.isin(day, dates)
     all_week = evidence.sites["occupied_all_week"].astype("boolean").fillna(False).to_numpy(dtype=np.bool_)
     mask: Bools = inside & (workday[None, :] | all_week[:, None])
     return mask

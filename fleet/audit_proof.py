@@ -85,7 +85,7 @@ def prices(case: Case, found: Findings) -> None:
         for kind, name in (("shed", "shortfall_price_per_kwh"), ("over", "over_price_per_kwh"))
     }
     most = {kind: price * book.clock.step_h for kind, price in top.items()}
-    limit = frame["kind"].map(most).fillna(np.inf).to_numpy(dtype=np.float64)
+    limit: Floats = np.asarray(frame["kind"].map(most).fillna(np.inf), dtype=np.float64)
     found.most("price in its range", sheet, "price", limit)
     found.least("price in its range", sheet, "price", 0.0)
     nodes = book.record.frames["nodes"]
@@ -165,6 +165,8 @@ def figures(case: Case, found: Findings) -> None:
     lack = told["objective"] - told["bound"]
     check("gap_money", lack)
     check("gap", lack / told["gross_cost"] if told["gross_cost"] > 0.0 else None)
+    if "requested_kwh" in told:
+        check("requested_kwh", float(total.terms.request_kw.sum()) * case.evidence.clock.step_h)
     if told["status"] not in STATES:
         found.tell("figures of the proof", _file(case), "status", str(told["status"]), " or ".join(STATES))
     if told["bound_by"] == "solver":

@@ -11,10 +11,11 @@ import numpy as np
 import pandas as pd
 
 from fleet import audit_baselines
+from fleet.audit_evidence import utc_naive
 from fleet.audit_findings import Findings, Sheet
-from fleet.audit_settled import Settled, days_of
-from fleet.money import Prices, lines, paid_share, performance_factor
-from sites.units import AnyArray, Floats
+from fleet.audit_settled import Settled, days_of, local_day
+from fleet.money import Prices, earned, firm_level_charge, performance_factor
+from sites.units import AnyArray, Floats, Ints
 
 MONEY: Final = ("capacity_payment", "energy_payment", "penalty", "total")
 
@@ -126,7 +127,8 @@ def against_meters(made: Settled, found: Findings) -> None:
     used = used[used["role"] == used["site_id"].map(streams)]
     read = made.meters.drop_duplicates(["meter_id", "interval_start"]).merge(used, on="meter_id")
     read = read.assign(kw=read["kw"] * read["sign"])
-    summed = read.groupby(["site_id", "interval_start"])["kw"].agg(lambda kw: kw.sum(skipna=False))
+    each = read.groupby(["site_id", "interval_start"])["kw"]
+    summed = each.sum().where(each.count() == each.size())
     sheet = made.sheet("intervals")
     keys = pd.MultiIndex.from_frame(sheet.frame[["site_id", "interval_start"]])
     value = summed.reindex(keys).to_numpy(dtype=np.float64)
@@ -153,9 +155,34 @@ def performance(made: Settled, found: Findings) -> None:
     for row, rule in enumerate(made.rules):
         one = slice(row, row + 1)
         factor[one] = performance_factor(
-            value[one], made.grid("committed_kw")[one], inside[one], step_h, rule
+            value[one], made.grid("committed_kw")[one], inside[one], step_h, rule, _hour(made)
         )
-    found.equal("performance factor", sheet, "performance_factor", factor)
+    excused = (sheet.frame["state"] == "excused").to_numpy()
+    found.equal("performance factor", sheet, "performance_factor", np.where(excused, np.nan, factor))
+    reasoned = sheet.frame["why"].notna().to_numpy()
+    found.wrong(
+        "excused", sheet, "why", reasoned != excused, sheet.frame["why"].to_numpy(dtype=object), "a reason"
+    )
+
+
+def taken_back(made: Settled, found: Findings) -> None:
+    """Energy given back from the own window's end until local midnight, and until the call's tank is full again."""
+    sheet = made.sheet("sites")
+    if not made.whole or len(sheet.frame) != len(made.site_id):
+        return
+    starts, zone = made.clock.starts, str(made.settings["timezone"])
+    ends = utc_naive(made.windows["window_end"])[:, None]
+    last = local_day((ends - made.clock.step).ravel(), zone)[:, None]
+    value, after = made.grid("delivered_kw"), starts >= ends
+    full = utc_naive(made.windows["full_again_at"])[:, None]
+    spans = {
+        "recovery_until_midnight_kwh": (after & (local_day(starts, zone) == last), np.zeros(len(last))),
+        "recovery_until_full_kwh": (after & (starts < full), np.where(np.isnat(full[:, 0]), np.nan, 0.0)),
+    }
+    for name, (held, base) in spans.items():
+        energy = base - np.where(held, value, 0.0).sum(axis=1) * made.clock.step_h
+        size = np.where(held, np.abs(np.nan_to_num(value)), 0.0).sum(axis=1)
+        found.equal("energy taken back", sheet, name, energy, size)
 
 
 def payments(made: Settled, found: Findings) -> None:
@@ -172,11 +199,31 @@ def payments(made: Settled, found: Findings) -> None:
         "performance_cap",
     )
     prices = Prices(str(told["currency"]), *(float(told[name]) for name in names))
-    factor = sheet.numbers("performance_factor")
-    share = np.array([paid_share(factor[k : k + 1], rule, prices)[0] for k, rule in enumerate(made.rules)])
-    due = lines(sheet.numbers("committed_kwh"), sheet.numbers("delivered_kwh"), share, prices)
-    for name in MONEY[:3]:
-        _amounts("payments", sheet, name, getattr(due, name), found)
+    factor, committed = sheet.numbers("performance_factor"), sheet.numbers("committed_kwh")
+    excused = (sheet.frame["state"] == "excused").to_numpy()
+    delivered_kwh = np.where(excused, np.nan, sheet.numbers("delivered_kwh"))
+    share = np.full(len(factor), np.nan)
+    due = np.zeros((len(factor), 3), dtype=object)
+    for rule in dict.fromkeys(made.rules):
+        rows = np.flatnonzero([other == rule for other in made.rules])
+        charge = np.zeros(len(rows))
+        if made.whole:
+            charge = firm_level_charge(
+                made.grid("metered_kw")[rows], made.in_window[rows], made.clock.step_h, rule, made.sign
+            )
+        share[rows], lines = earned(
+            committed[rows],
+            delivered_kwh[rows],
+            factor[rows],
+            np.where(excused[rows], 0.0, charge),
+            rule,
+            prices,
+            made.site_id[rows].tolist(),
+        )
+        due[rows] = np.stack([getattr(lines, name) for name in MONEY[:3]], axis=1)
+    found.equal("payments", sheet, "paid_share", share)
+    for place, name in enumerate(MONEY[:3]):
+        _amounts("payments", sheet, name, due[:, place], found)
     own = [sheet.frame[name].to_numpy(dtype=object) for name in MONEY[:3]]
     _amounts("total", sheet, "total", own[0] + own[1] + own[2], found)
 
@@ -200,7 +247,7 @@ def states(made: Settled, found: Findings) -> None:
         "",
     ).astype(object)
     # An unread adjustment window makes a row provisional too: then its adjustment was left out.
-    wanted = [rule.adjustment != "none" and rule.kind == "like_days" for rule in made.rules]
+    wanted = [rule.adjustment != "none" and rule.kind != "before_after" for rule in made.rules]
     left_out = (sheet.frame["adjustment_kind"] == "none").to_numpy() & np.array(wanted)
     sure = np.where(left_out, "provisional", "final").astype(object)
     loose = (must == "") & (method == "before_after")
@@ -248,6 +295,12 @@ def postings(made: Settled, found: Findings) -> None:
         found.tell("postings", sheet.file, "site_id", f"{len(listed)} sites", f"{len(wanted)}, each once")
 
 
+def _hour(made: Settled) -> Ints:
+    """(T,) hour of each interval, counted from the event's start."""
+    hour: Ints = (made.clock.starts - made.event[0]) // np.timedelta64(1, "h")
+    return hour
+
+
 def _delivered(made: Settled) -> Floats:
     value = made.sign * (made.grid("adjusted_baseline_kw") - made.grid("metered_kw"))
     watched = made.in_event | made.in_window
@@ -268,6 +321,7 @@ RULES = (
     delivered,
     against_meters,
     performance,
+    taken_back,
     payments,
     states,
     fleet_sums,
