@@ -48,14 +48,21 @@ def play(
     """Play the call in `record` (steps.parquet, windows.parquet) on the fleet in `folder`; write to `out`.
 
     A folder without `.truth`, or an event outside its days, gets hidden parameters drawn from its own tables by
-    `seed`. Raises DemoError where tables do not reach over the days.
+    `seed`; what those leave open is as the record's `frozen` tables resolved it.
+    Raises DemoError where tables do not reach over the days.
     """
     tell = progress or (lambda text, share: None)
     steps, windows = (pd.read_parquet(record / f"{name}.parquet") for name in ("steps", "windows"))
     if windows.empty:
         raise DemoError(f"{record} calls no site; there is nothing to play")
     tell("the fleet as it really is", 0.0)
-    days = truth_of(folder, naive(windows["window_start"]).min(), naive(windows["window_end"]).max(), seed)
+    days = truth_of(
+        folder,
+        naive(windows["window_start"]).min(),
+        naive(windows["window_end"]).max(),
+        seed,
+        record / "frozen",
+    )
     order = acts(days, steps, windows)
     tell("the days, with and without the event", 0.1)
     with_event, without = _both(days, order, windows)
@@ -90,7 +97,9 @@ def true_kwh(out: Path) -> tuple["pd.Series[Any]", float]:
     return each, float(each.sum())
 
 
-def truth_of(folder: Path, start: np.datetime64, end: np.datetime64, seed: int | None) -> Days:
+def truth_of(
+    folder: Path, start: np.datetime64, end: np.datetime64, seed: int | None, frozen: Path | None = None
+) -> Days:
     """The folder's own `.truth` where it reaches over the event and no other seed is asked, else drawn."""
     secret = folder / ".truth"
     if seed is None and (secret / "hidden.parquet").exists():
@@ -99,14 +108,15 @@ def truth_of(folder: Path, start: np.datetime64, end: np.datetime64, seed: int |
         days = dayfile.read(made, hidden, secret, *_place(folder))
         if days.times[0] <= start - np.timedelta64(12, "h") and end <= days.times[-1]:
             return days
-    return truth_from_folder(folder, 1 if seed is None else seed, start)
+    return truth_from_folder(folder, 1 if seed is None else seed, start, frozen)
 
 
-def truth_from_folder(folder: Path, seed: int, event_from: np.datetime64) -> Days:
+def truth_from_folder(folder: Path, seed: int, event_from: np.datetime64, frozen: Path | None = None) -> Days:
     """Days around an event, hidden parameters drawn from `seed`, loads and weather from the folder's tables.
 
     Runs from local midnight of the day before to the end of the day after; the forecast weather carries a
-    shared error of up to 0.7 K. Tanks start seven tenths full.
+    shared error of up to 0.7 K. Tanks start seven tenths full. `frozen` is a folder of the same tables with their
+    defaults resolved, preferred where it holds every site.
     """
     zone, holidays = _place(folder)
     day = str(calendar.local(np.array([event_from]), zone, holidays).day.astype("datetime64[D]")[0])
@@ -114,9 +124,8 @@ def truth_from_folder(folder: Path, seed: int, event_from: np.datetime64) -> Day
         calendar.midnight(calendar.next_day(day, -1), zone),
         calendar.midnight(calendar.next_day(day, 2), zone),
     )
-    sites = _table(folder, "sites")
-    hidden = hidden_file.draw(sites["site_id"], seed)
-    made = _made(folder, hidden)
+    hidden = hidden_file.draw(_table(folder, "sites")["site_id"], seed)
+    made = _made(folder, hidden, frozen)
     rng = np.random.default_rng([seed, 8])
     weather = _table(folder, "weather")
     _covers(folder, "weather", naive(weather["interval_start"]), times)
@@ -146,13 +155,21 @@ def _table(folder: Path, name: str) -> pd.DataFrame:
     return frame
 
 
-def _made(folder: Path, hidden: pd.DataFrame) -> hidden_file.Made:
+def _made(folder: Path, hidden: pd.DataFrame, frozen: Path | None = None) -> hidden_file.Made:
     """The folder's plants, what is out of service by its newest status left out."""
+    plates = _plates(folder, hidden, frozen)
     made = hidden_file.made(
-        _table(folder, "sites"), _table(folder, "chillers"), read_table(folder, "tanks"), hidden
+        _table(plates, "sites"), _table(plates, "chillers"), read_table(plates, "tanks"), hidden
     )
     machine, tank = hidden_file.outages(made, read_table(folder, "status"))
     return replace(made, plant=replace(made.plant, machine_up=machine, tank_up=tank))
+
+
+def _plates(folder: Path, hidden: pd.DataFrame, frozen: Path | None) -> Path:
+    """Where sites, chillers and tanks are read: `frozen` where it holds every site, else the folder itself."""
+    resolved = read_table(frozen, "sites") if frozen else None
+    whole = resolved is not None and set(resolved["site_id"]) == set(hidden["site_id"])
+    return frozen if frozen and whole else folder
 
 
 def _covers(folder: Path, name: str, have: Times, times: Times) -> None:

@@ -178,6 +178,27 @@ def test_a_folder_of_ones_own_is_played_on_its_own_tables(tmp_path: Path) -> Non
     assert truth.course.cooling_load_kw_th[0, column] != pytest.approx(given.iloc[0], rel=1e-3)
 
 
+def test_what_a_folder_leaves_open_is_as_the_record_resolved_it(tmp_path: Path) -> None:
+    own = tmp_path / "own"
+    shutil.copytree(short_fleet(5).path, own, ignore=shutil.ignore_patterns(".truth", "meters"))
+    sites = pd.read_csv(own / "sites.csv")
+    frozen = tmp_path / "frozen"
+    frozen.mkdir()
+    sites.to_parquet(frozen / "sites.parquet")
+    for name in ("chillers", "tanks"):
+        pd.read_csv(own / f"{name}.csv").to_parquet(frozen / f"{name}.parquet")
+    sites.drop(columns=["strategy", "mass_kwh_per_k"]).to_csv(own / "sites.csv", index=False)
+    open_ended, resolved = (
+        events.truth_from_folder(own, 3, _around()[0], where).made.plant for where in (None, frozen)
+    )
+    assert len(set(resolved.strategy)) > 1
+    assert len(set(open_ended.strategy)) == 1
+    assert not np.allclose(resolved.mass_kwh_per_k, open_ended.mass_kwh_per_k)
+    sites.iloc[:2].to_parquet(frozen / "sites.parquet")
+    partly = events.truth_from_folder(own, 3, _around()[0], frozen).made.plant
+    np.testing.assert_array_equal(partly.strategy, open_ended.strategy)
+
+
 def test_weather_that_does_not_reach_is_refused(tmp_path: Path) -> None:
     own = tmp_path / "own"
     shutil.copytree(short_fleet(5).path, own, ignore=shutil.ignore_patterns(".truth", "meters"))

@@ -71,7 +71,9 @@ def test_defaults_are_those_of_the_table_of_columns() -> None:
                 assert same, f"{name}: table says {stated}, here {default}"
     for name, factor in {**hidden.PER_M2, **hidden.PER_PEAK_KW_TH}.items():
         meaning = columns("sites")[name]["meaning"]
-        assert f"default {factor:.3f}" in meaning, meaning
+        stated = re.search(r"default (?:by building type, )?([\d.]+)(?: to ([\d.]+))?", meaning)
+        assert stated, meaning
+        assert float(stated[1]) <= factor <= float(stated[2] or stated[1]), meaning
     assert set(buildings.KINDS) == set(columns("sites")["building_type"]["choices"].split())
 
 
