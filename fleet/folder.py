@@ -15,6 +15,7 @@ from typing import Final
 import numpy as np
 import pandas as pd
 
+from fleet import plausible
 from fleet.errors import FleetError, Problem, Refused
 from fleet.one_price import one_price
 from fleet.public_days import public_days
@@ -40,6 +41,8 @@ __all__ = [
 
 SIDE_FOLDERS: Final = ("events", "rehearsals")
 _SUFFIXES: Final = (".csv", ".parquet")
+_SIZES: Final = {"sites", "chillers", "tanks"}
+"""Tables whose sizes are held against each other; not where one of them was left out."""
 
 
 @dataclass(frozen=True)
@@ -131,12 +134,13 @@ def survey_folder(
         frames[name] = read.frame if len(read.frame.columns) else empty_frame(table_of)
         faults += read.problems
         notes += read.notes
-        digests |= _digests(source, path)
+        digests |= _digests(source, path) if len(read.frame.columns) else {}
     if "tariffs" in wanted:
         frames["tariffs"], said = one_price(settings, frames, "tariffs" in sources)
         notes += said
     if not unreadable and "sites" in wanted:
         faults += _checked_together(frames, sources, wanted, settings)
+        notes += plausible.unlikely(frames, _files(sources)) if set(wanted) >= _SIZES else []
     ordered = [FILE, *(_file(sources, name) for name in tables("fleet"))]
     faults.sort(key=lambda problem: ordered.index(problem.file) if problem.file in ordered else len(ordered))
     frames = {name: frame.reset_index(drop=True) for name, frame in frames.items()}
@@ -187,7 +191,7 @@ def _sources(path: Path) -> tuple[dict[str, Path], list[Problem]]:
     known = list(tables("fleet"))
     found: dict[str, Path] = {}
     faults = []
-    for entry in sorted(path.iterdir()):
+    for entry in _entries(path):
         stem = entry.stem if entry.suffix in _SUFFIXES else entry.name if entry.is_dir() else ""
         if stem in SIDE_FOLDERS or stem.startswith(".") or not stem:
             continue
@@ -206,6 +210,17 @@ def _sources(path: Path) -> tuple[dict[str, Path], list[Problem]]:
     return found, faults
 
 
+def _entries(path: Path) -> list[Path]:
+    try:
+        return sorted(path.iterdir())
+    except OSError as error:
+        raise FleetError(f"{path}: cannot be listed ({error.strerror}); mend the permissions") from error
+
+
+def _files(sources: dict[str, Path]) -> dict[str, str]:
+    return {name: _file(sources, name) for name in tables("fleet")}
+
+
 def _file(sources: dict[str, Path], name: str) -> str:
     return sources[name].name if name in sources else f"{name}.csv"
 
@@ -216,9 +231,8 @@ def _read(
     """One table, typed; a frame without columns where its file cannot be read at all."""
     try:
         raw = read_raw(source, span)
-    except FleetError as error:
-        problem = Problem(source.name, None, None, "a file that cannot be read", "a table", str(error))
-        return Typed(pd.DataFrame(), [problem], [])
+    except Refused as refused:
+        return Typed(pd.DataFrame(), refused.problems, [])
     reading = Reading(source.name, settings.time_reading(name), settings.timezone, settings.interval_minutes)
     return typed(raw, table("fleet", name), reading)
 
@@ -226,8 +240,9 @@ def _read(
 def _checked_together(
     frames: dict[str, pd.DataFrame], sources: dict[str, Path], wanted: list[str], settings: Settings
 ) -> list[Problem]:
-    files = {name: _file(sources, name) for name in tables("fleet")}
+    files = _files(sources)
     faults = cross_problems(frames, files)
+    faults += plausible.impossible(frames, files) if set(wanted) >= _SIZES else []
     faults += unmapped_meters(
         frames["meters"], frames["meter_map"], frames["sites"]["site_id"], files["meters"]
     )

@@ -21,7 +21,7 @@ import pyarrow.compute as pc
 import pyarrow.csv as pacsv
 import pyarrow.parquet as pq
 
-from fleet.errors import FleetError
+from fleet.errors import FleetError, Problem, Refused
 from fleet.schema import SCHEMA_VERSION, Column, Table
 from sites.units import AnyArray
 
@@ -49,7 +49,11 @@ def arrow_schema(table: Table) -> Any:
         pa.field(column.name, _TYPES[column.type](), nullable=column.required != "yes")
         for column in table.columns
     ]
-    metadata = {"schema_version": str(SCHEMA_VERSION), "table": f"{table.folder}/{table.name}"}
+    metadata = {
+        "schema_version": str(SCHEMA_VERSION),
+        "table": f"{table.folder}/{table.name}",
+        "columns": ",".join(table.names),
+    }
     return pa.schema(fields, metadata=metadata)
 
 
@@ -74,6 +78,9 @@ def write_parquet(frame: pd.DataFrame, path: Path, table: Table) -> None:
 def read_parquet(path: Path, table: Table) -> pd.DataFrame:
     """Read a file written by `write_parquet` into the stable types in memory.
 
+    A column that the table of columns did not have when the file was written comes with its default, or as
+    missing; the file names the columns it was written with, so that one taken out of it shows.
+
     Raises FleetError where the file is missing, no Parquet, of another table or of a newer schema version.
     """
     found = _read(path)
@@ -87,11 +94,23 @@ def read_parquet(path: Path, table: Table) -> pd.DataFrame:
             f"{path}: written with schema version {version}; this program reads up to {SCHEMA_VERSION}; "
             "update the program"
         )
-    missing = [column for column in table.names if column not in found.column_names]
+    lacking = [column for column in table.names if column not in found.column_names]
+    missing = [column for column in lacking if column in metadata.get("columns", column).split(",")]
     if missing:
         raise FleetError(f"{path}: column {', '.join(missing)} is missing; the file was changed or cut")
-    frame = pd.DataFrame({column.name: _series(found[column.name], column) for column in table.columns})
-    return frame[list(table.names)]
+    count = found.num_rows
+    columns = {
+        column.name: _later(column, count) if column.name in lacking else _series(found[column.name], column)
+        for column in table.columns
+    }
+    return pd.DataFrame(columns)[list(table.names)]
+
+
+def _later(column: Column, count: int) -> pd.Series:
+    """A column that did not exist when the file was written: its default, or missing values."""
+    if column.default is None:
+        return _series(pa.nulls(count, _TYPES[column.type]()), column)
+    return _series(pa.array([column.default] * count, type=_TYPES[column.type]()), column)
 
 
 def read_raw(path: Path, span: tuple[pd.Timestamp, pd.Timestamp] | None = None) -> pd.DataFrame:
@@ -99,12 +118,14 @@ def read_raw(path: Path, span: tuple[pd.Timestamp, pd.Timestamp] | None = None) 
 
     Headings lose spaces at their ends. CSV rows keep their file line number as index (heading = 1); Parquet
     rows count from 1. Blank CSV lines are left out. With `span`, Parquet rows whose interval_start carries a zone
-    and lies outside [from, to) are left out too. Raises FleetError where the file cannot be read.
+    and lies outside [from, to) are left out too. Nested Parquet values come as text, which no column takes.
+    Raises Refused where the file cannot be read as a table.
     """
     if path.is_dir():
         parts = sorted(path.glob("*.parquet"))
         if not parts:
-            raise FleetError(f"{path.name}: the folder holds no .parquet file; put some there or remove it")
+            came, advice = "a folder without .parquet files", "put some there, or remove it"
+            raise _unreadable(path.name, None, came, "a table", advice)
     elif path.suffix == ".parquet":
         parts = [path]
     else:
@@ -240,16 +261,31 @@ def _plain(
     path: Path, span: tuple[pd.Timestamp, pd.Timestamp] | None, first: int
 ) -> tuple[pd.DataFrame, int]:
     """Rows of a Parquet file (of a span), numbered from `first`, and how many the file holds."""
-    found = _read(path)
-    found = found.rename_columns([name.strip() for name in found.column_names])
+    try:
+        found = _read(path)
+    except FleetError as error:
+        came, advice = f"no readable Parquet ({error.__cause__})", "export it again, or restore it"
+        raise _unreadable(path.name, None, came, "a whole Parquet file", advice) from error
+    names = [name.strip() for name in found.column_names]
+    columns = [_scalars(column) for column in found.columns]
+    found = pa.Table.from_arrays(columns, names=names)
     rows = np.arange(first, first + found.num_rows)
-    times = found["interval_start"] if span and "interval_start" in found.column_names else None
+    times = found["interval_start"] if span and names.count("interval_start") == 1 else None
     if span and times is not None and pa.types.is_timestamp(times.type) and times.type.tz:
         low, high = (pa.scalar(edge.to_pydatetime(), times.type) for edge in span)
         within = pc.and_(pc.greater_equal(times, low), pc.less(times, high))
         kept = np.flatnonzero(pc.fill_null(within, True).to_numpy())
         return _numbered(found.take(kept), rows[kept]), found.num_rows
     return _numbered(found, rows), found.num_rows
+
+
+def _scalars(column: Any) -> Any:
+    """The column itself; lists, structs and the like as the text of each value."""
+    if pa.types.is_dictionary(column.type):
+        column = column.cast(column.type.value_type)
+    if not pa.types.is_nested(column.type):
+        return column
+    return pa.array([None if value is None else str(value) for value in column.to_pylist()], type=pa.string())
 
 
 def _numbered(found: Any, rows: AnyArray) -> pd.DataFrame:
@@ -263,9 +299,17 @@ def _read_csv(path: Path) -> pd.DataFrame:
     try:
         text = path.read_bytes().decode("utf-8-sig")
     except OSError as error:
-        raise FleetError(f"{path.name}: cannot be read ({error.strerror}); check that it is there") from error
+        came = f"a file that cannot be read ({error.strerror})"
+        raise _unreadable(
+            path.name, None, came, "a table", "check that it is there and may be read"
+        ) from error
     except UnicodeDecodeError as error:
-        raise FleetError(f"{path.name}: is not UTF-8 text ({error.reason}); save it as CSV UTF-8") from error
+        came = f"bytes that are not UTF-8 ({error.reason})"
+        raise _unreadable(path.name, None, came, "text in UTF-8", "save it as CSV UTF-8") from error
+    if "\0" in text:
+        row = text.count("\n", 0, text.index("\0")) + 1
+        came = "a zero byte, as UTF-16 text has them"
+        raise _unreadable(path.name, row, came, "text in UTF-8", "save it as CSV UTF-8")
     quick = _csv_quickly(text)
     if quick is not None:
         return quick
@@ -274,10 +318,9 @@ def _read_csv(path: Path) -> pd.DataFrame:
     wrong = [(line, len(row)) for line, row in zip(lines, rows) if len(row) != width]
     if wrong:
         line, cells = wrong[0]
-        raise FleetError(
-            f"{path.name}, row {line}: came {cells} cells; expected {width} as in the heading; put quotes "
-            f"around a text that holds a comma (rows like this: {len(wrong)})"
-        )
+        came, expected = f"{cells} cells", f"{width} as in the heading (rows like this: {len(wrong)})"
+        advice = "put quotes around a text that holds a comma, and write numbers with a decimal point"
+        raise _unreadable(path.name, line, came, expected, advice)
     columns = list(zip(*rows)) if rows else [()] * width
     cells_of = (pd.Series([cell.strip() for cell in column], dtype=object) for column in columns)
     frame = pd.DataFrame(dict(enumerate(cells_of)))
@@ -322,11 +365,17 @@ def _csv_rows(text: str, name: str) -> tuple[list[str], list[int], list[list[str
                     rows.append(row)
             line = reader.line_num + 1
     except csv.Error as error:
-        raise FleetError(
-            f"{name}, row {line}: cannot be read as CSV: {error}; save it again as CSV"
-        ) from error
+        advice = "mend the quotes of that row, or save the file again as CSV"
+        raise _unreadable(name, line, str(error), "a row of CSV", advice) from error
     if heading is None:
-        raise FleetError(f"{name}: is empty; give it at least a heading, or remove it")
+        advice = "give it its heading and rows, or remove it"
+        raise _unreadable(name, None, "an empty file", "a heading at least", advice)
     if len(heading) == 1 and ";" in heading[0]:
-        raise FleetError(f"{name}: cells are parted by semicolons; save it with commas (and decimal points)")
+        came, advice = "cells parted by semicolons", "save it with commas and decimal points"
+        raise _unreadable(name, 1, came, "cells parted by commas", advice)
     return heading, lines, rows
+
+
+def _unreadable(file: str, row: int | None, came: str, expected: str, advice: str) -> Refused:
+    """What to raise where an input file is no table at all."""
+    return Refused([Problem(file, row, None, came, expected, advice)])

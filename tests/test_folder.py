@@ -293,8 +293,8 @@ def test_files_two_forms_typos_and_unreadable(tmp_path):
     (path / "events").mkdir()
     (path / "bills.csv").write_bytes(b"\xff\xfe")
     assert wrong(path) == [
-        "bills.csv: came a file that cannot be read; expected a table; "
-        "bills.csv: is not UTF-8 text (invalid start byte); save it as CSV UTF-8",
+        "bills.csv: came bytes that are not UTF-8 (invalid start byte); expected text in UTF-8; "
+        "save it as CSV UTF-8",
         "sites.parquet: came sites.csv and sites.parquet; expected one form of a table; remove one of them",
         "tarifs.csv: came an unknown table; expected a table that is known; "
         "rename it to tariffs.csv, or move it elsewhere",

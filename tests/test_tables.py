@@ -219,6 +219,21 @@ def test_reading_a_missing_cut_foreign_or_newer_file_says_so(tmp_path):
         read_parquet(path, table)
 
 
+def test_a_column_that_came_later_is_missing_in_an_older_file(tmp_path):
+    table = table_of("call", "usual")
+    path = tmp_path / "u.parquet"
+    write_parquet(frame_of(table), path, table)
+    whole = pq.read_table(path)
+    known = whole.schema.metadata[b"columns"].replace(b",rest_kw", b"")
+    older = whole.drop_columns(["rest_kw"]).replace_schema_metadata(
+        {**whole.schema.metadata, b"columns": known}
+    )
+    pq.write_table(older, path)
+    read = read_parquet(path, table)
+    assert read["rest_kw"].isna().all()
+    assert read["usual_kw"].tolist() == frame_of(table)["usual_kw"].tolist()
+
+
 def test_raw_csv_with_byte_order_mark_spaces_and_blank_rows(tmp_path):
     path = tmp_path / "nodes.csv"
     path.write_bytes("\ufeffnode_id , parent_id\r\nA,\r\n\r\n  B ,A \r\n,\r\nNA,A\r\n".encode())
@@ -245,7 +260,10 @@ def test_raw_folder_of_parquet_files_is_read_in_order_of_names(tmp_path):
     (tmp_path / "empty").mkdir()
     with pytest.raises(FleetError) as caught:
         read_raw(tmp_path / "empty")
-    assert str(caught.value) == ("empty: the folder holds no .parquet file; put some there or remove it")
+    assert (
+        str(caught.value)
+        == "empty: came a folder without .parquet files; expected a table; put some there, or remove it"
+    )
 
 
 @pytest.mark.parametrize(
@@ -253,21 +271,32 @@ def test_raw_folder_of_parquet_files_is_read_in_order_of_names(tmp_path):
     [
         (
             "site_id\nGr\xfcn\n".encode("latin-1"),
-            "sites.csv: is not UTF-8 text (invalid start byte); save it as CSV UTF-8",
+            "sites.csv: came bytes that are not UTF-8 (invalid start byte); expected text in UTF-8; "
+            "save it as CSV UTF-8",
         ),
         (
             b"a,b\n1,2\n1,2,3\n1\n",
-            "sites.csv, row 3: came 3 cells; expected 2 as in the heading; put quotes around "
-            "a text that holds a comma (rows like this: 2)",
+            "sites.csv, row 3: came 3 cells; expected 2 as in the heading (rows like this: 2); put quotes around "
+            "a text that holds a comma, and write numbers with a decimal point",
         ),
-        (b"\n  \n", "sites.csv: is empty; give it at least a heading, or remove it"),
+        (
+            b"\n  \n",
+            "sites.csv: came an empty file; expected a heading at least; give it its heading and rows, or remove it",
+        ),
+        (
+            b"a,b\n1,2\n\x001,2\n",
+            "sites.csv, row 3: came a zero byte, as UTF-16 text has them; expected text in UTF-8; "
+            "save it as CSV UTF-8",
+        ),
         (
             b"site_id;node_id\nA;N\n",
-            "sites.csv: cells are parted by semicolons; save it with commas (and decimal points)",
+            "sites.csv, row 1: came cells parted by semicolons; expected cells parted by commas; "
+            "save it with commas and decimal points",
         ),
         (
             b'a,b\n1,"2\n',
-            "sites.csv, row 2: cannot be read as CSV: unexpected end of data; save it again as CSV",
+            "sites.csv, row 2: came unexpected end of data; expected a row of CSV; mend the quotes of that row, "
+            "or save the file again as CSV",
         ),
     ],
 )
