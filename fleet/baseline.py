@@ -1,75 +1,42 @@
-"""What the meter would have shown: like-day averages, same-day adjustment, before / after.
+"""What the meter would have shown: averages of days, regression, a flat level, before / after; adjustment.
 
-Owns the choice of days with its trace and the arithmetic of one rule for many sites at once. Reads only measured
-values (an estimate comes in as NaN), so that no estimate can lift a baseline. Leaves meters to meters.py and
-delivered kW and money to settle.py. sign is +1 for shed, -1 for absorb: "highest" means highest in its sense.
+Owns the arithmetic of one rule for many sites at once. Reads only measured values (an estimate comes in as NaN),
+so that no estimate can lift a baseline. Leaves the choice of days to like_days.py, meters to meters.py, delivered
+kW and money to settle.py.
 """
 
 from dataclasses import dataclass
-from typing import Any, Final
 
 import numpy as np
 
+from fleet.like_days import (
+    BEFORE_AFTER,
+    METHODS,
+    NONE,
+    REASONS,
+    USED,
+    Charging,
+    DayFacts,
+    EventFacts,
+    Weather,
+    choose,
+)
+from fleet.regression import fit
 from fleet.rules import SettlementRule
 from sites.units import Bools, Floats, Ints, Strings
 
-REASONS: Final = (
-    "used",
-    "event_day",
-    "other_day_type",
-    "holiday",
-    "event_past",
-    "day_before_event",
-    "outage",
-    "low_usage",
-    "missing_data",
-    "beyond_look_back",
-    "not_ranked",
-    "enough_days",
-    "too_few_days",
-)
-METHODS: Final = ("none", "like_days", "event_days", "before_after")
-NONE, LIKE_DAYS, EVENT_DAYS, BEFORE_AFTER = range(4)
-USED: Final = 0
-
-
-@dataclass(frozen=True)
-class DayFacts:
-    """What is known of the candidate days, most recent first (day k lies k + 1 days before the event's)."""
-
-    exists: Bools
-    """(day, slot) False where the slot is left out by the spring change"""
-    weekend: Bools
-    """(day,) Saturday or Sunday"""
-    holiday: Bools
-    """(day,)"""
-    event_past: Bools
-    """(site, day) an earlier event of the site"""
-    before_event: Bools
-    """(site, day) the day after it is an event day"""
-    unusual: Bools
-    """(site, day) the plant ran in another mode than usual"""
-
-
-@dataclass(frozen=True)
-class EventFacts:
-    """The event as one rule sees it. Readings are measured values, NaN where missing or estimated."""
-
-    sign: float
-    weekend: bool
-    """The event's local day is a Saturday, Sunday or holiday."""
-    slot: Ints
-    """(interval,) local slot of each interval that gets a baseline"""
-    like: Bools
-    """(interval,) its local day is of the event day's class; elsewhere like days say nothing"""
-    event_slot: Ints
-    """(event interval,)"""
-    window_slot: Ints
-    """(window interval,) the adjustment window"""
-    window_kw: Floats
-    """(site, window interval)"""
-    around_kw: Floats
-    """(site, interval) the windows before and after"""
+__all__ = [
+    "METHODS",
+    "NONE",
+    "REASONS",
+    "USED",
+    "Baseline",
+    "Charging",
+    "DayFacts",
+    "EventFacts",
+    "Weather",
+    "baseline",
+]
 
 
 @dataclass(frozen=True)
@@ -87,6 +54,8 @@ class Baseline:
     """(site,) factor, or kW if additive, as applied; 1 where none"""
     adjustment_raw: Floats
     """(site,) the same before the cap; NaN where none"""
+    adjustment_charged: Floats
+    """(site,) what it would have been, capped, with the charging left in; NaN where nothing is taken out"""
     window_base_kw: Floats
     """(site,) mean baseline over the adjustment window"""
     doubtful: Bools
@@ -99,6 +68,18 @@ class Baseline:
     """(site, day) mean over the event hours"""
     day_window_kw: Floats
     """(site, day) mean over the adjustment window"""
+    beyond_training_k: Floats
+    """(site,) regression: how far the event's dry bulb lies outside the days it was fitted on; else NaN"""
+
+
+@dataclass(frozen=True)
+class _Levels:
+    """Baselines before adjustment: (site, interval), (site, window interval), (site, event interval)."""
+
+    shown_kw: Floats
+    window_kw: Floats
+    event_kw: Floats
+    beyond_k: Floats
 
 
 def baseline(day_kw: Floats, days: DayFacts, rule: SettlementRule, event: EventFacts) -> Baseline:
@@ -109,29 +90,64 @@ def baseline(day_kw: Floats, days: DayFacts, rule: SettlementRule, event: EventF
     """
     rank_value = _mean(day_kw[:, :, event.event_slot], days.exists[None, :, event.event_slot])
     day_window = _mean(day_kw[:, :, event.window_slot], days.exists[None, :, event.window_slot])
-    reason, method = _choose(day_kw, days, rule, event, rank_value)
+    reason, method = choose(day_kw, days, rule, event, rank_value)
     used = reason == USED
-    by_slot, _ = _average(day_kw, used)
-    raw_kw = np.where(event.like, by_slot[:, event.slot], np.nan)
-    adjusted, kind, applied, raw, base, doubtful = _adjust(raw_kw, by_slot, day_kw, used, rule, event)
+    levels = _levels(day_kw, days, used, rule, event)
+    raw_kw = np.where(event.like, levels.shown_kw, np.nan)
+    adjusted, kind, applied, raw, charged, base, doubtful = _adjust(raw_kw, levels, day_kw, used, rule, event)
     around, around_doubtful = _around(event.around_kw)
     flat = method == BEFORE_AFTER
     raw_kw = np.where(flat[:, None], around[:, None], raw_kw)
     adjusted = np.where(flat[:, None], around[:, None], adjusted)
-    like = (method == LIKE_DAYS) | (method == EVENT_DAYS)
+    of_days = ~flat & (method != NONE)
     return Baseline(
         baseline_kw=raw_kw,
         adjusted_kw=adjusted,
         method=np.where(flat & np.isnan(around), NONE, method),
-        kind=np.where(like, kind, "none").astype(object),
-        adjustment=np.where(like, applied, 1.0),
-        adjustment_raw=np.where(like, raw, np.nan),
+        kind=np.where(of_days, kind, "none").astype(object),
+        adjustment=np.where(of_days, applied, 1.0),
+        adjustment_raw=np.where(of_days, raw, np.nan),
+        adjustment_charged=np.where(of_days, charged, np.nan),
         window_base_kw=base,
-        doubtful=np.where(flat, around_doubtful, like & doubtful),
+        doubtful=np.where(flat, around_doubtful, of_days & doubtful),
         used=used,
         reason=reason,
         rank_value=rank_value,
         day_window_kw=day_window,
+        beyond_training_k=np.where(of_days, levels.beyond_k, np.nan),
+    )
+
+
+def _levels(day_kw: Floats, days: DayFacts, used: Bools, rule: SettlementRule, event: EventFacts) -> _Levels:
+    """What the used days say of every interval: slot by slot, by the fitted regression, or one flat level."""
+    nothing = np.full(len(day_kw), np.nan)
+    if rule.kind == "temperature_regression":
+        return _regressed(day_kw, used, rule, event)
+    if rule.kind == "maximum_base_load":
+        exists = days.exists[:, event.event_slot]
+        highest = np.where(exists, event.sign * day_kw[:, :, event.event_slot], -np.inf).max(axis=2)
+        total = np.where(used, highest, 0.0).sum(axis=1)
+        count = used.sum(axis=1)
+        level = np.where(count > 0, event.sign * total / np.maximum(count, 1), np.nan)[:, None]
+        counts = (len(event.slot), len(event.window_slot), len(event.event_slot))
+        shown, window, inside = (np.repeat(level, number, axis=1) for number in counts)
+        return _Levels(shown, window, inside, nothing)
+    by_slot, _ = _average(day_kw, used)
+    slots = (event.slot, event.window_slot, event.event_slot)
+    shown, window, inside = (by_slot[:, at] for at in slots)
+    return _Levels(shown, window, inside, nothing)
+
+
+def _regressed(day_kw: Floats, used: Bools, rule: SettlementRule, event: EventFacts) -> _Levels:
+    """The regression on the used days, at the dry bulb of the event day."""
+    weather = event.weather
+    if weather is None:
+        raise ValueError("a regression needs the dry bulb")
+    fitted = fit(day_kw, used, weather.weekday, weather.day_c, rule.temperature_knots_c)
+    shown = fitted.at(weather.at_weekday, event.slot, weather.at_c)
+    window = fitted.at(weather.window_weekday, event.window_slot, weather.window_c)
+    return _Levels(
+        shown, window, shown[:, weather.in_event], fitted.beyond_k(weather.at_c[:, weather.in_event])
     )
 
 
@@ -151,157 +167,62 @@ def _average(day_kw: Floats, used: Bools) -> tuple[Floats, Ints]:
     return np.where(count > 0, total / np.maximum(count, 1), np.nan), count
 
 
-def _code(name: str) -> int:
-    return REASONS.index(name)
-
-
-def _choose(
-    day_kw: Floats, days: DayFacts, rule: SettlementRule, event: EventFacts, rank_value: Floats
-) -> tuple[Ints, Ints]:
-    """Reason of every (site, day) and the method of every site."""
-    reason = _first_reasons(day_kw, days, rule, event)
-    eligible = reason == USED
-    if rule.kind == "before_after":
-        return np.where(eligible, _code("not_ranked"), reason), np.full(len(day_kw), BEFORE_AFTER)
-    if rule.low_usage_fraction is not None:
-        low = _low_usage(eligible, rank_value, rule)
-        reason, eligible = np.where(low, _code("low_usage"), reason), eligible & ~low
-    pool: Bools = eligible & (np.cumsum(eligible, axis=1) <= rule.pool_days)
-    reason = np.where(eligible & ~pool, _code("enough_days"), reason)
-    score = event.sign * rank_value
-    lack = rule.minimum_days - pool.sum(axis=1)
-    added = _event_days(_first_reasons(day_kw, days, _with_event_days(rule), event), days, score, lack, rule)
-    short = lack - added.sum(axis=1) > 0
-    taken = _take(pool | added, score, rule) & ~short[:, None]
-    reason = np.where(pool | added, np.where(taken, USED, _code("not_ranked")), reason)
-    reason = np.where(short[:, None] & pool, _code("too_few_days"), reason)
-    way_out = BEFORE_AFTER if rule.when_too_few == "before_after" else NONE
-    method = np.where(added.any(axis=1), EVENT_DAYS, LIKE_DAYS)
-    return reason, np.where(short, way_out, method)
-
-
-def _with_event_days(rule: SettlementRule) -> SettlementRule:
-    return rule.model_copy(update={"exclude_event_days": False})
-
-
-def _event_days(clear: Ints, days: DayFacts, score: Floats, lack: Ints, rule: SettlementRule) -> Bools:
-    """The highest past event days that fill the pool to its minimum, where the rule says so and they suffice."""
-    past = (clear == USED) & days.event_past & rule.exclude_event_days
-    if rule.when_too_few != "highest_event_days":
-        return np.zeros_like(past)
-    place = _place(np.argsort(np.where(past, -score, np.inf), axis=1, kind="stable"))
-    added: Bools = past & (place < lack[:, None])
-    enough: Bools = added & (added.sum(axis=1) >= lack)[:, None]
-    return enough
-
-
-def _first_reasons(day_kw: Floats, days: DayFacts, rule: SettlementRule, event: EventFacts) -> Ints:
-    """USED for every day that may enter the pool, else the first thing that speaks against it."""
-    slots = event.event_slot
-    if rule.kind == "like_days" and rule.adjustment != "none":
-        slots = np.concatenate([slots, event.window_slot])
-    exists = days.exists[:, slots]
-    lost = (np.isnan(day_kw[:, :, slots]) & exists).any(axis=2) | ~days.exists[:, event.event_slot].any(
-        axis=1
-    )
-    other = _other_type(days, rule, event)
-    holiday = days.holiday & (rule.holidays == "excluded" and rule.day_classes == "weekday_weekend")
-    age = np.arange(1, day_kw.shape[1] + 1)
-    shape = day_kw.shape[:2]
-    tests: list[tuple[Any, str]] = [
-        (age > rule.look_back_days, "beyond_look_back"),
-        (other, "other_day_type"),
-        (holiday, "holiday"),
-        (days.event_past & rule.exclude_event_days, "event_past"),
-        (days.before_event & rule.exclude_day_before_event, "day_before_event"),
-        (days.unusual & rule.exclude_unusual_modes, "outage"),
-        (lost, "missing_data"),
-    ]
-    against = [np.broadcast_to(test, shape) for test, _ in tests]
-    reason: Ints = np.select(against, [_code(name) for _, name in tests], USED)
-    return reason
-
-
-def _other_type(days: DayFacts, rule: SettlementRule, event: EventFacts) -> Bools:
-    """Days of another class; a holiday belongs to the weekend's, and is told apart by its own reason."""
-    if rule.day_classes == "all_days":
-        return np.zeros(len(days.weekend), dtype=np.bool_)
-    if event.weekend:
-        return ~(days.weekend | days.holiday)
-    if rule.holidays == "excluded":
-        return days.weekend
-    return days.weekend | days.holiday
-
-
-def _low_usage(eligible: Bools, rank_value: Floats, rule: SettlementRule) -> Bools:
-    """Days dropped because their mean is below the stated share of the pool's; each drop refills the pool."""
-    dropped = np.zeros_like(eligible)
-    value = np.where(eligible, rank_value, 0.0)
-    for _ in range(eligible.shape[1]):
-        left = eligible & ~dropped
-        pool = left & (np.cumsum(left, axis=1) <= rule.pool_days)
-        mean = np.where(pool, value, 0.0).sum(axis=1) / np.maximum(pool.sum(axis=1), 1)
-        low = pool & (value < (rule.low_usage_fraction or 0.0) * mean[:, None])
-        if not low.any():
-            break
-        dropped |= low
-    return dropped
-
-
-def _take(pool: Bools, score: Floats, rule: SettlementRule) -> Bools:
-    """X of the pool by rank; of equal days the more recent stays."""
-    if rule.rank == "recent":
-        return pool & (np.cumsum(pool, axis=1) <= rule.take_days)
-    key = np.where(pool, score, -np.inf)
-    recent_first = _place(np.argsort(-key, axis=1, kind="stable"))
-    if rule.rank == "highest":
-        return pool & (recent_first < rule.take_days)
-    # Middle: from the top (falling order, older first), then from the bottom of what is left; the highest goes
-    # where an odd number has to.
-    spare = np.maximum(pool.sum(axis=1) - rule.take_days, 0)[:, None]
-    older_first = _place(np.argsort(-key[:, ::-1], axis=1, kind="stable"))[:, ::-1]
-    left = pool & (older_first >= (spare + 1) // 2)
-    falling = _place(np.argsort(-np.where(left, key, -np.inf), axis=1, kind="stable"))
-    middle: Bools = left & (falling < left.sum(axis=1)[:, None] - spare // 2)
-    return middle
-
-
-def _place(order: Ints) -> Ints:
-    """Position of each element in a row's sort order."""
-    place = np.empty_like(order)
-    np.put_along_axis(place, order, np.broadcast_to(np.arange(order.shape[1]), order.shape), axis=1)
-    return place
-
-
 def _adjust(
-    raw_kw: Floats, by_slot: Floats, day_kw: Floats, used: Bools, rule: SettlementRule, event: EventFacts
-) -> tuple[Floats, Strings, Floats, Floats, Floats, Bools]:
-    """Adjusted baseline, kind, factor or kW applied, the same before the cap, window base, and doubt.
+    raw_kw: Floats, levels: _Levels, day_kw: Floats, used: Bools, rule: SettlementRule, event: EventFacts
+) -> tuple[Floats, Strings, Floats, Floats, Floats, Floats, Bools]:
+    """Adjusted baseline, kind, factor or kW applied, before its cap, with charging left in, window base, doubt.
 
-    ratio: B' = B A / b; additive: B' = B + A - b, with A the event day's mean over the window and b the baseline's.
-    A small, zero or negative b makes the ratio meaningless, so additive takes its place. A window with a
-    reading missing or estimated leaves the baseline as it is.
+    ratio: B' = B A / b; additive: B' = B + A - b, with A the event day's mean over the window and b the baseline's,
+    both less the metered charging where the rule has it taken out. A small, zero or negative b makes the ratio
+    meaningless, so additive takes its place. A window with a reading missing or estimated leaves the baseline
+    as it is.
     """
-    base = _plain_mean(by_slot[:, event.window_slot])
-    none = np.full(len(base), "none", dtype=object)
+    base = _plain_mean(levels.window_kw)
+    sites = len(base)
+    nan = np.full(sites, np.nan)
     if rule.adjustment == "none":
-        nan = np.full(len(base), np.nan)
-        return raw_kw, none, np.ones(len(base)), nan, base, np.zeros(len(base), dtype=np.bool_)
+        none = np.full(sites, "none", dtype=object)
+        return raw_kw, none, np.ones(sites), nan, nan, base, np.zeros(sites, dtype=np.bool_)
     level = _plain_mean(event.window_kw)
-    known = ~np.isnan(level) & ~np.isnan(base)
     peak = np.where(used[:, :, None] & ~np.isnan(day_kw), day_kw, 0.0).max(axis=(1, 2), initial=0.0)
+    limit = np.abs(_plain_mean(levels.event_kw))
+    charged = nan
+    own_level, own_base = level, base
+    if event.charging is not None:
+        own_level, own_base = _less_charging(level, base, used, event.charging)
+        _, _, with_charging, _ = _factor(level, base, peak, limit, rule)
+        charged = np.where(event.charging.guarded, with_charging, np.nan)
+    known, additive, applied, raw = _factor(own_level, own_base, peak, limit, rule)
+    kind = np.where(known, np.where(additive, "additive", "ratio"), "none").astype(object)
+    added = raw_kw + np.where(additive, applied, 0.0)[:, None]
+    scaled = raw_kw * np.where(additive, 1.0, applied)[:, None]
+    adjusted = np.where(known[:, None], np.where(additive[:, None], added, scaled), raw_kw)
+    return adjusted, kind, applied, raw, charged, base, ~known
+
+
+def _less_charging(level: Floats, base: Floats, used: Bools, charging: Charging) -> tuple[Floats, Floats]:
+    """Window means of the event day and of the used days less what was metered as charging (site,)."""
+    held = used & ~np.isnan(charging.day_kw)
+    count = held.sum(axis=1)
+    usual = np.where(held, charging.day_kw, 0.0).sum(axis=1) / np.maximum(count, 1)
+    usual = np.where(count > 0, usual, np.nan)
+    return (
+        level - np.where(charging.guarded, charging.window_kw, 0.0),
+        base - np.where(charging.guarded, usual, 0.0),
+    )
+
+
+def _factor(
+    level: Floats, base: Floats, peak: Floats, limit: Floats, rule: SettlementRule
+) -> tuple[Bools, Bools, Floats, Floats]:
+    """(site,) whether both means are known, whether additive, factor or kW applied (1 unknown), before the cap."""
+    known = ~np.isnan(level) & ~np.isnan(base)
     small = base <= rule.small_base_fraction * peak
     additive = small if rule.adjustment == "ratio" else np.ones(len(base), dtype=np.bool_)
     ratio = level / np.where(known & ~additive, base, 1.0)
     raw = np.where(known, np.where(additive, level - base, ratio), np.nan)
-    limit = np.abs(_plain_mean(by_slot[:, event.event_slot]))
-    applied = _capped(np.where(known, raw, 1.0), additive, limit, rule)
-    kind = np.where(known, np.where(additive, "additive", "ratio"), "none").astype(object)
-    added = raw_kw + np.where(additive, applied, 0.0)[:, None]
-    scaled = raw_kw * np.where(additive, 1.0, applied)[:, None]
-    adjusted = np.where(additive[:, None], added, scaled)
-    adjusted = np.where(known[:, None], adjusted, raw_kw)
-    return adjusted, kind, np.where(known, applied, 1.0), raw, base, ~known
+    applied = np.where(known, _capped(np.where(known, raw, 1.0), additive, limit, rule), 1.0)
+    return known, additive, applied, raw
 
 
 def _plain_mean(kw: Floats) -> Floats:

@@ -5,7 +5,7 @@ readings, rules' arithmetic or money.
 """
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 import pandas as pd
@@ -46,6 +46,12 @@ class CallFacts:
     fleet_site_ids: tuple[str, ...] = ()
     """All sites of the fleet, whose meters may stand in the same file; empty: the called ones"""
     called_at: np.datetime64 | None = None
+    weather: pd.DataFrame = field(default_factory=pd.DataFrame)
+    """station_id, interval_start, dry_bulb_c; read where a rule needs it"""
+    stations: Mapping[str, str] = field(default_factory=dict)
+    """site_id -> station_id"""
+    excused: Mapping[str, str] = field(default_factory=dict)
+    """site_id -> why it earns and owes nothing for this event"""
 
 
 @dataclass(frozen=True)
@@ -63,6 +69,8 @@ class Plan:
     delivery_factor: Floats
     committed_kw: Floats
     """(site, interval)"""
+    full_again_at: Times
+    """(site,) NaT where the tank is not full again within the horizon, or the call does not say"""
 
     def in_event(self, clock: Clock) -> Bools:
         """(interval,) of that clock: within the whole event."""
@@ -87,6 +95,12 @@ def arrange(call: CallFacts) -> Plan:
         raise FleetError(
             f"event {call.event_id}: no settlement rule for {', '.join(lacking[:5])}; freeze one each"
         )
+    strangers = sorted(set(call.excused) - set(site_ids))
+    if strangers:
+        raise FleetError(
+            f"event {call.event_id}: site {', '.join(strangers)} is not called, so it cannot be excused; "
+            f"called are {', '.join(site_ids[:5])}{' and more' if len(site_ids) > 5 else ''}"
+        )
     event_start = microseconds(call.request["interval_start"]).min()
     event_end = microseconds(call.request["interval_end"]).max()
     _check_request(call, event_start, event_end)
@@ -105,7 +119,14 @@ def arrange(call: CallFacts) -> Plan:
         window_end=end,
         delivery_factor=windows["delivery_factor"].to_numpy(dtype=np.float64),
         committed_kw=_committed(call, site_ids, clock, times),
+        full_again_at=_full_again(windows),
     )
+
+
+def _full_again(windows: pd.DataFrame) -> Times:
+    if "full_again_at" not in windows:
+        return np.full(len(windows), np.datetime64("NaT", "us"))
+    return microseconds(windows["full_again_at"])
 
 
 def _check_request(call: CallFacts, event_start: np.datetime64, event_end: np.datetime64) -> None:

@@ -12,7 +12,7 @@ from typing import Final
 import numpy as np
 
 from fleet.rules import SettlementRule
-from sites.units import AnyArray, Bools, Floats
+from sites.units import AnyArray, Bools, Floats, Ints
 
 _TWO: Final = (
     "AED AFN ALL AMD AOA ARS AUD AWG AZN BAM BBD BDT BGN BMD BND BOB BRL BSD BTN BWP BYN BZD CAD CDF CHF CNY "
@@ -95,26 +95,84 @@ def largest_remainder(
 
 
 def performance_factor(
-    delivered_kw: Floats, committed_kw: Floats, counted: Bools, step_h: float, rule: SettlementRule
+    delivered_kw: Floats,
+    committed_kw: Floats,
+    counted: Bools,
+    step_h: float,
+    rule: SettlementRule,
+    hour: Ints | None = None,
 ) -> Floats:
     """Delivered over committed energy (site,), by the rule's order of floor, cap and rounding; NaN if undefined.
 
-    Shapes (site, interval); counted: the site's own window. An interval with no value adds nothing. Undefined
-    where nothing was committed, or no interval has a value.
+    Shapes (site, interval); counted: the site's own window; hour (interval,): the hour each interval belongs to,
+    for a rule that looks at hours. An interval with no value adds nothing. Undefined where nothing was
+    committed, or no interval has a value.
     """
     known = counted & ~np.isnan(delivered_kw)
     value = np.where(known, delivered_kw, 0.0)
+    pledged = np.where(counted, committed_kw, 0.0)
+    committed = pledged.sum(axis=1) * step_h
+    if rule.performance_by != "interval":
+        group = np.zeros(value.shape[1], dtype=np.int64)
+        if rule.performance_by == "hour" and hour is not None:
+            group = hour - hour.min(initial=0)
+        member = group[:, None] == np.arange(group.max(initial=0) + 1)
+        value, pledged = value @ member, pledged @ member
     if rule.floor_intervals:
         value = np.maximum(value, 0.0)
     if rule.cap_intervals:
-        value = np.minimum(value, committed_kw)
-    committed = np.where(counted, committed_kw, 0.0).sum(axis=1) * step_h
+        value = np.minimum(value, pledged)
     defined = (committed > 0.0) & known.any(axis=1)
     factor = value.sum(axis=1) * step_h / np.where(defined, committed, 1.0)
-    if rule.performance_decimals is not None:
-        scale = 10.0**rule.performance_decimals
-        factor = np.sign(factor) * np.floor(np.round(np.abs(factor) * scale, 6) + 0.5) / scale
-    return np.where(defined, factor, np.nan)
+    return np.where(defined, _rounded(factor, rule), np.nan)
+
+
+def _rounded(factor: Floats, rule: SettlementRule) -> Floats:
+    if rule.performance_decimals is None:
+        return factor
+    scale = 10.0**rule.performance_decimals
+    found: Floats = np.sign(factor) * np.floor(np.round(np.abs(factor) * scale, 6) + 0.5) / scale
+    return found
+
+
+def joint_factor(factor: Floats, committed_kwh: Floats, rule: SettlementRule) -> Floats:
+    """The factor of all sites under a portfolio rule together, for each that has one (site,); NaN elsewhere.
+
+    Joint = sum of factor x committed over sum of committed: over-delivery here nets a lack there.
+    """
+    known = ~np.isnan(factor)
+    committed = np.where(known, committed_kwh, 0.0).sum()
+    if not known.any() or committed <= 0.0:
+        return factor
+    joint = np.array([np.where(known, factor * committed_kwh, 0.0).sum() / committed])
+    return np.where(known, _rounded(joint, rule)[0], np.nan)
+
+
+def firm_level_charge(
+    metered_kw: Floats, counted: Bools, step_h: float, rule: SettlementRule, sign: float
+) -> Floats:
+    """Money (site,) for what was metered beyond the rule's firm level in the window; sign +1 shed, -1 absorb.
+
+    An interval with no value adds nothing.
+    """
+    if rule.firm_level_kw is None:
+        return np.zeros(len(metered_kw))
+    beyond = np.maximum(sign * (metered_kw - rule.firm_level_kw), 0.0)
+    beyond_kwh = np.where(counted & ~np.isnan(metered_kw), beyond, 0.0).sum(axis=1) * step_h
+    charge: Floats = beyond_kwh * rule.firm_level_charge_per_kwh
+    return charge
+
+
+def season_factor(
+    delivered_kw: Sequence[float], committed_kw: Sequence[float], rule: SettlementRule
+) -> float:
+    """Factor of a season over all its event hours together, one value per hour, kW; NaN where undefined.
+
+    A mean over hours, not over events: an event of four hours weighs four times one of a single hour.
+    """
+    delivered, committed = (np.array([list(kw)], dtype=np.float64) for kw in (delivered_kw, committed_kw))
+    each = np.ones(delivered.shape, dtype=np.bool_)
+    return float(performance_factor(delivered, committed, each, 1.0, rule)[0])
 
 
 def paid_share(factor: Floats, rule: SettlementRule, prices: Prices) -> Floats:
@@ -140,21 +198,92 @@ def paid_share(factor: Floats, rule: SettlementRule, prices: Prices) -> Floats:
     return np.where(known, share, np.nan)
 
 
-def lines(committed_kwh: Floats, delivered_kwh: Floats, share: Floats, prices: Prices) -> Lines:
+def lines(
+    committed_kwh: Floats,
+    delivered_kwh: Floats,
+    share: Floats,
+    prices: Prices,
+    firm_charge: Floats | None = None,
+) -> Lines:
     """Statement lines of every site; arrays of shape (site,), delivered and share NaN where undefined.
 
     capacity = price x committed x share; energy = price x max(delivered, 0); penalty = -price x max(committed -
-    delivered, 0), nothing where nothing was committed. Undefined makes the line zero: nothing is paid or
-    charged on a value that is not there. Each line is rounded half-up; total is their sum.
+    delivered, 0) - firm_charge, no lack where nothing was committed. Undefined makes a line zero: nothing is
+    paid or charged on a value that is not there. Each line is rounded half-up; total is their sum.
     """
-    undefined = np.isnan(delivered_kwh)
-    delivered = np.where(undefined, 0.0, delivered_kwh)
-    lack = np.where(undefined | (committed_kwh <= 0.0), 0.0, np.maximum(committed_kwh - delivered, 0.0))
+    delivered, lack = _delivered_and_lack(committed_kwh, delivered_kwh)
     earned = np.where(np.isnan(share), 0.0, share)
     decimal = np.frompyfunc(exact, 1, 1)
     rounded = np.frompyfunc(lambda amount: to_minor(amount, prices.currency), 1, 1)
     capacity = rounded(decimal(committed_kwh) * decimal(earned) * exact(prices.capacity_payment_per_kwh))
     energy = rounded(decimal(np.maximum(delivered, 0.0)) * exact(prices.energy_payment_per_kwh))
+    charge = np.zeros(len(lack)) if firm_charge is None else firm_charge
     # Subtracted from zero, so that no penalty is 0 and not -0.
-    penalty = Decimal(0) - rounded(decimal(lack) * exact(prices.penalty_per_kwh))
+    penalty = Decimal(0) - rounded(decimal(lack) * exact(prices.penalty_per_kwh) + decimal(charge))
     return Lines(capacity, energy, penalty, capacity + energy + penalty)
+
+
+def portfolio_lines(
+    committed_kwh: Floats,
+    delivered_kwh: Floats,
+    share: Floats,
+    prices: Prices,
+    firm_charge: Floats,
+    site_ids: Sequence[str],
+) -> Lines:
+    """Lines of sites settled together: each line is worked out and rounded on their sums, then shared out.
+
+    share (site,) is the joint one, NaN where undefined: those sites stay out. Capacity is shared by committed,
+    energy by delivered above zero, the penalty by each site's own lack, left-over units by largest remainder; so
+    that the lines of the sites add up to the portfolio's to the cent. Firm-level charges stay with their site.
+    """
+    known = ~np.isnan(share)
+    delivered, lack = _delivered_and_lack(committed_kwh, np.where(known, delivered_kwh, np.nan))
+    committed = np.where(known, committed_kwh, 0.0)
+    together = _total(committed), _total(delivered)
+    paid = exact(float(share[known][0])) if known.any() else Decimal(0)
+    due = (
+        together[0] * paid * exact(prices.capacity_payment_per_kwh),
+        max(together[1], Decimal(0)) * exact(prices.energy_payment_per_kwh),
+        max(together[0] - together[1], Decimal(0)) * exact(prices.penalty_per_kwh),
+    )
+    parts = committed, np.maximum(delivered, 0.0), lack
+    capacity, energy, lacking = (
+        largest_remainder(part.tolist(), site_ids, to_minor(amount, prices.currency), prices.currency)
+        for part, amount in zip(parts, due)
+    )
+    charge = np.frompyfunc(lambda money: to_minor(exact(money), prices.currency), 1, 1)(firm_charge)
+    penalty = Decimal(0) - (lacking + charge)
+    return Lines(capacity, energy, penalty, capacity + energy + penalty)
+
+
+def _total(values: Floats) -> Decimal:
+    return sum((exact(value) for value in values.tolist()), Decimal(0))
+
+
+def _delivered_and_lack(committed_kwh: Floats, delivered_kwh: Floats) -> tuple[Floats, Floats]:
+    """Delivered with zero for undefined, and what lacks to the commitment."""
+    undefined = np.isnan(delivered_kwh)
+    delivered = np.where(undefined, 0.0, delivered_kwh)
+    lack = np.where(undefined | (committed_kwh <= 0.0), 0.0, np.maximum(committed_kwh - delivered, 0.0))
+    return delivered, lack
+
+
+def earned(
+    committed_kwh: Floats,
+    delivered_kwh: Floats,
+    factor: Floats,
+    firm_charge: Floats,
+    rule: SettlementRule,
+    prices: Prices,
+    site_ids: Sequence[str],
+) -> tuple[Floats, Lines]:
+    """Paid share (site,) and lines of the sites under one rule, each for itself or as a portfolio.
+
+    factor NaN and delivered NaN: undefined, or a site that is excused.
+    """
+    if rule.netting == "site":
+        share = paid_share(factor, rule, prices)
+        return share, lines(committed_kwh, delivered_kwh, share, prices, firm_charge)
+    share = paid_share(joint_factor(factor, committed_kwh, rule), rule, prices)
+    return share, portfolio_lines(committed_kwh, delivered_kwh, share, prices, firm_charge, site_ids)

@@ -4,8 +4,9 @@ Owns the fields of a rule, the presets under the names the trade gives them and 
 the arithmetic to baseline.py (load) and money.py (pay). A rule is frozen into the event record as JSON.
 """
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from difflib import get_close_matches
+from itertools import pairwise
 from types import MappingProxyType
 from typing import Final, Literal, Self
 
@@ -23,7 +24,8 @@ class SettlementRule(BaseModel):
 
     name: str = Field(min_length=1)
     version: int = Field(default=1, ge=1)
-    kind: Literal["like_days", "before_after"] = "like_days"
+    kind: Literal["like_days", "before_after", "temperature_regression", "maximum_base_load"] = "like_days"
+    """temperature_regression: fitted on the used days. maximum_base_load: one flat level from them."""
     stream: Literal["building", "plant"] = "building"
     """What is settled on: the building's meter, or the cooling plant's sub-meter."""
 
@@ -32,8 +34,9 @@ class SettlementRule(BaseModel):
     """Y: the most recent like days."""
     take_days: int = Field(default=10, ge=1, le=400)
     """X: how many of the pool are averaged."""
-    rank: Literal["recent", "highest", "middle"] = "recent"
-    """By the mean over the event hours; for absorb events `highest` takes the lowest."""
+    rank: Literal["recent", "highest", "middle", "nearest_weather"] = "recent"
+    """By the mean over the event hours; for absorb events `highest` takes the lowest. nearest_weather: by how
+    close the day's highest dry bulb is to the event day's."""
     day_classes: Literal["weekday_weekend", "all_days"] = "weekday_weekend"
     """Whether Saturdays and Sundays (and holidays) are like days of a working day."""
     holidays: Literal["excluded", "as_weekend"] = "excluded"
@@ -57,16 +60,26 @@ class SettlementRule(BaseModel):
     small_base_fraction: float = Field(default=0.1, ge=0.0, le=1.0)
     """Window base at or below this share of the used days' peak: additive takes the place of ratio."""
 
+    pre_charge_guard: Literal["off", "tank", "tank_or_plant"] = "off"
+    """Adjust on load without the power that charges tanks: less the tank sub-meter; where there is none, and the
+    rule is on the building's meter, less the plant's."""
+    temperature_knots_c: tuple[float, ...] = (10.0, 16.0, 22.0, 28.0)
+    """Regression: dry bulbs at which the slope may change."""
+
     before_h: float = Field(default=1.0, ge=0.0, le=24.0)
     before_buffer_h: float = Field(default=0.0, ge=0.0, le=24.0)
     after_h: float = Field(default=0.0, ge=0.0, le=24.0)
     after_buffer_h: float = Field(default=0.0, ge=0.0, le=24.0)
     """Before / after: mean of both windows, each that far from the event; also used when days are too few."""
 
+    performance_by: Literal["interval", "hour", "event"] = "interval"
+    """What floor_intervals and cap_intervals look at: each interval, each hour counted from the event's start,
+    or the whole window."""
     floor_intervals: bool = False
-    """Negative intervals count as zero in the performance factor."""
+    """Negative ones count as zero in the performance factor; False: they net, and the paid share's floor says
+    whether a negative factor is charged."""
     cap_intervals: bool = False
-    """No interval counts above its commitment in the performance factor."""
+    """None counts above its commitment in the performance factor."""
     performance_decimals: int | None = Field(default=None, ge=0, le=9)
     """The factor is rounded half-up to so many decimals; None = not rounded."""
     performance_formula: Literal["proportional", "linear", "ladder"] = "proportional"
@@ -80,6 +93,11 @@ class SettlementRule(BaseModel):
     performance_floor: float | None = Field(default=None, ge=-5.0, le=5.0)
     performance_cap: float | None = Field(default=None, ge=-5.0, le=5.0)
     """Limits of the paid share; None = the fleet's settings."""
+    netting: Literal["site", "portfolio"] = "site"
+    """portfolio: all sites under the rule earn by their joint factor; amounts are shared out to the cent."""
+    firm_level_kw: float | None = Field(default=None, ge=0.0)
+    firm_level_charge_per_kwh: float = Field(default=0.0, ge=0.0)
+    """Charged on every kWh metered above firm_level_kw in the site's window (absorb: below it); None = no level."""
     source: str = ""
     """Where the rule comes from, and how surely: READ, or from memory."""
 
@@ -97,7 +115,16 @@ class SettlementRule(BaseModel):
                 "before_h and after_h are both 0",
             ),
             (self.performance_formula == "ladder" and not self.ladder, "a ladder with no rungs"),
-            (list(self.ladder) != sorted(self.ladder), "the ladder's lower bounds do not rise"),
+            (_not_rising([bound for bound, _ in self.ladder]), "the ladder's lower bounds do not rise"),
+            (_not_rising(self.temperature_knots_c), "temperature_knots_c do not rise"),
+            (
+                self.kind == "temperature_regression" and self.rank == "nearest_weather",
+                "a regression takes its days by recent, highest or middle, not by nearest_weather",
+            ),
+            (
+                self.firm_level_charge_per_kwh > 0 and self.firm_level_kw is None,
+                "firm_level_charge_per_kwh without firm_level_kw",
+            ),
             (
                 None not in (self.performance_floor, self.performance_cap)
                 and (self.performance_floor or 0.0) > (self.performance_cap or 0.0),
@@ -110,13 +137,20 @@ class SettlementRule(BaseModel):
         return self
 
     @property
+    def needs_weather(self) -> bool:
+        """Dry bulb of the days looked at is part of the rule."""
+        return self.kind == "temperature_regression" or self.rank == "nearest_weather"
+
+    @property
     def order_of_rounding(self) -> str:
         """The order of limits and rounding in words, derived from the fields so that it cannot disagree."""
         steps = ["delivered kW per interval unrounded"]
-        if self.floor_intervals:
-            steps.append("negative intervals to zero")
-        if self.cap_intervals:
-            steps.append("intervals capped at their commitment")
+        if self.floor_intervals or self.cap_intervals:
+            each = {"interval": "intervals", "hour": "hours", "event": "windows"}[self.performance_by]
+            if self.floor_intervals:
+                steps.append(f"negative {each} to zero")
+            if self.cap_intervals:
+                steps.append(f"{each} capped at their commitment")
         steps.append("energy over the site's window")
         decimals = self.performance_decimals
         rounded = "unrounded" if decimals is None else f"rounded half-up to {decimals} decimals"
@@ -124,53 +158,130 @@ class SettlementRule(BaseModel):
         if self.performance_gate is not None:
             steps.append(f"nothing unless it is more than {self.performance_gate:g}")
         steps.append(f"{self.performance_formula} share, floor and cap")
+        if self.netting == "portfolio":
+            steps.append(
+                "all sites under the rule earn by their joint factor; left-over units of money go by largest "
+                "remainder, ties by site id"
+            )
+        if self.firm_level_kw is not None:
+            steps.append(
+                f"{self.firm_level_charge_per_kwh:g} per kWh beyond the firm level of {self.firm_level_kw:g} kW"
+            )
         steps.append("each line rounded half-up to the currency's minor unit")
         steps.append("total = sum of the lines")
         return "; ".join(steps)
 
 
+def _not_rising(values: Sequence[float]) -> bool:
+    return any(later <= earlier for earlier, later in pairwise(values))
+
+
+MEMORY: Final = "figures from memory of utility tariffs, whose texts could not be read"
+PEER: Final = "NAESB WEQ-015 Baseline Type-I, by name; " + MEMORY
+PRESET_FIELDS: Final[Mapping[str, Mapping[str, object]]] = {
+    "ten_of_ten": {
+        "adjustment": "ratio",
+        "adjustment_from_h": 4.0,
+        "adjustment_to_h": 1.0,
+        "cap_fraction": 0.2,
+        "source": PEER,
+    },
+    "high_five_of_ten": {
+        "take_days": 5,
+        "rank": "highest",
+        "adjustment": "ratio",
+        "adjustment_from_h": 4.0,
+        "adjustment_to_h": 2.0,
+        "cap_fraction": 0.2,
+        "source": PEER,
+    },
+    "high_four_of_five": {
+        "pool_days": 5,
+        "take_days": 4,
+        "rank": "highest",
+        "minimum_days": 4,
+        "low_usage_fraction": 0.25,
+        "adjustment": "additive",
+        "adjustment_from_h": 4.0,
+        "adjustment_to_h": 1.0,
+        "source": PEER,
+    },
+    "middle_eight_of_ten": {
+        "take_days": 8,
+        "rank": "middle",
+        "adjustment": "ratio",
+        "adjustment_from_h": 4.0,
+        "adjustment_to_h": 1.0,
+        "cap_fraction": 0.2,
+        "cap_form": "ratio",
+        "source": PEER + "; scalar adjustment with a cap symmetric in ratio",
+    },
+    "weather_matched_days": {
+        "look_back_days": 90,
+        "pool_days": 90,
+        "take_days": 4,
+        "rank": "nearest_weather",
+        "minimum_days": 4,
+        "adjustment": "additive",
+        "adjustment_from_h": 4.0,
+        "adjustment_to_h": 1.0,
+        "source": PEER + "; four days nearest in highest dry bulb of the last 90",
+    },
+    "temperature_regression": {
+        "kind": "temperature_regression",
+        "look_back_days": 60,
+        "pool_days": 60,
+        "take_days": 60,
+        "minimum_days": 10,
+        "adjustment": "additive",
+        "adjustment_from_h": 4.0,
+        "adjustment_to_h": 1.0,
+        "source": "time of week and temperature after Mathieu, Price, Kiliccote and Piette, IEEE Trans. Smart "
+        "Grid 2 (2011), from memory; one set of slopes, no split by occupancy",
+    },
+    "maximum_base_load": {
+        "kind": "maximum_base_load",
+        "pool_days": 20,
+        "take_days": 5,
+        "rank": "highest",
+        "source": "NAESB WEQ-015 Maximum Base Load, by name; the level is the mean of the five highest days' "
+        "highest reading in the event hours, " + MEMORY,
+    },
+    "meter_before_after": {
+        "kind": "before_after",
+        "before_h": 1.0,
+        "source": "NAESB WEQ-015 Meter Before / Meter After, from memory: the hour before against the event; "
+        "nothing after the event, where the plant's restart would lift the baseline",
+    },
+    "three_before_two_after": {
+        "kind": "before_after",
+        "before_h": 3.0,
+        "before_buffer_h": 1.0,
+        "after_h": 2.0,
+        "after_buffer_h": 1.0,
+        "source": "NAESB WEQ-015 Meter Before / Meter After, by name; three hours before and two after the "
+        "event, one left out on each side, " + MEMORY,
+    },
+}
+
+
 def _presets() -> dict[str, SettlementRule]:
-    like = "NAESB WEQ-015 Baseline Type-I, by name; figures from memory of utility tariffs"
-    building = (
-        SettlementRule(
-            name="ten_of_ten",
-            adjustment="ratio",
-            adjustment_from_h=4.0,
-            adjustment_to_h=1.0,
-            cap_fraction=0.2,
-            source=like,
-        ),
-        SettlementRule(
-            name="high_five_of_ten",
-            take_days=5,
-            rank="highest",
-            adjustment="ratio",
-            adjustment_from_h=4.0,
-            adjustment_to_h=2.0,
-            cap_fraction=0.2,
-            source=like,
-        ),
-        SettlementRule(
-            name="meter_before_after",
-            kind="before_after",
-            before_h=1.0,
-            source="NAESB WEQ-015 Meter Before / Meter After, from memory: the hour before against the event;"
-            " nothing after the event, where the plant's restart would lift the baseline",
-        ),
-    )
-    # A plant's load may start near zero in the window (a tank just discharged): additive by default.
-    plant = tuple(
-        rule.model_copy(
-            update={
-                "name": f"{rule.name}_plant",
-                "stream": "plant",
-                "adjustment": "none" if rule.adjustment == "none" else "additive",
-                "source": rule.source + "; on the cooling plant's sub-meter, additive by default",
-            }
-        )
-        for rule in building
-    )
-    return {rule.name: rule for rule in building + plant}
+    """Every preset on the building's meter and, as <name>_plant, on the cooling plant's sub-meter.
+
+    A plant's load may start near zero in the window (a tank just discharged): there additive by default.
+    """
+    found: dict[str, SettlementRule] = {}
+    for name, fields in PRESET_FIELDS.items():
+        guard = "tank_or_plant" if fields.get("adjustment", "none") != "none" else "off"
+        building = SettlementRule.model_validate({"name": name, "pre_charge_guard": guard, **fields})
+        changes = {
+            "name": f"{name}_plant",
+            "stream": "plant",
+            "adjustment": "none" if building.adjustment == "none" else "additive",
+            "source": building.source + "; on the cooling plant's sub-meter, additive by default",
+        }
+        found |= {name: building, f"{name}_plant": building.model_copy(update=changes)}
+    return found
 
 
 PRESETS: Final[Mapping[str, SettlementRule]] = MappingProxyType(_presets())

@@ -5,17 +5,27 @@ leaves readings to meters.py, baselines to baseline.py, money to money.py, table
 positive in the event's direction. An estimated reading counts only where it lowers what was delivered.
 """
 
-from dataclasses import dataclass, fields
+from dataclasses import fields
 from typing import Final
 
 import numpy as np
 import pandas as pd
 
-from fleet.baseline import NONE, Baseline, DayFacts, EventFacts, baseline
-from fleet.callfacts import CallFacts, Plan, arrange, local_days, marked, modes
-from fleet.meters import EDITED, LocalGrid, Streams, by_local_day, estimate, local_grid, spikes, streams
-from fleet.money import lines, minor_digits, paid_share, performance_factor
-from fleet.rules import SettlementRule
+from fleet.baseline import NONE, Baseline, baseline
+from fleet.callfacts import CallFacts, Plan, arrange
+from fleet.history import (
+    History,
+    day_facts,
+    event_facts,
+    filled,
+    history,
+    hours,
+    part,
+    peak_dry_bulb_c,
+    rows_of,
+)
+from fleet.meters import EDITED, Streams, by_local_day, spikes
+from fleet.money import Lines, earned, firm_level_charge, minor_digits, performance_factor
 from fleet.settlement import (
     Settlement,
     SiteResult,
@@ -27,30 +37,15 @@ from fleet.settlement import (
     posting_table,
     site_table,
 )
-from sites.clock import Clock
 from sites.direction import Direction
-from sites.units import AnyArray, Bools, Floats, Ints
+from sites.units import AnyArray, Bools, Floats, Ints, Times
 
 __all__ = ["CallFacts", "Settlement", "settle"]
 
 PRE_CHARGE_WARNING: Final = 1.10
 """Load in the adjustment window above like days by more than this, after notice, is pointed out."""
-SHORTEST_HISTORY_DAYS: Final = 4
-"""Windows before the event reach back at most 48 h, whatever a rule's look-back."""
-
-
-@dataclass(frozen=True)
-class _History:
-    """Readings and the local days behind them; day arrays over the grid's days."""
-
-    raw: Streams
-    grid: LocalGrid
-    event_day: int
-    weekend: Bools
-    holiday: Bools
-    past: Bools
-    """(site, day) other event days"""
-    modes: AnyArray
+SITES_AT_ONCE: Final = 1_000
+"""Sites whose days are laid out together; keeps memory flat as the fleet grows."""
 
 
 def settle(
@@ -62,148 +57,66 @@ def settle(
     for readings that cannot be placed (see meters.streams) and FleetError for a call that is not complete.
     """
     plan = arrange(call)
-    history = _history(call, plan, readings)
-    found, window_kw = _baselines(plan, call.direction, history)
-    filled = _filled(plan, history)
-    shown = slice(filled.clock.index(plan.clock.start), filled.clock.index(plan.clock.end))
-    metered, quality = filled.kw[:, shown], filled.quality[:, shown]
-    result = _result(plan, call, found, metered, quality)
-    kw, day_quality = by_local_day(filled.kw, filled.quality, history.grid)
-    trace = Trace(history.grid, history.event_day, kw, day_quality, history.modes, window_kw)
+    found = history(call, plan, readings)
+    base, window_kw, charging = _baselines(plan, call.direction, found)
+    whole = filled(plan, found)
+    shown = slice(whole.clock.index(plan.clock.start), whole.clock.index(plan.clock.end))
+    result = _result(plan, call, base, found, whole.kw[:, shown], whole.quality[:, shown])
+    kw, day_quality = by_local_day(whole.kw, whole.quality, found.grid)
+    trace = Trace(
+        grid=found.grid,
+        event_day=found.event_day,
+        kw=kw,
+        quality=day_quality,
+        modes=found.modes,
+        window_kw=window_kw,
+        charging_kw=charging,
+        dry_bulb_c=by_local_day(found.dry_bulb_c, np.zeros_like(whole.quality), found.grid)[0],
+        peak_dry_bulb_c=peak_dry_bulb_c(found),
+        step_h=plan.clock.step_h,
+    )
     head = (call.event_id, revision, plan)
-    sites = site_table(*head, found, result)
+    sites = site_table(*head, base, result)
     fleet = fleet_table(*head, call.request, result)
     return Settlement(
-        intervals=interval_table(*head, found, result),
-        days=day_table(*head, found, trace),
-        day_intervals=day_interval_table(*head, found, trace),
+        intervals=interval_table(*head, base, result),
+        days=day_table(*head, base, trace),
+        day_intervals=day_interval_table(*head, base, trace),
         sites=sites,
         fleet=fleet,
         postings=posting_table(call.event_id, revision, sites, previous_sites),
-        summary=_summary(call, revision, plan, sites, fleet, filled),
-        notes=_notes(call, plan, found, trace),
+        summary=_summary(call, revision, plan, sites, fleet, whole),
+        notes=_notes(call, plan, base, trace),
     )
 
 
-def _history(call: CallFacts, plan: Plan, readings: pd.DataFrame) -> _History:
-    """Readings of the called sites from the longest look-back's first local midnight to the horizon's end."""
-    day = pd.Timestamp(plan.event_start, tz="UTC").tz_convert(call.timezone).tz_localize(None).normalize()
-    back = max(SHORTEST_HISTORY_DAYS, *(rule.look_back_days for rule in plan.rules))
-    midnight = (day - pd.Timedelta(days=back)).tz_localize(
-        call.timezone, ambiguous=True, nonexistent="shift_forward"
-    )
-    since = np.datetime64(midnight.tz_convert("UTC").tz_localize(None).floor(f"{call.step_minutes}min"), "us")
-    after = max(_hours(rule.after_h + rule.after_buffer_h) for rule in plan.rules)
-    until = max(plan.clock.end, plan.event_end + after)
-    known = call.fleet_site_ids or plan.site_ids
-    step = call.step_minutes
-    all_rows = streams(
-        readings, call.meter_map, plan.site_ids, call.timezone, step, since, until, known_site_ids=known
-    )
-    raw = all_rows.pick(plan.site_ids, [rule.stream for rule in plan.rules])
-    grid = local_grid(raw.clock, call.timezone)
-    event_day = int(grid.day[raw.clock.index(plan.event_start)])
-    past = marked(call.past_event_days, plan.site_ids, grid.days)
-    no_days = call.holidays.empty
-    holiday = np.zeros(len(grid.days), dtype=np.bool_)
-    if not no_days:
-        holiday = np.isin(grid.days, local_days(call.holidays["date"]))
-    # Day 0 of the calendar, 1970-01-01, was a Thursday.
-    weekend = (grid.days.astype(np.int64) + 3) % 7 >= 5
-    ran = modes(call.plant_days, plan.site_ids, grid.days)
-    return _History(raw, grid, event_day, weekend, holiday, past, ran)
-
-
-def _hours(hours: float) -> np.timedelta64:
-    return np.timedelta64(round(hours * 3_600_000_000), "us")
-
-
-def _measured(history: _History) -> Floats:
-    """(site, interval) readings that are no estimate, else NaN."""
-    measured: Floats = np.where(history.raw.quality <= EDITED, history.raw.kw, np.nan)
-    return measured
-
-
-def _filled(plan: Plan, history: _History) -> Streams:
-    """Gaps estimated: no line over the start or end of the event or a site's window, no like day inside."""
-    clock, grid = history.raw.clock, history.grid
-    starts = clock.starts
-    breaks = (starts >= plan.event_start).astype(np.int64) + (starts >= plan.event_end)
-    own = (starts >= plan.window_start[:, None]).astype(np.int64) + (starts >= plan.window_end[:, None])
-    shut = plan.in_event(clock) | plan.in_window(clock)
-    events = history.past.copy()
-    events[:, history.event_day] = True
-    day_class = (history.weekend | history.holiday).astype(np.int64)
-    return estimate(history.raw, breaks + own, shut, day_class, events, grid)
-
-
-def _baselines(plan: Plan, direction: Direction, history: _History) -> tuple[Baseline, Floats]:
-    """Baselines of all sites, rule by rule, and the event day's mean over each site's adjustment window."""
-    measured = _measured(history)
-    day_kw, _ = by_local_day(measured, history.raw.quality, history.grid)
-    recent = np.arange(history.event_day - 1, -1, -1)
+def _baselines(plan: Plan, direction: Direction, found: History) -> tuple[Baseline, Floats, Floats]:
+    """Baselines of all sites, rule by rule; the event day's mean over each adjustment window (site,), and what is
+    taken out of each day's (site, day of the grid)."""
     parts: list[Baseline] = []
     order: list[int] = []
     window_kw = np.full(len(plan.site_ids), np.nan)
+    charging_kw = np.full((len(plan.site_ids), len(found.grid.days)), np.nan)
     for rule in dict.fromkeys(plan.rules):
-        rows = np.array([at for at, other in enumerate(plan.rules) if other == rule], dtype=np.int64)
-        event = _event_facts(plan, direction, history, rule, measured[rows])
-        facts = _day_facts(history, recent, rows)
-        parts.append(baseline(day_kw[np.ix_(rows, recent)], facts, rule, event))
-        if rule.kind == "like_days" and event.window_kw.shape[1]:
-            window_kw[rows] = event.window_kw.mean(axis=1)
-        order += rows.tolist()
+        every = rows_of(plan.rules, rule)
+        for first in range(0, len(every), SITES_AT_ONCE):
+            rows = every[first : first + SITES_AT_ONCE]
+            own = part(found, rows)
+            event = event_facts(plan, direction, own, rule)
+            day_kw, _ = by_local_day(own.measured, own.raw.quality, own.grid)
+            parts.append(baseline(day_kw[:, own.recent], day_facts(own), rule, event))
+            if rule.kind != "before_after" and event.window_kw.shape[1]:
+                window_kw[rows] = event.window_kw.mean(axis=1)
+            if event.charging is not None:
+                charging_kw[np.ix_(rows, own.recent)] = event.charging.day_kw
+                charging_kw[rows, own.event_day] = event.charging.window_kw
+            order += rows.tolist()
     back = np.argsort(order)
     joined = {
-        field.name: np.concatenate([getattr(part, field.name) for part in parts])[back]
+        field.name: np.concatenate([getattr(one, field.name) for one in parts])[back]
         for field in fields(Baseline)
     }
-    return Baseline(**joined), window_kw
-
-
-def _day_facts(history: _History, recent: Ints, rows: Ints) -> DayFacts:
-    """Facts of the days before the event for some sites, most recent first."""
-    eventful = history.past.copy()
-    eventful[:, history.event_day] = True
-    return DayFacts(
-        exists=history.grid.times[recent] > 0,
-        weekend=history.weekend[recent],
-        holiday=history.holiday[recent],
-        event_past=history.past[np.ix_(rows, recent)],
-        before_event=eventful[np.ix_(rows, recent + 1)],
-        unusual=history.modes[np.ix_(rows, recent)] != "usual",
-    )
-
-
-def _event_facts(
-    plan: Plan, direction: Direction, history: _History, rule: SettlementRule, measured: Floats
-) -> EventFacts:
-    """Slots and windows of one rule; measured (site of the rule, interval)."""
-    clock, grid = history.raw.clock, history.grid
-    start, end = plan.event_start, plan.event_end
-    window = _between(clock, start - _hours(rule.adjustment_from_h), start - _hours(rule.adjustment_to_h))
-    before_end, after_start = start - _hours(rule.before_buffer_h), end + _hours(rule.after_buffer_h)
-    before = _between(clock, before_end - _hours(rule.before_h), before_end)
-    after = _between(clock, after_start, after_start + _hours(rule.after_h))
-    shown = np.arange(clock.index(plan.clock.start), clock.index(plan.clock.end))
-    free = history.weekend | history.holiday
-    like = (free[grid.day[shown]] == free[history.event_day]) | (rule.day_classes == "all_days")
-    return EventFacts(
-        sign=-direction.sign,
-        weekend=bool(free[history.event_day]),
-        slot=grid.slot[shown],
-        like=like,
-        event_slot=grid.slot[np.flatnonzero(plan.in_event(clock))],
-        window_slot=grid.slot[window],
-        window_kw=measured[:, window],
-        around_kw=measured[:, np.concatenate([before, after])],
-    )
-
-
-def _between(clock: Clock, since: np.datetime64, until: np.datetime64) -> Ints:
-    """Indices of the intervals that lie wholly within [since, until)."""
-    starts = clock.starts
-    return np.flatnonzero((starts >= since) & (starts + clock.step <= until))
+    return Baseline(**joined), window_kw, charging_kw
 
 
 def _delivered(plan: Plan, direction: Direction, found: Baseline, metered: Floats, quality: Ints) -> Floats:
@@ -217,22 +130,39 @@ def _delivered(plan: Plan, direction: Direction, found: Baseline, metered: Float
     return delivered
 
 
-def _result(plan: Plan, call: CallFacts, found: Baseline, metered: Floats, quality: Ints) -> SiteResult:
+def _result(
+    plan: Plan, call: CallFacts, base: Baseline, found: History, metered: Floats, quality: Ints
+) -> SiteResult:
     """Energy over each site's own window, performance, state and money."""
     clock = plan.clock
-    delivered = _delivered(plan, call.direction, found, metered, quality)
+    delivered = _delivered(plan, call.direction, base, metered, quality)
     in_window = plan.in_window(clock)
     known = in_window & ~np.isnan(delivered)
     committed_kwh = np.where(in_window, plan.committed_kw, 0.0).sum(axis=1) * clock.step_h
     energy = np.where(known, delivered, 0.0).sum(axis=1) * clock.step_h
     delivered_kwh = np.where(known.any(axis=1), energy, np.nan)
+    excused = np.array([site in call.excused for site in plan.site_ids])
     factor, share = np.full(len(energy), np.nan), np.full(len(energy), np.nan)
+    money = np.zeros((len(energy), 4), dtype=object)
+    hour = (clock.starts - plan.event_start) // np.timedelta64(1, "h")
+    sign = -call.direction.sign
     for rule in dict.fromkeys(plan.rules):
-        rows = np.array([other == rule for other in plan.rules])
-        factor[rows] = performance_factor(
-            delivered[rows], plan.committed_kw[rows], in_window[rows], clock.step_h, rule
+        rows = rows_of(plan.rules, rule)
+        inside, out = in_window[rows], excused[rows]
+        one = performance_factor(delivered[rows], plan.committed_kw[rows], inside, clock.step_h, rule, hour)
+        charge = firm_level_charge(metered[rows], inside, clock.step_h, rule, sign)
+        factor[rows] = np.where(out, np.nan, one)
+        share[rows], due = earned(
+            committed_kwh[rows],
+            np.where(out, np.nan, delivered_kwh[rows]),
+            factor[rows],
+            np.where(out, 0.0, charge),
+            rule,
+            call.prices,
+            [plan.site_ids[row] for row in rows],
         )
-        share[rows] = paid_share(factor[rows], rule, call.prices)
+        money[rows] = np.stack([due.capacity_payment, due.energy_payment, due.penalty, due.total], axis=1)
+    starts = slice(found.raw.clock.index(clock.start), found.raw.clock.index(clock.end))
     return SiteResult(
         metered_kw=metered,
         quality=quality,
@@ -242,9 +172,35 @@ def _result(plan: Plan, call: CallFacts, found: Baseline, metered: Floats, quali
         committed_kwh=committed_kwh,
         delivered_kwh=delivered_kwh,
         factor=factor,
-        state=_state(plan, found, metered, quality),
-        money=lines(committed_kwh, delivered_kwh, share, call.prices),
+        paid_share=share,
+        state=np.where(excused, "excused", _state(plan, base, metered, quality)).astype(object),
+        why=np.array([call.excused.get(site) for site in plan.site_ids], dtype=object),
+        guard=found.guard,
+        dry_bulb_c=found.dry_bulb_c[:, starts],
+        until_midnight_kwh=_taken_back(plan, delivered, _midnight(plan, found.grid.day[starts])),
+        until_full_kwh=_taken_back(plan, delivered, plan.full_again_at),
+        money=Lines(*money.T),
     )
+
+
+def _midnight(plan: Plan, day: Ints) -> Times:
+    """(site,) end of the local day of the own window's last interval, or of the horizon; day (interval,)."""
+    last = ((plan.window_end - plan.clock.start) // plan.clock.step).astype(np.int64) - 1
+    after = np.searchsorted(day, day[last], side="right")
+    end: Times = plan.clock.start + after * plan.clock.step
+    return end
+
+
+def _taken_back(plan: Plan, delivered: Floats, until: Times) -> Floats:
+    """kWh (site,) given back from the own window's end to `until`, what was delivered there with its sign turned.
+
+    Undefined where `until` is, or an interval has no value.
+    """
+    starts = plan.clock.starts
+    held = (starts >= plan.window_end[:, None]) & (starts < until[:, None])
+    value = np.where(held, -delivered, 0.0).sum(axis=1) * plan.clock.step_h
+    # Minus zero would read as something given back.
+    return np.where(np.isnat(until), np.nan, value + 0.0)
 
 
 def _state(plan: Plan, found: Baseline, metered: Floats, quality: Ints) -> AnyArray:
@@ -260,7 +216,7 @@ def _state(plan: Plan, found: Baseline, metered: Floats, quality: Ints) -> AnyAr
 
 
 def _summary(
-    call: CallFacts, revision: int, plan: Plan, sites: pd.DataFrame, fleet: pd.DataFrame, filled: Streams
+    call: CallFacts, revision: int, plan: Plan, sites: pd.DataFrame, fleet: pd.DataFrame, whole: Streams
 ) -> dict[str, object]:
     """The revision in a few figures; kWh of the fleet at the requested node, over the whole event."""
     money = {name: sites[name].sum() for name in ("capacity_payment", "energy_payment", "penalty", "total")}
@@ -272,7 +228,7 @@ def _summary(
         "fleet_committed_kwh": float(fleet["committed_kw"].sum() * plan.clock.step_h),
         "fleet_delivered_kwh": float(fleet["delivered_kw"].sum() * plan.clock.step_h),
         **money,
-        "readings": dict(filled.counts),
+        "readings": dict(whole.counts),
     }
 
 
@@ -282,7 +238,7 @@ def _notes(call: CallFacts, plan: Plan, found: Baseline, trace: Trace) -> tuple[
     with_base = found.window_base_kw > 0.0
     above = trace.window_kw > PRE_CHARGE_WARNING * np.where(with_base, found.window_base_kw, np.inf)
     late = [
-        call.called_at is not None and call.called_at < plan.event_start - _hours(rule.adjustment_to_h)
+        call.called_at is not None and call.called_at < plan.event_start - hours(rule.adjustment_to_h)
         for rule in plan.rules
     ]
     adjusted = np.array([kind != "none" for kind in found.kind])

@@ -17,6 +17,8 @@ from fleet.meters import QUALITIES, LocalGrid
 from fleet.money import Lines
 from sites.units import AnyArray, Bools, Floats, Ints, Strings, Times
 
+UNREAD = [REASONS.index(name) for name in ("other_day_type", "holiday")]
+"""Days whose readings are not looked at, and not recorded."""
 STATES = ("final", "provisional", "no_baseline", "meter_missing", "excused")
 
 
@@ -34,7 +36,16 @@ class SiteResult:
     committed_kwh: Floats
     delivered_kwh: Floats
     factor: Floats
+    paid_share: Floats
     state: Strings
+    why: Strings
+    """(site,) None where the site is not excused"""
+    guard: Strings
+    dry_bulb_c: Floats
+    """(site, interval) NaN where the rule needs none"""
+    until_midnight_kwh: Floats
+    """(site,) energy taken back after the own window; NaN where not known"""
+    until_full_kwh: Floats
     money: Lines
 
 
@@ -51,6 +62,13 @@ class Trace:
     """(site, day)"""
     window_kw: Floats
     """(site,) the event day's mean over the adjustment window; NaN where there is none"""
+    charging_kw: Floats
+    """(site, day) what is taken out of that mean as charging"""
+    dry_bulb_c: Floats
+    """(site, day, slot)"""
+    peak_dry_bulb_c: Floats
+    """(site, day)"""
+    step_h: float
 
 
 @dataclass(frozen=True)
@@ -91,6 +109,7 @@ def interval_table(
             "delivered_kw": result.delivered_kw.ravel(),
             "committed_kw": plan.committed_kw.ravel(),
             "quality": _objects(QUALITIES)[result.quality.ravel()],
+            "dry_bulb_c": result.dry_bulb_c.ravel(),
         }
     )
 
@@ -111,6 +130,11 @@ def day_table(event_id: str, revision: int, plan: Plan, found: Baseline, trace: 
             "mode": trace.modes[site, day],
             "rank_value": np.where(own, np.nan, found.rank_value[site, at]),
             "window_base_kw": np.where(own, trace.window_kw[site], found.day_window_kw[site, at]),
+            "window_charging_kw": np.where(own | (reason == USED), trace.charging_kw[site, day], np.nan),
+            "day_kwh": np.where(
+                own | ~np.isin(reason, UNREAD), np.nansum(trace.kw, axis=2)[site, day] * trace.step_h, np.nan
+            ),
+            "peak_dry_bulb_c": trace.peak_dry_bulb_c[site, day],
         }
     )
 
@@ -119,9 +143,8 @@ def day_interval_table(
     event_id: str, revision: int, plan: Plan, found: Baseline, trace: Trace
 ) -> pd.DataFrame:
     """Slot by slot the days whose readings were looked at, and the event's day; slots that exist that day."""
-    unread = [REASONS.index(name) for name in ("other_day_type", "holiday")]
     looked = _considered(plan, trace)
-    looked[:, : trace.event_day] &= ~np.isin(found.reason, unread)[:, ::-1]
+    looked[:, : trace.event_day] &= ~np.isin(found.reason, UNREAD)[:, ::-1]
     site, day, slot = np.nonzero(looked[:, :, None] & (trace.grid.times > 0)[None])
     return pd.DataFrame(
         {
@@ -130,6 +153,7 @@ def day_interval_table(
             "slot": slot,
             "kw": trace.kw[site, day, slot],
             "quality": _objects(QUALITIES)[trace.quality[site, day, slot]],
+            "dry_bulb_c": trace.dry_bulb_c[site, day, slot],
         }
     )
 
@@ -158,6 +182,13 @@ def site_table(event_id: str, revision: int, plan: Plan, found: Baseline, result
             "adjustment": found.adjustment,
             "adjustment_raw": found.adjustment_raw,
             "adjustment_kind": found.kind,
+            "guard": np.where(np.isnan(found.adjustment_charged), "none", result.guard).astype(object),
+            "adjustment_charged": found.adjustment_charged,
+            "beyond_training_k": found.beyond_training_k,
+            "paid_share": result.paid_share,
+            "recovery_until_midnight_kwh": result.until_midnight_kwh,
+            "recovery_until_full_kwh": result.until_full_kwh,
+            "why": result.why,
             "capacity_payment": money.capacity_payment,
             "energy_payment": money.energy_payment,
             "penalty": money.penalty,

@@ -39,7 +39,9 @@ def times(start: pd.Timestamp, end: pd.Timestamp, step_minutes: int) -> pd.Datet
     return pd.date_range(start, end, freq=f"{step_minutes}min", inclusive="left").as_unit("us")
 
 
-def readings(meter_id: str, starts: pd.DatetimeIndex, kw: object, quality: object = "measured") -> pd.DataFrame:
+def readings(
+    meter_id: str, starts: pd.DatetimeIndex, kw: object, quality: object = "measured"
+) -> pd.DataFrame:
     """Rows of the meters table."""
     return pd.DataFrame({"meter_id": meter_id, "interval_start": starts, "kw": kw, "quality": quality})
 

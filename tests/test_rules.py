@@ -9,7 +9,17 @@ from fleet.rules import PRESETS, SettlementRule, rule
 def test_presets_carry_the_terms_of_the_trade() -> None:
     assert set(PRESETS) == {
         f"{name}{stream}"
-        for name in ("ten_of_ten", "high_five_of_ten", "meter_before_after")
+        for name in (
+            "ten_of_ten",
+            "high_five_of_ten",
+            "high_four_of_five",
+            "middle_eight_of_ten",
+            "weather_matched_days",
+            "temperature_regression",
+            "maximum_base_load",
+            "meter_before_after",
+            "three_before_two_after",
+        )
         for stream in ("", "_plant")
     }
     ten, high = PRESETS["ten_of_ten"], PRESETS["high_five_of_ten"]
@@ -18,8 +28,30 @@ def test_presets_carry_the_terms_of_the_trade() -> None:
     assert (ten.adjustment_from_h, ten.adjustment_to_h) == (4.0, 1.0)
     assert (high.adjustment_from_h, high.adjustment_to_h) == (4.0, 2.0)
     assert (high.pool_days, high.take_days, high.rank) == (10, 5, "highest")
+    four, middle = PRESETS["high_four_of_five"], PRESETS["middle_eight_of_ten"]
+    assert (four.pool_days, four.take_days, four.adjustment, four.cap_fraction) == (5, 4, "additive", None)
+    assert (four.adjustment_from_h, four.adjustment_to_h, four.low_usage_fraction) == (4.0, 1.0, 0.25)
+    assert (middle.take_days, middle.rank, middle.adjustment, middle.cap_form) == (
+        8,
+        "middle",
+        "ratio",
+        "ratio",
+    )
+    around = PRESETS["three_before_two_after"]
+    assert (around.before_h, around.before_buffer_h) == (3.0, 1.0)
+    assert (around.after_h, around.after_buffer_h) == (2.0, 1.0)
+    nearest = PRESETS["weather_matched_days"]
+    assert (nearest.look_back_days, nearest.take_days, nearest.rank) == (90, 4, "nearest_weather")
     plant = PRESETS["ten_of_ten_plant"]
     assert (plant.stream, plant.adjustment) == ("plant", "additive")
+
+
+@pytest.mark.parametrize("name", PRESETS)
+def test_every_preset_says_how_surely_its_source_is_known(name: str) -> None:
+    assert "from memory" in PRESETS[name].source
+    assert PRESETS[name].pre_charge_guard == (
+        "off" if PRESETS[name].adjustment == "none" else "tank_or_plant"
+    )
 
 
 @pytest.mark.parametrize("name", PRESETS)
