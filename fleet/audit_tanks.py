@@ -81,9 +81,9 @@ def charge_limit(case: Case, found: Findings) -> None:
 def inlet_temperature(case: Case, found: Findings) -> None:
     """lmtd_k is what the loop's temperatures give.
 
-    In parallel the tank's inlet is the return. In series it is supply + (return - supply) x the tanks' share of the
-    load: what the machines upstream leave to them. The share lies between what the tanks gave (limited in the end)
-    and all that machines could not serve; where no limit held the tanks back both are one and lmtd_k is exact.
+    In parallel the tank's inlet is the return. In series it is supply + (return - supply) x the tanks' share of what
+    is served: what the machines upstream leave to them. The share lies between what the tanks gave (limited in the
+    end) and all that machines could not serve; where no limit held the tanks back both are one and lmtd_k is exact.
     """
     book, sheet = case.evidence, case.evidence.sheets["tanks"]
     supply, back = (book.fact(name, book.tanks.site)[:, None] for name in ("supply_c", "return_c"))
@@ -194,13 +194,12 @@ def _could_give(case: Case) -> Floats:
 
 
 def _tank_share(case: Case) -> tuple[Floats, Floats]:
-    """Least and largest share (R, T) of the load that the tanks' inlet may rest on; 1 in parallel."""
+    """Least and largest share (R, T) of what is served that the tanks' inlet may rest on; 1 in parallel."""
     book = case.evidence
     load = book.grid("intervals", "cooling_load_kw_th")
     ready = book.per_called(book.machines, case.ready_kw_th)
     drawn = book.grid("intervals", "discharge_kw_th")
-    total = np.maximum(load, 1e-9)
-    least = 1.0 - np.minimum(load - drawn, ready) / total
+    least = drawn / np.maximum(drawn + np.minimum(load - drawn, ready), 1e-9)
     could = _could_give(case)
     held = drawn >= could - allowed(drawn, could, could)
     most = np.where(held, 1.0, least)

@@ -15,7 +15,6 @@ from made_sites import made_outlook, made_roster, made_standing
 
 from fleet import event, feeders, ordering, records
 from fleet.allocate import Allocation, allocate
-from fleet.audit_inputs import digests
 from fleet.calling import prices_frame
 from fleet.request import Request, request
 from fleet.rules import PRESETS
@@ -86,7 +85,6 @@ def made_event(home: Path, settlements: int = 2) -> Path:
     frames["prices"] = prices_frame(choice, found)
     records.write_call(home, EVENT_ID, frames, _proof(quoted, found), frozen, frozen_json(roster, standing))
     path = home / "events" / EVENT_ID
-    _add_digests(path / "call-001")
     ordering.write(home, EVENT_ID)
     for revision in range(1, settlements + 1):
         _settle(home, revision)
@@ -292,14 +290,6 @@ def _settle(home: Path, revision: int) -> None:
     before = records.read_settlement(home, EVENT_ID).frames["sites"] if revision > 1 else None
     made = settle(facts, readings(home, revision), revision, before)
     records.write_settlement(home, EVENT_ID, made.frames, statements(made, facts))
-
-
-def _add_digests(call: Path) -> None:
-    """Digests of the frozen files into the proof, where calling does not put them yet."""
-    proof = json.loads((call / "proof.json").read_text())
-    proof["frozen_sha256"] = digests(call / "frozen")
-    (call / "proof.json").write_text(json_text(proof))
-    reseal(call.parent)
 
 
 def reseal(event_path: Path) -> None:
