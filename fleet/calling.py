@@ -15,13 +15,16 @@ import pandas as pd
 from fleet import event, records, rules
 from fleet.allocate import Allocation, allocate
 from fleet.desk import Progress, Survey
-from fleet.errors import CannotBeMet
+from fleet.errors import CannotBeMet, FleetError
+from fleet.limits import COUNTED, IN_FORCE
 from fleet.request import Request, default_event_id, request
 from fleet.shortage import Shortage, explain
 from fleet.steps import steps
-from fleet.wall_time import local_text
+from fleet.wall_time import local_text, utc_timestamp
 from sites.units import Floats
 
+NAMED = 5
+"""Sites that a sentence names; the rest is counted."""
 PACKAGES = ("shedwright", "numpy", "pandas", "pulp", "highspy", "pyarrow")
 
 
@@ -72,15 +75,65 @@ def call(
     )
     frames["prices"] = prices_frame(choice, allocation)
     proof = proof_of(survey, allocation)
-    path = records.write_call(home, ask.event_id, frames, proof, frozen_tables(survey), frozen_json(survey))
-    notes = (*survey.feeders.notes, *survey.headroom.notes)
+    with records.lock(home) as swept:
+        _check_nothing_new(survey, home)
+        path = records.write_call(
+            home, ask.event_id, frames, proof, frozen_tables(survey), frozen_json(survey)
+        )
+    network = (*survey.feeders.notes, *survey.headroom.notes)
+    notes = (*swept, *survey.folder.notes, *network, *not_callable(survey))
     return Call(path, ask.event_id, allocation, choice, proof, notes)
+
+
+def _check_nothing_new(survey: Survey, home: Path) -> None:
+    """FleetError where a call that binds sites was written since the survey looked; call it under the lock."""
+    if home.resolve() != survey.folder.path.resolve():
+        return
+    known, now = (_binding(past) for past in (survey.past, records.events(home)))
+    if known != now:
+        new = ", ".join(sorted({event_id for event_id, _ in now ^ known}))
+        raise FleetError(
+            f"{home}: another call was written meanwhile ({new}) and may bind the same sites; nothing was "
+            "written; run the same command again"
+        )
+
+
+def _binding(past: pd.DataFrame) -> set[tuple[str, int]]:
+    counted = past[past["purpose"].isin(COUNTED)]
+    return set(zip(counted["event_id"], counted["revision"], strict=True))
+
+
+def not_callable(survey: Survey) -> list[str]:
+    """A sentence for each reason why sites under the node may not be called, calls in force with their end."""
+    below = [str(name) for name in survey.fleet.roster.buildings.site_id[survey.under_node]]
+    reasons: dict[str, list[str]] = {}
+    for name in below:
+        if name in survey.eligible.reason:
+            reasons.setdefault(survey.eligible.reason[name], []).append(name)
+    said = [f"not called: {_few(names)}, which {why}" for why, names in reasons.items() if why != IN_FORCE]
+    past = survey.past
+    counted = past[past["purpose"].isin(COUNTED) & past["site_id"].isin(reasons.get(IN_FORCE, []))]
+    running = counted[counted["window_end"] > utc_timestamp(survey.ask.at)]
+    for event_id, windows in running.groupby("event_id"):
+        last = windows["window_end"].max().tz_localize(None).to_datetime64()
+        until = local_text(last, survey.folder.settings.timezone)
+        said.append(
+            f"not called: {_few(sorted(windows['site_id']))}, bound by the call in force {event_id} until {until}; "
+            "call them again from then on, or ask at a node without them"
+        )
+    return said
+
+
+def _few(names: list[str]) -> str:
+    """The first names, the rest counted."""
+    more = f" and {len(names) - NAMED} more" if len(names) > NAMED else ""
+    return ", ".join(names[:NAMED]) + more
 
 
 def _request(survey: Survey, requested_kw: float | Floats, event_id: str | None, purpose: str) -> Request:
     ask = survey.ask
     return request(
-        event_id or default_event_id(ask.at, survey.node_id),
+        default_event_id(ask.at, survey.node_id) if event_id is None else event_id,
         survey.node_id,
         ask.direction,
         purpose,
@@ -126,7 +179,8 @@ def _cannot(survey: Survey, allocation: Allocation) -> CannotBeMet:
 def _shortage_lines(survey: Survey, shortage: Shortage) -> list[str]:
     zone = survey.folder.settings.timezone
     starts = survey.quoted.quotes.clock.starts[survey.quoted.quotes.event_from :]
-    lines = ["the request cannot be met as asked:", *shortage.sentences(), "by interval (kW):"]
+    lines = ["the request cannot be met as asked:", *shortage.sentences(), *not_callable(survey)]
+    lines.append("by interval (kW):")
     rows = zip(
         starts, shortage.requested_kw, shortage.available.available_kw, shortage.expected_kw, strict=False
     )
@@ -164,6 +218,7 @@ def _shortage_detail(survey: Survey, shortage: Shortage) -> dict[str, object]:
         ],
         "sustained_kw_if_lifted": {name: found.sustained_kw for name, found in shortage.lifted.items()},
         "sites_limited_by": shortage.limited_by,
+        "not_callable": not_callable(survey),
     }
 
 

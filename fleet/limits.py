@@ -13,6 +13,7 @@ from sites.clock import Clock, as_us
 from sites.units import Bools, Floats
 
 COUNTED = ("real", "test")
+IN_FORCE = "has a call in force"
 _WEEK = pd.Timedelta(days=7)
 
 
@@ -54,7 +55,7 @@ def eligible_sites(
         for name in ("calls_per_season", "calls_per_week", "hours_per_season")
     )
     over = {
-        "has a call in force": busy,
+        IN_FORCE: busy,
         "has had all its calls of the season": calls + 1 > most_calls,
         "has had all its calls of the week": busiest + 1 > most_week,
         "has had all its hours of the season": hours >= most_hours,

@@ -13,11 +13,14 @@ class Written:
 
     path: Path
     files: tuple[str, ...]
+    notes: tuple[str, ...] = ()
+    """What killed runs left and was swept."""
 
 
 def write(home: Path, event_id: str) -> Written:
     """Write the orders of the newest call of an event; where they stand already, those are returned."""
     record = records.read_call(home, event_id)
     files = order_files(record)
-    path = records.write_orders(home, event_id, files)
-    return Written(path, tuple(sorted(files)))
+    with records.lock(home) as swept:
+        path = records.write_orders(home, event_id, files)
+    return Written(path, tuple(sorted(files)), tuple(swept))

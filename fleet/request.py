@@ -6,7 +6,7 @@ horizon, the fleet's rated total and past calls are left to those who know them.
 
 import re
 from collections.abc import Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import Final
 
 import numpy as np
@@ -94,6 +94,15 @@ def request(
         raise Refused(problems)
     at, start, end = (time.astype("datetime64[us]") for time in times.values())
     return Request(event_id, node_id, Direction(direction), purpose, at, start, end, kw)
+
+
+def check_words(event_id: str | None, purpose: str, kw: float) -> None:
+    """Refused for an id, a purpose or kW that no request can have: known before anything is read or quoted."""
+    problems = [] if event_id is None else _id_problems(event_id)
+    problems += _word_problems(str(Direction.SHED), purpose)
+    problems += _kw_problems(np.array([kw]))[:1]
+    if problems:
+        raise Refused([replace(problem, file="call", row=None) for problem in problems])
 
 
 def default_event_id(called_at: np.datetime64, node_id: str) -> str:

@@ -28,6 +28,8 @@ MAKING: Final = ".making-"
 SEAL: Final = "seal.json"
 KINDS: Final = ("call", "orders", "settlement")
 REVISION: Final = re.compile(rf"({'|'.join(KINDS)})-(\d{{3,}})")
+UNPRINTED: Final = re.compile("[\x7f-\x9f\xad\u200b-\u200f\u2028-\u202e\u2060-\u206f\ufeff]")
+"""Characters that JSON lets through and that could steer a terminal or turn a text round."""
 HEX_DIGEST: Final = re.compile(r"[0-9a-f]{64}")
 
 
@@ -171,7 +173,7 @@ def json_text(value: Any) -> str:
         raise FleetError(
             f"{_bad_place(value, '')}: is not a finite number; write null where there is none"
         ) from error
-    return text + "\n"
+    return UNPRINTED.sub(lambda found: f"\\u{ord(found[0]):04x}", text) + "\n"
 
 
 def _plain_number(value: Any) -> Any:

@@ -194,18 +194,20 @@ def call_json(survey: Survey, made: Call) -> dict[str, Any]:
 def orders_lines(written: Written) -> list[str]:
     """Orders that were written."""
     texts = sum(name.endswith(".txt") for name in written.files)
-    return [f"{texts} orders in {written.path}, each as text and as JSON"]
+    notes = [f"note: {note}" for note in written.notes]
+    return [f"{texts} orders in {written.path}, each as text and as JSON", *notes]
 
 
 def orders_json(written: Written) -> dict[str, Any]:
     """The same as a document."""
-    return {"path": str(written.path), "files": list(written.files)}
+    return {"path": str(written.path), "files": list(written.files), "notes": list(written.notes)}
 
 
 def settle_lines(settled: Settled) -> list[str]:
     """A settlement that was written: its statement's text, and where it lies."""
     text = (settled.path / "statement.txt").read_text(encoding="utf-8").rstrip("\n").split("\n")
-    return [*text, f"settlement: {settled.path}"]
+    said = [f"note: {note}" for note in settled.notes if note not in settled.settlement.notes]
+    return [*text, *said, f"settlement: {settled.path}"]
 
 
 def settle_json(settled: Settled) -> dict[str, Any]:

@@ -118,7 +118,7 @@ def read_raw(path: Path, span: tuple[pd.Timestamp, pd.Timestamp] | None = None) 
 
     Headings lose spaces at their ends. CSV rows keep their file line number as index (heading = 1); Parquet
     rows count from 1. Blank CSV lines are left out. With `span`, Parquet rows whose interval_start carries a zone
-    and lies outside [from, to) are left out too. Nested Parquet values come as text, which no column takes.
+    and lies outside [from, to) are left out too. Nested Parquet values come as bytes, which no column takes.
     Raises Refused where the file cannot be read as a table.
     """
     if path.is_dir():
@@ -280,12 +280,13 @@ def _plain(
 
 
 def _scalars(column: Any) -> Any:
-    """The column itself; lists, structs and the like as the text of each value."""
+    """The column itself; lists, structs and the like as the bytes of each value's text, which nothing takes."""
     if pa.types.is_dictionary(column.type):
         column = column.cast(column.type.value_type)
     if not pa.types.is_nested(column.type):
         return column
-    return pa.array([None if value is None else str(value) for value in column.to_pylist()], type=pa.string())
+    texts = [None if value is None else str(value).encode() for value in column.to_pylist()]
+    return pa.array(texts, type=pa.binary())
 
 
 def _numbered(found: Any, rows: AnyArray) -> pd.DataFrame:

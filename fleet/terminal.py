@@ -4,10 +4,16 @@ Owns how things are shown, never what. Control characters in any text are made h
 """
 
 import json
+import os
 import sys
 from collections.abc import Iterable
+from contextlib import suppress
+from typing import Final
 
-import numpy as np
+from fleet.errors import FleetError
+
+FORMULA_SIGNS: Final = ("=", "+", "-", "@", "\t", "\r")
+"""A cell of CSV that starts with one of these is a formula to a spreadsheet."""
 
 
 class Terminal:
@@ -16,6 +22,9 @@ class Terminal:
     def __init__(self, as_json: bool) -> None:
         self.as_json = as_json
         self._shown = False
+        for stream in (sys.stdout, sys.stderr):
+            if hasattr(stream, "reconfigure"):
+                stream.reconfigure(errors="backslashreplace")
 
     def progress(self, text: str) -> None:
         """One line of progress, on a terminal only."""
@@ -28,15 +37,16 @@ class Terminal:
         """The command's result: lines for a person, or the document."""
         self._clear()
         if self.as_json:
-            sys.stdout.write(json.dumps(document, indent=1, default=_plain, allow_nan=False) + "\n")
+            _write(json.dumps(document, indent=1, default=_plain, allow_nan=False) + "\n")
         else:
-            sys.stdout.write("".join(f"{harmless(line)}\n" for line in lines))
+            _write("".join(f"{harmless(line)}\n" for line in lines))
 
     def fail(self, message: str, document: object) -> None:
         """A refusal: the message on stderr, with `as_json` the document on stdout too."""
         self._clear()
         if self.as_json:
-            self.put((), document)
+            with suppress(FleetError):
+                self.put((), document)
         sys.stderr.write("".join(f"{harmless(line)}\n" for line in message.split("\n")))
 
     def _clear(self) -> None:
@@ -45,15 +55,41 @@ class Terminal:
             self._shown = False
 
 
+def _write(text: str) -> None:
+    """To stdout at once; a reader that has gone away is no error, a full disk is."""
+    try:
+        sys.stdout.write(text)
+        sys.stdout.flush()
+    except BrokenPipeError:
+        _to_nowhere()
+    except OSError as error:
+        _to_nowhere()
+        raise FleetError(
+            f"standard output cannot be written ({error.strerror}); what the command did is done; "
+            "free some space or send the output elsewhere"
+        ) from error
+
+
+def _to_nowhere() -> None:
+    """Let what is still buffered for stdout go nowhere, so that the end of the program does not trip over it."""
+    with suppress(OSError, ValueError):
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+
+
 def harmless(text: str) -> str:
     """Text with control characters (escape codes too) shown as their numbers."""
     return "".join(char if char.isprintable() else f"\\x{ord(char):02x}" for char in text)
 
 
+def csv_text(text: str) -> str:
+    """A text as a cell of CSV: harmless, and with an apostrophe before what a spreadsheet would work out."""
+    plain = harmless(text)
+    return f"'{plain}" if text.startswith(FORMULA_SIGNS) else plain
+
+
 def _plain(value: object) -> object:
     """numpy and other values as JSON knows them."""
-    if isinstance(value, np.generic):
-        return value.item()
-    if isinstance(value, np.ndarray):
-        return value.tolist()
+    for convert in ("item", "tolist"):
+        if hasattr(value, convert) and (convert == "tolist" or getattr(value, "shape", None) == ()):
+            return getattr(value, convert)()
     return str(value)

@@ -4,6 +4,7 @@ Owns what can be said of a table alone. What tables say about each other is refe
 folder.py's. Every bad cell becomes a Problem and a missing value; nothing is filled or clipped.
 """
 
+import re
 from collections.abc import Iterable
 from dataclasses import dataclass
 from difflib import get_close_matches
@@ -15,7 +16,7 @@ import pandas as pd
 from fleet.errors import Problem
 from fleet.schema import Column, Table
 from fleet.tables import stable
-from fleet.wall_time import off_grid, read_times
+from fleet.wall_time import END_DAY, FIRST_DAY, SERIAL_PATTERN, not_a_serial, off_grid, read_times
 from sites.units import AnyArray, Bools
 
 KEYS: Final[dict[str, tuple[str, ...]]] = {
@@ -78,7 +79,10 @@ def typed(raw: pd.DataFrame, table: Table, reading: Reading) -> Typed:
         else:
             values, good = _cells(given, column)
             bad = ~(good | empty)
-            why = pd.Series(column.expected, index=given.index)
+            words = np.full(len(given), column.expected, dtype=object)
+            if column.type == "day":
+                words[bad] = [_no_day(value, column.expected) for value in given[bad]]
+            why = pd.Series(words, index=given.index)
         problems += _named(reading.file, column.name, given[bad], why[bad], _advice(column))
         if column.required == "yes":
             wanted = pd.Series(column.expected, index=given.index)
@@ -148,7 +152,16 @@ def _days(given: pd.Series) -> tuple[pd.Series, Bools]:
     texts = given.astype(object).map(str, na_action="ignore")
     shaped = texts.str.fullmatch(_DAY_PATTERN).fillna(False).to_numpy(dtype=bool)
     days = pd.to_datetime(texts.where(shaped).str[:10], format="%Y-%m-%d", errors="coerce")
+    days = days.where((days >= pd.Timestamp(FIRST_DAY)) & (days < pd.Timestamp(END_DAY)))
     return days.astype("datetime64[s]"), days.notna().to_numpy()
+
+
+def _no_day(value: object, expected: str) -> str:
+    """What was expected in place of a value that is no date."""
+    text = str(value)
+    if SERIAL_PATTERN.fullmatch(text):
+        return not_a_serial(expected, text)
+    return f"{expected} that exists, from 1970 to 2199" if re.fullmatch(_DAY_PATTERN, text) else expected
 
 
 def _numbers(given: pd.Series, column: Column) -> tuple[pd.Series, Bools]:

@@ -20,6 +20,13 @@ TIME_PATTERN: Final = (
 )
 _WHOLE: Final = re.compile(TIME_PATTERN)
 _DAY_US: Final = 86_400_000_000
+FIRST_DAY: Final = np.datetime64("1970-01-01", "us")
+END_DAY: Final = np.datetime64("2200-01-01", "us")
+WITHIN: Final = "a time from 1970 to 2199"
+"""Times outside are slips of the pen, and some zones have no rules for them."""
+SERIAL_PATTERN: Final = re.compile(r"[2-9]\d{4}(?:\.\d+)?")
+_SERIAL_ZERO: Final = pd.Timestamp("1899-12-30")
+"""Day 0 of spreadsheets' day numbers (1 is 1 January 1900, and a 29 February 1900 is counted)."""
 
 
 @dataclass(frozen=True)
@@ -124,7 +131,7 @@ def read_times(series: pd.Series, reading: str, timezone: str, key: pd.Series) -
     """
     if isinstance(series.dtype, pd.DatetimeTZDtype):
         utc = series.dt.tz_convert("UTC").dt.tz_localize(None).to_numpy().astype("datetime64[us]")
-        return ReadTimes(utc, np.full(len(utc), "", dtype=object), 0)
+        return ReadTimes(utc, np.where(_astray(utc), WITHIN, "").astype(object), 0)
     codes, uniques = pd.factorize(series.astype(object), use_na_sentinel=True)
     texts = pd.Series(np.asarray(uniques, dtype=object), dtype=object).map(_as_text).astype(object)
     parts = texts.str.extract(f"^{TIME_PATTERN}$").astype(object)
@@ -132,6 +139,10 @@ def read_times(series: pd.Series, reading: str, timezone: str, key: pd.Series) -
     written = parts[0] + "T" + parts[1].where(parts[1] != "", "00:00")
     naive = pd.to_datetime(written, format="ISO8601", errors="coerce").to_numpy().astype("datetime64[us]")
     fault = np.where(np.isnat(naive) & (texts != "").to_numpy(), "a time in ISO 8601", "").astype(object)
+    serial = (fault != "") & texts.str.fullmatch(SERIAL_PATTERN).to_numpy(dtype=bool)
+    fault[serial] = [not_a_serial("a time in ISO 8601", text) for text in texts[serial]]
+    astray = _astray(naive)
+    fault[astray], naive[astray] = WITHIN, np.datetime64("NaT")
     utc, shift_known = _by_offset(naive, parts[2].to_numpy())
     bare = ~shift_known & ~np.isnat(naive)
     if reading == "offset":
@@ -142,6 +153,19 @@ def read_times(series: pd.Series, reading: str, timezone: str, key: pd.Series) -
     elif reading == "local":
         return _resolve_local(codes, utc, naive, bare, fault, timezone, key)
     return ReadTimes(*_spread(codes, utc, fault), 0)
+
+
+def not_a_serial(expected: str, text: str) -> str:
+    """What was expected in place of a spreadsheet's day number, and the time that number stands for."""
+    time = (_SERIAL_ZERO + pd.Timedelta(days=float(text))).round("s")
+    shown = f"{time:%Y-%m-%d}" if "." not in text else f"{time:%Y-%m-%dT%H:%M:%S}"
+    return f"{expected}, not a spreadsheet's day number ({text} is {shown})"
+
+
+def _astray(times: Times) -> Bools:
+    """Mask of the times, any shape, that no fleet lives in; NaT is not counted."""
+    mask: Bools = ~np.isnat(times) & ((times < FIRST_DAY) | (times >= END_DAY))
+    return mask
 
 
 def _as_text(value: object) -> str:
