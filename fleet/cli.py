@@ -160,9 +160,13 @@ def call(
     Example: shedwright call rehearsal --kw 1500 --from 2026-07-15T16:00 --to 2026-07-15T19:00
     --node North --at 2026-07-15T13:00 --event practice-2 --purpose rehearsal
     """
-    from fleet import calling, desk, show
+    from fleet import calling, desk, records, show
+    from fleet.request import check_words
 
     terminal = Terminal(json)
+    check_words(event, purpose, kw)
+    if event is not None:
+        records.check_free(fleet, event)
     survey = desk.survey(fleet, _ask(fleet, start, end, node, at, direction), terminal.progress, kw)
     made = calling.call(survey, kw, event, purpose, fleet, accept_less, progress=terminal.progress)
     terminal.put(show.call_lines(survey, made), show.call_json(survey, made))
