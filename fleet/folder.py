@@ -22,6 +22,7 @@ from fleet.public_days import public_days
 from fleet.references import cross_problems, unmapped_meters
 from fleet.schema import table, tables
 from fleet.settings import FILE, Settings, parse_settings
+from fleet.starter import example_settings, without_examples
 from fleet.tables import empty_frame, read_raw
 from fleet.values import Reading, Typed, typed
 from fleet.wall_time import local_parts, local_text, on_grid, parse_time, utc_timestamp
@@ -121,6 +122,7 @@ def survey_folder(
         return Survey(None, refused.problems)
     wanted = [name for name in tables("fleet") if (names is None or name in names) and name not in without]
     sources, faults = _sources(path)
+    faults += example_settings(settings)
     frames, notes, unreadable = {}, [], False
     for name, table_of in tables("fleet").items():
         source = sources.get(name)
@@ -131,8 +133,9 @@ def survey_folder(
             continue
         read = _read(source, name, settings)
         unreadable |= not len(read.frame.columns)
-        frames[name] = read.frame if len(read.frame.columns) else empty_frame(table_of)
-        faults += read.problems
+        frame = read.frame if len(read.frame.columns) else empty_frame(table_of)
+        frames[name], examples = without_examples(frame, source.name, name)
+        faults += examples + read.problems
         notes += read.notes
         digests |= _digests(source, path) if len(read.frame.columns) else {}
     if "tariffs" in wanted:
