@@ -81,6 +81,45 @@ def sample(
 
 
 @app.command()
+def begin(
+    directory: Annotated[Path, typer.Argument(metavar="DIR", help="Folder to be made; it must not exist.")],
+    book: Annotated[
+        Path | None, typer.Option("--from", help="A workbook (.xlsx) with one sheet per table.")
+    ] = None,
+    mapping: Annotated[
+        Path | None,
+        typer.Option("--mapping", help="The mapping file of its headings, read and confirmed by you."),
+    ] = None,
+    name: Annotated[str | None, typer.Option("--name", help="The fleet's name.")] = None,
+    timezone: Annotated[str | None, typer.Option("--timezone", help="IANA name: Europe/Athens.")] = None,
+    currency: Annotated[str | None, typer.Option("--currency", help="ISO 4217: EUR.")] = None,
+    price: Annotated[float | None, typer.Option("--price", help="One energy price, per kWh.")] = None,
+    json: Json = False,
+) -> None:
+    """Start a fleet folder of your own: with example rows, or from a workbook.
+
+    Example: shedwright begin mine --from fleet.xlsx, then with --mapping fleet.mapping.csv
+    """
+    from fleet import begin as beginning
+
+    terminal = Terminal(json)
+    told = {"name": name, "timezone": timezone, "currency": currency, "energy_price_per_kwh": price}
+    given = {key: value for key, value in told.items() if value is not None}
+    if book is None:
+        if mapping is not None:
+            raise FleetError("--mapping without --from: name the workbook it maps, too")
+        begun = beginning.begin(directory, given)
+    elif mapping is None:
+        suggested = beginning.suggest_mapping(directory, book)
+        terminal.put(beginning.suggested_lines(suggested), beginning.suggested_json(suggested))
+        raise typer.Exit(REFUSED)
+    else:
+        terminal.progress("reading the workbook")
+        begun = beginning.begin_from(directory, book, mapping, given)
+    terminal.put(beginning.begun_lines(begun), beginning.begun_json(begun))
+
+
+@app.command()
 def columns(
     table: Annotated[
         str | None, typer.Argument(metavar="[TABLE]", help="One table; none: all of them.")
