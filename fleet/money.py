@@ -72,6 +72,12 @@ def to_minor(amount: Decimal, currency: str) -> Decimal:
     return amount.quantize(Decimal(1).scaleb(-digits), rounding=ROUND_HALF_UP)
 
 
+def told(amount: Decimal, currency: str) -> str:
+    """An amount as text with the currency's decimals and no minus before zero; a record keeps four."""
+    rounded = to_minor(amount, currency)
+    return f"{rounded if rounded else abs(rounded)}"
+
+
 def largest_remainder(
     parts: Sequence[float], site_ids: Sequence[str], total: Decimal, currency: str
 ) -> AnyArray:

@@ -4,29 +4,35 @@ Owns the layout only; every figure is a row of the settlement's tables.
 """
 
 import json
-from collections.abc import Hashable, Mapping
+from collections.abc import Hashable, Iterator, Mapping, Sequence
 from decimal import Decimal
 from typing import Any
 
 import pandas as pd
 
 from fleet.callfacts import CallFacts
+from fleet.changes import change_lines, changes
+from fleet.money import told
 from fleet.settlement import Settlement
 from fleet.words import plain
 
 WIDTH = 118
 
 
-def statements(settlement: Settlement, facts: CallFacts) -> dict[str, str]:
-    """Files of a settlement's folder: statement.txt and statement.json."""
+def statements(
+    settlement: Settlement, facts: CallFacts, before: Mapping[str, pd.DataFrame] | None = None
+) -> dict[str, str]:
+    """Files of a settlement's folder: statement.txt and statement.json; before: the revision before's tables."""
+    changed = [] if before is None else changes(before, settlement.frames, facts.prices.currency)
+    document = statement_json(settlement, facts, changed)
     return {
-        "statement.txt": statement_text(settlement, facts),
-        "statement.json": json.dumps(statement_json(settlement, facts), indent=1, sort_keys=True) + "\n",
+        "statement.txt": statement_text(settlement, facts, changed),
+        "statement.json": json.dumps(document, indent=1, sort_keys=True) + "\n",
     }
 
 
-def statement_text(settlement: Settlement, facts: CallFacts) -> str:
-    """Statement as plain text, one line per called site, then the fleet and how it was worked out."""
+def statement_text(settlement: Settlement, facts: CallFacts, changed: Sequence[dict[str, Any]] = ()) -> str:
+    """Statement as plain text, one line per called site, then the fleet, what changed and how it was worked out."""
     sites, currency = settlement.sites, facts.prices.currency
     revision = int(sites["revision"].iloc[0])
     lines = [
@@ -46,13 +52,43 @@ def statement_text(settlement: Settlement, facts: CallFacts) -> str:
         f"fleet: asked {asked:,.1f} kWh, delivered {delivered:,.1f} kWh over the event "
         f"(rebounds inside it netted); paid {total} {currency}",
         "",
-        "how it was worked out:",
+        *_recovery_lines(sites),
+        *_guard_lines(sites),
+        *[f"excused: {plain(str(row.site_id))}: {plain(str(row.why))}" for row in _excused(sites)],
     ]
+    if settlement.postings["from_revision"].notna().any():
+        posted = sum(settlement.postings["amount"], Decimal(0))
+        lines += [f"changed against revision {revision - 1}, posting {told(posted, currency)} {currency}:"]
+        lines += change_lines(list(changed)) or ["  nothing"]
+    lines += ["", "how it was worked out:"]
     used = {str(facts.rules[str(site)].name): facts.rules[str(site)] for site in sites["site_id"]}
     lines += [f"  {name}: {rule.order_of_rounding}" for name, rule in sorted(used.items())]
     lines += [f"  {name}: {rule.source}" for name, rule in sorted(used.items()) if rule.source]
     lines += [f"note: {plain(note)}" for note in settlement.notes]
     return "\n".join(lines) + "\n"
+
+
+def _excused(sites: pd.DataFrame) -> Iterator[Any]:
+    return sites[sites["why"].notna()].itertuples()
+
+
+def _recovery_lines(sites: pd.DataFrame) -> list[str]:
+    """Energy taken back after the windows, beside what was delivered and not netted."""
+    midnight, full = sites["recovery_until_midnight_kwh"], sites["recovery_until_full_kwh"]
+    return [
+        f"energy taken back after the own windows, not netted: {midnight.sum():,.1f} kWh until midnight "
+        f"({int(midnight.notna().sum())} sites), {full.sum():,.1f} kWh until the tank is full "
+        f"({int(full.notna().sum())} sites)"
+    ]
+
+
+def _guard_lines(sites: pd.DataFrame) -> list[str]:
+    """Both adjustments of the sites whose charging was taken out of the adjustment window."""
+    return [
+        f"adjustment without charging ({row.guard} meter taken out): {plain(str(row.site_id))} "
+        f"{row.adjustment:.3f}, with it {row.adjustment_charged:.3f} ({row.adjustment_kind})"
+        for row in sites[(sites["guard"] != "none") & (sites["adjustment_kind"] != "none")].itertuples()
+    ]
 
 
 def _site_line(row: Mapping[Hashable, Any]) -> str:
@@ -68,7 +104,9 @@ def _site_line(row: Mapping[Hashable, Any]) -> str:
     )
 
 
-def statement_json(settlement: Settlement, facts: CallFacts) -> dict[str, object]:
+def statement_json(
+    settlement: Settlement, facts: CallFacts, changed: Sequence[dict[str, Any]] = ()
+) -> dict[str, object]:
     """Statement as one JSON document; money as text, so that no cent is lost."""
     sites = settlement.sites.astype(object).where(settlement.sites.notna(), None)
     rows = [
@@ -81,6 +119,8 @@ def statement_json(settlement: Settlement, facts: CallFacts) -> dict[str, object
         "sites": rows,
         "total": str(sum(settlement.sites["total"], Decimal(0))),
         "notes": list(settlement.notes),
+        "changes": list(changed),
+        "sources": {rule.name: rule.source for rule in facts.rules.values()},
         "order_of_rounding": {
             rule.name: rule.order_of_rounding for rule in facts.rules.values() if rule is not None
         },

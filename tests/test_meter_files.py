@@ -1,0 +1,112 @@
+"""Files of readings named by hand: other forms brought to the meters table, what cannot be is refused."""
+
+from pathlib import Path
+
+import numpy as np
+import pandas as pd
+import pytest
+from feeds import START, block, feed, meter_reading, reading_type, usage_point
+
+from fleet.errors import FleetError
+from fleet.folder import FleetFolder
+from fleet.meter_files import read_meter_file
+from fleet.schema import tables
+from fleet.settings import Settings
+from fleet.tables import empty_frame
+
+SINCE, UNTIL = np.datetime64("2025-07-10T00:00", "us"), np.datetime64("2025-07-11T00:00", "us")
+
+
+def folder_of(path: Path, minutes: int = 15) -> FleetFolder:
+    settings = Settings(name="f", timezone="America/New_York", currency="USD", interval_minutes=minutes)
+    frames = {name: empty_frame(table) for name, table in tables("fleet").items()}
+    frames["meter_map"] = pd.DataFrame(
+        {"meter_id": ["m1", "House"], "site_id": ["a", "b"], "role": "building", "sign": 1}
+    )
+    return FleetFolder(path, settings, frames, {}, {}, [])
+
+
+def read(folder: Path, text: str, minutes: int = 15, name: str = "given.csv") -> pd.DataFrame:
+    path = folder / name
+    path.write_text(text)
+    frame = read_meter_file(folder_of(folder, minutes), SINCE, UNTIL, path).frame
+    return frame.sort_values(["meter_id", "interval_start"], ignore_index=True)
+
+
+def refusal(folder: Path, text: str, minutes: int = 15) -> str:
+    with pytest.raises(FleetError) as caught:
+        read(folder, text, minutes)
+    return str(caught.value)
+
+
+def test_energy_and_interval_ends_become_power_and_starts(tmp_path: Path) -> None:
+    text = (
+        "meter_id,interval_end,kwh\nm1,2025-07-10T15:15Z,25\nm1,2025-07-10T15:30Z,30\nm1,2025-07-10T15:45Z,\n"
+    )
+    found = read(tmp_path, text)
+    assert found["kw"].tolist()[:2] == [100.0, 120.0]
+    assert found["quality"].tolist() == ["measured", "measured", "missing"]
+    assert found["interval_start"].dt.strftime("%H:%M").tolist() == ["15:00", "15:15", "15:30"]
+
+
+def test_finer_readings_are_averaged_and_a_part_is_missing(tmp_path: Path) -> None:
+    rows = [(f"2025-07-10T15:{minute:02d}Z", 100 + minute) for minute in range(0, 40, 5) if minute != 35]
+    text = "meter_id,interval_start,kw,quality\n" + "".join(
+        f"m1,{at},{kw},{'edited' if kw == 120 else 'measured'}\n" for at, kw in rows
+    )
+    found = read(tmp_path, text)
+    assert found["kw"].tolist()[:2] == [105.0, 120.0]
+    assert found["quality"].tolist() == ["measured", "edited", "missing"]
+
+
+def test_coarser_readings_are_refused_and_never_spread(tmp_path: Path) -> None:
+    text = "meter_id,interval_start,kw\nm1,2025-07-10T15:00Z,1\nm1,2025-07-10T16:00Z,2\n"
+    assert refusal(tmp_path, text) == (
+        "given.csv, column interval_start: came intervals of 60 minutes for meter m1; expected the fleet's 15 "
+        "minutes, or parts of it; give finer readings; coarse ones are never spread"
+    )
+
+
+def test_megawatts_and_two_forms_at_once_are_refused(tmp_path: Path) -> None:
+    assert refusal(tmp_path, "meter_id,interval_start,mw\nm1,2025-07-10T15:00Z,1\n") == (
+        "given.csv, row 1, column mw: came readings in MW; expected kw or kwh; "
+        "multiply by 1000 and name the column kw"
+    )
+    both = "meter_id,interval_start,interval_end,kw,kwh\nm1,2025-07-10T15:00Z,2025-07-10T15:15Z,1,1\n"
+    assert refusal(tmp_path, both).splitlines() == [
+        "given.csv, row 1, column interval_end: came both interval_start and interval_end; expected one of them; "
+        "take one column out",
+        "given.csv, row 1, column kwh: came both kw and kwh; expected one of them; take one column out",
+    ]
+
+
+def test_times_of_an_unknown_meter_and_off_the_grid_are_refused(tmp_path: Path) -> None:
+    assert refusal(tmp_path, "meter_id,interval_start,kwh\nx,2025-07-10T15:00Z,1\n").startswith(
+        "given.csv, row 2, column meter_id: came 'x'; expected a meter_id of meter_map; add it to meter_map"
+    )
+    odd = "meter_id,interval_start,kwh\nm1,2025-07-10T15:02Z,1\nm1,2025-07-10T15:07Z,1\n"
+    assert refusal(tmp_path, odd).splitlines()[0] == (
+        "given.csv, column interval_start: came 2025-07-10T15:02:00Z for meter m1; expected starts on the 5-minute "
+        "grid; correct the times"
+    )
+
+
+def test_a_plain_table_goes_the_plain_way_and_another_year_is_left_out(tmp_path: Path) -> None:
+    text = (
+        "meter_id,interval_start,kw\nm1,2025-07-10T15:00Z,7\nm1,2025-07-10T15:15Z,8\nm1,2024-07-10T15:00Z,9\n"
+    )
+    assert read(tmp_path, text)["kw"].tolist() == [7.0, 8.0]
+
+
+def test_a_feed_goes_by_title_or_by_the_usage_points_number(tmp_path: Path) -> None:
+    text = feed(
+        usage_point("01", "House"),
+        meter_reading(),
+        reading_type(),
+        block([25_000]),
+        usage_point("m1", "anything"),
+        meter_reading("1", "7", "m1"),
+        block([50_000], start=START + 900, point="m1"),
+    )
+    found = read(tmp_path, text, name="feed.xml")
+    assert list(zip(found["meter_id"], found["kw"])) == [("House", 100.0), ("m1", 200.0)]
