@@ -230,7 +230,21 @@ def settle(
     event: EventId,
     meter: Annotated[
         Path | None,
-        typer.Option("--meter", help="Readings that replace the folder's for the same intervals."),
+        typer.Option(
+            "--meter",
+            help="Readings that replace the folder's for the same intervals: CSV, Parquet or an interval-data "
+            "feed (.xml).",
+        ),
+    ] = None,
+    excuse: Annotated[
+        list[str] | None, typer.Option("--excuse", help="A site that earns and owes nothing; repeatable.")
+    ] = None,
+    why: Annotated[str, typer.Option("--why", help="Why the sites are excused; kept in the record.")] = "",
+    again: Annotated[
+        int | None,
+        typer.Option(
+            "--again", help="Work this old revision out again and compare its bytes; writes nothing."
+        ),
     ] = None,
     json: Json = False,
 ) -> None:
@@ -241,8 +255,37 @@ def settle(
     from fleet import settling, show
 
     terminal = Terminal(json)
-    settled = settling.settle_event(fleet, event, meter, terminal.progress)
+    if again is not None:
+        different = settling.settle_again(fleet, event, again, meter)
+        text = f"settlement revision {again}: " + (
+            ", ".join(different) + " differ" if different else "same bytes"
+        )
+        terminal.put([text], {"revision": again, "different": different})
+        raise typer.Exit(FAULT if different else 0)
+    excused = dict.fromkeys(excuse or [], why)
+    settled = settling.settle_event(fleet, event, meter, terminal.progress, excuse=excused)
     terminal.put(show.settle_lines(settled), show.settle_json(settled))
+
+
+@app.command()
+def reckon(
+    fleet: FleetDir,
+    event: EventId,
+    site: Annotated[str, typer.Argument(metavar="SITE", help="The site's id.")],
+    revision: Annotated[
+        int | None, typer.Option("--revision", help="A settlement revision; default the newest.")
+    ] = None,
+    json: Json = False,
+) -> None:
+    """Show how one site was settled, line by line, from the record alone.
+
+    Example: shedwright reckon rehearsal practice hotel-03
+    """
+    from fleet import reckoning, reckoning_page
+
+    terminal = Terminal(json)
+    found = reckoning.reckon(fleet, event, site, revision)
+    terminal.put(reckoning_page.reckoning_lines(found), found)
 
 
 @app.command()
