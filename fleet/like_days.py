@@ -220,7 +220,8 @@ def _low_usage(eligible: Bools, rank_value: Floats, rule: SettlementRule) -> Boo
         left = eligible & ~dropped
         pool = left & (np.cumsum(left, axis=1) <= rule.pool_days)
         mean = np.where(pool, value, 0.0).sum(axis=1) / np.maximum(pool.sum(axis=1), 1)
-        low = pool & (value < (rule.low_usage_fraction or 0.0) * mean[:, None])
+        # By size: a site that exports on its usual days uses little on a day near zero.
+        low = pool & (np.abs(value) < (rule.low_usage_fraction or 0.0) * np.abs(mean)[:, None])
         if not low.any():
             break
         dropped |= low

@@ -1,12 +1,17 @@
 """A settlement written a second time, in plain loops over sites, days and intervals; imports nothing of the fleet.
 
+Only the regression's slopes are solved by numpy's least squares.
+
 Times are aware datetimes in UTC, local time comes from zoneinfo, money is left out. Rules are plain dictionaries.
 """
 
 from datetime import date, datetime, timedelta
 from zoneinfo import ZoneInfo
 
+import numpy as np
+
 GOOD = ("measured", "edited")
+OF_DAYS = ("like_days", "event_days", "regression", "base_load")
 
 
 def settle_site(case: dict, site: str) -> dict:
@@ -20,11 +25,8 @@ def settle_site(case: dict, site: str) -> dict:
     while at < case["horizon_end"]:
         shown.append(at)
         at += step
-    base = {
-        at: like_value(case, site, rule, used, at) if method in ("like_days", "event_days") else None
-        for at in shown
-    }
-    kind, applied = "none", 1.0
+    base = {at: like_value(case, site, rule, used, at) if method in OF_DAYS else None for at in shown}
+    kind, applied, charged = "none", 1.0, None
     doubtful = False
     adjusted = dict(base)
     if method == "before_after":
@@ -34,7 +36,9 @@ def settle_site(case: dict, site: str) -> dict:
         adjusted = dict(base)
         method = "before_after" if values else "none"
     elif method != "none" and rule["adjustment"] != "none":
-        kind, applied, doubtful = adjustment(case, site, rule, used)
+        kind, applied, doubtful = adjustment(case, site, rule, used, guarded=True)
+        if guarded(case, site, rule):
+            charged = adjustment(case, site, rule, used, guarded=False)[1]
         for at in shown:
             if base[at] is not None and kind == "ratio":
                 adjusted[at] = base[at] * applied
@@ -70,6 +74,9 @@ def settle_site(case: dict, site: str) -> dict:
         state = "meter_missing"
     assert series is not None
     return {
+        "charged": charged,
+        "beyond": beyond(case, site, used) if method == "regression" else None,
+        "until_midnight": taken_back(case, site, rows),
         "rows": rows,
         "days": days,
         "method": method,
@@ -79,6 +86,106 @@ def settle_site(case: dict, site: str) -> dict:
         "committed_kwh": committed,
         "state": state,
     }
+
+
+def taken_back(case: dict, site: str, rows: dict) -> float | None:
+    """Delivered with its sign turned, from the window's end to the end of that local day."""
+    end, step = case["windows"][site][1], timedelta(minutes=case["step_minutes"])
+    day, total = local(case, end - step)[0], 0.0
+    for at, (_, _, _, delivered, _) in rows.items():
+        if at >= end and local(case, at)[0] == day:
+            if delivered is None:
+                return None
+            total -= delivered * case["step_minutes"] / 60
+    return total
+
+
+def degrees(case: dict, site: str, at: datetime) -> float | None:
+    return case["dry_bulb"][site].get(at)
+
+
+def slot_degrees(case: dict, site: str, day: date, slot: int) -> float | None:
+    values = [degrees(case, site, at) for at in case["by_slot"].get((day, slot), [])]
+    return None if not values or None in values else sum(values) / len(values)
+
+
+def peak(case: dict, site: str, day: date) -> float | None:
+    """Highest dry bulb of a day of which every slot is known."""
+    highest = None
+    for slot in range(1440 // case["step_minutes"]):
+        if (day, slot) in case["by_slot"]:
+            value = slot_degrees(case, site, day, slot)
+            if value is None:
+                return None
+            highest = value if highest is None else max(highest, value)
+    return highest
+
+
+def stretches(value: float, knots: list[float]) -> list[float]:
+    parts = [min(value, knots[0])]
+    for number, knot in enumerate(knots):
+        top = knots[number + 1] if number + 1 < len(knots) else 1e9
+        parts.append(min(max(value - knot, 0.0), top - knot))
+    return parts
+
+
+def training(case: dict, site: str, used: list[date]) -> list[tuple[int, int, float, float]]:
+    """(weekday, slot, kW, degC) of every measured slot of the used days."""
+    rows = []
+    for day in used:
+        for slot in range(1440 // case["step_minutes"]):
+            kw, warm = slot_value(case, site, day, slot)[1], slot_degrees(case, site, day, slot)
+            if kw is not None and warm is not None:
+                rows.append((day.weekday(), slot, kw, warm))
+    return rows
+
+
+def beyond(case: dict, site: str, used: list[date]) -> float:
+    warm = [row[3] for row in training(case, site, used)]
+    event = [degrees(case, site, at) for at in in_hours(case, case["event_start"], case["event_end"])]
+    return max(0.0, max(event) - max(warm), min(warm) - min(event))
+
+
+def regression(case: dict, site: str, rule: dict, used: list[date]) -> tuple[dict, list[float]]:
+    """Level of each weekday and slot, and slopes, least squares on deviations from each group's mean."""
+    key = (site, tuple(used), tuple(rule["temperature_knots_c"]))
+    if key in case["fits"]:
+        return case["fits"][key]
+    groups: dict = {}
+    for weekday, slot, kw, warm in training(case, site, used):
+        groups.setdefault((weekday, slot), []).append([kw, *stretches(warm, rule["temperature_knots_c"])])
+    means = {group: [sum(column) / len(rows) for column in zip(*rows)] for group, rows in groups.items()}
+    off = [
+        [value - mean for value, mean in zip(row, means[group])]
+        for group, rows in groups.items()
+        for row in rows
+    ]
+    matrix = np.array(off)
+    slopes = np.linalg.lstsq(matrix[:, 1:], matrix[:, 0], rcond=1e-5)[0].tolist()
+    levels = {
+        group: mean[0] - sum(slope * part for slope, part in zip(slopes, mean[1:]))
+        for group, mean in means.items()
+    }
+    case["fits"][key] = (levels, slopes)
+    return levels, slopes
+
+
+def guarded(case: dict, site: str, rule: dict) -> bool:
+    return rule["pre_charge_guard"] != "off" and site in case["charging"]
+
+
+def charging(case: dict, site: str, day: date, moments: list[datetime]) -> float | None:
+    """Mean of the tank meter on a day at the slots of these moments; None if one is lost or none exists."""
+    values = []
+    for at in moments:
+        found = [
+            case["charging"][site].get(one) for one in case["by_slot"].get((day, local(case, at)[1]), [])
+        ]
+        if None in found:
+            return None
+        if found:
+            values.append(sum(found) / len(found))
+    return sum(values) / len(values) if values else None
 
 
 def local(case: dict, at: datetime) -> tuple[date, int]:
@@ -163,7 +270,8 @@ def complaint(case: dict, site: str, rule: dict, day: date, ignore_events: bool 
             exists, value = slot_value(case, site, day, local(case, at)[1])
             if exists and value is None:
                 return "missing_data"
-    return None
+    needs = rule["kind"] == "temperature_regression" or rule["rank"] == "nearest_weather"
+    return "missing_weather" if needs and peak(case, site, day) is None else None
 
 
 def choose_days(case: dict, site: str) -> tuple[dict, str, list[date]]:
@@ -186,7 +294,7 @@ def choose_days(case: dict, site: str) -> tuple[dict, str, list[date]]:
         while again:
             pool = eligible[: rule["pool_days"]]
             mean = sum(rank[day] for day in pool) / max(len(pool), 1)
-            low = [day for day in pool if rank[day] < rule["low_usage_fraction"] * mean]
+            low = [day for day in pool if abs(rank[day]) < rule["low_usage_fraction"] * abs(mean)]
             for day in low:
                 reasons[day] = "low_usage"
                 eligible.remove(day)
@@ -194,7 +302,13 @@ def choose_days(case: dict, site: str) -> tuple[dict, str, list[date]]:
     pool = eligible[: rule["pool_days"]]
     for day in eligible[rule["pool_days"] :]:
         reasons[day] = "enough_days"
-    method = "like_days"
+    kinds = {"temperature_regression": "regression", "maximum_base_load": "base_load"}
+    method = kinds.get(rule["kind"], "like_days")
+    score = {day: value and sign * value for day, value in rank.items()}
+    if rule["rank"] == "nearest_weather":
+        today = peak(case, site, event_day)
+        peaks = {day: peak(case, site, day) for day in rank}
+        score = {day: None if warm is None else -abs(warm - today) for day, warm in peaks.items()}
     lack = rule["minimum_days"] - len(pool)
     if lack > 0 and rule["when_too_few"] == "highest_event_days":
         spare = [
@@ -202,14 +316,15 @@ def choose_days(case: dict, site: str) -> tuple[dict, str, list[date]]:
             for day in reasons
             if reasons[day] == "event_past" and complaint(case, site, rule, day, ignore_events=True) is None
         ]
-        spare.sort(key=lambda day: -sign * rank[day])
+        spare.sort(key=lambda day: -score[day])
         if len(spare) >= lack:
-            pool, method, lack = sorted(pool + spare[:lack], reverse=True), "event_days", 0
+            pool, lack = sorted(pool + spare[:lack], reverse=True), 0
+            method = "event_days" if rule["kind"] == "like_days" else method
     if lack > 0:
         for day in pool:
             reasons[day] = "too_few_days"
         return reasons, "before_after" if rule["when_too_few"] == "before_after" else "none", []
-    used = take(pool, {day: sign * rank[day] for day in pool}, rule)
+    used = take(pool, score, rule)
     for day in pool:
         reasons[day] = "used" if day in used else "not_ranked"
     return reasons, method, used
@@ -220,7 +335,7 @@ def take(pool: list[date], score: dict, rule: dict) -> list[date]:
     take_days = rule["take_days"]
     if rule["rank"] == "recent":
         return pool[:take_days]
-    if rule["rank"] == "highest":
+    if rule["rank"] in ("highest", "nearest_weather"):
         return sorted(pool, key=lambda day: (-score[day], -day.toordinal()))[:take_days]
     left = list(pool)
     spare = max(len(pool) - take_days, 0)
@@ -235,9 +350,30 @@ def take(pool: list[date], score: dict, rule: dict) -> list[date]:
 def like_value(case: dict, site: str, rule: dict, used: list[date], at: datetime) -> float | None:
     """Mean of the used days at this slot; none on a day of another class."""
     event_day = local(case, case["event_start"])[0]
-    day, slot = local(case, at)
+    day = local(case, at)[0]
     if rule["day_classes"] == "weekday_weekend" and is_free(case, day) != is_free(case, event_day):
         return None
+    return level_at(case, site, rule, used, at)
+
+
+def level_at(case: dict, site: str, rule: dict, used: list[date], at: datetime) -> float | None:
+    """What the used days say of a moment, by the rule's kind."""
+    day, slot = local(case, at)
+    if rule["kind"] == "maximum_base_load":
+        sign = 1 if case["direction"] == "shed" else -1
+        moments = in_hours(case, case["event_start"], case["event_end"])
+        highest = []
+        for one in used:
+            values = [slot_value(case, site, one, local(case, moment)[1])[1] for moment in moments]
+            highest.append(max(sign * value for value in values if value is not None))
+        return sign * sum(highest) / len(highest) if highest else None
+    if rule["kind"] == "temperature_regression":
+        levels, slopes = regression(case, site, rule, used)
+        warm = degrees(case, site, at)
+        if warm is None or (day.weekday(), slot) not in levels:
+            return None
+        parts = stretches(warm, rule["temperature_knots_c"])
+        return levels[day.weekday(), slot] + sum(slope * part for slope, part in zip(slopes, parts))
     return average(case, site, used, slot)
 
 
@@ -247,14 +383,21 @@ def average(case: dict, site: str, used: list[date], slot: int) -> float | None:
     return sum(values) / len(values) if values else None
 
 
-def adjustment(case: dict, site: str, rule: dict, used: list[date]) -> tuple[str, float, bool]:
+def adjustment(case: dict, site: str, rule: dict, used: list[date], guarded: bool) -> tuple[str, float, bool]:
     """Kind, factor or kW applied, and whether the window could not be used."""
     times = window_times(case, rule)
     level = [good_value(case, site, at) for at in times]
-    base = [average(case, site, used, local(case, at)[1]) for at in times]
+    base = [level_at(case, site, rule, used, at) for at in times]
     if None in level or None in base or not times:
         return "none", 1.0, True
     a, b = sum(level) / len(level), sum(base) / len(base)
+    if guarded and rule["pre_charge_guard"] != "off" and site in case["charging"]:
+        own = [case["charging"][site].get(at) for at in times]
+        usual = [charging(case, site, day, times) for day in used]
+        usual = [value for value in usual if value is not None]
+        if None in own or not usual:
+            return "none", 1.0, True
+        a, b = a - sum(own) / len(own), b - sum(usual) / len(usual)
     peak = -1e99
     for day in used:
         for slot in range(1440 // case["step_minutes"]):
@@ -267,7 +410,9 @@ def adjustment(case: dict, site: str, rule: dict, used: list[date]) -> tuple[str
         change = a - b
         if cap is not None:
             hours = in_hours(case, case["event_start"], case["event_end"])
-            mean = [average(case, site, used, local(case, at)[1]) for at in hours]
+            mean = [level_at(case, site, rule, used, at) for at in hours]
+            if None in mean:
+                return "additive", change if cap else 0.0, False
             bound = cap * abs(sum(mean) / len(mean))
             change = max(-bound, min(bound, change))
         return "additive", change, False
