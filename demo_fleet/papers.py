@@ -116,7 +116,9 @@ def _tank_status(
         .to_numpy(dtype=np.float64)
     )
     true = inventory_kwh_th[row, called - age - 1] * share
-    read = np.clip(true + rng.standard_normal(len(true)) * blur * capacity, 0.0, capacity)
+    # A capacity in whole ton-hours may be up to 1.8 kWh_th less than the tank's: no gauge reads above it.
+    top = np.floor(capacity - 2.0)
+    read = np.clip(true + rng.standard_normal(len(true)) * blur * capacity, 0.0, top)
     gauged = kind == "measured"
     return pd.DataFrame(
         {
@@ -128,7 +130,7 @@ def _tank_status(
                 gauged, np.round(np.maximum(read - 0.03 * capacity, 0.0)), np.nan
             ),
             "inventory_high_kwh_th": np.where(
-                gauged, np.round(np.minimum(read + 0.03 * capacity, capacity)), np.nan
+                gauged, np.round(np.minimum(read + 0.03 * capacity, top)), np.nan
             ),
             "available": True,
             "quality": kind,

@@ -14,6 +14,7 @@ from demo_folders import short_fleet
 from demo_fleet import buildings, calendar, course, hidden
 from demo_fleet.files import DemoError, read_table
 from demo_fleet.sample import sample
+from fleet.folder import problems
 
 TABLES = (
     "sites", "chillers", "tanks", "nodes", "node_loads", "weather", "loads", "tariffs", "bills", "status",
@@ -289,3 +290,9 @@ def test_names_are_kinds_and_numbers_or_coined_words() -> None:
     assert set(read(40, "nodes")["node_id"]) == {
         "Oramene", "North", "Saltmarsh", "N1", "N2", "N3", "N4", "N5", "S1", "S2", "S3",
     }  # fmt: skip
+
+
+@pytest.mark.parametrize("seed", [1, 2])
+def test_the_folder_passes_every_check_on_input(seed: int) -> None:
+    """Seed 2 once wrote a level a fraction of a kWh_th above a capacity in whole ton-hours."""
+    assert [str(problem) for problem in problems(short_fleet(40, seed).path)] == []
