@@ -55,8 +55,10 @@ def days_read(made: Settled, found: Findings) -> None:
         there[own[own >= 0]] = days.recorded[rows][own >= 0]
     event_day = sheet.frame["day"].to_numpy().astype("datetime64[D]") == days.day[-1]
     rank = np.where(event_day, np.nan, rank)
-    asked = event_day & _without_window(made, sheet.frame["site_id"])
-    base = np.where(asked, np.nan, base)
+    no_window = sheet.frame["site_id"].map(_without_window(made)).to_numpy(dtype=np.bool_)
+    base = np.where(event_day & no_window, np.nan, base)
+    elsewhere = sheet.frame["site_id"].map(_window_elsewhere(made)).to_numpy(dtype=np.bool_)
+    base = np.where(event_day & elsewhere, sheet.numbers("window_base_kw"), base)
     for name, values in (("rank_value", rank), ("window_base_kw", base)):
         kept = np.where(there, values, sheet.numbers(name))
         found.equal("means of a day", sheet, name, kept)
@@ -144,6 +146,13 @@ def adjustment(made: Settled, found: Findings) -> None:
         own_base = base - np.where(guarded, usual, 0.0)
         raw[rows], applied[rows], kind[rows] = _factor(own_level, own_base, peak, limit, rule)
         charged[rows] = np.where(guarded, _factor(level[rows], base, peak, limit, rule)[1], np.nan)
+        if rule.kind == "temperature_regression" and slots.window_days_before.any():
+            # The dry bulb of a window on another day does not stand in the record: as told.
+            raw[rows], applied[rows] = (
+                made.site_numbers(name)[rows] for name in ("adjustment_raw", "adjustment")
+            )
+            charged[rows] = made.site_numbers("adjustment_charged")[rows]
+            kind[rows] = made.sites("adjustment_kind")[rows]
     place = pd.Index(made.site_id).get_indexer(pd.Index(sheet.frame["site_id"]))
     found.equal("adjustment", sheet, "adjustment_raw", raw[place])
     found.equal("adjustment", sheet, "adjustment", applied[place])
@@ -228,14 +237,20 @@ def _hours(hours: float) -> np.timedelta64:
     return np.timedelta64(round(hours * 3_600_000_000), "us")
 
 
-def _without_window(made: Settled, site_id: pd.Series) -> Bools:
-    """Rows of sites whose rule looks at no adjustment window on the event's day, or not only on that day."""
-    none = {
-        site: rule.kind == "before_after" or bool(_slots(made, rule).window_days_before.any())
-        for site, rule in zip(made.site_id.tolist(), made.rules, strict=True)
-    }
-    mask: Bools = site_id.map(none).fillna(True).to_numpy(dtype=np.bool_)
-    return mask
+def _without_window(made: Settled) -> dict[str, bool]:
+    """Sites whose rule looks at no adjustment window on the event's day."""
+    return {site: rule.kind == "before_after" for site, rule in zip(made.site_id.tolist(), made.rules)}
+
+
+def _window_elsewhere(made: Settled) -> dict[str, bool]:
+    """Sites whose window reaches into another day or an hour that comes twice: its mean is taken as told."""
+    found = {}
+    for site, rule in zip(made.site_id.tolist(), made.rules, strict=True):
+        slots = _slots(made, rule)
+        twice = len(np.unique(slots.window)) < len(slots.window)
+        beyond = bool(slots.window_days_before.any()) or twice
+        found[site] = beyond and rule.kind != "before_after"
+    return found
 
 
 def _mean(kw: Floats, exists: Bools) -> Floats:
@@ -333,7 +348,9 @@ def _reasons(
     pool = eligible & (newest <= rule.pool_days)
     reason = np.where(eligible & ~pool, "enough_days", reason)
     short = pool.sum(axis=1) < rule.minimum_days
-    added = (method == "event_days")[:, None] & (told == "used") & (reason == "event_past")
+    ways = ("event_days", "regression", "base_load")
+    filled = np.isin(method.astype(str), ways) & (rule.when_too_few == "highest_event_days")
+    added = filled[:, None] & (told == "used") & (reason == "event_past")
     short &= ~added.any(axis=1)
     score = made.sign * rank
     if rule.rank == "nearest_weather":

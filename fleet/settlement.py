@@ -130,7 +130,11 @@ def day_table(event_id: str, revision: int, plan: Plan, found: Baseline, trace: 
             "mode": trace.modes[site, day],
             "rank_value": np.where(own, np.nan, found.rank_value[site, at]),
             "window_base_kw": np.where(own, trace.window_kw[site], found.day_window_kw[site, at]),
-            "window_charging_kw": np.where(own | (reason == USED), trace.charging_kw[site, day], np.nan),
+            "window_charging_kw": np.where(
+                (own | (reason == USED)) & ~np.isnan(found.adjustment_charged[site]),
+                trace.charging_kw[site, day],
+                np.nan,
+            ),
             "day_kwh": np.where(
                 own | ~np.isin(reason, UNREAD), np.nansum(trace.kw, axis=2)[site, day] * trace.step_h, np.nan
             ),
