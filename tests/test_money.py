@@ -7,12 +7,15 @@ import pytest
 
 from fleet.money import (
     Prices,
+    earned,
     exact,
+    firm_level_charge,
     largest_remainder,
     lines,
     minor_digits,
     paid_share,
     performance_factor,
+    season_factor,
     to_minor,
 )
 from fleet.rules import SettlementRule
@@ -135,3 +138,59 @@ def test_left_over_cents_go_by_largest_remainder_then_site_id() -> None:
     assert uneven.tolist() == [Decimal("0.04"), Decimal("0.02"), Decimal("0.01")]
     assert largest_remainder([0.0, 0.0], ["a", "b"], Decimal("3"), "JPY").tolist() == [2, 1]
     assert sum(largest_remainder([3.0, 1.0], ["a", "b"], Decimal("-0.05"), "USD")) == Decimal("-0.05")
+
+
+def factor(rule: SettlementRule, delivered: list[float], hours: list[int] | None = None) -> float:
+    """Performance factor of 200 kW committed in each interval of an hour."""
+    kw = np.array([delivered], dtype=float)
+    hour = None if hours is None else np.array(hours)
+    return float(
+        performance_factor(kw, np.full(kw.shape, 200.0), np.ones(kw.shape, bool), 1.0, rule, hour)[0]
+    )
+
+
+def test_caps_and_floors_look_at_intervals_hours_or_the_whole_window() -> None:
+    # Two hours of two intervals: 300, 100 and -50, 150; 200 committed in each.
+    kw, hours = [300.0, 100.0, -50.0, 150.0], [0, 0, 1, 1]
+    capped = {"name": "own", "cap_intervals": True, "floor_intervals": True}
+    assert factor(SettlementRule(**capped), kw) == pytest.approx((200 + 100 + 0 + 150) / 800)
+    by_hour = SettlementRule(**capped, performance_by="hour")
+    assert factor(by_hour, kw, hours) == pytest.approx((400 + 100) / 800)
+    whole = SettlementRule(**capped, performance_by="event")
+    assert factor(whole, [900.0, 100.0, -50.0, 150.0], hours) == 1.0
+    assert "negative hours to zero; hours capped at their commitment" in by_hour.order_of_rounding
+
+
+def test_a_season_is_averaged_over_its_hours_and_not_over_its_events() -> None:
+    # One event of one hour at 100 %, one of four at 50 %: 60 %, not 75 %.
+    plain = SettlementRule(name="own")
+    assert season_factor([200.0, 100.0, 100.0, 100.0, 100.0], [200.0] * 5, plain) == pytest.approx(0.6)
+
+
+def test_use_above_a_firm_level_is_charged_by_the_kwh() -> None:
+    rule = SettlementRule(name="own", firm_level_kw=300.0, firm_level_charge_per_kwh=6.0)
+    metered = np.array([[310.0, 290.0, 305.0, np.nan]])
+    inside = np.array([[True, True, True, True]])
+    # 10 kW and 5 kW above in quarter hours: 3.75 kWh at $6.00.
+    assert firm_level_charge(metered, inside, 0.25, rule, 1.0).tolist() == [22.5]
+    assert firm_level_charge(metered, inside, 0.25, rule, -1.0).tolist() == [15.0]
+    due = lines(np.array([100.0]), np.array([100.0]), np.array([1.0]), Prices("USD"), np.array([22.5]))
+    assert due.penalty[0] == due.total[0] == Decimal("-22.50")
+
+
+def test_a_portfolio_nets_over_its_sites_and_shares_out_to_the_cent() -> None:
+    rule = SettlementRule(name="own", netting="portfolio")
+    prices = Prices("USD", 0.1, 0.01, 0.05)
+    committed, delivered = np.array([100.0, 100.0, 100.0, 50.0]), np.array([150.0, 40.0, 100.0, np.nan])
+    own = delivered / committed
+    nothing = np.zeros(4)
+    share, due = earned(committed, delivered, own, nothing, rule, prices, ["a", "b", "c", "d"])
+    # 290 of 300 kWh together; the fourth, undefined, stays out.
+    assert share[:3] == pytest.approx([290 / 300] * 3) and np.isnan(share[3])
+    assert sum(due.capacity_payment) == Decimal("29.00") and due.capacity_payment[3] == 0
+    assert sorted(due.capacity_payment[:3]) == [Decimal("9.66"), Decimal("9.67"), Decimal("9.67")]
+    # 10 kWh lack at 5 cents, borne by the one site that lacks; alone it would owe for 60.
+    assert due.penalty.tolist() == [0, Decimal("-0.50"), 0, 0]
+    alone = earned(committed, delivered, own, nothing, SettlementRule(name="own"), prices, list("abcd"))[1]
+    assert alone.penalty[1] == Decimal("-3.00")
+    assert (due.total == due.capacity_payment + due.energy_payment + due.penalty).all()
