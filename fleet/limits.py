@@ -76,7 +76,7 @@ def _busiest_week(counted: pd.DataFrame, start: pd.Timestamp) -> pd.Series:
     """Most calls of each site in any seven days that would also hold `start`."""
     near = counted[(counted["window_start"] - start).abs() < _WEEK][["site_id", "window_start"]]
     firsts = pd.concat([near, near.assign(window_start=start)])
-    firsts = firsts[firsts["window_start"] <= start]
+    firsts = firsts[firsts["window_start"] <= start].drop_duplicates()
     pairs = firsts.merge(near, on="site_id", suffixes=("_first", ""))
     late = pairs["window_start"] - pairs["window_start_first"]
     inside = pairs[(late >= pd.Timedelta(0)) & (late < _WEEK)]
