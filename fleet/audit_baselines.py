@@ -1,4 +1,4 @@
-"""Rules on baselines: which days were used and why, and the baseline from their readings alone.
+"""Rules on baselines: the means of the recorded days, the baseline and its adjustment from their readings alone.
 
 The frozen rule is applied again to the recorded days. An estimate is no reading: it never enters a baseline. Shapes:
 S called sites, T shown intervals, D local days (the event's last), L slots a day.
@@ -10,7 +10,7 @@ from typing import Final
 import numpy as np
 import pandas as pd
 
-from fleet.audit_evidence import utc_naive
+from fleet.audit_days import by_day, days_chosen, free_days, sites_of
 from fleet.audit_findings import Findings
 from fleet.audit_levels import guards, levels, weather
 from fleet.audit_settled import Days, Settled, days_of, local_day, slots_of
@@ -45,7 +45,7 @@ def days_read(made: Settled, found: Findings) -> None:
     rank, base = np.full(len(sheet.frame), np.nan), np.full(len(sheet.frame), np.nan)
     there = np.zeros(len(sheet.frame), dtype=np.bool_)
     for rule in dict.fromkeys(made.rules):
-        rows = _sites_of(made, rule)
+        rows = sites_of(made, rule)
         slots = _slots(made, rule)
         for values, at in ((rank, slots.event), (base, slots.window)):
             mean = _mean(readings[rows][:, :, at], days.exists[:, at])
@@ -69,29 +69,6 @@ def days_read(made: Settled, found: Findings) -> None:
         found.equal("energy of a day", sheet, "day_kwh", energy)
 
 
-def days_chosen(made: Settled, found: Findings) -> None:
-    """Reason, mode and use of every day by the frozen rule, holidays, plant days and earlier calls."""
-    days, sheet = days_of(made), made.sheet("days")
-    wanted = np.full(len(sheet.frame), "", dtype=object)
-    rank = _by_day(sheet.numbers("rank_value"), days.row)
-    base = _by_day(sheet.numbers("window_base_kw"), days.row)
-    told = _by_day(sheet.frame["reason"].to_numpy(dtype=object), days.row)
-    method = made.sites("method")
-    for rule in dict.fromkeys(made.rules):
-        rows = _sites_of(made, rule)
-        reason = _reasons(made, days, rule, rows, rank[rows], base[rows], told[rows], method[rows])
-        own = days.row[rows]
-        wanted[own[own >= 0]] = reason[own >= 0]
-    found.same("days chosen", sheet, "reason", wanted)
-    found.same("days chosen", sheet, "used", wanted == "used")
-    found.same("days chosen", sheet, "mode", _modes(made, sheet.frame))
-    count = pd.Series(wanted != "", index=sheet.frame.index)
-    wrong = sheet.frame.duplicated(["site_id", "day"], keep=False).to_numpy() | ~count.to_numpy()
-    found.wrong(
-        "days chosen", sheet, "day", wrong, sheet.frame["day"].to_numpy(), "each day of the look-back once"
-    )
-
-
 def baseline(made: Settled, found: Findings) -> None:
     """baseline_kw: what the used days' readings say by the rule's kind, or the mean before and after."""
     if not made.whole:
@@ -107,7 +84,7 @@ def baseline(made: Settled, found: Findings) -> None:
     said = np.full(made.committed_kw.shape, np.nan)
     beyond = np.full(len(said), np.nan)
     for rule in dict.fromkeys(made.rules):
-        rows, slots = _sites_of(made, rule), _slots(made, rule)
+        rows, slots = sites_of(made, rule), _slots(made, rule)
         one = levels(made, days, rule, rows, slots.event, slots.window)
         said[rows], beyond[rows] = one.shown_kw, one.beyond_k
     said = np.where(_like(made, days), said, np.nan)
@@ -123,15 +100,15 @@ def adjustment(made: Settled, found: Findings) -> None:
     """The adjustment before and after its cap and with charging left in, from the window's means."""
     days, sheet = days_of(made), made.sheet("sites")
     told = made.sheet("days")
-    level = _by_day(told.numbers("window_base_kw"), days.row)[:, -1]
-    charging = _by_day(told.numbers("window_charging_kw"), days.row)
+    level = by_day(told.numbers("window_base_kw"), days.row)[:, -1]
+    charging = by_day(told.numbers("window_charging_kw"), days.row)
     guard = guards(made)
     size = level.shape
     raw, applied, charged = np.full(size, np.nan), np.ones(size), np.full(size, np.nan)
     kind = np.full(size, "none", dtype=object)
     of_days = np.isin(made.sites("method").astype(str), OF_DAYS)
     for rule in dict.fromkeys(made.rules):
-        rows, slots = _sites_of(made, rule), _slots(made, rule)
+        rows, slots = sites_of(made, rule), _slots(made, rule)
         rows = rows[of_days[rows]]
         if rule.adjustment == "none" or not rows.size:
             continue
@@ -214,10 +191,6 @@ def event_day_readings(made: Settled, found: Findings) -> None:
     found.equal("readings of the event's day", sheet, "metered_kw", expected.ravel())
 
 
-def _sites_of(made: Settled, rule: SettlementRule) -> Ints:
-    return np.array([row for row, other in enumerate(made.rules) if other == rule], dtype=np.int64)
-
-
 def _slots(made: Settled, rule: SettlementRule) -> Slots:
     """Slots of the event and of the adjustment window of a rule."""
     zone, clock = str(made.settings["timezone"]), made.clock
@@ -264,29 +237,12 @@ def _plain_mean(kw: Floats) -> Floats:
     return kw.mean(axis=-1) if kw.shape[-1] else np.full(kw.shape[:-1], np.nan)
 
 
-def _by_day(values: AnyArray, row: Ints) -> AnyArray:
-    """A column of table days as (S, D); NaN or "" where there is no row."""
-    none = "" if values.dtype == object else np.nan
-    padded = np.append(values, none) if values.dtype != object else np.array([*values, none], dtype=object)
-    return padded[row]
-
-
 def _like(made: Settled, days: Days) -> Bools:
     """(S, T) the interval's day is of the event day's class, elsewhere like days say nothing."""
     day = local_day(made.clock.starts, str(made.settings["timezone"]))
-    free = _free_days(made, day)
-    own = _free_days(made, days.day[-1:])[0]
+    free = free_days(made, day)
+    own = free_days(made, days.day[-1:])[0]
     return np.stack([(free == own) | (rule.day_classes == "all_days") for rule in made.rules])
-
-
-def _free_days(made: Settled, day: AnyArray) -> Bools:
-    """Weekends and holidays."""
-    holidays = made.call.frozen.get("holidays")
-    dates = np.zeros(0, dtype="datetime64[D]")
-    if holidays is not None:
-        dates = holidays["date"].to_numpy().astype("datetime64[D]")
-    free: Bools = ((day.astype(np.int64) + 3) % 7 >= 5) | np.isin(day, dates)
-    return free
 
 
 def _around(made: Settled, days: Days, rule: SettlementRule, row: int) -> float:
@@ -310,143 +266,6 @@ def _capped(raw: Floats, additive: Bools, limit_kw: Floats, rule: SettlementRule
     low = 1.0 - cap if rule.cap_form == "difference" else 1.0 / (1.0 + cap)
     most = cap * np.where(np.isnan(limit_kw), np.inf if cap else 0.0, limit_kw)
     return np.where(additive, np.clip(raw, -most, most), np.clip(raw, low, 1.0 + cap))
-
-
-def _modes(made: Settled, frame: pd.DataFrame) -> AnyArray:
-    """How each plant ran on each day of table days; no frozen row = usual."""
-    plant = made.call.frozen.get("plant_days")
-    if plant is None or plant.empty:
-        return np.full(len(frame), "usual", dtype=object)
-    known = plant.drop_duplicates(["site_id", "day"], keep="last").set_index(["site_id", "day"])["mode"]
-    keys = pd.MultiIndex.from_frame(frame[["site_id", "day"]])
-    return known.reindex(keys).fillna("usual").to_numpy(dtype=object)
-
-
-def _reasons(
-    made: Settled,
-    days: Days,
-    rule: SettlementRule,
-    rows: Ints,
-    rank: Floats,
-    base: Floats,
-    told: AnyArray,
-    method: AnyArray,
-) -> AnyArray:
-    """Reason of every (site of the rule, day) by the rule, days newest last and the event's own at the end.
-
-    Low usage and event days that fill the pool are taken as told; what is chosen among the others is not.
-    """
-    peak_c = _by_day(made.sheet("days").numbers("peak_dry_bulb_c"), days.row)[rows]
-    reason = _first_reasons(made, days, rule, rows, rank, base, peak_c)
-    reason[:, -1] = "event_day"
-    eligible = reason == "used"
-    if rule.kind == "before_after":
-        return np.where(eligible, "not_ranked", reason)
-    low = eligible & (told == "low_usage") & (rule.low_usage_fraction is not None)
-    reason, eligible = np.where(low, "low_usage", reason), eligible & ~low
-    newest = np.cumsum(eligible[:, ::-1], axis=1)[:, ::-1]
-    pool = eligible & (newest <= rule.pool_days)
-    reason = np.where(eligible & ~pool, "enough_days", reason)
-    short = pool.sum(axis=1) < rule.minimum_days
-    ways = ("event_days", "regression", "base_load")
-    filled = np.isin(method.astype(str), ways) & (rule.when_too_few == "highest_event_days")
-    added = filled[:, None] & (told == "used") & (reason == "event_past")
-    short &= ~added.any(axis=1)
-    score = made.sign * rank
-    if rule.rank == "nearest_weather":
-        score = -np.abs(peak_c - peak_c[:, -1:])
-    taken = _taken(pool | added, score, rule) & ~short[:, None]
-    reason = np.where(pool | added, np.where(taken, "used", "not_ranked"), reason)
-    return np.where(short[:, None] & pool, "too_few_days", reason)
-
-
-def _first_reasons(
-    made: Settled,
-    days: Days,
-    rule: SettlementRule,
-    rows: Ints,
-    rank: Floats,
-    base: Floats,
-    peak_c: Floats,
-) -> AnyArray:
-    """ "used" for every day that may enter the pool, else the first thing that speaks against it (site, day)."""
-    age = len(days.day) - 1 - np.arange(len(days.day))
-    free_event = bool(_free_days(made, days.day[-1:])[0])
-    other = np.zeros(len(days.day), dtype=np.bool_)
-    if rule.day_classes != "all_days":
-        free = days.weekend | days.holiday
-        other = ~free if free_event else days.weekend if rule.holidays == "excluded" else free
-    excluded = rule.holidays == "excluded" and rule.day_classes == "weekday_weekend"
-    past = _past_days(made, days)[rows]
-    after = np.concatenate([past[:, 1:], np.ones((len(rows), 1), dtype=np.bool_)], axis=1)
-    after[:, -2:-1] = True
-    needs_window = rule.kind != "before_after" and rule.adjustment != "none"
-    lost = np.isnan(rank) | (needs_window & np.isnan(base))
-    usual = _mode_usual(made, days)[rows]
-    tests = [
-        (age > rule.look_back_days, "beyond_look_back"),
-        (other, "other_day_type"),
-        (days.holiday & excluded, "holiday"),
-        (past & rule.exclude_event_days, "event_past"),
-        (after & rule.exclude_day_before_event, "day_before_event"),
-        (~usual & rule.exclude_unusual_modes, "outage"),
-        (lost, "missing_data"),
-        (np.isnan(peak_c) & rule.needs_weather, "missing_weather"),
-    ]
-    shape = (len(rows), len(days.day))
-    masks = [np.broadcast_to(mask, shape) for mask, _ in tests]
-    return np.select(masks, [name for _, name in tests], "used").astype(object)
-
-
-def _taken(pool: Bools, score: Floats, rule: SettlementRule) -> Bools:
-    """X of the pool by rank, days newest last; of equal days the more recent stays."""
-    if rule.rank == "recent":
-        return pool & (np.cumsum(pool[:, ::-1], axis=1)[:, ::-1] <= rule.take_days)
-    size = pool.sum(axis=1)[:, None]
-    newest = pool.shape[1] - 1 - np.arange(pool.shape[1])[None, :]
-    key = np.where(pool, score, -np.inf)
-    order = np.lexsort((np.broadcast_to(newest, key.shape), -key), axis=1)
-    place = np.empty_like(order)
-    np.put_along_axis(place, order, np.broadcast_to(np.arange(order.shape[1]), order.shape), axis=1)
-    if rule.rank in ("highest", "nearest_weather"):
-        return pool & (place < rule.take_days)
-    spare = np.maximum(size - rule.take_days, 0)
-    older = np.lexsort((np.broadcast_to(-newest, key.shape), -key), axis=1)
-    from_top = np.empty_like(older)
-    np.put_along_axis(from_top, older, np.broadcast_to(np.arange(older.shape[1]), older.shape), axis=1)
-    middle: Bools = pool & (from_top >= (spare + 1) // 2) & (place < size - spare // 2)
-    return middle
-
-
-def _past_days(made: Settled, days: Days) -> Bools:
-    """(S, D) local days of a site's earlier real and test calls, by the frozen list."""
-    zone = str(made.settings["timezone"])
-    calls = pd.DataFrame(made.call.frozen_json.get("calls", {}).get("calls", []))
-    mask = np.zeros((len(made.site_id), len(days.day)), dtype=np.bool_)
-    if calls.empty:
-        return mask
-    calls = calls[calls["purpose"].isin(("real", "test"))]
-    day = local_day(utc_naive(pd.to_datetime(calls["window_start"], utc=True)), zone)
-    return _mark(mask, made, calls["site_id"], day, days)
-
-
-def _mode_usual(made: Settled, days: Days) -> Bools:
-    """(S, D) the plant ran as usual."""
-    plant = made.call.frozen.get("plant_days")
-    mask = np.zeros((len(made.site_id), len(days.day)), dtype=np.bool_)
-    if plant is None or plant.empty:
-        return ~mask
-    odd = plant[plant["mode"] != "usual"]
-    return ~_mark(mask, made, odd["site_id"], odd["day"].to_numpy().astype("datetime64[D]"), days)
-
-
-def _mark(mask: Bools, made: Settled, site_id: pd.Series, day: AnyArray, days: Days) -> Bools:
-    """Sets (site, day) in a mask; the event's own day and later ones stay out."""
-    site = pd.Index(made.site_id).get_indexer(pd.Index(site_id))
-    at = (day - days.day[0]).astype(np.int64)
-    held = (site >= 0) & (at >= 0) & (at < len(days.day) - 1)
-    mask[site[held], at[held]] = True
-    return mask
 
 
 RULES = (weather, days_read, days_chosen, baseline, adjustment, adjusted, event_day_readings)
