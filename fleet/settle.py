@@ -37,6 +37,7 @@ from fleet.settlement import (
     posting_table,
     site_table,
 )
+from fleet.validation import STUCK_H, negative, shifted_h, stuck
 from sites.direction import Direction
 from sites.units import AnyArray, Bools, Floats, Ints, Times
 
@@ -74,6 +75,7 @@ def settle(
         dry_bulb_c=by_local_day(found.dry_bulb_c, np.zeros_like(whole.quality), found.grid)[0],
         peak_dry_bulb_c=peak_dry_bulb_c(found),
         step_h=plan.clock.step_h,
+        starts=whole.clock.starts,
     )
     head = (call.event_id, revision, plan)
     sites = site_table(*head, base, result)
@@ -252,7 +254,46 @@ def _notes(call: CallFacts, plan: Plan, found: Baseline, trace: Trace) -> tuple[
     _name(notes, plan, found.doubtful, "readings of the adjustment window, or before and after, not measured")
     spiky = spikes(trace.kw[:, trace.event_day])
     _name(notes, plan, spiky, "a spike on the event day (highest above third highest by over 180 %)")
+    _readings_notes(notes, call, plan, found, trace)
     return tuple(notes)
+
+
+def _readings_notes(notes: list[str], call: CallFacts, plan: Plan, found: Baseline, trace: Trace) -> None:
+    """Readings of the event day that look wrong, and like days on which the plant ran unusually."""
+    day_kw, step_h = trace.kw[:, trace.event_day], trace.step_h
+    export = np.array([site in _exporting(call) for site in plan.site_ids])
+    _name(notes, plan, negative(day_kw, export), "readings below zero on a meter that only delivers")
+    _name(
+        notes,
+        plan,
+        stuck(day_kw, step_h),
+        f"one value unchanged for {STUCK_H:g} h or longer on the event day",
+    )
+    used = found.used[:, ::-1, None]
+    held = used & ~np.isnan(trace.kw[:, : trace.event_day])
+    total = np.where(held, trace.kw[:, : trace.event_day], 0.0).sum(axis=1)
+    usual = np.where(held.any(axis=1), total / np.maximum(held.sum(axis=1), 1), np.nan)
+    first = trace.grid.slot[np.searchsorted(trace.starts, plan.event_start)]
+    shift = shifted_h(day_kw, usual, int(first), step_h)
+    _name(notes, plan, shift != 0.0, "the event day fits its like days better when shifted by an hour")
+    odd = (used[:, :, 0] & (trace.modes[:, : trace.event_day] != "usual")).any(axis=1)
+    _name(
+        notes,
+        plan,
+        odd,
+        "the rule lets days count on which the plant ran unusually (tank out, recovery, ...)",
+    )
+
+
+def _exporting(call: CallFacts) -> set[str]:
+    """Sites with a meter that can deliver backwards."""
+    mapped = call.meter_map
+    if mapped.empty:
+        return set()
+    sign = mapped["sign"].fillna(1) if "sign" in mapped else 1
+    role = mapped["role"].fillna("building") if "role" in mapped else "building"
+    back = (pd.Series(sign, index=mapped.index) < 0) | (pd.Series(role, index=mapped.index) == "generation")
+    return set(mapped.loc[back, "site_id"].astype(str))
 
 
 def _name(notes: list[str], plan: Plan, mask: Bools, text: str) -> None:

@@ -69,6 +69,8 @@ class Trace:
     peak_dry_bulb_c: Floats
     """(site, day)"""
     step_h: float
+    starts: Times
+    """(interval,) of the whole period read"""
 
 
 @dataclass(frozen=True)
