@@ -170,7 +170,7 @@ def _tree(frames: Frames, files: Mapping[str, str]) -> list[Problem]:
         problems.append(
             Problem(files["nodes"], row, "parent_id", came, "exactly one row without parent_id", advice)
         )
-    return problems + _cycles(nodes, files["nodes"])
+    return problems + _cycles(nodes.dropna(subset=["node_id"]), files["nodes"])
 
 
 def _cycles(nodes: pd.DataFrame, file: str) -> list[Problem]:

@@ -427,3 +427,10 @@ def test_long_csv_takes_the_fast_reader_and_gives_the_same(tmp_path):
     careful = write_small_fleet(tmp_path / "careful", meters=quoted)
     assert (careful / "meters.csv").read_text() != (quick / "meters.csv").read_text()
     pd.testing.assert_frame_equal(open_folder(quick).frames["meters"], open_folder(careful).frames["meters"])
+
+
+def test_nodes_without_any_id_are_refused_for_that(tmp_path):
+    found = wrong(write_small_fleet(tmp_path, nodes="parent_id\nx\ny\n"))
+    assert found[0] == (
+        "nodes.csv, row 1, column node_id: came no such column; expected the column in the heading; add it"
+    )
