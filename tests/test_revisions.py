@@ -1,0 +1,164 @@
+"""Revisions of a practice event's settlement, and the reckoning of one site done again by hand from its document."""
+
+import json
+import shutil
+from decimal import ROUND_HALF_UP, Decimal
+from pathlib import Path
+
+import pandas as pd
+import pytest
+from conftest import Practice, shedwright
+
+from fleet import records
+from fleet.audit import audit
+from fleet.errors import FleetError
+from fleet.reckoning import reckon
+from fleet.reckoning_page import reckoning_lines
+from fleet.settling import settle_again, settle_event
+
+EVENT = "practice"
+
+
+@pytest.fixture(scope="module")
+def home(practice: Practice, tmp_path_factory: pytest.TempPathFactory) -> Path:
+    """The practised fleet with two more revisions: a site excused, then a meter corrected."""
+    path = tmp_path_factory.mktemp("revisions") / "fleet"
+    shutil.copytree(practice.fleet, path)
+    text = (path / "fleet.toml").read_text()
+    (path / "fleet.toml").write_text(text + '\n[rules.later]\nbased_on = "meter_before_after"\n')
+    meters = path / "meters-event.parquet"
+    settle_event(path, EVENT, meters, excuse={a_site(path): " a power cut "})
+    frame = pd.read_parquet(meters)
+    other = f"B-{other_site(path)}"
+    late = (frame["meter_id"] == other) & (frame["interval_start"] >= pd.Timestamp("2026-07-15T14:00Z"))
+    frame.loc[late & (frame["interval_start"] < pd.Timestamp("2026-07-15T14:30Z")), "kw"] += 8.0
+    frame.to_parquet(path / "corrected.parquet")
+    settle_event(path, EVENT, path / "corrected.parquet")
+    return path
+
+
+def sites(path: Path, revision: int) -> pd.DataFrame:
+    return records.read_settlement(path, EVENT, revision).frames["sites"].set_index("site_id")
+
+
+def a_site(path: Path) -> str:
+    return str(sites(path, 1)["total"].astype(float).idxmax())
+
+
+def other_site(path: Path) -> str:
+    return str(sites(path, 1)["total"].astype(float).nlargest(2).index[1])
+
+
+def test_an_excused_site_earns_and_owes_nothing_and_stays_excused(home: Path) -> None:
+    site = a_site(home)
+    for revision in (2, 3):
+        row = sites(home, revision).loc[site]
+        assert (row["state"], row["why"]) == ("excused", "a power cut")
+        assert pd.isna(row["performance_factor"]) and pd.isna(row["paid_share"])
+        assert row["total"] == row["penalty"] == Decimal(0)
+        assert row["delivered_kwh"] == pytest.approx(sites(home, 1).loc[site, "delivered_kwh"])
+
+
+def test_postings_are_the_difference_and_the_statement_says_what_changed(home: Path) -> None:
+    site, other = a_site(home), other_site(home)
+    second = records.read_settlement(home, EVENT, 2)
+    posted = second.frames["postings"].set_index("site_id")["amount"]
+    assert posted[site] == -sites(home, 1).loc[site, "total"]
+    assert (posted.drop(site) == 0).all()
+    assert f"excused: {site}: a power cut" in second.statements["statement.txt"]
+    third = records.read_settlement(home, EVENT, 3)
+    changed = json.loads(third.statements["statement.json"])["changes"]
+    assert [entry["site_id"] for entry in changed] == [other]
+    # Two quarter hours 8 kW higher: 4 kWh less delivered.
+    was, now = changed[0]["columns"]["delivered_kwh"]
+    assert was - now == pytest.approx(4.0)
+    assert [row["interval_start"] for row in changed[0]["intervals"]] == [
+        "2026-07-15T14:00:00Z",
+        "2026-07-15T14:15:00Z",
+    ]
+    was, now = changed[0]["intervals"][0]["metered_kw"]
+    assert now - was == pytest.approx(8.0)
+    assert f"  {other}: delivered_kwh " in third.statements["statement.txt"]
+    amount = third.frames["postings"].set_index("site_id").loc[other, "amount"]
+    assert amount == sites(home, 3).loc[other, "total"] - sites(home, 2).loc[other, "total"] < 0
+
+
+def test_an_old_revision_comes_out_the_same_byte_for_byte(home: Path) -> None:
+    meters = home / "meters-event.parquet"
+    assert settle_again(home, EVENT, 1, meters) == []
+    assert settle_again(home, EVENT, 2, meters) == []
+    with pytest.raises(FleetError) as caught:
+        settle_again(home, EVENT, 1, home / "corrected.parquet")
+    assert str(caught.value) == (
+        "event practice, settlement revision 1: was made of other readings (meters-event.parquet, "
+        "meters/history-000.parquet, meters/recent.parquet); give back those files, unchanged, to work it out again"
+    )
+
+
+def test_the_rule_is_the_frozen_one_and_the_audit_holds(home: Path) -> None:
+    assert set(sites(home, 3)["rule"]) == set(sites(home, 1)["rule"])
+    assert audit(home, EVENT).holds
+
+
+def test_an_excuse_needs_a_called_site_and_a_reason(home: Path) -> None:
+    meters = home / "meters-event.parquet"
+    with pytest.raises(FleetError, match=r"^--excuse x: no reason is given; say why with --why$"):
+        settle_event(home, EVENT, meters, excuse={"x": " "})
+    with pytest.raises(FleetError, match=r"^event practice: site x is not called, so it cannot be excused; "):
+        settle_event(home, EVENT, meters, excuse={"x": "y"})
+    assert records.revisions(home, EVENT, "settlement") == [1, 2, 3]
+
+
+def test_one_site_worked_out_by_hand_from_its_reckoning(home: Path) -> None:
+    """Every step from the document alone: mean of days, factor, intervals, energy, money."""
+    site = other_site(home)
+    found = reckon(home, EVENT, site, 1)
+    mean = {(slot["part"], slot["local_time"]): slot["mean_kw"] for slot in found["slots"]}
+    for slot in found["slots"]:
+        kw = list(slot["kw_by_day"].values())
+        assert slot["mean_kw"] == pytest.approx(sum(kw) / len(kw))
+    window = [value for (part, _), value in mean.items() if part == "window"]
+    own = found["adjustment"]
+    a = own["event_day_window_kw"] - (own["event_day_charging_kw"] or 0.0)
+    b = sum(window) / len(window) - (own["used_days_charging_kw"] or 0.0)
+    assert own["raw"] == pytest.approx(a / b)
+    factor = min(max(a / b, own["cap"][0]), own["cap"][1])
+    assert own["applied"] == pytest.approx(factor)
+    energy = 0.0
+    for row in found["intervals"]:
+        base = mean["event", row["local_time"][11:16]]
+        assert row["baseline_kw"] == pytest.approx(base)
+        assert row["delivered_kw"] == pytest.approx(base * factor - row["metered_kw"])
+        energy += row["delivered_kw"] / 4 if row["in_window"] else 0.0
+    committed, told = found["energy"]["committed_kwh"], found["money"]
+    assert found["energy"]["delivered_kwh"] == pytest.approx(energy)
+    share = min(max(energy / committed, 0.0), 1.0)
+
+    def cents(amount: float) -> Decimal:
+        return Decimal(f"{amount:.9f}").quantize(Decimal("0.01"), ROUND_HALF_UP)
+
+    due = (
+        cents(committed * share * told["capacity_payment_per_kwh"]),
+        cents(energy * told["energy_payment_per_kwh"]),
+        -cents(max(committed - energy, 0.0) * told["penalty_per_kwh"]),
+    )
+    assert tuple(Decimal(told[name]) for name in ("capacity_payment", "energy_payment", "penalty")) == due
+    assert Decimal(told["total"]) == sum(due) == Decimal(told["posted"])
+
+
+def test_the_page_holds_the_documents_figures(home: Path) -> None:
+    found = reckon(home, EVENT, a_site(home), 2)
+    page = "\n".join(reckoning_lines(found))
+    assert "excused: a power cut" in page and "factor undefined" in page
+    assert f"before the cap {found['adjustment']['raw']:.6f}" in page
+    assert f"{found['days'][1]['day']}  yes" in page
+
+
+def test_the_command_prints_one_document_and_names_the_called(home: Path) -> None:
+    told = shedwright("reckon", str(home), EVENT, a_site(home), "--revision", "1", "--json", cwd=home)
+    assert json.loads(told.stdout) == reckon(home, EVENT, a_site(home), 1)
+    refused = shedwright("reckon", str(home), EVENT, "nobody", cwd=home)
+    assert refused.returncode == 2
+    assert refused.stderr.startswith(
+        "event practice, settlement revision 3: site 'nobody' is not called; called are "
+    )
