@@ -43,6 +43,8 @@ class History:
     """(site, interval) what it read; NaN where it did not, or there is none"""
     dry_bulb_c: Floats
     """(site, interval); NaN where not known, or the site's rule needs none"""
+    has_weather: bool
+    """Some rule needs it."""
 
     @property
     def measured(self) -> Floats:
@@ -100,6 +102,7 @@ def history(call: CallFacts, plan: Plan, readings: pd.DataFrame) -> History:
         guard=guard,
         charging_kw=np.where(taken.quality <= EDITED, taken.kw, np.nan),
         dry_bulb_c=_dry_bulb(call, plan, raw.clock, grid, event_day),
+        has_weather=any(rule.needs_weather for rule in plan.rules),
     )
 
 
@@ -225,10 +228,19 @@ def event_facts(plan: Plan, direction: Direction, found: History, rule: Settleme
     )
 
 
+def dry_bulb_by_day(found: History) -> Floats:
+    """(site, day, slot) dry bulb; NaN where not known."""
+    if not found.has_weather:
+        return np.broadcast_to(np.nan, (len(found.dry_bulb_c), *found.grid.times.shape))
+    return by_local_day(found.dry_bulb_c, np.zeros_like(found.raw.quality), found.grid)[0]
+
+
 def peak_dry_bulb_c(found: History) -> Floats:
     """(site, day) highest dry bulb of each local day; NaN where one of its intervals is not known."""
-    day_c, _ = by_local_day(found.dry_bulb_c, np.zeros_like(found.raw.quality), found.grid)
+    day_c = dry_bulb_by_day(found)
     exists = found.grid.times > 0
+    if not found.has_weather:
+        return np.full(day_c.shape[:2], np.nan)
     known = ~(np.isnan(day_c) & exists).any(axis=2)
     highest = np.where(exists & ~np.isnan(day_c), day_c, -np.inf).max(axis=2)
     return np.where(known, highest, np.nan)
@@ -254,7 +266,7 @@ def _charging(found: History, window: Ints) -> Charging | None:
 def _weather(found: History, shown: Ints, event: Ints, window: Ints) -> Weather:
     grid, recent = found.grid, found.recent
     peak_c = peak_dry_bulb_c(found)
-    day_c, _ = by_local_day(found.dry_bulb_c, np.zeros_like(found.raw.quality), grid)
+    day_c = dry_bulb_by_day(found)
     # Day 0 of the calendar, 1970-01-01, was a Thursday, day 3 of a week that starts on Monday.
     weekday = (grid.days.astype(np.int64) + 3) % 7
     return Weather(

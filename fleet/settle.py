@@ -16,6 +16,7 @@ from fleet.callfacts import CallFacts, Plan, arrange
 from fleet.history import (
     History,
     day_facts,
+    dry_bulb_by_day,
     event_facts,
     filled,
     history,
@@ -72,7 +73,7 @@ def settle(
         modes=found.modes,
         window_kw=window_kw,
         charging_kw=charging,
-        dry_bulb_c=by_local_day(found.dry_bulb_c, np.zeros_like(whole.quality), found.grid)[0],
+        dry_bulb_c=dry_bulb_by_day(found),
         peak_dry_bulb_c=peak_dry_bulb_c(found),
         step_h=plan.clock.step_h,
         starts=whole.clock.starts,

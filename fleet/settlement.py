@@ -154,11 +154,13 @@ def day_interval_table(
     site, day, slot = np.nonzero(looked[:, :, None] & (trace.grid.times > 0)[None])
     return pd.DataFrame(
         {
-            **_head(event_id, revision, _objects(plan.site_ids)[site]),
+            "event_id": _texts(np.full(len(site), event_id, dtype=object)),
+            "revision": revision,
+            "site_id": _texts(_objects(plan.site_ids)[site]),
             "day": trace.grid.days[day].astype("datetime64[s]"),
             "slot": slot,
             "kw": trace.kw[site, day, slot],
-            "quality": _objects(QUALITIES)[trace.quality[site, day, slot]],
+            "quality": _texts(_objects(QUALITIES)[trace.quality[site, day, slot]]),
             "dry_bulb_c": trace.dry_bulb_c[site, day, slot],
         }
     )
@@ -263,6 +265,11 @@ def _streams(plan: Plan) -> Strings:
 
 def _objects(names: object) -> Strings:
     return np.array(names, dtype=object)
+
+
+def _texts(names: Strings) -> pd.Series:
+    """A column of texts as it is: looking through millions of them for a type is slow."""
+    return pd.Series(names, dtype=object)
 
 
 def _utc(times: Times) -> pd.DatetimeIndex:

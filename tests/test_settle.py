@@ -348,14 +348,17 @@ def test_an_incomplete_call_is_refused_with_what_is_missing() -> None:
 
 def test_early_charging_after_notice_is_pointed_out() -> None:
     early = np.datetime64("2025-07-10T12:00", "us")
+    # The made-up meter stands still at night, which is pointed out too.
+    still = "one value unchanged for 4 h or longer on the event day: a"
     result = settle(worked_call(TEN, called_at=early), worked_readings(430.0))
     assert result.notes == (
         "load in the adjustment window more than 10 % above like days after notice; look for early charging of "
         "the tank: a",
+        still,
     )
-    assert settle(worked_call(TEN, called_at=early), worked_readings(420.0)).notes == ()
+    assert settle(worked_call(TEN, called_at=early), worked_readings(420.0)).notes == (still,)
     after = np.datetime64("2025-07-10T18:30", "us")
-    assert settle(worked_call(TEN, called_at=after), worked_readings(430.0)).notes == ()
+    assert settle(worked_call(TEN, called_at=after), worked_readings(430.0)).notes == (still,)
 
 
 def test_the_day_after_of_another_class_has_no_baseline() -> None:
