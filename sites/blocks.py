@@ -5,7 +5,8 @@ from dataclasses import dataclass
 import numpy as np
 
 from sites.candidate import Stages
-from sites.roster import Roster, Standing
+from sites.recovery import RECOVERIES
+from sites.roster import Roster, Rows, Standing
 from sites.units import Bools, Floats, Ints
 
 LOAD_LIMITS = (1.0, 0.75, 0.5)
@@ -26,10 +27,12 @@ class Terms:
     """Longest window, by the hours left to call"""
     allowed: Bools
     """False: over a call limit, or already in a call"""
+    recoveries: tuple[str, ...] = ("usual",)
+    """Which of RECOVERIES each window is offered with"""
 
 
 @dataclass(frozen=True)
-class Candidates:
+class Candidates(Rows):
     """C candidates sorted by site, start, end; windows [start, end) as clock indices."""
 
     site: Ints
@@ -37,6 +40,8 @@ class Candidates:
     end: Ints
     load_limit_fraction: Floats
     """(C,) demand limit on what stays on"""
+    recovery: Ints
+    """(C,) index into RECOVERIES"""
     stages: Stages
 
 
@@ -66,7 +71,7 @@ def candidates(roster: Roster, standing: Standing, terms: Terms) -> Candidates:
             )
             machine_limit = np.where(off[site], 0.0, limit)
             parts.append((site, first[block], last[block], np.full(len(site), limit), machine_limit))
-    return _sorted(parts, roster.chillers.exists.shape[1])
+    return _sorted(parts, roster.chillers.exists.shape[1], terms.recoveries)
 
 
 def _least_off_intervals(roster: Roster, off: Bools, terms: Terms) -> Ints:
@@ -75,13 +80,19 @@ def _least_off_intervals(roster: Roster, off: Bools, terms: Terms) -> Ints:
     return np.asarray(np.ceil(minutes / terms.step_minutes), dtype=np.int64)
 
 
-def _sorted(parts: list[tuple[Ints, Ints, Ints, Floats, Floats]], machines: int) -> Candidates:
+def _sorted(
+    parts: list[tuple[Ints, Ints, Ints, Floats, Floats]], machines: int, recoveries: tuple[str, ...]
+) -> Candidates:
+    """All candidates in order, each once with every recovery."""
     if not parts:
         none = np.zeros(0, dtype=np.int64)
         empty = Stages(none[:, None], none[:, None], np.zeros((0, 1, machines)))
-        return Candidates(none, none, none, np.zeros(0), empty)
+        return Candidates(none, none, none, np.zeros(0), none, empty)
     site, start, end, limit, machine = (np.concatenate(column) for column in zip(*parts, strict=True))
     order = np.lexsort((-limit, (machine == 0.0).sum(axis=1), end, start, site))
+    codes = np.array([RECOVERIES.index(name) for name in recoveries], dtype=np.int64)
+    recovery = np.tile(codes, len(order))
+    order = np.repeat(order, len(codes))
     site, start, end, limit, machine = (array[order] for array in (site, start, end, limit, machine))
     stages = Stages(start[:, None], end[:, None], machine[:, None, :])
-    return Candidates(site, start, end, limit, stages)
+    return Candidates(site, start, end, limit, recovery, stages)

@@ -10,6 +10,7 @@ import numpy as np
 
 from sites import chiller, tank
 from sites.outlook import Outlook, in_hours
+from sites.recovery import recovery_hours
 from sites.roster import ICE_KINDS, STRATEGIES, TANK_KINDS, Roster, Standing, kind_is
 from sites.units import Bools, Floats
 
@@ -34,6 +35,11 @@ class Conditions:
     on_peak_left_h: Floats
     """(site, interval) hours of the running on-peak period still to come, this interval included; else 0"""
     charge_hours: Bools
+    recovery_hours: Bools
+    """(recovery, site, interval) hours that each of RECOVERIES may use"""
+    rest_kw: Floats
+    billed_peak_kw: Floats
+    """(site,)"""
     occupied: Bools
     level_kw_th: Floats
     """(site,) flat chiller output of load levelling: mean load of the first day plus standing loss"""
@@ -57,6 +63,7 @@ def conditions(roster: Roster, outlook: Outlook, standing: Standing) -> Conditio
     on_peak = in_hours(hour, buildings.peak_from_hour, buildings.peak_to_hour)
     ice_tank = kind_is(tanks.kind, TANK_KINDS, ICE_KINDS) & tanks.exists
     brine = buildings.charge_brine_c
+    charge_hours = in_hours(hour, buildings.charge_from_hour, buildings.charge_to_hour)
     return Conditions(
         direct_kw_th=direct.available_kw_th * up,
         direct_full_kw=direct.full_load_kw * up,
@@ -66,7 +73,10 @@ def conditions(roster: Roster, outlook: Outlook, standing: Standing) -> Conditio
         load_kw_th=outlook.cooling_load_kw_th,
         on_peak=on_peak,
         on_peak_left_h=_run_left(on_peak) * outlook.clock.step_h,
-        charge_hours=in_hours(hour, buildings.charge_from_hour, buildings.charge_to_hour),
+        charge_hours=charge_hours,
+        recovery_hours=recovery_hours(buildings, outlook, charge_hours),
+        rest_kw=outlook.rest_kw,
+        billed_peak_kw=outlook.billed_peak_kw,
         occupied=_occupied(roster, outlook),
         level_kw_th=_level(roster, outlook),
         discharge=tank.discharge_curves(tanks),

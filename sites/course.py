@@ -29,12 +29,16 @@ class Course:
     inventory_kwh_th: Floats
     discharge_limit_kw_th: Floats
     lmtd_k: Floats
+    wanted_kw_th: Floats
+    """(row, interval) what the load asked of the tanks before their limits"""
     load_kw_th: Floats
     unmet_kw_th: Floats
     pull_down_kw_th: Floats
     air_rise_k: Floats
     mass_rise_k: Floats
     air_mean_rise_k: Floats
+    charging: Bools
+    """(row, interval) still in charging mode at the interval's end"""
 
     @property
     def chiller_kw_th(self) -> Floats:
@@ -45,7 +49,7 @@ class Course:
     @property
     def as_usual(self) -> Usual:
         """This course as the case that events are measured against."""
-        return Usual(self.unmet_kw_th, self.inventory_kwh_th)
+        return Usual(self.unmet_kw_th, self.inventory_kwh_th, self.charge_kw_th.sum(axis=1), self.power_kw)
 
 
 def course(moments: Iterable[Moment]) -> Course:
@@ -69,10 +73,12 @@ def course(moments: Iterable[Moment]) -> Course:
         inventory_kwh_th=over("inventory_kwh_th"),
         discharge_limit_kw_th=over("discharge_limit_kw_th"),
         lmtd_k=over("lmtd_k"),
+        wanted_kw_th=over("wanted_kw_th"),
         load_kw_th=over("load_kw_th"),
         unmet_kw_th=over("unmet_kw_th"),
         pull_down_kw_th=over("pull_down_kw_th"),
         air_rise_k=over("air_rise_k"),
         mass_rise_k=over("mass_rise_k"),
         air_mean_rise_k=over("air_mean_rise_k"),
+        charging=over("charging").astype(np.bool_),
     )

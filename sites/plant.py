@@ -17,8 +17,9 @@ import numpy as np
 from sites import comfort, storage, tank
 from sites.candidate import Stages
 from sites.conditions import Conditions
-from sites.dispatch import plant_power_kw, staged_load_kw_th
-from sites.roster import STRATEGIES
+from sites.making import Task, make_within
+from sites.recovery import CAPPED, USUAL, cap_kw
+from sites.roster import STRATEGIES, Rows
 from sites.rows import Plants
 from sites.units import Bools, Floats, total
 
@@ -43,6 +44,10 @@ class Usual:
     """(site, interval)"""
     inventory_kwh_th: Floats
     """(site, tank, interval), end of interval"""
+    charge_kw_th: Floats
+    """(site, interval) all tanks together"""
+    power_kw: Floats
+    """(site, interval)"""
 
 
 @dataclass(frozen=True)
@@ -78,28 +83,49 @@ class Moment:
     air_rise_k: Floats
     mass_rise_k: Floats
     air_mean_rise_k: Floats
+    charging: Bools
+    """(row,) still in charging mode at the interval's end"""
 
 
-@dataclass
-class _State:
+@dataclass(frozen=True)
+class State(Rows):
+    """Where rows stand between two intervals: inventory (row, tank), charging mode, rise of air and mass (row,)."""
+
     inventory_kwh_th: Floats
     charging: Bools
     air_k: Floats
     mass_k: Floats
 
 
-def simulate(
-    rows: Plants, here: Conditions, stages: Stages, inventory_kwh_th: Floats, usual: Usual | None
-) -> Iterator[Moment]:
-    """Run every row over the horizon; yields one Moment an interval.
+def at_rest(inventory_kwh_th: Floats, charging: Bools | None = None) -> State:
+    """Rows with tanks at `inventory_kwh_th` (row, tank) and zones as in the usual case."""
+    count = len(inventory_kwh_th)
+    mode = np.zeros(count, dtype=np.bool_) if charging is None else charging
+    return State(inventory_kwh_th, mode, np.zeros(count), np.zeros(count))
 
-    inventory_kwh_th (row, tank) at the start; `usual` None means that these rows are the usual case.
+
+def state_after(moment: Moment) -> State:
+    """Where rows stand at the end of an interval, to be carried on from."""
+    return State(moment.inventory_kwh_th, moment.charging, moment.air_rise_k, moment.mass_rise_k)
+
+
+def simulate(
+    rows: Plants,
+    here: Conditions,
+    stages: Stages,
+    state: State,
+    usual: Usual | None,
+    first: int = 0,
+    last: int | None = None,
+) -> Iterator[Moment]:
+    """Run every row from `state` over the intervals [first, last) of the horizon (last None: to its end); yields
+    one Moment an interval. `usual` None means that these rows are the usual case.
     """
-    count = len(rows.site)
     series = storage.behind(rows)
-    state = _State(inventory_kwh_th, np.zeros(count, dtype=np.bool_), np.zeros(count), np.zeros(count))
-    for interval in range(here.load_kw_th.shape[1]):
-        moment, state = _advance(rows, series, here, stages, usual, state, interval)
+    room_kw = _room_kw(rows, here, usual)
+    for interval in range(first, here.load_kw_th.shape[1] if last is None else last):
+        moment = _advance(rows, series, here, stages, usual, state, room_kw, interval)
+        state = state_after(moment)
         yield moment
 
 
@@ -109,9 +135,10 @@ def _advance(
     here: Conditions,
     stages: Stages,
     usual: Usual | None,
-    state: _State,
+    state: State,
+    room_kw: Floats,
     t: int,
-) -> tuple[Moment, _State]:
+) -> Moment:
     tanks = rows.roster.tanks
     start = state.inventory_kwh_th
     loss = tank.standing_loss_kw_th(
@@ -132,21 +159,22 @@ def _advance(
     air, mass, air_mean = comfort.advance(rows.zone, state.air_k, state.mass_k, extra - pull_down)
     charging = _charging(rows, here, staged, usual, state, t)
     asked = _charge_asked(rows, here, usual, load, start, t)
-    direct, into_tank, charge, ice_mode = _charge_and_load(
-        rows, here, charging, direct_cap, limit, served + pull_down, asked, start, loss, t
-    )
-    machine_kw, power = _power(rows, here, direct + into_tank, ice_mode, charge, discharge, t)
+    if usual is not None:
+        charging, asked = _made_up(rows, here, usual, staged, (start, loss, drawn), (charging, asked), t)
+    task = Task(charging, direct_cap, limit, served + pull_down, asked, start, loss, discharge)
+    made = make_within(rows, here, task, room_kw[:, t], rows.recovery == CAPPED, t)
+    charge = made.charge_kw_th
     inventory = start + (charge - discharge - loss) * here.step_h
     largest = direct_cap.max(axis=1, initial=0.0)
-    moment = Moment(
+    return Moment(
         interval=t,
         staged=staged,
         limit_fraction=limit,
-        direct_kw_th=direct,
-        into_tank_kw_th=into_tank,
-        making_ice=ice_mode,
-        machine_kw=machine_kw,
-        power_kw=power,
+        direct_kw_th=made.direct_kw_th,
+        into_tank_kw_th=made.into_tank_kw_th,
+        making_ice=made.ice_mode,
+        machine_kw=made.machine_kw,
+        power_kw=made.power_kw,
         charge_kw_th=charge,
         discharge_kw_th=discharge,
         loss_kw_th=loss,
@@ -163,8 +191,8 @@ def _advance(
         air_rise_k=air,
         mass_rise_k=mass,
         air_mean_rise_k=air_mean,
+        charging=charging & _not_full(rows, inventory),
     )
-    return moment, _State(inventory, charging & _not_full(rows, inventory), air, mass)
 
 
 def _wanted_from_tank(
@@ -191,7 +219,7 @@ def _wanted_from_tank(
 
 
 def _pull_down(
-    rows: Plants, here: Conditions, state: _State, staged: Bools, extra: Floats, spare: Floats
+    rows: Plants, here: Conditions, state: State, staged: Bools, extra: Floats, spare: Floats
 ) -> Floats:
     """Extra cooling (row,) that brings a warm zone back on a ramp, from spare capacity, outside stages."""
     warm = ~staged & (state.air_k > 0.0)
@@ -203,7 +231,7 @@ def _pull_down(
 
 
 def _charging(
-    rows: Plants, here: Conditions, staged: Bools, usual: Usual | None, state: _State, t: int
+    rows: Plants, here: Conditions, staged: Bools, usual: Usual | None, state: State, t: int
 ) -> Bools:
     """Rows (row,) in charging mode: in charging hours, from low enough until full; an event row also while
     its tank lies below the usual case's; load levelling whenever load is under the flat rate."""
@@ -229,6 +257,42 @@ def _not_full(rows: Plants, inventory: Floats) -> Bools:
     return below
 
 
+def _room_kw(rows: Plants, here: Conditions, usual: Usual | None) -> Floats:
+    """Plant power (row, interval) that a capped recovery keeps to; inf for all others."""
+    count = here.load_kw_th.shape[1]
+    if usual is None or not (rows.recovery == CAPPED).any():
+        return np.broadcast_to(np.float64(np.inf), (len(rows.site), count))
+    room = cap_kw(here.rest_kw, here.billed_peak_kw, usual.power_kw)
+    return np.where((rows.recovery == CAPPED)[:, None], room[rows.site], np.inf)
+
+
+def _made_up(
+    rows: Plants,
+    here: Conditions,
+    usual: Usual,
+    staged: Bools,
+    tanks: tuple[Floats, Floats, Floats],
+    plan: tuple[Bools, Floats],
+    t: int,
+) -> tuple[Bools, Floats]:
+    """Charging mode and charge asked for (row,) after a window under a recovery other than the usual one.
+
+    In the recovery's hours what brings the tanks to the usual case's level by the interval's end, in others what
+    the usual case charges; nothing while the tanks give. `tanks` are start inventory and loss (row, tank) and
+    discharge (row,); `plan` is what the usual recovery would do.
+    """
+    own = (rows.recovery != USUAL) & (rows.recover_from <= t)
+    if not own.any():
+        return plan
+    start, loss, drawn = tanks
+    level = storage.held(rows, usual.inventory_kwh_th[rows.site, :, t])
+    lacking = (level - storage.held(rows, start)) / here.step_h + storage.held(rows, loss)
+    hours = here.recovery_hours[rows.recovery, rows.site, t]
+    asked = np.where(hours, np.maximum(lacking, 0.0), usual.charge_kw_th[rows.site, t])
+    on = ~staged & (drawn <= 0.0) & (asked > 0.0)
+    return np.where(own, on, plan[0]), np.where(own, asked, plan[1])
+
+
 def _charge_asked(
     rows: Plants, here: Conditions, usual: Usual | None, load: Floats, start: Floats, t: int
 ) -> Floats:
@@ -241,73 +305,8 @@ def _charge_asked(
 
 
 def _behind(rows: Plants, usual: Usual | None, held: Floats, t: int) -> Bools:
-    """Rows whose tanks hold less than in the usual case at this interval's end."""
-    if usual is None:
+    """Rows whose tanks hold less than in the usual case at this interval's start."""
+    if usual is None or t == 0:
         return np.zeros(len(rows.site), dtype=np.bool_)
-    behind: Bools = held < storage.held(rows, usual.inventory_kwh_th[rows.site, :, t])
+    behind: Bools = held < storage.held(rows, usual.inventory_kwh_th[rows.site, :, t - 1])
     return behind
-
-
-def _charge_and_load(
-    rows: Plants,
-    here: Conditions,
-    charging: Bools,
-    direct_cap: Floats,
-    limit: Floats,
-    cooling: Floats,
-    asked: Floats,
-    start: Floats,
-    loss: Floats,
-    t: int,
-) -> tuple[Floats, Floats, Floats, Bools]:
-    """Machine loads to the building and into tanks (row, machine), charge (row, tank), ice mode (row, machine).
-
-    Ice sites: machines that make ice go over to ice making while charging, and carry in that mode what the
-    others cannot of the building's load; where that would leave load unmet they stay in direct cooling and
-    the tank waits.
-    """
-    makes_ice = rows.roster.chillers.makes_ice & here.ice_site[rows.site][:, None] & charging[:, None]
-    ice_cap = here.ice_kw_th[rows.site, :, t] * limit
-    mixed_cap = np.where(makes_ice, ice_cap, direct_cap)
-    can = charging & (total(mixed_cap) >= cooling)
-    ice_mode = makes_ice & can[:, None]
-    cap = np.where(ice_mode, ice_cap, direct_cap)
-    warm_cap = np.where(ice_mode, 0.0, cap)
-    ice_site = here.ice_site[rows.site]
-    chilling = total(np.where(ice_mode, cap, 0.0))
-    spare = np.where(ice_site, np.minimum(chilling, total(cap) - cooling), total(cap) - cooling)
-    offered = np.minimum(np.maximum(spare, 0.0), asked)
-    charge = storage.charge(rows, here.step_h, can, offered, start, loss)
-    filled = total(charge)
-    on_warm = np.minimum(cooling, total(warm_cap))
-    on_ice = cooling - on_warm
-    stage_up = rows.roster.buildings.stage_up_fraction
-    into = np.where(ice_site, 0.0, filled)
-    warm_load = staged_load_kw_th(on_warm + into, warm_cap, stage_up)
-    ice_load = staged_load_kw_th(on_ice + np.where(ice_site, filled, 0.0), cap - warm_cap, stage_up)
-    share_warm = np.divide(into, on_warm + into, out=np.zeros_like(into), where=on_warm + into > 0.0)
-    share_ice = np.divide(filled, on_ice + filled, out=np.zeros_like(into), where=on_ice + filled > 0.0)
-    share_ice = np.where(ice_site, share_ice, 0.0)
-    into_tank = warm_load * share_warm[:, None] + ice_load * share_ice[:, None]
-    return warm_load + ice_load - into_tank, into_tank, charge, ice_mode & (ice_load > 0.0)
-
-
-def _power(
-    rows: Plants,
-    here: Conditions,
-    machine_load: Floats,
-    ice_mode: Bools,
-    charge: Floats,
-    discharge: Floats,
-    t: int,
-) -> tuple[Floats, Floats]:
-    """Power of each machine with its own auxiliaries (row, machine), and of the whole plant (row,)."""
-    chillers, buildings = rows.roster.chillers, rows.roster.buildings
-    available = np.where(ice_mode, here.ice_kw_th[rows.site, :, t], here.direct_kw_th[rows.site, :, t])
-    full = np.where(ice_mode, here.ice_full_kw[rows.site, :, t], here.direct_full_kw[rows.site, :, t])
-    machine_kw = plant_power_kw(machine_load, available, full, chillers.kind, chillers.dedicated_aux_kw)
-    through_tank = total(charge) + total(discharge)
-    working = (total(machine_load) + through_tank) > 0.0
-    shared = np.where(working, buildings.shared_aux_kw, 0.0)
-    pump = np.where(through_tank > 0.0, buildings.tank_pump_kw, 0.0)
-    return machine_kw, total(machine_kw) + shared + pump

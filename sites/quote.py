@@ -10,38 +10,20 @@ from dataclasses import dataclass
 import numpy as np
 
 from sites import blocks
-from sites.candidate import Stages, no_stages
-from sites.conditions import Conditions, conditions
 from sites.cost import cost_parts, lack_price_per_kwh_th
 from sites.course import Course, course
 from sites.direction import Direction
 from sites.errors import SitesError
-from sites.outlook import Outlook
-from sites.plant import simulate
+from sites.ground import Ground, ground
+from sites.plant import at_rest, simulate
 from sites.quotes import LIMITED_BY, DenseQuotes
-from sites.roster import Roster, Standing
+from sites.recovery import RECOVERIES, USUAL
+from sites.roster import Roster
 from sites.rows import plants
-from sites.tally import Tally, broken, tally, tank_cause
+from sites.trial import try_all
 from sites.units import Bools, Floats, Ints, Strings
 
-LEAST_SHED_KW = 1.0
-"""A candidate sheds at least this much in every interval of its window, else its machines are as good as off."""
-LOW_TOLERANCE = 0.01
-"""Share by which the low inventory's shed may lie below the best's."""
-
-
-@dataclass(frozen=True)
-class Ground:
-    """All that quotes stand on: the sites, what is expected, where they stand, and the usual case."""
-
-    roster: Roster
-    outlook: Outlook
-    standing: Standing
-    here: Conditions
-    usual: Course
-    usual_low: Course
-    in_force: Stages
-    """Stages of other calls in force, one row a site: part of the usual case"""
+__all__ = ["Ground", "Quoted", "detail", "ground", "quote", "windows_of"]
 
 
 @dataclass(frozen=True)
@@ -52,6 +34,8 @@ class Quoted:
     quotes: DenseQuotes
     load_limit_fraction: Floats
     """(C,) demand limit on what stays on"""
+    recovery: Ints
+    """(C,) index into RECOVERIES"""
     inventory_low_start_kwh_th: Floats
     """(C,) inventory at window start in the low course"""
     peak_rise_k: Floats
@@ -62,19 +46,6 @@ class Quoted:
     """Candidates simulated, quoted or not"""
 
 
-def ground(roster: Roster, outlook: Outlook, standing: Standing, in_force: Stages | None = None) -> Ground:
-    """Work out conditions and the usual case (other calls in force carried out) from best and low inventory."""
-    here = conditions(roster, outlook, standing)
-    machines = roster.chillers.exists.shape[1]
-    stages = in_force if in_force is not None else no_stages(roster.count, machines)
-    rows = plants(roster, here, standing.tank_available, np.arange(roster.count))
-    usual, low = (
-        course(simulate(rows, here, stages, start, None))
-        for start in (standing.best_kwh_th, standing.low_kwh_th)
-    )
-    return Ground(roster, outlook, standing, here, usual, low, stages)
-
-
 def quote(base: Ground, terms: blocks.Terms, direction: Direction = Direction.SHED) -> Quoted:
     """Quote every candidate of every site.
 
@@ -83,24 +54,20 @@ def quote(base: Ground, terms: blocks.Terms, direction: Direction = Direction.SH
     if direction is not Direction.SHED:
         raise SitesError("direction absorb cannot be quoted yet; call with direction shed")
     offered = blocks.candidates(base.roster, base.standing, terms)
-    best = _run(base, offered, base.usual, base.standing.best_kwh_th)
-    low = _run(base, offered, base.usual_low, base.standing.low_kwh_th)
-    change = best.power_kw - base.usual.power_kw[offered.site]
-    change_low = low.power_kw - base.usual_low.power_kw[offered.site]
-    event = slice(terms.event_from, terms.event_to)
-    expected = direction.sign * change[:, event]
-    verdict = _verdict(base, terms, offered, (best, low), expected, direction.sign * change_low[:, event])
-    kept = np.flatnonzero(verdict == 0)
+    event = (terms.event_from, terms.event_to)
+    tried = try_all(base, offered, event, direction.sign)
+    best, kept = tried.best, tried.kept
     site = offered.site[kept]
+    change = best.power_kw - base.usual.power_kw[site]
     lack_price = lack_price_per_kwh_th(base.here, base.outlook)[site]
     cost = cost_parts(
         base.outlook.take(site),
         base.roster.buildings.take(site),
         base.usual.power_kw[site],
-        change[kept],
+        change,
         (offered.start[kept], offered.end[kept]),
-        best.unmet_kwh_th[kept],
-        best.lack_kwh_th[kept],
+        best.unmet_kwh_th,
+        best.lack_kwh_th,
         lack_price,
     )
     quotes = DenseQuotes(
@@ -109,26 +76,27 @@ def quote(base: Ground, terms: blocks.Terms, direction: Direction = Direction.SH
         event_from=terms.event_from,
         event_to=terms.event_to,
         site=site,
-        quote_id=_quote_ids(base.roster, offered.site)[kept],
+        quote_id=_quote_ids(base.roster, offered)[kept],
         stages=offered.stages.take(kept),
         window_start=offered.start[kept],
         window_end=offered.end[kept],
-        expected_kw=expected[kept],
-        change_kw=change[kept],
+        expected_kw=tried.expected_kw[kept],
+        change_kw=change,
         cost=cost,
-        unmet_kwh_th=best.unmet_kwh_th[kept],
-        end_lack_kwh_th=best.lack_kwh_th[kept],
+        unmet_kwh_th=best.unmet_kwh_th,
+        end_lack_kwh_th=best.lack_kwh_th,
         end_lack_price_per_kwh_th=lack_price,
-        limited_by=_limited_by(best, kept),
-        site_limited_by=_site_limits(base, terms, offered.site, verdict, expected),
+        limited_by=tried.limited_by,
+        site_limited_by=_site_limits(base, terms, offered.site, tried.verdict, tried.expected_kw),
     )
     return Quoted(
         ground=base,
         quotes=quotes,
         load_limit_fraction=offered.load_limit_fraction[kept],
-        inventory_low_start_kwh_th=low.inventory_at_start_kwh_th[kept],
-        peak_rise_k=best.rise_k[kept].max(axis=1, initial=0.0),
-        full_again=best.full_again[kept],
+        recovery=offered.recovery[kept],
+        inventory_low_start_kwh_th=tried.low_start_kwh_th,
+        peak_rise_k=best.rise_k.max(axis=1, initial=0.0),
+        full_again=best.full_again,
         tried=len(offered.site),
     )
 
@@ -137,52 +105,11 @@ def detail(quoted: Quoted, candidate: Ints) -> Course:
     """Whole course of the chosen candidates (row,), from the best estimate of the inventory."""
     base, quotes = quoted.ground, quoted.quotes
     site = quotes.site[candidate]
-    rows = plants(base.roster, base.here, base.standing.tank_available, site)
+    recovery = (quoted.recovery[candidate], quotes.window_end[candidate])
+    rows = plants(base.roster, base.here, base.standing.tank_available, site, recovery)
     stages = base.in_force.take(site).join(quotes.stages.take(candidate))
-    start = base.standing.best_kwh_th[site]
+    start = at_rest(base.standing.best_kwh_th[site])
     return course(simulate(rows, base.here, stages, start, base.usual.as_usual))
-
-
-def _run(base: Ground, offered: blocks.Candidates, usual: Course, inventory: Floats) -> Tally:
-    rows = plants(base.roster, base.here, base.standing.tank_available, offered.site)
-    stages = base.in_force.take(offered.site).join(offered.stages)
-    moments = simulate(rows, base.here, stages, inventory[offered.site], usual.as_usual)
-    return tally(moments, rows, base.here, usual, offered.start, offered.end)
-
-
-def _verdict(
-    base: Ground,
-    terms: blocks.Terms,
-    offered: blocks.Candidates,
-    runs: tuple[Tally, Tally],
-    expected: Floats,
-    expected_low: Floats,
-) -> Ints:
-    """Why each candidate is refused (C,), as an index into LIMITED_BY; 0 = it is quoted."""
-    rows = plants(base.roster, base.here, base.standing.tank_available, offered.site)
-    best, low = (broken(run, rows, base.here) for run in runs)
-    hour = np.arange(terms.event_from, terms.event_to)[None, :]
-    inside = (hour >= offered.start[:, None]) & (hour < offered.end[:, None])
-    least = np.where(inside, expected, np.inf).min(axis=1, initial=np.inf)
-    slack = LOW_TOLERANCE * np.abs(expected) + LEAST_SHED_KW
-    less = (inside & (expected_low < expected - slack)).any(axis=1)
-    return np.select(
-        [least < LEAST_SHED_KW, best > 0, low > 0, less],
-        [
-            np.full_like(best, LIMITED_BY.index("already_off")),
-            best,
-            low,
-            np.full_like(best, LIMITED_BY.index("inventory")),
-        ],
-        default=0,
-    )
-
-
-def _limited_by(best: Tally, kept: Ints) -> Ints:
-    """What a quoted candidate leans on: the tank's cause where load goes unmet, else nothing."""
-    cause = tank_cause(best)[kept]
-    comfort = np.where(best.unmet_kwh_th[kept] > 0.0, LIMITED_BY.index("comfort"), 0)
-    return np.where(cause > 0, cause, comfort)
 
 
 def _site_limits(base: Ground, terms: blocks.Terms, site: Ints, verdict: Ints, expected: Floats) -> Ints:
@@ -209,14 +136,17 @@ def _site_limits(base: Ground, terms: blocks.Terms, site: Ints, verdict: Ints, e
     return result
 
 
-def _quote_ids(roster: Roster, site: Ints) -> Strings:
-    """Id of each candidate: the site's id and the candidate's number within the site, from 1."""
+def _quote_ids(roster: Roster, offered: blocks.Candidates) -> Strings:
+    """Id of each candidate: the site's id, the candidate's number within the site from 1, and its recovery where
+    that is not the usual one."""
+    site = offered.site
     if not len(site):
         return np.zeros(0, dtype=np.object_)
     first = np.searchsorted(site, site, side="left")
     number = np.strings.zfill((np.arange(len(site)) - first + 1).astype(np.str_), 4)
     named = np.strings.add(np.strings.add(roster.buildings.site_id.astype(np.str_)[site], "."), number)
-    result: Strings = named.astype(np.object_)
+    suffix = np.array([f"-{name}" if code != USUAL else "" for code, name in enumerate(RECOVERIES)])
+    result: Strings = np.strings.add(named, suffix[offered.recovery]).astype(np.object_)
     return result
 
 

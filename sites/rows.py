@@ -23,10 +23,25 @@ class Plants(Rows):
     tank_available: Bools
     reserve_kwh_th: Floats
     """(row,) inventory that staged intervals leave untouched"""
+    recovery: Ints
+    """(row,) index into sites.recovery.RECOVERIES: when the tank may be brought back to the usual case's level"""
+    recover_from: Ints
+    """(row,) interval from which the recovery holds"""
 
 
-def plants(roster: Roster, here: Conditions, tank_available: Bools, rows: Ints) -> Plants:
-    """Gather sites into rows, shape (row,) of site indices."""
+def plants(
+    roster: Roster,
+    here: Conditions,
+    tank_available: Bools,
+    rows: Ints,
+    recovery: tuple[Ints, Ints] | None = None,
+) -> Plants:
+    """Gather sites into rows, shape (row,) of site indices.
+
+    `recovery`: index into RECOVERIES and first interval it holds in, each (row,); None = as usual for all.
+    """
+    as_usual = np.zeros(len(rows), dtype=np.int64)
+    code, recover_from = (as_usual, as_usual) if recovery is None else recovery
     taken = roster.take(rows)
     lmtd = np.broadcast_to(here.charge_lmtd_k[rows][:, None], taken.tanks.exists.shape)
     return Plants(
@@ -39,4 +54,6 @@ def plants(roster: Roster, here: Conditions, tank_available: Bools, rows: Ints) 
         zone=comfort.two_node(taken.buildings, here.step_h),
         tank_available=tank_available[rows] & taken.tanks.exists,
         reserve_kwh_th=taken.buildings.held_back_kwh_th,
+        recovery=code,
+        recover_from=recover_from,
     )

@@ -13,6 +13,9 @@ from sites.roster import LAYOUTS
 from sites.rows import Plants
 from sites.units import Bools, Floats, Ints, total
 
+SERIES_PASSES = 2
+"""Leaves the limit of a tank in series less than 0.2 % too high."""
+
 
 def held(rows: Plants, inventory: Floats) -> Floats:
     """Sum (row,) over the tanks that are in service."""
@@ -83,18 +86,20 @@ def discharge(
 ) -> Discharged:
     """What the tanks give of what is `wanted` (row,) beside machines that can do `direct_cap` (row,).
 
-    Two passes in series: where the first limit leaves more load to machines upstream, the tank's inlet is
-    colder and its limit lower. In parallel the inlet is the loop's return and one pass is exact.
+    In series the inlet follows the tanks' share of what is served (the building's flow is cut to what can be
+    cooled to its supply), and the share follows the limit: from the share that is wanted, SERIES_PASSES more
+    close in on the limit from above, each some eight times nearer. In parallel the inlet is the loop's return
+    and one pass is exact.
     """
-    share_of = 1.0 / np.maximum(load, 1e-9)
-    knots, lmtd = _knots(rows, wanted * share_of)
+    knots, lmtd = _knots(rows, wanted / np.maximum(load, 1e-9))
     most = _most(rows, step_h, start, loss, knots)
     usable = _above_reserve(rows, step_h, staged, start, loss, most)
     drawn = np.minimum(wanted, usable)
     pick = series.index
-    if len(pick):
+    for _ in range(SERIES_PASSES if len(pick) else 0):
         rest = np.minimum(load - drawn, direct_cap)[pick]
-        knots[pick], lmtd[pick] = _knots(series.rows, 1.0 - rest * share_of[pick])
+        share = drawn[pick] / np.maximum(drawn[pick] + rest, 1e-9)
+        knots[pick], lmtd[pick] = _knots(series.rows, share)
         most[pick] = _most(series.rows, step_h, start[pick], loss[pick], knots[pick])
         part = (start[pick], loss[pick], most[pick])
         usable[pick] = _above_reserve(series.rows, step_h, staged[pick], *part)

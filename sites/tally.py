@@ -3,7 +3,6 @@
 Sums and peaks only, so that many candidates fit in memory; course.py keeps everything for the chosen few.
 """
 
-from collections.abc import Iterable
 from dataclasses import dataclass
 
 import numpy as np
@@ -13,11 +12,15 @@ from sites.conditions import Conditions
 from sites.course import Course
 from sites.plant import Moment
 from sites.quotes import LIMITED_BY
+from sites.roster import Rows
 from sites.rows import Plants
 from sites.units import Bools, Floats, Ints, total
 
 UNMET_TOLERANCE_KW_TH = 1e-6
 NEAR_EMPTY_FRACTION = 0.02
+EMPTY_FRACTION = 1e-3
+REMNANT_FRACTION = 0.1
+"""A tank that still gives this share of what is asked in the interval it runs empty in ran out in its middle."""
 FULL_AGAIN_FRACTION = 1e-3
 """A tank is full again when it lies within this share of capacity of the usual case (and always, below)."""
 
@@ -36,10 +39,14 @@ class Tally:
     """Worst unmet beyond the usual case after the window"""
     critical_short_kw_th: Floats
     """Worst lack against the critical load, with the largest running machine lost"""
+    usual_short: Bools
+    """In the window load goes unmet in the usual case already"""
     rate_bound: Bools
     """In the window the tanks were asked for more than their rate, with inventory left"""
     stock_bound: Bools
     """In the window the tanks were asked for more than their inventory"""
+    ran_out: Bools
+    """In the window the tanks ran empty in the middle of an interval"""
     reserve_bound: Bools
     """In the window the held-back inventory was reached"""
     inventory_at_start_kwh_th: Floats
@@ -50,59 +57,88 @@ class Tally:
     """How far the row ends below the usual case"""
 
 
-class _Sums:
-    """Running sums of one simulation; filled interval by interval."""
+@dataclass(frozen=True)
+class Sums(Rows):
+    """Running sums of one simulation of candidate rows; filled interval by interval with `add`."""
 
-    def __init__(self, rows: int, intervals: int) -> None:
-        self.power_kw = np.zeros((rows, intervals))
-        self.rise_k = np.zeros((rows, intervals))
-        self.unmet_kwh_th = np.zeros(rows)
-        self.unmet_after_kw_th = np.zeros(rows)
-        self.critical_short_kw_th = np.zeros(rows)
-        self.rate_bound = np.zeros(rows, dtype=np.bool_)
-        self.stock_bound = np.zeros(rows, dtype=np.bool_)
-        self.reserve_bound = np.zeros(rows, dtype=np.bool_)
-        self.at_start = np.zeros(rows)
-        self.at_end = np.zeros(rows)
-        self.full_again = np.full(rows, -1, dtype=np.int64)
-        self.lack_kwh_th = np.zeros(rows)
+    power_kw: Floats
+    """(row, interval)"""
+    rise_k: Floats
+    unmet_kwh_th: Floats
+    unmet_after_kw_th: Floats
+    critical_short_kw_th: Floats
+    usual_short: Bools
+    rate_bound: Bools
+    stock_bound: Bools
+    ran_out: Bools
+    reserve_bound: Bools
+    at_start: Floats
+    at_end: Floats
+    full_again: Ints
+    lack_kwh_th: Floats
+
+    def tally(self) -> "Tally":
+        """What has been summed up so far."""
+        return Tally(
+            power_kw=self.power_kw,
+            rise_k=self.rise_k,
+            unmet_kwh_th=self.unmet_kwh_th,
+            unmet_after_kw_th=self.unmet_after_kw_th,
+            critical_short_kw_th=self.critical_short_kw_th,
+            usual_short=self.usual_short,
+            rate_bound=self.rate_bound,
+            stock_bound=self.stock_bound,
+            ran_out=self.ran_out,
+            reserve_bound=self.reserve_bound,
+            inventory_at_start_kwh_th=self.at_start,
+            inventory_at_end_kwh_th=self.at_end,
+            full_again=self.full_again,
+            lack_kwh_th=self.lack_kwh_th,
+        )
 
 
-def tally(
-    moments: Iterable[Moment], rows: Plants, here: Conditions, usual: Course, start: Ints, end: Ints
-) -> Tally:
-    """Sum up a simulation of candidate rows whose windows are [start, end) (row,), against the usual course."""
-    sums = _Sums(len(rows.site), here.load_kw_th.shape[1])
-    for moment in moments:
-        _add(sums, moment, rows, here, usual, start, end)
-    return Tally(
-        power_kw=sums.power_kw,
-        rise_k=sums.rise_k,
-        unmet_kwh_th=sums.unmet_kwh_th,
-        unmet_after_kw_th=sums.unmet_after_kw_th,
-        critical_short_kw_th=sums.critical_short_kw_th,
-        rate_bound=sums.rate_bound,
-        stock_bound=sums.stock_bound,
-        reserve_bound=sums.reserve_bound,
-        inventory_at_start_kwh_th=sums.at_start,
-        inventory_at_end_kwh_th=sums.at_end,
-        full_again=sums.full_again,
-        lack_kwh_th=sums.lack_kwh_th,
+def sums(power_kw: Floats) -> Sums:
+    """Empty sums of rows whose power (row, interval) is `power_kw` until they are run."""
+    rows = len(power_kw)
+
+    def zeros() -> Floats:
+        return np.zeros(rows)
+
+    def no() -> Bools:
+        return np.zeros(rows, dtype=np.bool_)
+
+    return Sums(
+        power_kw=power_kw.copy(),
+        rise_k=np.zeros(power_kw.shape),
+        unmet_kwh_th=zeros(),
+        unmet_after_kw_th=zeros(),
+        critical_short_kw_th=zeros(),
+        usual_short=no(),
+        rate_bound=no(),
+        stock_bound=no(),
+        ran_out=no(),
+        reserve_bound=no(),
+        at_start=zeros(),
+        at_end=zeros(),
+        full_again=np.full(rows, -1, dtype=np.int64),
+        lack_kwh_th=zeros(),
     )
 
 
-def _add(
-    sums: _Sums, moment: Moment, rows: Plants, here: Conditions, usual: Course, start: Ints, end: Ints
+def add(
+    sums: Sums, moment: Moment, rows: Plants, here: Conditions, usual: Course, start: Ints, end: Ints
 ) -> None:
+    """Add one interval of rows whose windows are [start, end) (row,), against the usual course."""
     t = moment.interval
     capacity = total(rows.roster.tanks.capacity_kwh_th)
     held = total(moment.inventory_kwh_th)
     usual_held = total(usual.inventory_kwh_th[rows.site, :, t])
     extra = moment.unmet_kw_th - usual.unmet_kw_th[rows.site, t]
     inside = (start <= t) & (t < end)
+    sums.usual_short[:] |= inside & (usual.unmet_kw_th[rows.site, t] > UNMET_TOLERANCE_KW_TH)
     sums.power_kw[:, t] = moment.power_kw
     sums.rise_k[:, t] = moment.air_rise_k
-    sums.unmet_kwh_th += np.maximum(extra, 0.0) * here.step_h
+    sums.unmet_kwh_th[:] += np.where(extra > UNMET_TOLERANCE_KW_TH, extra, 0.0) * here.step_h
     np.maximum(sums.unmet_after_kw_th, np.where(t >= end, extra, 0.0), out=sums.unmet_after_kw_th)
     critical = np.minimum(rows.roster.buildings.critical_kw_th, moment.load_kw_th)
     lack = np.maximum(critical - moment.firm_kw_th, critical - (moment.load_kw_th - moment.unmet_kw_th))
@@ -112,21 +148,27 @@ def _add(
     reserve = rows.reserve_kwh_th
     at_reserve = (reserve > 0.0) & (held <= reserve + NEAR_EMPTY_FRACTION * capacity)
     empty = held <= NEAR_EMPTY_FRACTION * capacity
-    sums.reserve_bound |= short & at_reserve
-    sums.stock_bound |= short & empty & ~at_reserve
-    sums.rate_bound |= short & ~empty & ~at_reserve
-    sums.at_start = np.where(t == start, total(moment.inventory_start_kwh_th), sums.at_start)
-    sums.at_end = np.where(t == end - 1, held, sums.at_end)
+    sums.reserve_bound[:] |= short & at_reserve
+    sums.ran_out[:] |= (
+        short & (held <= EMPTY_FRACTION * capacity) & (drawn > REMNANT_FRACTION * moment.wanted_kw_th)
+    )
+    sums.stock_bound[:] |= short & empty & ~at_reserve
+    sums.rate_bound[:] |= short & ~empty & ~at_reserve
+    np.copyto(sums.at_start, total(moment.inventory_start_kwh_th), where=start == t)
+    np.copyto(sums.at_end, held, where=end - 1 == t)
     back = (t >= end) & (sums.full_again < 0) & (held >= usual_held - FULL_AGAIN_FRACTION * capacity)
     sums.full_again[back] = t
-    sums.lack_kwh_th = np.maximum(usual_held - held, 0.0)
+    sums.lack_kwh_th[:] = np.maximum(usual_held - held, 0.0)
 
 
-def broken(result: Tally, rows: Plants, here: Conditions) -> Ints:
+def broken(result: Tally, rows: Plants, here: Conditions, usual_counts: bool = True) -> Ints:
     """First limit each row breaks, (row,), as an index into LIMITED_BY; 0 ("none") where it keeps all.
 
     Comfort is the critical load, sites that allow no unmet load, the site's own ceiling and the drift limits
-    in occupied hours; recovery is load left unmet after the window because the tank is low.
+    in occupied hours, and (where `usual_counts`) a window in which the usual plan is short of cooling already:
+    what it would have drawn then hangs on the minute the tank runs out. So does the zone of a tank that runs out
+    in the middle of a window's interval: inventory. Recovery is load left unmet after the window because the tank
+    is low.
     """
     buildings = rows.roster.buildings
     occupied = here.occupied[rows.site]
@@ -138,8 +180,15 @@ def broken(result: Tally, rows: Plants, here: Conditions) -> Ints:
     cause = tank_cause(result)
     tank_or_comfort = np.where(cause > 0, cause, LIMITED_BY.index("comfort"))
     return np.select(
-        [warm | unserved | critical, result.unmet_after_kw_th > UNMET_TOLERANCE_KW_TH],
-        [tank_or_comfort, np.full_like(cause, LIMITED_BY.index("recovery"))],
+        [
+            warm | unserved | critical | (result.usual_short & usual_counts),
+            result.ran_out,
+            result.unmet_after_kw_th > UNMET_TOLERANCE_KW_TH,
+        ],
+        [
+            tank_or_comfort,
+            *(np.full_like(cause, LIMITED_BY.index(name)) for name in ("inventory", "recovery")),
+        ],
         default=LIMITED_BY.index("none"),
     )
 

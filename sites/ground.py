@@ -1,0 +1,90 @@
+"""What quotes stand on: conditions and the usual case of every site, worked out once for all candidates."""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from sites.candidate import Stages, no_stages
+from sites.conditions import Conditions, conditions
+from sites.course import Course, course
+from sites.dispatch import plant_power_kw, staged_load_kw_th
+from sites.outlook import Outlook
+from sites.plant import at_rest, simulate
+from sites.roster import Roster, Standing
+from sites.rows import plants
+from sites.units import Floats, total
+
+STAGE_BAND = 0.03
+"""Least width of the band above a machine's start in which it may be off for part of an interval, of the load."""
+
+
+@dataclass(frozen=True)
+class Ground:
+    """All that quotes stand on: the sites, what is expected, where they stand, and the usual case."""
+
+    roster: Roster
+    outlook: Outlook
+    standing: Standing
+    here: Conditions
+    usual: Course
+    usual_low: Course
+    overstated_kw: Floats
+    """(site, interval) by how much the usual power may be too high: its tanks are held to their limits at the END
+    of each interval, and a machine that starts in the middle of an interval counts for all of it"""
+    in_force: Stages
+    """Stages of other calls in force, one row a site: part of the usual case"""
+
+
+def ground(roster: Roster, outlook: Outlook, standing: Standing, in_force: Stages | None = None) -> Ground:
+    """Work out conditions and the usual case (other calls in force carried out) from best and low inventory."""
+    here = conditions(roster, outlook, standing)
+    machines = roster.chillers.exists.shape[1]
+    stages = in_force if in_force is not None else no_stages(roster.count, machines)
+    rows = plants(roster, here, standing.tank_available, np.arange(roster.count))
+    usual, low = (
+        course(simulate(rows, here, stages, at_rest(start), None))
+        for start in (standing.best_kwh_th, standing.low_kwh_th)
+    )
+    overstated = _by_tank_kw(here, usual) + _by_staging_kw(roster, here, usual)
+    return Ground(roster, outlook, standing, here, usual, low, overstated, stages)
+
+
+def _by_tank_kw(here: Conditions, usual: Course) -> Floats:
+    """Where the usual plan asks its tanks for more than their limit, the limit in the interval's middle is higher
+    by about drawn x dt / 2 over the inventory (a limit in proportion to inventory), and machines do that much
+    less, at their mean full-load power; (site, interval)."""
+    drawn = usual.discharge_kw_th.sum(axis=1)
+    held = np.maximum(usual.inventory_kwh_th.sum(axis=1), 1e-9)
+    kw_th = np.minimum(usual.wanted_kw_th - drawn, drawn * drawn * here.step_h / 2.0 / held)
+    made, full = here.direct_kw_th.sum(axis=1), here.direct_full_kw.sum(axis=1)
+    specific = np.divide(full, made, out=np.zeros_like(made), where=made > 0.0)
+    return np.asarray(np.maximum(kw_th, 0.0) * specific)
+
+
+def _by_staging_kw(roster: Roster, here: Conditions, usual: Course) -> Floats:
+    """What the plant draws less where its load comes within the interval as low as a machine's start and that
+    machine is left off; (site, interval), in direct cooling. Within an interval the load moves by a quarter of what
+    lies between its neighbours either way, and by STAGE_BAND at least."""
+    sites, machines, count = usual.direct_kw_th.shape
+    chillers = roster.chillers
+
+    def flat(values: Floats) -> Floats:
+        """(site, machine, interval) to (site x interval, machine)"""
+        return np.moveaxis(values, 1, 2).reshape(-1, machines)
+
+    capacity = flat(here.direct_kw_th * usual.limit_fraction)
+    demand = np.minimum(total(flat(usual.direct_kw_th)), total(capacity))
+    stage_up = np.repeat(roster.buildings.stage_up_fraction, count)
+    moves = np.abs(np.gradient(demand.reshape(sites, count), axis=1)).ravel() / 2.0
+    band = np.divide(moves, demand, out=np.zeros_like(demand), where=demand > 0.0)
+    later = stage_up * (1.0 + np.clip(band, STAGE_BAND, 1.0))
+    kind, own = np.repeat(chillers.kind, count, axis=0), np.repeat(chillers.dedicated_aux_kw, count, axis=0)
+    available, full = flat(here.direct_kw_th), flat(here.direct_full_kw)
+
+    def drawn(start: Floats) -> Floats:
+        load = staged_load_kw_th(demand, capacity, start)
+        return total(plant_power_kw(load, available, full, kind, own))
+
+    less = drawn(stage_up) - drawn(later)
+    makes_ice = usual.making_ice.any(axis=1)
+    return np.where(makes_ice, 0.0, np.maximum(less, 0.0).reshape(sites, count))
