@@ -3,7 +3,7 @@
 Owns the gathering and the wording; what is wrong is found by folder.py, what is assumed by resolve.py.
 """
 
-from collections.abc import Iterable
+from collections.abc import Callable, Iterable
 from dataclasses import asdict, dataclass
 from itertools import groupby
 from pathlib import Path
@@ -12,7 +12,8 @@ from typing import Any, Final
 import numpy as np
 import pandas as pd
 
-from fleet.errors import Problem
+from fleet.effects import Effect, Effects, effects
+from fleet.errors import FleetError, Problem
 from fleet.folder import FleetFolder, survey_folder
 from fleet.resolve import Assumption, Resolved, assumptions, resolve
 from fleet.settings import DefaultUsed, defaults_used
@@ -46,6 +47,8 @@ class CheckReport:
     defaults: tuple[DefaultUsed, ...]
     notes: tuple[str, ...]
     abilities: tuple[Ability, ...]
+    effects: Effects | None = None
+    """what the assumed values are worth in kW, where it was asked for and there is no problem"""
 
     @property
     def is_ok(self) -> bool:
@@ -53,8 +56,13 @@ class CheckReport:
         return not self.problems
 
 
-def report(path: Path) -> CheckReport:
-    """Check a fleet folder; FleetError where there is none."""
+def report(
+    path: Path, with_effects: bool = False, progress: Callable[[str], None] = lambda text: None
+) -> CheckReport:
+    """Check a fleet folder, where asked with what its assumed values are worth in kW.
+
+    Raises FleetError where there is no such folder.
+    """
     found = survey_folder(path)
     folder, problems = found.folder, tuple(found.problems)
     if folder is None:
@@ -66,7 +74,13 @@ def report(path: Path) -> CheckReport:
         assumed = (*resolved.assumed, *_never_said(folder, resolved))
     defaults = tuple(defaults_used(folder.settings))
     abilities = tuple(_ability(command, folder, problems) for command in _NEEDED)
-    return CheckReport(path, problems, assumed, defaults, tuple(folder.notes), abilities)
+    notes, worth = folder.notes, None
+    if with_effects and abilities[0].is_ok:
+        try:
+            worth = effects(folder, progress)
+        except FleetError as error:
+            notes = [*notes, f"effects cannot be worked out: {error}"]
+    return CheckReport(path, problems, assumed, defaults, tuple(notes), abilities, worth)
 
 
 def lines(found: CheckReport) -> list[str]:
@@ -81,6 +95,10 @@ def lines(found: CheckReport) -> list[str]:
     written += _section("notes", found.notes)
     written += _section("settings not given", (f"{used.name} = {used.value}" for used in found.defaults))
     written += _section("assumed", assumed_lines(found.assumed))
+    if found.effects is not None:
+        written += effect_lines(found.effects)
+    elif found.assumed and found.abilities[0].is_ok:
+        written.append(f"what these are worth in kW: shedwright check {found.path} --effects")
     return written
 
 
@@ -96,6 +114,7 @@ def document(found: CheckReport) -> dict[str, Any]:
         "notes": list(found.notes),
         "settings_not_given": {one.name: one.value for one in found.defaults},
         "assumed": [asdict(one) for one in found.assumed],
+        "effects": asdict(found.effects) if found.effects is not None else None,
     }
 
 
@@ -112,6 +131,29 @@ def assumed_lines(assumed: Iterable[Assumption]) -> list[str]:
         value = f" = {ones[0].value}" if same else ""
         written.append(f"{table}.{column}{value} ({why}): {', '.join(shown)}{more}")
     return written
+
+
+def effect_lines(found: Effects) -> list[str]:
+    """The effects with how they were worked out, one line a column, the largest first."""
+    written = [
+        f"worth of what is assumed: kW that all sites sustain over {found.event}, each for the whole of it,",
+        f"before feeder and call limits: {found.base_kw:,.0f} as assumed; the change when the assumed cells of one",
+        "column take another value (and the site that it moves most):",
+    ]
+    nothing = []
+    for (table, column), group in groupby(found.effects, key=lambda one: (one.table, one.column)):
+        ones = list(group)
+        if any(round(abs(one.change_kw)) or round(abs(one.most_kw)) for one in ones):
+            written.append(f"  {table}.{column}: " + ", ".join(_effect_words(one) for one in ones))
+        else:
+            nothing.append(f"{table}.{column}")
+    return [*written, f"  no whole kW: {', '.join(nothing)}"] if nothing else written
+
+
+def _effect_words(one: Effect) -> str:
+    most = f" ({one.most_site} {one.most_kw:+,.0f})" if round(one.most_kw) else ""
+    # A whole number has no minus zero.
+    return f"{one.tried} {round(one.change_kw):+,d} kW{most}"
 
 
 def _never_said(folder: FleetFolder, resolved: Resolved) -> list[Assumption]:

@@ -29,6 +29,7 @@ _PER_M2: Final = {
     "coupling_kw_per_k": 0.009,
     "envelope_kw_per_k": 0.001,
 }
+_MASS_PER_M2: Final = "mass_kwh_per_k_m2"
 _PER_PEAK: Final = {"shared_aux_kw": 0.015, "tank_pump_kw": 0.008}
 _DEDICATED_AUX: Final = {"air_cooled_screw": 0.0, "water_cooled_centrifugal": 0.033}
 _KEYS: Final = {
@@ -113,13 +114,15 @@ def _sites(frames: dict[str, pd.DataFrame], settings: Settings, assumed: list[As
 def _by_building_type(sites: pd.DataFrame, fill: "Fill") -> None:
     """What is usual for the building's type; the type itself comes first."""
     fill("building_type", table("fleet", "sites").column("building_type").default, "default")
-    for name, kind in sites.groupby("building_type", sort=False).groups.items():
-        rows = sites.index.isin(kind)
-        for column in USUAL_COLUMNS:
-            fill(column, usual(sites["building_type"], column).where(rows), f"usual for type {name}")
-        per_m2 = usual(sites["building_type"], "mass_kwh_per_k_m2").where(rows)
-        why = f"{per_m2.max():g} per m2 of floor area, usual for type {name}"
-        fill("mass_kwh_per_k", sites["floor_area_m2"] * per_m2, why)
+    for column in (*USUAL_COLUMNS, "mass_kwh_per_k"):
+        lacking = sites.loc[sites[column].isna(), "building_type"].unique()
+        values = usual(sites["building_type"], _MASS_PER_M2 if column == "mass_kwh_per_k" else column)
+        for name in lacking:
+            own, why = values.where(sites["building_type"] == name), f"usual for type {name}"
+            if column == "mass_kwh_per_k":
+                why = f"{own.max():g} per m2 of floor area, {why}"
+                own = own * sites["floor_area_m2"]
+            fill(column, own, why)
 
 
 def _chillers(given: pd.DataFrame, tanks: pd.DataFrame, assumed: list[Assumption]) -> pd.DataFrame:
