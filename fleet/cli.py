@@ -137,7 +137,14 @@ def columns(
 
 
 @app.command()
-def check(fleet: FleetDir, json: Json = False) -> None:
+def check(
+    fleet: FleetDir,
+    effects: Annotated[
+        bool,
+        typer.Option("--effects", help="Say what the assumed values are worth in kW; takes some seconds."),
+    ] = False,
+    json: Json = False,
+) -> None:
     """Check a fleet folder: all problems at once, what can be done with it, every assumed value.
 
     Example: shedwright check rehearsal
@@ -146,7 +153,7 @@ def check(fleet: FleetDir, json: Json = False) -> None:
 
     terminal = Terminal(json)
     terminal.progress("checking")
-    found = checking.report(fleet)
+    found = checking.report(fleet, effects, terminal.progress)
     terminal.put(checking.lines(found), checking.document(found))
     if found.problems:
         raise typer.Exit(REFUSED)
