@@ -13,7 +13,7 @@ from typing import Any, Final
 import numpy as np
 import pandas as pd
 
-from fleet.errors import Problem, Refused
+from fleet.errors import FleetError, Problem, Refused
 from fleet.espi import RANK, read_feed
 from fleet.folder import FleetFolder, Meters, read_meters
 from fleet.references import unmapped_meters
@@ -39,17 +39,33 @@ def read_meter_file(folder: FleetFolder, since: np.datetime64, until: np.datetim
         rows, notes = _table(raw, folder, path)
         lengths = set(rows["seconds"])
         if not set(FORMS) & set(raw.columns) and lengths <= {folder.settings.interval_minutes * 60}:
-            return read_meters(folder, since, until, path)
+            found = read_meters(folder, since, until, path)
+            _check_period(found.frame, rows, since, until, path)
+            return found
     rows, told = _on_grid(rows, folder.settings.interval_minutes * 60, path)
     since_utc, until_utc = utc_timestamp(since), utc_timestamp(until)
     inside = (rows["interval_start"] >= since_utc) & (rows["interval_start"] < until_utc)
     frame = rows.loc[inside, COLUMNS]
+    _check_period(frame, rows, since, until, path)
     faults = unmapped_meters(frame, folder.frames["meter_map"], folder.frames["sites"]["site_id"], path.name)
     if faults:
         raise Refused(faults)
     with path.open("rb") as stream:
         digest = hashlib.file_digest(stream, "sha256").hexdigest()
     return Meters(frame, {path.name: digest}, [*notes, *told])
+
+
+def _check_period(
+    inside: pd.DataFrame, rows: pd.DataFrame, since: np.datetime64, until: np.datetime64, path: Path
+) -> None:
+    """FleetError where not one reading lies in the period: a file of another event or year."""
+    if len(inside) or rows.empty:
+        return
+    first, last = (f"{at:%Y-%m-%dT%H:%MZ}" for at in rows["interval_start"].agg(["min", "max"]))
+    raise FleetError(
+        f"{path.name}: came readings from {first} to {last}; expected some from {since}Z to before {until}Z, the "
+        "days that the settlement looks at; name the file of the event"
+    )
 
 
 def _named(rows: pd.DataFrame, folder: FleetFolder) -> pd.DataFrame:

@@ -110,3 +110,13 @@ def test_a_feed_goes_by_title_or_by_the_usage_points_number(tmp_path: Path) -> N
     )
     found = read(tmp_path, text, name="feed.xml")
     assert list(zip(found["meter_id"], found["kw"])) == [("House", 100.0), ("m1", 200.0)]
+
+
+@pytest.mark.parametrize("column", ["kw", "kwh"])
+def test_a_file_of_another_year_is_refused(tmp_path: Path, column: str) -> None:
+    text = f"meter_id,interval_start,{column}\nm1,2024-07-10T15:00Z,7\nm1,2024-07-10T15:15Z,8\n"
+    assert refusal(tmp_path, text) == (
+        "given.csv: came readings from 2024-07-10T15:00Z to 2024-07-10T15:15Z; expected some from "
+        "2025-07-10T00:00:00.000000Z to before 2025-07-11T00:00:00.000000Z, the days that the settlement looks at; "
+        "name the file of the event"
+    )

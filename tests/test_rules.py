@@ -109,3 +109,26 @@ def test_the_order_of_rounding_follows_the_fields() -> None:
     assert "performance factor unrounded" in plain and "capped at their commitment" not in plain
     other = rule("mine", {"mine": {"cap_intervals": True, "performance_decimals": 2}}).order_of_rounding
     assert other.index("capped at their commitment") < other.index("performance factor rounded half-up to 2")
+
+
+@pytest.mark.parametrize(
+    ("fields", "said"),
+    [
+        ({"ladder": [[0.7, 0.5], [0.6, 0.25]]}, "the ladder's lower bounds do not rise"),
+        ({"ladder": [[0.6, 0.25], [0.6, 0.5]]}, "the ladder's lower bounds do not rise"),
+        ({"performance_formula": "ladder"}, "a ladder with no rungs"),
+        ({"temperature_knots_c": [20.0, 10.0]}, "temperature_knots_c do not rise"),
+        ({"firm_level_charge_per_kwh": 6.0}, "firm_level_charge_per_kwh without firm_level_kw"),
+        (
+            {"kind": "temperature_regression", "rank": "nearest_weather"},
+            "a regression takes its days by recent, highest or middle, not by nearest_weather",
+        ),
+    ],
+)
+def test_what_does_not_fit_together_is_told_in_one_sentence(fields: dict[str, object], said: str) -> None:
+    with pytest.raises(Refused) as caught:
+        rule("mine", {"mine": fields})
+    assert str(caught.value) == (
+        f"fleet.toml, column rules.mine: came fields that do not fit together; expected {said}; "
+        "correct it in fleet.toml"
+    )
