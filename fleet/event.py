@@ -258,6 +258,7 @@ def quotes_frame(call: Chosen) -> pd.DataFrame:
             **{f"cost_{part}": quotes.cost[:, k] for k, part in enumerate(COST_PARTS)},
             "end_lack_kwh_th": quotes.end_lack_kwh_th,
             "end_lack_price_per_kwh_th": quotes.end_lack_price_per_kwh_th,
+            "inventory_low_start_kwh_th": quoted.inventory_low_start_kwh_th,
             "unmet_kwh_th": quotes.unmet_kwh_th,
             "limited_by": np.array(LIMITED_BY, dtype=object)[quotes.limited_by],
         }
