@@ -178,9 +178,10 @@ def guards(made: Settled) -> AnyArray:
             continue
         if (site, "tank") in there:
             found[row] = "tank"
-        elif (site, "plant") in there and (rule.pre_charge_guard, rule.stream) == (
+        elif (site, "plant") in there and (rule.pre_charge_guard, rule.stream, rule.kind) == (
             "tank_or_plant",
             "building",
+            "like_days",
         ):
             found[row] = "plant"
     return found

@@ -118,6 +118,7 @@ def _guards(plan: Plan, every: Streams) -> Strings:
     for site, rule in zip(plan.site_ids, plan.rules):
         wanted = rule.pre_charge_guard != "off" and rule.adjustment != "none" and rule.kind != "before_after"
         also_plant = rule.pre_charge_guard == "tank_or_plant" and rule.stream == "building"
+        also_plant &= rule.kind == "like_days"
         ways = ["tank", "plant"] if also_plant else ["tank"]
         found.append(next((way for way in ways if wanted and (site, way) in there), "none"))
     return np.array(found, dtype=object)

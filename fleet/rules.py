@@ -62,7 +62,8 @@ class SettlementRule(BaseModel):
 
     pre_charge_guard: Literal["off", "tank", "tank_or_plant"] = "off"
     """Adjust on load without the power that charges tanks: less the tank sub-meter; where there is none, and the
-    rule is on the building's meter, less the plant's."""
+    rule averages like days of the building's meter, less the plant's. Not the plant's in a regression: its usual
+    power says nothing of the event day's weather."""
     temperature_knots_c: tuple[float, ...] = (10.0, 16.0, 22.0, 28.0)
     """Regression: dry bulbs at which the slope may change."""
 

@@ -234,6 +234,9 @@ def test_without_a_tank_meter_the_plants_power_is_taken_out_and_a_lost_reading_l
     site = settle(facts, pd.concat([base, plant])).sites.iloc[0]
     assert site["guard"] == "plant"
     assert site["adjustment"] == pytest.approx((430.0 - 100.0) / (383.0 - 100.0))
+    regressed = PRESETS["temperature_regression"].model_copy(update={"minimum_days": 5})
+    warm = {"weather": weather(PEAKS), "stations": {"a": "w"}, "meter_map": pd.DataFrame(role)}
+    assert settle(worked_call(regressed, **warm), pd.concat([base, plant])).sites["guard"][0] == "none"
     lost = settle(facts, pd.concat([base, plant[~early]])).sites.iloc[0]
     assert (lost["adjustment_kind"], lost["state"]) == ("none", "provisional")
 
