@@ -193,7 +193,7 @@ def _score(heading: str, column: Column) -> tuple[float, str]:
     fits = unit is None or unit in accepted(unit_for(column)) or _is_bare(column)
     if not fits and not _is_size(column):
         return 0.0, UNUSED
-    names = [own, *COLUMN_WORDS.get(column.name, "").split(";")]
+    names = [own, plain_words(column.name), *COLUMN_WORDS.get(column.name, "").split(";")]
     likeness = max(_likeness(words, name) for name in names if name)
     bonus = 0.5 if unit is not None and unit in accepted(unit_for(column)) else 0.0
     if likeness == 1.0:
@@ -283,7 +283,8 @@ def _fault(
         named = ", ".join(sheets)
         return Problem(file, line.row, "sheet", repr(line.sheet), f"a sheet of {book}: {named}", "correct it")
     heading, _, value = line.heading.partition(EQUALS)
-    is_value = EQUALS in line.column
+    name, mark, ours = f"{line.column} ".partition(EQUALS)
+    name, ours, is_value = name.strip(), ours.strip(), bool(mark)
     if (
         not line.heading.startswith("=")
         and line.heading not in sheet.headings
@@ -296,13 +297,12 @@ def _fault(
         return None
     if line.table not in known:
         return Problem(file, line.row, "table", repr(line.table), f"one of {', '.join(known)}", "correct it")
-    name, _, ours = line.column.partition(EQUALS)
     table = known[line.table]
     if name not in table.names:
         advice = f"correct it, or leave table and column empty; `shedwright columns {line.table}` lists them"
         return Problem(file, line.row, "column", repr(line.column), f"a column of {line.table}", advice)
     column = table.column(name)
-    if is_value or line.column.endswith(EQUALS.rstrip()):
+    if is_value:
         if ours in column.choices:
             return None
         came, expected = (
