@@ -11,8 +11,16 @@ from typing import Any, Final, Self
 from sites.units import AnyArray, Bools, Floats, Ints, Strings
 
 CHILLER_KINDS: Final = ("air_cooled_screw", "water_cooled_centrifugal")
-TANK_KINDS: Final = ("ice_internal_melt", "ice_external_melt", "chilled_water")
-ICE_KINDS: Final = ("ice_internal_melt", "ice_external_melt")
+TANK_KINDS: Final = (
+    "ice_internal_melt",
+    "ice_external_melt",
+    "chilled_water",
+    "ice_encapsulated",
+    "eutectic_salt",
+)
+ICE_KINDS: Final = ("ice_internal_melt", "ice_external_melt", "ice_encapsulated")
+FREEZING_KINDS: Final = (*ICE_KINDS, "eutectic_salt")
+"""Kinds that sit at their melting point until the last of it: their standing loss does not fall with inventory."""
 STRATEGIES: Final = ("full_storage", "load_levelling", "chiller_priority", "storage_priority")
 LAYOUTS: Final = ("parallel", "series")
 

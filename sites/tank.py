@@ -14,7 +14,7 @@ import numpy as np
 from numpy.polynomial import polynomial
 
 from sites.errors import SitesError
-from sites.roster import ICE_KINDS, TANK_KINDS, Rows, Tanks, kind_is
+from sites.roster import FREEZING_KINDS, ICE_KINDS, TANK_KINDS, Rows, Tanks, kind_is
 from sites.units import SECONDS_PER_HOUR, FloatLike, Floats, Ints
 
 SET_A: Final = (0.0, 0.09, -0.15, 0.612, -0.324, -0.216)
@@ -37,6 +37,16 @@ TOUCHING_K: Final = 1e-9
 
 CHILLED_WATER_HOURS: Final = 5.0
 """A chilled-water tank with no flow limit given moves its capacity in this time (assumed, common practice)."""
+
+EUTECTIC_HOURS: Final = 6.0
+"""A eutectic tank with no flow limit given moves its capacity in this time while its limit is flat (assumed, common
+practice)."""
+EUTECTIC_FALLS_BELOW: Final = 0.4
+"""Charged fraction below which a eutectic tank's limit falls in proportion to what is left (assumed; flat and then
+falling as in Chen & Sheen 1993)."""
+EUTECTIC_MELTING_C: Final = 8.3
+EUTECTIC_LATENT_HEAT_KJ_PER_KG: Final = 95.0
+"""Phase change of the salt in use for cooling (Chen & Sheen 1993); such a tank cools no colder than that."""
 
 WATER_DENSITY_KG_PER_M3: Final = 999.78
 WATER_CP_KJ_PER_KG_K: Final = 4.1968
@@ -123,8 +133,11 @@ def minorant(coefficients: tuple[float, ...], knots: Floats) -> Floats:
 def discharge_curves(tanks: Tanks) -> RateCurves:
     """Discharge limits, rising with inventory.
 
-    Internal melt: SET_A in the discharged fraction. External melt: EXTERNAL_MELT_DISCHARGE. Chilled water:
-    flat, its discharge limit, or capacity over CHILLED_WATER_HOURS where none is given.
+    Internal melt: SET_A in the discharged fraction. External melt: EXTERNAL_MELT_DISCHARGE. Encapsulated ice melts
+    from the capsule's wall inwards through a growing layer of water: INTERNAL_MELT in the discharged fraction (taken
+    over from coils; the maker's fit replaces it). Chilled water: flat, its discharge limit, or capacity over
+    CHILLED_WATER_HOURS where none is given. Eutectic salt: flat likewise (EUTECTIC_HOURS), falling in proportion to
+    inventory below EUTECTIC_FALLS_BELOW.
     """
     return _curves(tanks, "discharge", tanks.discharge_limit_kw_th)
 
@@ -134,7 +147,8 @@ def charge_curves(tanks: Tanks) -> RateCurves:
 
     Ice: INTERNAL_MELT in the charged fraction, for ice grows on the coil whichever side it melts from. SET_A
     would stop short of full at usual brine (0.96 at an LMTD of 5 K), which a tank in daily use does not.
-    Chilled water: flat until full, its charge limit, or capacity over CHILLED_WATER_HOURS.
+    Chilled water and eutectic salt: flat until full, the charge limit, or capacity over CHILLED_WATER_HOURS or
+    EUTECTIC_HOURS.
     """
     return _curves(tanks, "charge", tanks.charge_limit_kw_th)
 
@@ -209,10 +223,10 @@ def standing_loss_kw_th(
 ) -> Floats:
     """Standing loss over one interval, kW_th; all but step_h broadcast.
 
-    Ice sits at 0 degC to the last, UA (T_ambient - 0): a share of CAPACITY per hour while any ice is left.
-    Chilled water: a share of inventory. At most what is there, E / dt.
+    Ice and eutectic salt sit at their melting point to the last, UA (T_ambient - T_melting): a share of CAPACITY
+    per hour while any of it is left. Chilled water: a share of inventory. At most what is there, E / dt.
     """
-    of_capacity = kind_is(kind, TANK_KINDS, ICE_KINDS)
+    of_capacity = kind_is(kind, TANK_KINDS, FREEZING_KINDS)
     held = np.where(of_capacity, capacity_kwh_th, inventory_kwh_th)
     return np.minimum(held * loss_fraction_per_h, inventory_kwh_th / step_h)
 
@@ -250,6 +264,29 @@ def usable_water_kwh_th(
     return usable
 
 
+def water_at_return_kwh_th(
+    capacity_kwh_th: FloatLike, supply_c: FloatLike, return_c: FloatLike, design_return_c: FloatLike
+) -> Floats:
+    """Capacity of a chilled-water tank whose water comes back at `return_c` instead of the design's; any shape.
+
+    V rho cp FOM (T_return - T_supply) in proportion: a return colder than design shrinks the tank, a warmer one is
+    not counted on. Raises SitesError where the design return is not above the supply; a return at or below the supply
+    leaves nothing.
+    """
+    supply, design = np.asarray(supply_c, dtype=np.float64), np.asarray(design_return_c, dtype=np.float64)
+    if np.any(design <= supply):
+        raise SitesError(
+            f"design_return_c: came {np.min(design - supply):g} K above supply_c; expected above 0; check both"
+        )
+    share = np.clip((np.asarray(return_c, dtype=np.float64) - supply) / (design - supply), 0.0, 1.0)
+    return np.asarray(capacity_kwh_th * share, dtype=np.float64)
+
+
+def eutectic_kwh_th(mass_kg: FloatLike) -> Floats:
+    """Cooling held by the salt of a eutectic tank, latent heat alone: 38 kg a kWh_th; any shape."""
+    return np.asarray(mass_kg, dtype=np.float64) * EUTECTIC_LATENT_HEAT_KJ_PER_KG / SECONDS_PER_HOUR
+
+
 def _end_inventory(target: Floats, capacity: Floats, gain: Floats) -> Floats:
     """The E_end in [0, capacity] for which E_end + gain(E_end) = target, gain given at the knots, (..., J).
 
@@ -273,26 +310,31 @@ def _curves(tanks: Tanks, way: str, limit_kw_th: Floats) -> RateCurves:
     """Curves of every tank in one direction: ice from the table of its kind, water from its own flat limit."""
     base, slope = (table[tanks.kind] for table in _ice_tables(way))
     real = np.isfinite(limit_kw_th) & (tanks.capacity_kwh_th > 0.0)
-    flat = np.full(limit_kw_th.shape, 1.0 / CHILLED_WATER_HOURS)
+    salt = kind_is(tanks.kind, TANK_KINDS, ("eutectic_salt",))
+    flat = 1.0 / np.where(salt, EUTECTIC_HOURS, CHILLED_WATER_HOURS)
     np.divide(limit_kw_th, tanks.capacity_kwh_th, out=flat, where=real)
-    water = ~kind_is(tanks.kind, TANK_KINDS, ICE_KINDS)
-    return RateCurves(
-        np.where(water[..., None], flat[..., None], base), np.where(water[..., None], 0.0, slope)
+    falling = (
+        np.minimum(KNOT_SOC / EUTECTIC_FALLS_BELOW, 1.0) if way == "discharge" else np.ones_like(KNOT_SOC)
     )
+    level = flat[..., None] * np.where(salt[..., None], falling, 1.0)
+    water = ~kind_is(tanks.kind, TANK_KINDS, ICE_KINDS)
+    return RateCurves(np.where(water[..., None], level, base), np.where(water[..., None], 0.0, slope))
 
 
 @cache
 def _ice_tables(way: str) -> tuple[Floats, Floats]:
-    """Base and slope at the knots, each (tank kind, J), rows in the order of TANK_KINDS; zeros for water."""
+    """Base and slope at the knots, each (tank kind, J), rows in the order of TANK_KINDS; zeros for water and salt."""
     freezing = ((0.0, 0.0), INTERNAL_MELT)
     pairs: dict[str, tuple[tuple[float, ...], tuple[float, ...]]] = {
         "ice_internal_melt": freezing,
         "ice_external_melt": freezing,
+        "ice_encapsulated": freezing,
     }
     if way == "discharge":
         pairs = {
             "ice_internal_melt": (SET_A[:3], SET_A[3:]),
             "ice_external_melt": ((0.0, 0.0), EXTERNAL_MELT_DISCHARGE),
+            "ice_encapsulated": freezing,
         }
     # A model of discharge is written in the discharged fraction: mirror the knots, then the values back.
     mirrored = way == "discharge"

@@ -132,7 +132,7 @@ def _outlook(roster: Roster, minutes: dict[str, np.ndarray], start_hour: float) 
 def cases(seed: int, per_class: tuple[int, int, int]) -> Cases:
     """Quoted candidates of random sites, one a site: so many limited by tank, by comfort, and by neither."""
     rng = np.random.default_rng(seed)
-    count = 5 * sum(per_class)
+    count = 6 * sum(per_class)
     start_hour = 11.0
     roster = random_roster(rng, count, bare=0.55)
     minutes = smooth_minutes(rng, roster, start_hour)

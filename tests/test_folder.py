@@ -102,12 +102,12 @@ def test_byte_order_mark_spaces_blank_rows_and_other_orders_change_nothing(tmp_p
         (
             "tanks", 2, "kind", "ice",
             "tanks.csv, row 2, column kind: came 'ice'; expected one of ice_internal_melt, ice_external_melt, "
-            "chilled_water; correct the spelling",
+            "chilled_water, ice_encapsulated, eutectic_salt; correct the spelling",
         ),
         (
             "tanks", 3, "kind", "",
             "tanks.csv, row 3, column kind: came nothing; expected one of ice_internal_melt, "
-            "ice_external_melt, chilled_water; fill it in",
+            "ice_external_melt, chilled_water, ice_encapsulated, eutectic_salt; fill it in",
         ),
         (
             "tanks", 4, "capacity_kwh_th", None,

@@ -322,3 +322,54 @@ def test_knots_start_and_end_where_a_tank_does():
     # Set A gives nothing from the last hundredth at brine 12 to 4.
     last = polyval(0.99, tank.SET_A[:3]) + polyval(0.99, tank.SET_A[3:]) * BRINE_12_TO_4_K / 10.0
     assert last == pytest.approx(0.0, abs=2e-5)
+
+
+def test_eutectic_limit_is_flat_and_then_falls_to_nothing():
+    part = tanks("eutectic_salt", capacity=600.0)
+    knots = tank.knots_kw_th(
+        tank.discharge_curves(part), part.capacity_kwh_th, part.discharge_limit_kw_th, 7.0
+    )
+    limits = [
+        float(tank.limit_kw_th(np.array([[held]]), part.capacity_kwh_th, knots)[0, 0])
+        for held in (600, 300, 0)
+    ]
+    assert limits == pytest.approx([100.0, 100.0, 0.0])
+    assert 0.0 < float(tank.limit_kw_th(np.array([[60.0]]), part.capacity_kwh_th, knots)[0, 0]) <= 25.0
+
+
+def test_eutectic_salt_holds_a_kwh_in_38_kg():
+    """95 kJ/kg (Chen & Sheen 1993): 3600 / 95 = 37.89 kg."""
+    assert tank.eutectic_kwh_th(37.8947) == pytest.approx(1.0, rel=1e-5)
+
+
+def test_encapsulated_ice_melts_by_the_internal_form_in_the_discharged_fraction():
+    """P(0) = 1.3879 and P(1) = 0.0435 of Henze & Krarti 2002, at 10 K: shares of capacity per hour."""
+    part = tanks("ice_encapsulated", capacity=1000.0)
+    knots = tank.knots_kw_th(
+        tank.discharge_curves(part), part.capacity_kwh_th, part.discharge_limit_kw_th, 10.0
+    )
+    # The curve from below gives up a little at the ends of a convex stretch.
+    assert 0.985 * 1387.9 <= knots[0, 0, -1] <= 1387.9
+    assert 0.0 < knots[0, 0, 0] <= 43.5 + 1e-9
+
+
+def test_a_colder_return_shrinks_a_chilled_water_tank_in_proportion():
+    """1000 m3, 5 to 13 degC: 8391.9 kWh (CoolProp water); back at 11 degC it holds 6/8 of that."""
+    assert tank.water_at_return_kwh_th(8391.9, 5.0, 11.0, 13.0) == pytest.approx(8391.9 * 0.75)
+    assert tank.water_at_return_kwh_th(8391.9, 5.0, 15.0, 13.0) == pytest.approx(8391.9)
+    assert tank.water_at_return_kwh_th(8391.9, 5.0, 4.0, 13.0) == 0.0
+    with pytest.raises(
+        SitesError, match="design_return_c: came 0 K above supply_c; expected above 0; check both"
+    ):
+        tank.water_at_return_kwh_th(1.0, 5.0, 9.0, 5.0)
+
+
+def test_external_melt_is_never_charged_past_full():
+    part = tanks("ice_external_melt", capacity=1000.0, loss=0.0)
+    knots = tank.knots_kw_th(tank.charge_curves(part), part.capacity_kwh_th, part.charge_limit_kw_th, 5.0)
+    for held in (900.0, 999.0, 1000.0):
+        for step_h in (0.25, 1.0):
+            most = tank.most_charge_kw_th(
+                np.array([[held]]), np.zeros((1, 1)), part.capacity_kwh_th, knots, step_h
+            )
+            assert held + float(most[0, 0]) * step_h <= 1000.0 + 1e-9

@@ -9,7 +9,7 @@ import pytest
 from model_arrays import tanks
 
 from sites import tank
-from sites.roster import ICE_KINDS, TANK_KINDS
+from sites.roster import FREEZING_KINDS, TANK_KINDS
 
 CAPACITY = 300.0
 STEPS_H = (5 / 60, 0.25, 0.5, 1.0)
@@ -115,14 +115,15 @@ def test_half_the_step_is_never_less_energy(kind, way, loss):
 @every_kind
 def test_coarse_is_never_more_than_fine_and_close_to_it(kind):
     # A quarter hour against a minute, over the first hour from full: 3 % less for SET_A; 7 % for external melt,
-    # whose limit falls steeply from full; nothing where the limit is flat.
+    # and 8 % for capsules, whose limits fall steeply from full; nothing where the limit is flat.
     part = tanks(kind, capacity=CAPACITY, loss=0.0)
     coarse, fine = (
         run(part, "discharge", step_h, 1.0, hours=1.0)[1].sum() * step_h for step_h in (0.25, 1 / 60)
     )
     assert coarse <= fine + 1e-9
-    expected = {"ice_internal_melt": 0.03, "ice_external_melt": 0.07, "chilled_water": 0.0}[kind]
-    assert 1.0 - coarse / fine == pytest.approx(expected, abs=0.005)
+    expected = {"ice_internal_melt": 0.03, "ice_external_melt": 0.07, "chilled_water": 0.0}
+    expected |= {"ice_encapsulated": 0.08, "eutectic_salt": 0.0}
+    assert 1.0 - coarse / fine == pytest.approx(expected[kind], abs=0.005)
 
 
 @every_step
@@ -150,7 +151,7 @@ def test_two_equal_half_tanks_are_one_tank(kind, way, step_h):
 def test_standing_loss_is_as_stated(kind, step_h):
     part = tanks(kind, capacity=CAPACITY, loss=0.002)
     inventory, _, loss, _ = run(part, "discharge", step_h, 0.5, share=0.0)
-    if kind in ICE_KINDS:
+    if kind in FREEZING_KINDS:
         # A share of capacity, as long as ice is left: 0.6 kW_th, 14.4 kWh_th a day.
         np.testing.assert_allclose(loss, 0.6, rtol=1e-12)
         assert inventory[-1, 0, 0] == pytest.approx(150.0 - 14.4, rel=1e-12)

@@ -104,9 +104,14 @@ class _Tanks:
     freeze_slope: Floats
     ice: Bools
     """(N, K)"""
+    salt: Bools
 
     def take(self, rows: np.ndarray) -> "_Tanks":
-        return _Tanks(*(getattr(self, field.name)[:, rows] for field in fields(self)[:4]), self.ice[rows])
+        return _Tanks(
+            *(getattr(self, field.name)[:, rows] for field in fields(self)[:4]),
+            self.ice[rows],
+            self.salt[rows],
+        )
 
 
 def _tanks(plants: Plants) -> _Tanks:
@@ -118,10 +123,12 @@ def _tanks(plants: Plants) -> _Tanks:
     parts[0][:3] = np.where(internal, np.array(STRAND[:3])[:, None, None], 0.0)
     parts[1][:3] = np.where(internal, np.array(STRAND[3:])[:, None, None], 0.0)
     parts[1] += np.where(external, np.array(EXTERNAL)[:, None, None], 0.0)
+    parts[1] += np.where(plants.tank_kind == "ice_encapsulated", np.array(INTERNAL)[:, None, None], 0.0)
     parts[3] += np.where(ice, np.array(INTERNAL)[:, None, None], 0.0)
     for part, limit in ((parts[0], plants.tank_limit_kw_th), (parts[2], plants.charge_limit_kw_th)):
-        part[0] += np.where(ice, 0.0, np.where(np.isfinite(limit), limit / size, 0.2))
-    return _Tanks(*parts, ice)
+        flat = np.where(plants.tank_kind == "eutectic_salt", 1.0 / 6.0, 0.2)
+        part[0] += np.where(ice, 0.0, np.where(np.isfinite(limit), limit / size, flat))
+    return _Tanks(*parts, ice, plants.tank_kind == "eutectic_salt")
 
 
 @dataclass(frozen=True)
@@ -218,6 +225,7 @@ def _melt_limit(plants: Plants, tanks: _Tanks, held: Floats, lmtd: Floats) -> Fl
     """Most discharge (N, K) at an inventory and the loop's mean temperature difference."""
     d = 1.0 - np.clip(held / np.maximum(plants.tank_kwh_th, 1e-9), 0.0, 1.0)
     rate = _polynomial(tanks.melt_base + tanks.melt_slope * (lmtd / 10.0)[None, :, None], d)
+    rate = rate * np.where(tanks.salt, np.minimum((1.0 - d) / 0.4, 1.0), 1.0)
     return np.minimum(np.maximum(rate, 0.0) * plants.tank_kwh_th, plants.tank_limit_kw_th)
 
 
