@@ -2,7 +2,8 @@
 
 A broken write leaves half of its content behind, as a full disk or a dead machine would. Run as a script it
 forks one child for each k, so that the real SIGKILL is seen with nothing imported anew:
-`python breaking.py DIR call|settlement` prints one JSON list of what each killed run left.
+`python breaking.py DIR call|orders|settlement` prints one JSON list of what each killed run left; with a number
+behind it the runs are killed at that many moments spread over the time that a write takes.
 """
 
 import errno
@@ -11,6 +12,7 @@ import os
 import shutil
 import signal
 import sys
+import time
 from collections.abc import Callable, Iterator
 from contextlib import contextmanager
 from pathlib import Path
@@ -96,10 +98,13 @@ def breaking(breaker: Breaker) -> Iterator[Breaker]:
 
 
 def write(fleet: Path, kind: str, made: dict[str, Any]) -> Path:
-    """Write a call, or the next settlement of the event, from frames made beforehand."""
+    """Write a call, or the next orders or settlement of the event, from frames made beforehand."""
     if kind == "call":
         settings = {"settings": {"timezone": "Europe/Athens"}}
         return records.write_call(fleet, EVENT, made["call"], {"status": "proven"}, made["frozen"], settings)
+    if kind == "orders":
+        pages = {f"{number:03d}-site.txt": "stop\n" * 2000 for number in range(1, 9)}
+        return records.write_orders(fleet, EVENT, {**pages, "orders.json": "[]\n"})
     return records.write_settlement(fleet, EVENT, made["settlement"], {"statement.txt": "Paid: 0.00\n"})
 
 
@@ -110,15 +115,12 @@ def made_frames() -> dict[str, Any]:
 def _kill_each(base: Path, kind: str) -> list[dict[str, Any]]:
     """One forked run per k until a run ends unharmed; what it left, and what the next run made of it."""
     made, found, start = made_frames(), [], base / "start"
-    start.mkdir(parents=True)
-    if kind == "settlement":
-        _forked(lambda: write(start, "call", made))
+    _start(start, kind, made)
     for at in range(1, 1000):
         fleet = base / f"{at:03d}"
         shutil.copytree(start, fleet)
         died = _forked(lambda fleet=fleet, at=at: _break(fleet, kind, made, at))
-        left = sorted(str(path.relative_to(fleet)) for path in fleet.glob("events/*"))
-        left += sorted(str(path.relative_to(fleet)) for path in fleet.glob("events/*/*"))
+        left = _left(fleet)
         whole = f"events/{EVENT}/{kind}-001" in left
         written = not whole and at % WRITTEN_AGAIN == 0
         again = _forked(lambda fleet=fleet, written=written: _next_run(fleet, kind, made, written))
@@ -127,6 +129,71 @@ def _kill_each(base: Path, kind: str) -> list[dict[str, Any]]:
         if died == 0:
             break
     return found
+
+
+def _start(start: Path, kind: str, made: dict[str, Any]) -> None:
+    """The folder every run of a kind begins with: empty for a call, with the call for what follows it."""
+    start.mkdir(parents=True)
+    if kind != "call":
+        _forked(lambda: write(start, "call", made))
+
+
+def _left(fleet: Path) -> list[str]:
+    """Names one and two levels below `events`, hidden ones too."""
+    found = [*fleet.glob("events/*"), *fleet.glob("events/*/*")]
+    return sorted(str(path.relative_to(fleet)) for path in found)
+
+
+def _kill_at_moments(base: Path, kind: str, count: int) -> list[dict[str, Any]]:
+    """Runs killed `count` times, evenly over the time from a write's first byte to its last rename."""
+    made, found, start = made_frames(), [], base / "start"
+    _start(start, kind, made)
+    shutil.copytree(start, base / "000")
+    took = _seconds_of(base / "000", kind, made)
+    for turn in range(count):
+        fleet = base / f"{turn + 1:03d}"
+        shutil.copytree(start, fleet)
+        died = _killed_after(fleet, kind, made, took * (turn + 0.5) / count)
+        left = _left(fleet)
+        again = _forked(lambda fleet=fleet: _next_run(fleet, kind, made, False))
+        whole = f"events/{EVENT}/{kind}-001" in left
+        found.append(
+            {"at": turn + 1, "killed": died == -signal.SIGKILL, "left": left, "again": again, "whole": whole}
+        )
+    return found
+
+
+def _seconds_of(fleet: Path, kind: str, made: dict[str, Any]) -> float:
+    """How long a write takes that nobody disturbs, in a child like the others."""
+    reader, writer = os.pipe()
+
+    def timed() -> None:
+        started = time.perf_counter()
+        write(fleet, kind, made)
+        os.write(writer, repr(time.perf_counter() - started).encode())
+
+    _forked(timed)
+    return float(os.read(reader, 100))
+
+
+def _killed_after(fleet: Path, kind: str, made: dict[str, Any], seconds: float) -> int:
+    """Exit code of a write that is killed so long after it began; 0 where it was quicker."""
+    reader, writer = os.pipe()
+    child = os.fork()
+    if child == 0:
+        code = 1
+        try:
+            os.write(writer, b"go")
+            write(fleet, kind, made)
+            code = 0
+        finally:
+            os._exit(code)
+    os.read(reader, 2)
+    time.sleep(seconds)
+    os.kill(child, signal.SIGKILL)
+    for end in (reader, writer):
+        os.close(end)
+    return os.waitstatus_to_exitcode(os.waitpid(child, 0)[1])
 
 
 def _next_run(fleet: Path, kind: str, made: dict[str, Any], written: bool) -> None:
@@ -156,4 +223,11 @@ def _forked(run: Callable[[], Any]) -> int:
 
 
 if __name__ == "__main__":
-    print(json.dumps(_kill_each(Path(sys.argv[1]), sys.argv[2])))
+    folder, what, *moments = sys.argv[1:]
+    print(
+        json.dumps(
+            _kill_at_moments(Path(folder), what, int(moments[0]))
+            if moments
+            else _kill_each(Path(folder), what)
+        )
+    )
