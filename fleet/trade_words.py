@@ -98,6 +98,8 @@ VALUE_WORDS: Final = {
     "ice_internal_melt": "internal melt;ice on coil internal melt;internal melt ice",
     "ice_external_melt": "external melt;ice on coil external melt;external melt ice;ice harvester",
     "chilled_water": "chilled water tank;water;stratified;stratified water;chw;chilled water storage",
+    "ice_encapsulated": "encapsulated ice;encapsulated;ice balls",
+    "eutectic_salt": "eutectic;eutectic salts;phase change salt",
     "concert_hall": "theatre;theater;auditorium",
     "courthouse": "court;law court",
     "school": "university;college",

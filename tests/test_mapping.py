@@ -5,7 +5,8 @@ import pytest
 from made_workbook import two_sites, write_workbook
 
 from fleet.errors import FleetError, Refused
-from fleet.mapping import as_text, read_mapping, suggest
+from fleet.mapping import as_text, known_tables, read_mapping, suggest
+from fleet.trade_words import COLUMN_WORDS, TABLE_WORDS, VALUE_WORDS
 from fleet.workbook import read_workbook
 
 
@@ -177,3 +178,13 @@ def test_no_mapping_file_or_one_without_its_columns(tmp_path, sheets):
 
 def test_every_sheet_of_the_two_site_book_is_known(sheets):
     assert {line.sheet for line in suggest(sheets) if line.table} == set(two_sites())
+
+
+def test_words_of_the_trade_speak_of_columns_and_values_that_exist():
+    columns = {column.name: column for one in known_tables().values() for column in one.columns}
+    assert set(COLUMN_WORDS) <= set(columns)
+    assert set(TABLE_WORDS) == set(known_tables())
+    values = {choice for column in columns.values() for choice in column.choices}
+    assert set(VALUE_WORDS) <= values
+    for name in ("tanks", "chillers"):
+        assert set(known_tables()[name].column("kind").choices) <= set(VALUE_WORDS), "every kind has words"
