@@ -230,7 +230,9 @@ def audit_lines(found: Any) -> list[str]:
     head = f"audit: {checked:,} values under {len(found.checked)} rules"
     if found.holds:
         return [f"{head}; the record holds", *[f"note: {note}" for note in found.notes]]
-    return [f"{head}; {len(found.faults)} faults", *[str(fault) for fault in found.faults]]
+    hidden = sum(found.hidden.values())
+    more = [f"... and {hidden} more of the same rules"] if hidden else []
+    return [f"{head}; {len(found.faults) + hidden} faults", *[str(fault) for fault in found.faults], *more]
 
 
 def audit_json(found: Any) -> dict[str, Any]:
