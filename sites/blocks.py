@@ -1,12 +1,14 @@
-"""Which candidates a site is quoted for: one contiguous block of the event, some machines off, the rest limited."""
+"""Which candidates a site is quoted for: one contiguous block of the event, some machines off and the
+rest limited, or the tanks made to charge."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from sites.candidate import Stages
+from sites.direction import Direction
 from sites.recovery import RECOVERIES
-from sites.roster import Roster, Rows, Standing
+from sites.roster import ICE_KINDS, TANK_KINDS, Roster, Rows, Standing, kind_is
 from sites.units import Bools, Floats, Ints
 
 LOAD_LIMITS = (1.0, 0.75, 0.5)
@@ -45,39 +47,75 @@ class Candidates(Rows):
     stages: Stages
 
 
-def candidates(roster: Roster, standing: Standing, terms: Terms) -> Candidates:
-    """Every block of the event that a site's notice and minimum times allow, with its last k machines in
-    loading order off and a demand limit on the others, for every k."""
+def candidates(
+    roster: Roster, standing: Standing, terms: Terms, direction: Direction = Direction.SHED
+) -> Candidates:
+    """Every block of the event that a site's notice and minimum times allow.
+
+    Shed: with its last k machines in loading order off and a demand limit on the others, for every k. Absorb: with
+    the tanks made to charge and a demand limit on all machines.
+    """
+    if direction is Direction.ABSORB:
+        return _charging(roster, standing, terms)
     ready = roster.chillers.exists & standing.chiller_available
     from_end = np.cumsum(ready[:, ::-1], axis=1)[:, ::-1]
     count = ready.sum(axis=1)
-    blocks = np.arange(terms.event_from, terms.event_to + 1)
-    first, last = (grid.ravel() for grid in np.meshgrid(blocks, blocks, indexing="ij"))
-    first, last = first[first < last], last[first < last]
     parts = []
     for off_count in range(1, int(count.max(initial=0)) + 1):
         off = ready & (from_end <= off_count)
-        shortest = np.maximum(terms.minimum_intervals, _least_off_intervals(roster, off, terms))
+        shortest = np.maximum(
+            terms.minimum_intervals, _least_intervals(off, roster.chillers.min_off_minutes, terms)
+        )
         startable = np.where(off, roster.chillers.starts_left >= 1, True).all(axis=1)
         for limit in LOAD_LIMITS:
             has = terms.allowed & startable & (count >= off_count)
             if limit < 1.0:
                 has = has & (count > off_count)
-            site, block = np.nonzero(
-                has[:, None]
-                & (first[None, :] >= terms.earliest[:, None])
-                & (last - first >= shortest[:, None])
-                & (last - first <= terms.most_intervals[:, None])
-            )
+            site, first, last = _blocks(terms, has, shortest)
             machine_limit = np.where(off[site], 0.0, limit)
-            parts.append((site, first[block], last[block], np.full(len(site), limit), machine_limit))
+            parts.append((site, first, last, np.full(len(site), limit), machine_limit))
     return _sorted(parts, roster.chillers.exists.shape[1], terms.recoveries)
 
 
-def _least_off_intervals(roster: Roster, off: Bools, terms: Terms) -> Ints:
-    """Intervals (site,) that keep every stopped machine's minimum off time."""
-    minutes = np.where(off, roster.chillers.min_off_minutes, 0.0).max(axis=1, initial=0.0)
-    return np.asarray(np.ceil(minutes / terms.step_minutes), dtype=np.int64)
+def _charging(roster: Roster, standing: Standing, terms: Terms) -> Candidates:
+    """Blocks in which the tanks are made to charge: sites with a tank and machines that can charge it."""
+    chillers, tanks = roster.chillers, roster.tanks
+    tank = tanks.exists & standing.tank_available
+    ice = np.asarray((tank & kind_is(tanks.kind, TANK_KINDS, ICE_KINDS)).any(axis=1))
+    ready = chillers.exists & standing.chiller_available
+    able = ready & (chillers.makes_ice | ~ice[:, None])
+    startable = np.where(able, chillers.starts_left >= 1, True).all(axis=1)
+    shortest = np.maximum(terms.minimum_intervals, _least_intervals(able, chillers.min_on_minutes, terms))
+    has = terms.allowed & tank.any(axis=1) & able.any(axis=1) & startable
+    parts = []
+    for limit in LOAD_LIMITS:
+        site, first, last = _blocks(terms, has, shortest)
+        machine_limit = np.where(ready[site], limit, 1.0)
+        parts.append((site, first, last, np.full(len(site), limit), machine_limit))
+    found = _sorted(parts, chillers.exists.shape[1], terms.recoveries)
+    return replace(
+        found, stages=replace(found.stages, charge=np.ones(found.stages.start.shape, dtype=np.bool_))
+    )
+
+
+def _blocks(terms: Terms, has: Bools, shortest: Ints) -> tuple[Ints, Ints, Ints]:
+    """Site, start and end of every block of the event, at least `shortest` (site,), of the sites that `has` any."""
+    edges = np.arange(terms.event_from, terms.event_to + 1)
+    first, last = (grid.ravel() for grid in np.meshgrid(edges, edges, indexing="ij"))
+    first, last = first[first < last], last[first < last]
+    site, block = np.nonzero(
+        has[:, None]
+        & (first[None, :] >= terms.earliest[:, None])
+        & (last - first >= shortest[:, None])
+        & (last - first <= terms.most_intervals[:, None])
+    )
+    return site, first[block], last[block]
+
+
+def _least_intervals(which: Bools, minutes: Floats, terms: Terms) -> Ints:
+    """Intervals (site,) that keep the longest of the minimum times of `which` machines."""
+    longest = np.where(which, minutes, 0.0).max(axis=1, initial=0.0)
+    return np.asarray(np.ceil(longest / terms.step_minutes), dtype=np.int64)
 
 
 def _sorted(

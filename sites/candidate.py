@@ -1,7 +1,8 @@
 """A candidate: for every interval, which machines are on and their load limit.
 
 A candidate is a row of stages; in each stage every machine has a load limit as a fraction of what it could
-give: 0 is off, 1 is free. One contiguous block is one stage. Padding stages have start == end.
+give: 0 is off, 1 is free. A stage may make the tanks charge; in any other they do not. One contiguous block is
+one stage. Padding stages have start == end.
 """
 
 from dataclasses import dataclass
@@ -20,12 +21,20 @@ class Stages(Rows):
     start: Ints
     end: Ints
     load_limit_fraction: Floats
+    charge: Bools = None  # type: ignore[assignment]
+    """(row, stage) True: the tanks charge as hard as they can; none does where it is not given"""
 
-    def at(self, interval: int) -> tuple[Bools, Floats]:
-        """Rows that are in a stage in this interval (row,), and each machine's limit then (row, machine)."""
+    def __post_init__(self) -> None:
+        if self.charge is None:
+            object.__setattr__(self, "charge", np.zeros(self.start.shape, dtype=np.bool_))
+
+    def at(self, interval: int) -> tuple[Bools, Floats, Bools]:
+        """Rows that are in a stage in this interval (row,), each machine's limit then (row, machine), and rows that
+        are made to charge (row,)."""
         inside = (self.start <= interval) & (interval < self.end)
         limit = np.where(inside[:, :, None], self.load_limit_fraction, 1.0).min(axis=1, initial=1.0)
-        return np.asarray(inside.any(axis=1), dtype=np.bool_), limit
+        charge = np.asarray((inside & self.charge).any(axis=1), dtype=np.bool_)
+        return np.asarray(inside.any(axis=1), dtype=np.bool_), limit, charge
 
     def join(self, other: Self) -> Self:
         """Both rows' stages together; where they overlap the lower limit holds."""
@@ -33,6 +42,7 @@ class Stages(Rows):
             np.concatenate([self.start, other.start], axis=1),
             np.concatenate([self.end, other.end], axis=1),
             np.concatenate([self.load_limit_fraction, other.load_limit_fraction], axis=1),
+            np.concatenate([self.charge, other.charge], axis=1),
         )
 
     @property

@@ -40,13 +40,21 @@ def ground(roster: Roster, outlook: Outlook, standing: Standing, in_force: Stage
     here = conditions(roster, outlook, standing)
     machines = roster.chillers.exists.shape[1]
     stages = in_force if in_force is not None else no_stages(roster.count, machines)
-    rows = plants(roster, here, standing.tank_available, np.arange(roster.count))
     usual, low = (
-        course(simulate(rows, here, stages, at_rest(start), None))
-        for start in (standing.best_kwh_th, standing.low_kwh_th)
+        _usual(roster, here, standing, stages, start) for start in (standing.best_kwh_th, standing.low_kwh_th)
     )
     overstated = _by_tank_kw(here, usual) + _by_staging_kw(roster, here, usual)
     return Ground(roster, outlook, standing, here, usual, low, overstated, stages)
+
+
+def usual_high(base: Ground) -> Course:
+    """The usual case from the high inventory, which an absorb is held against."""
+    return _usual(base.roster, base.here, base.standing, base.in_force, base.standing.high_kwh_th)
+
+
+def _usual(roster: Roster, here: Conditions, standing: Standing, stages: Stages, start: Floats) -> Course:
+    rows = plants(roster, here, standing.tank_available, np.arange(roster.count))
+    return course(simulate(rows, here, stages, at_rest(start), None))
 
 
 def _by_tank_kw(here: Conditions, usual: Course) -> Floats:

@@ -144,7 +144,7 @@ def _advance(
     loss = tank.standing_loss_kw_th(
         tanks.kind, start, tanks.capacity_kwh_th, tanks.loss_fraction_per_h, here.step_h
     )
-    staged, limit = stages.at(t)
+    staged, limit, made_to = stages.at(t)
     direct_cap = here.direct_kw_th[rows.site, :, t] * limit
     ready = total(direct_cap)
     load = here.load_kw_th[rows.site, t]
@@ -161,6 +161,8 @@ def _advance(
     asked = _charge_asked(rows, here, usual, load, start, t)
     if usual is not None:
         charging, asked = _made_up(rows, here, usual, staged, (start, loss, drawn), (charging, asked), t)
+    charging = charging | (made_to & _not_full(rows, start))
+    asked = np.where(made_to, np.inf, asked)
     task = Task(charging, direct_cap, limit, served + pull_down, asked, start, loss, discharge)
     made = make_within(rows, here, task, room_kw[:, t], rows.recovery == CAPPED, t)
     charge = made.charge_kw_th
@@ -297,11 +299,18 @@ def _charge_asked(
     rows: Plants, here: Conditions, usual: Usual | None, load: Floats, start: Floats, t: int
 ) -> Floats:
     """Charge (row,) that the strategy asks for: all there is, or with load levelling what lies under the flat
-    rate, unless the tank is behind the usual case in its charging hours."""
+    rate, unless the tank is behind the usual case in its charging hours; a levelled tank that is ahead of the usual
+    case waits for it."""
     levelling = rows.roster.buildings.strategy == _LEVEL
     behind = here.charge_hours[rows.site, t] & _behind(rows, usual, storage.held(rows, start), t)
     below_level = np.maximum(here.level_kw_th[rows.site] - load, 0.0)
-    return np.where(levelling & ~behind, below_level, np.inf)
+    asked = np.where(levelling & ~behind, below_level, np.inf)
+    if usual is None or t == 0:
+        return asked
+    held, capacity = storage.held(rows, start), storage.held(rows, rows.roster.tanks.capacity_kwh_th)
+    ahead = held - storage.held(rows, usual.inventory_kwh_th[rows.site, :, t - 1]) > 1e-3 * capacity
+    lacking = (storage.held(rows, usual.inventory_kwh_th[rows.site, :, t]) - held) / here.step_h
+    return np.where(levelling & ahead, np.minimum(asked, np.maximum(lacking, 0.0)), asked)
 
 
 def _behind(rows: Plants, usual: Usual | None, held: Floats, t: int) -> Bools:

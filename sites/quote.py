@@ -1,8 +1,8 @@
 """Quotes: every candidate of every site simulated, held against its limits, and priced.
 
-Each candidate is run twice: from the best estimate of the inventory and from the low one. Limits must hold in
-both; kW and cost are the best estimate's, and a candidate that would shed less from the low inventory is not
-quoted at all, so that no promise rests on the better level.
+Each candidate is run twice: from the best estimate of the inventory and from the low one (an absorb: the high
+one). Limits must hold in both; kW and cost are the best estimate's, and a candidate that would give less from the
+other inventory is not quoted at all, so that no promise rests on the better level.
 """
 
 from dataclasses import dataclass
@@ -13,7 +13,6 @@ from sites import blocks
 from sites.cost import cost_parts, lack_price_per_kwh_th
 from sites.course import Course, course
 from sites.direction import Direction
-from sites.errors import SitesError
 from sites.ground import Ground, ground
 from sites.plant import at_rest, simulate
 from sites.quotes import LIMITED_BY, DenseQuotes
@@ -37,7 +36,7 @@ class Quoted:
     recovery: Ints
     """(C,) index into RECOVERIES"""
     inventory_low_start_kwh_th: Floats
-    """(C,) inventory at window start in the low course"""
+    """(C,) inventory at window start in the course from the low inventory; of an absorb, from the high one"""
     peak_rise_k: Floats
     """(C,) highest rise of the zone's air above the usual case"""
     full_again: Ints
@@ -47,15 +46,10 @@ class Quoted:
 
 
 def quote(base: Ground, terms: blocks.Terms, direction: Direction = Direction.SHED) -> Quoted:
-    """Quote every candidate of every site.
-
-    Raises SitesError for Direction.ABSORB, whose candidates are not offered yet.
-    """
-    if direction is not Direction.SHED:
-        raise SitesError("direction absorb cannot be quoted yet; call with direction shed")
-    offered = blocks.candidates(base.roster, base.standing, terms)
+    """Quote every candidate of every site in a direction: machines off, or tanks made to charge."""
+    offered = blocks.candidates(base.roster, base.standing, terms, direction)
     event = (terms.event_from, terms.event_to)
-    tried = try_all(base, offered, event, direction.sign)
+    tried = try_all(base, offered, event, direction)
     best, kept = tried.best, tried.kept
     site = offered.site[kept]
     change = best.power_kw - base.usual.power_kw[site]
@@ -87,7 +81,7 @@ def quote(base: Ground, terms: blocks.Terms, direction: Direction = Direction.SH
         end_lack_kwh_th=best.lack_kwh_th,
         end_lack_price_per_kwh_th=lack_price,
         limited_by=tried.limited_by,
-        site_limited_by=_site_limits(base, terms, offered.site, tried.verdict, tried.expected_kw),
+        site_limited_by=_site_limits(base, terms, direction, offered.site, tried.verdict, tried.expected_kw),
     )
     return Quoted(
         ground=base,
@@ -112,20 +106,24 @@ def detail(quoted: Quoted, candidate: Ints) -> Course:
     return course(simulate(rows, base.here, stages, start, base.usual.as_usual))
 
 
-def _site_limits(base: Ground, terms: blocks.Terms, site: Ints, verdict: Ints, expected: Floats) -> Ints:
+def _site_limits(
+    base: Ground, terms: blocks.Terms, direction: Direction, site: Ints, verdict: Ints, expected: Floats
+) -> Ints:
     """What keeps each site (N,) from giving more: the reason of its largest refused candidate that beats its
     best quoted one, or why it has no candidate at all."""
     count = base.roster.count
     energy = expected.sum(axis=1)
     best = np.zeros(count)
     np.maximum.at(best, site[verdict == 0], energy[verdict == 0])
-    refused = np.flatnonzero((verdict > 0) & (energy > best[site]))
-    limit = np.where(best > 0.0, LIMITED_BY.index("none"), LIMITED_BY.index("already_off"))
+    refused = np.flatnonzero((verdict > 0) & ((energy > best[site]) | (best[site] <= 0.0)))
+    limit = np.full(count, LIMITED_BY.index("none"))
     order = refused[np.argsort(energy[refused], kind="stable")]
     limit[site[order]] = verdict[order]
     tried = np.zeros(count, dtype=np.bool_)
     tried[site] = True
     ready = (base.roster.chillers.exists & base.standing.chiller_available).any(axis=1)
+    if direction is Direction.ABSORB:
+        ready &= (base.roster.tanks.exists & base.standing.tank_available).any(axis=1)
     late = terms.earliest > terms.event_to - terms.minimum_intervals
     untried = np.select(
         [~ready, ~terms.allowed, late],

@@ -28,6 +28,8 @@ LIMITED_BY: Final = (
     "recovery",
     "notice",
     "call_limit",
+    "full",
+    "already_on",
 )
 
 

@@ -9,12 +9,14 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
+from sites import storage
 from sites.blocks import Candidates
 from sites.candidate import Stages
 from sites.conditions import Conditions
 from sites.course import Course
-from sites.ground import Ground
-from sites.plant import State, at_rest, simulate, state_after
+from sites.direction import Direction
+from sites.ground import Ground, usual_high
+from sites.plant import STOP_CHARGE_AT, State, at_rest, simulate, state_after
 from sites.quotes import LIMITED_BY
 from sites.roster import Rows
 from sites.rows import Plants, plants
@@ -79,20 +81,24 @@ class Tried:
     """(R,) what a quoted candidate leans on"""
 
 
-def try_all(base: Ground, offered: Candidates, event: tuple[int, int], sign: float) -> Tried:
-    """Try every candidate from the best inventory, and those that keep their limits from the other one.
+def try_all(base: Ground, offered: Candidates, event: tuple[int, int], direction: Direction) -> Tried:
+    """Try every candidate from the best inventory, and those that keep their limits from the other one: the low
+    inventory for a shed, the high one for an absorb.
 
     Limits must hold in both; one that gives less from the other inventory than from the best is refused, so that
     no promise rests on the better level.
     """
-    runs = _Runs(base, offered, event, sign)
+    absorb = direction is Direction.ABSORB
+    runs = _Runs(base, offered, event, direction)
+    other = usual_high(base) if absorb else base.usual_low
+    other_kwh_th = base.standing.high_kwh_th if absorb else base.standing.low_kwh_th
     verdict = np.zeros(len(offered.site), dtype=np.int64)
     everyone = np.arange(len(verdict))
     best, alive, expected = runs.part(everyone, base.usual, base.standing.best_kwh_th, verdict)
     best = runs.rest(best, alive, base.usual, verdict)
     alive, best = alive[verdict[alive] == 0], best.take(np.flatnonzero(verdict[alive] == 0))
-    low, still, _ = runs.part(alive, base.usual_low, base.standing.low_kwh_th, verdict, expected[alive])
-    low = runs.rest(low, still, base.usual_low, verdict)
+    low, still, _ = runs.part(alive, other, other_kwh_th, verdict, expected[alive])
+    low = runs.rest(low, still, other, verdict)
     last = verdict[still] == 0
     kept = still[last]
     chosen = best.take(np.searchsorted(alive, kept))
@@ -108,7 +114,7 @@ class _Runs:
     base: Ground
     offered: Candidates
     event: tuple[int, int]
-    sign: float
+    direction: Direction
 
     def part(
         self, index: Ints, usual: Course, inventory: Floats, verdict: Ints, promised: Floats | None = None
@@ -119,7 +125,7 @@ class _Runs:
         trial = begin(self.base, self.offered.take(index), usual, first, inventory)
         trial = trial.run(self.base.here, usual, first, last)
         change = trial.sums.power_kw[:, first:last] - usual.power_kw[trial.rows.site, first:last]
-        expected = self.sign * change
+        expected = self.direction.sign * change
         hour = np.arange(first, last)[None, :]
         inside = (hour >= trial.start[:, None]) & (hour < trial.end[:, None])
         least = np.where(inside, expected, np.inf).min(axis=1, initial=np.inf)
@@ -131,7 +137,12 @@ class _Runs:
             small = np.zeros(len(index), dtype=np.bool_)
         over = (self.base.overstated_kw[trial.rows.site, first:last] * inside).sum(axis=1)
         unsure = over > UNSURE_FRACTION * np.maximum((expected * inside).sum(axis=1), 0.0)
-        reasons = ((small, "already_off"), (found > 0, ""), (less, "inventory"), (unsure, "already_off"))
+        if self.direction is Direction.ABSORB:
+            held, size = storage.held(trial.rows, trial.state.inventory_kwh_th), trial.rows.roster.tanks
+            full = held >= STOP_CHARGE_AT * storage.held(trial.rows, size.capacity_kwh_th)
+            reasons = ((small & full, "full"), (small, "already_on"), (found > 0, ""), (less, "full"))
+        else:
+            reasons = ((small, "already_off"), (found > 0, ""), (less, "inventory"), (unsure, "already_off"))
         verdict[index] = np.select(
             [mask for mask, _ in reasons],
             [np.full_like(found, LIMITED_BY.index(name)) if name else found for _, name in reasons],

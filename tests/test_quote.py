@@ -8,8 +8,6 @@ import pytest
 from made_sites import made_outlook, made_roster, made_standing
 
 from sites import blocks, plant, tank
-from sites.direction import Direction
-from sites.errors import SitesError
 from sites.outlook import Outlook
 from sites.quote import Ground, Quoted, detail, ground, quote
 from sites.quotes import LIMITED_BY, Answer
@@ -212,11 +210,6 @@ def test_a_case_shifted_by_a_day_is_the_same() -> None:
     moved = replace(base.outlook, clock=clock, local_day=base.outlook.local_day + 1)
     other = quote(ground(base.roster, moved, base.standing), made_terms(6)).quotes
     np.testing.assert_array_equal(other.change_kw, made_quotes().quotes.change_kw)
-
-
-def test_absorb_is_refused_in_words() -> None:
-    with pytest.raises(SitesError, match="direction absorb cannot be quoted yet; call with direction shed"):
-        quote(made_ground(), made_terms(6), Direction.ABSORB)
 
 
 def test_answer_is_the_least_over_each_sites_candidates() -> None:
