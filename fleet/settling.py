@@ -80,8 +80,9 @@ def settle_event(
     before = None if last is None else last.frames
     excused = {**_excused(before), **_excuses(excuse)}
     made = _make(home, record, revision, before, excused, meter_file, meters_of, progress)
-    path = records.write_settlement(home, event_id, made.settlement.frames, made.texts)
-    return Settled(path, revision, made.settlement, (*made.notes, *_left_aside(last, made)))
+    with records.lock(home) as swept:
+        path = records.write_settlement(home, event_id, made.settlement.frames, made.texts)
+    return Settled(path, revision, made.settlement, (*swept, *made.notes, *_left_aside(last, made)))
 
 
 def settle_again(home: Path, event_id: str, revision: int, meter_file: Path | None = None) -> list[str]:

@@ -74,6 +74,8 @@ def test_what_a_killed_run_left_is_named_by_each_command_that_sweeps_it(tmp_path
     (fleet / "events" / "A" / ".making-orders-002-0a1b2c3d").mkdir()
     swept = "note: events/A/.making-orders-002-0a1b2c3d: left by a run that was killed; removed"
     assert swept in run("orders", fleet, "A").out.splitlines()
+    (fleet / "events" / "A" / ".making-orders-002-0a1b2c3d").mkdir()
+    assert swept in run("settle", fleet, "A").out.splitlines()
     (fleet / "events" / ".making-B-0a1b2c3d").mkdir()
     ran = run("call", fleet, "--kw", "10", *ASK, "--event", "C")
     assert "note: events/.making-B-0a1b2c3d: left by a run that was killed; removed" in ran.out.splitlines()

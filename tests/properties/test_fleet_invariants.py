@@ -4,6 +4,7 @@ import dataclasses
 from pathlib import Path
 from tempfile import TemporaryDirectory
 
+import made_settlement as made
 import numpy as np
 import pandas as pd
 import pytest
@@ -16,7 +17,9 @@ from strategies import frames, small_fleets
 from fleet.assemble import assemble
 from fleet.audit import audit
 from fleet.folder import open_folder
+from fleet.rules import PRESETS
 from fleet.schema import Table, tables
+from fleet.settle import settle
 from fleet.tables import read_parquet, stable, write_parquet
 from sites.units import KW_TH_PER_TON
 
@@ -116,3 +119,33 @@ def test_no_small_fleet_is_called_beyond_a_limit(drawn, kw, hours) -> None:
 @given(*ASKED)
 def test_two_hundred_small_fleets_are_not_called_beyond_a_limit(drawn, kw, hours) -> None:
     holds(drawn, kw, hours)
+
+
+EVENT = (made.utc("2025-07-10 15:00"), made.utc("2025-07-10 18:00"))
+
+
+LIKE_DAYS = [
+    name
+    for name in PRESETS
+    if not name.startswith(("weather", "temperature")) and not name.endswith("_plant")
+]
+"""Rules that settle a building meter and ask for no weather."""
+
+
+@pytest.mark.parametrize("name", LIKE_DAYS)
+def test_a_meter_that_shows_the_baseline_has_delivered_nothing(name: str) -> None:
+    starts = made.times(made.utc("2025-06-01"), made.utc("2025-07-11"), 60)
+    event = np.asarray((starts >= EVENT[0]) & (starts < EVENT[1]))
+    facts = made.call({"a": PRESETS[name]}, *EVENT, made.utc("2025-07-11"))
+
+    @settings(lean, max_examples=5)
+    @given(st.integers(0, 2**32 - 1))
+    def nothing(seed: int) -> None:
+        kw = np.random.default_rng(seed).uniform(100.0, 500.0, len(starts))
+        rows = settle(facts, made.readings("a", starts, kw)).intervals
+        kw[event] = rows.loc[rows["in_event"], "adjusted_baseline_kw"].to_numpy()
+        again = settle(facts, made.readings("a", starts, kw))
+        assert np.abs(again.intervals.loc[again.intervals["in_event"], "delivered_kw"]).max() < 1e-9
+        assert again.sites["delivered_kwh"][0] == pytest.approx(0.0, abs=1e-9)
+
+    nothing()
