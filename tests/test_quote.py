@@ -11,7 +11,7 @@ from sites import blocks, plant, tank
 from sites.outlook import Outlook
 from sites.quote import Ground, Quoted, detail, ground, quote
 from sites.quotes import LIMITED_BY, Answer
-from sites.roster import Roster
+from sites.roster import CHILLER_KINDS, Roster
 
 EVENT = (12, 24)
 """16:00 to 19:00 on the made-up clock, which starts at 13:00."""
@@ -191,6 +191,22 @@ def test_the_price_gradient_of_a_cost_is_the_change_in_energy() -> None:
         (two.net_cost - one.net_cost)[kept], 0.01 * one.change_kw[kept, 50] * 0.25, atol=1e-9
     )
     assert np.abs(one.change_kw[kept, 50]).max() > 0.0
+
+
+def test_at_flat_prices_one_cop_and_no_losses_a_shed_costs_nothing() -> None:
+    """What is not made now is made later at the same COP and price: no loss, drift, auxiliaries, fee or demand."""
+    roster = made_roster(
+        (4,), aux=0.0, call_fee=0.0, demand_price_per_kw=0.0, no_unmet=True, stage_up_fraction=0.9
+    )
+    object.__setattr__(roster.chillers, "kind", np.full((1, 3), CHILLER_KINDS.index("air_cooled_screw")))
+    object.__setattr__(roster.tanks, "loss_fraction_per_h", np.zeros((1, 2)))
+    outlook = flat(roster, made_outlook(roster))
+    quotes = quote(ground(roster, outlook, made_standing(roster, 0.6)), made_terms(1)).quotes
+    assert len(quotes.site) > 10
+    gross = np.abs(quotes.change_kw).sum(axis=1) * 0.25 * 0.1
+    assert gross.min() > 1.0
+    assert quotes.unmet_kwh_th.max() == 0.0
+    np.testing.assert_allclose(quotes.net_cost / gross, 0.0, atol=1e-9)
 
 
 def test_permuted_sites_give_permuted_quotes() -> None:
