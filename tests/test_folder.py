@@ -431,6 +431,13 @@ def test_long_csv_takes_the_fast_reader_and_gives_the_same(tmp_path):
 
 def test_nodes_without_any_id_are_refused_for_that(tmp_path):
     found = wrong(write_small_fleet(tmp_path, nodes="parent_id\nx\ny\n"))
-    assert found[0] == (
-        "nodes.csv, row 1, column node_id: came no such column; expected the column in the heading; add it"
-    )
+    assert [text for text in found if text.startswith("nodes.csv")] == [
+        "nodes.csv, row 1, column node_id: came no such column; expected the column in the heading; add it",
+        *(
+            f"nodes.csv, row {row}, column parent_id: came '{name}'; expected a node_id of nodes; add it to nodes, "
+            "or correct the spelling"
+            for row, name in ((2, "x"), (3, "y"))
+        ),
+        "nodes.csv, column parent_id: came 0 roots (none); expected exactly one row without parent_id; "
+        "leave parent_id of the root empty",
+    ]

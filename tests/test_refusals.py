@@ -225,7 +225,8 @@ FILES = {
     ),
     "with semicolons": (
         SITES.replace(",", ";").encode(),
-        "row 1: came cells parted by semicolons; expected cells parted by commas; save it with commas and decimal points",
+        "row 1: came cells parted by semicolons; expected cells parted by commas; "
+        "save it with commas and decimal points",
     ),
     "with a decimal comma bare": (
         SITES.replace("9000.0", "9000,0").encode(),
