@@ -66,7 +66,12 @@ def test_defaults_have_the_columns_own_type():
     [
         ("fleet", "sites", "floor_area_m2", "a number from 10 to 2000000 m2"),
         ("fleet", "sites", "call_fee", "a number of 0 money or more"),
-        ("fleet", "tanks", "kind", "one of ice_internal_melt, ice_external_melt, chilled_water, ice_encapsulated, eutectic_salt"),
+        (
+            "fleet",
+            "tanks",
+            "kind",
+            "one of ice_internal_melt, ice_external_melt, chilled_water, ice_encapsulated, eutectic_salt",
+        ),
         ("fleet", "node_loads", "other_kw", "a number in kW"),
         ("settlement", "sites", "penalty", "an exact amount of money of 0 money or less"),
         ("fleet", "bills", "cycle_end", "a date (YYYY-MM-DD)"),
