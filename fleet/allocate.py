@@ -1,39 +1,29 @@
 """Quotes, network and request -> who is called with which candidate, and a proof of how good that is.
 
-Owns the order of work: prices, an answer, whole-candidate models on what prices leave open, local improvement,
-and the figures, all of them recomputed in numpy. The bound is bound.py's, the models are choice.py's.
-
-Candidates are left out of a model in one way only that keeps the solver's bound valid: every allocation that holds
-candidate c costs at least bound + regret_c, so above the best answer known c cannot be part of a better one
-(reduced-cost fixing). Where a model is smaller than that, its bound is not used.
+Owns the order of work (prices, then whole candidates, at which shortfall price) and the figures, all of them
+recomputed in numpy. The bound is bound.py's, the prices are prices.py's, the search among candidates narrow.py's.
 """
 
 import time
-from collections.abc import Callable, Sequence
+from collections.abc import Callable
 from dataclasses import dataclass, replace
 from typing import Final
 
 import numpy as np
 
 from fleet.bound import Offers, Prices, Terms, steering
-from fleet.choice import Status, integer
+from fleet.choice import Status
+from fleet.effort import Effort, within
 from fleet.feeders import Feeders
-from fleet.improve import Score, improve, repaired, score
-from fleet.most import MOST_SECONDS, most_of
+from fleet.improve import Score, score
+from fleet.most import most_of
+from fleet.narrow import solve
 from fleet.offers import allowance_kw, check_fit, offered, offers_of
-from fleet.prices import FEASIBLE_KW, Searched, as_choices, can_bind, cheapest, rows_that_bind, search
+from fleet.prices import Searched, priced
 from fleet.request import Request
 from sites.quotes import COST_PARTS, DenseQuotes
 from sites.units import Bools, Floats, Ints, Strings
 
-WHOLE_MODEL: Final = 6000
-"""Candidates up to which all that fixing leaves goes into one model."""
-FIRST_MODEL: Final = 600
-SEARCH_SHARE: Final = 0.35
-LEAST_SHARE: Final = 0.15
-ABLE_SHARE: Final = 0.4
-ABLE_SECONDS: Final = 2.0 * MOST_SECONDS
-"""Longer than the model that told the most had, so that a call for it follows the same path as far at least."""
 FIRM_FACTOR: Final = 1000.0
 
 
@@ -121,7 +111,7 @@ def allocate(
     *,
     site_ids: Strings,
     over_delivery_fraction: float = 0.05,
-    seconds: float = 8.0,
+    seconds: float | None = None,
     target_gap: float = 0.001,
     stopwatch: Callable[[], float] = time.perf_counter,
 ) -> Allocation:
@@ -129,8 +119,10 @@ def allocate(
 
     headroom_kw (J, T); delivery_factor, allowed and site_ids (N,). Only allowed sites at or below the request's
     node are called. Where the shortfall price would leave kW undelivered that the fleet can give, it is raised by
-    FIRM_FACTOR and the choice made again; the price used stands in the proof. A request that cannot be met comes
-    back short (`met` False). Raises FleetError where quotes and request do not fit together.
+    FIRM_FACTOR; the price used stands in the proof. A request that cannot be met comes back short (`met` False).
+
+    seconds None: work is counted, and the same inputs give the same answer on any load. Else the best answer found
+    by then, cut short where that is. Raises FleetError where quotes and request do not fit together.
     """
     started = stopwatch()
     check_fit(quotes, request)
@@ -145,7 +137,7 @@ def allocate(
         headroom_kw=headroom_kw,
     )
     gross = _gross_costs(quotes, kept)
-    answer = _answer(offers, terms, gross, seconds, target_gap, stopwatch)
+    answer = _answer(offers, terms, gross, target_gap, within(seconds, stopwatch))
     proof = _proof(quotes, kept, offers, answer, gross, target_gap, stopwatch() - started)
     return _allocation(quotes, kept, answer, proof)
 
@@ -156,157 +148,50 @@ def _gross_costs(quotes: DenseQuotes, kept: Ints) -> Floats:
     return gross
 
 
-def _gap(answer: Score, chosen: Ints, gross: Floats, terms: Terms, bound: float) -> float:
-    """Gap relative to gross cost; 0 where the bound is reached, inf where there is no denominator."""
-    lack = answer.objective - bound
-    base = float(gross[chosen].sum() + terms.shortfall_price_per_kw @ answer.shortfall_kw)
-    if lack <= 0.0:
-        return 0.0
-    return lack / base if base > 0.0 else np.inf
-
-
-class _Incumbent:
-    """The best answer so far; takes only what keeps the limits by numpy."""
-
-    def __init__(self, offers: Offers, terms: Terms) -> None:
-        self.offers, self.terms = offers, terms
-        self.chosen = np.zeros(0, dtype=np.int64)
-        self.score = score(offers, terms, self.chosen)
-
-    def offer(self, chosen: Ints) -> None:
-        trial = score(self.offers, self.terms, chosen)
-        if trial.keeps_limits and trial.objective < self.score.objective - 1e-12:
-            self.chosen, self.score = chosen, trial
-
-
-def _answer(
-    offers: Offers,
-    terms: Terms,
-    gross: Floats,
-    seconds: float,
-    target_gap: float,
-    stopwatch: Callable[[], float],
-) -> _Answer:
-    """The best choice at the given prices, or at firm ones where only the price would leave the request short.
+def _answer(offers: Offers, terms: Terms, gross: Floats, target_gap: float, effort: Effort) -> _Answer:
+    """The best choice that meets the request, at firm prices; at the given ones where none meets it.
 
     A bound at the given prices holds at firm ones too: a dearer shortfall makes no choice cheaper.
     """
-    end = stopwatch() + seconds
-    searched = search(offers, terms, cheapest(terms), SEARCH_SHARE * seconds, _tolerance(gross), stopwatch)
-    able = _able(offers, terms, ABLE_SHARE * seconds, stopwatch)
-    if able is None:
-        return _solve(offers, terms, gross, searched, end, target_gap, (), -np.inf, stopwatch)
-    known, bound = [able], -np.inf
-    at_cap = bool((searched.prices.shed >= 0.999 * terms.shortfall_price_per_kw).any())
-    if not at_cap:
-        answer = _solve(offers, terms, gross, searched, end, target_gap, known, bound, stopwatch)
-        if answer.score.met:
-            return answer
-        known, bound = [able, answer.chosen], answer.bound_solver
-        end = stopwatch() + 0.25 * seconds
     firm = replace(terms, shortfall_price_per_kw=terms.shortfall_price_per_kw * FIRM_FACTOR)
-    left = max(end - stopwatch(), 0.0)
-    again = search(offers, firm, cheapest(firm), SEARCH_SHARE * left, _tolerance(gross), stopwatch)
-    if searched.bound.value > again.bound.value:
-        again = replace(again, prices=searched.prices, bound=searched.bound)
-    return _solve(offers, firm, gross, again, end, target_gap, known, bound, stopwatch)
+    searched = priced(offers, firm, effort.sooner(0.5))
+    if searched.bound.value <= _dearest(offers, terms):
+        found = solve(offers, firm, gross, searched, target_gap, (), effort)
+        if not found.score.met:
+            able = _able(offers, terms, effort)
+            if able is not None:
+                found = solve(offers, firm, gross, searched, target_gap, (able,), effort, found.bound_solver)
+        if found.score.met:
+            return _told(offers, terms, firm, searched, found.chosen, found.bound_solver)
+    searched = priced(offers, terms, effort.sooner(0.5))
+    found = solve(offers, terms, gross, searched, target_gap, (), effort)
+    return _Answer(searched, found.chosen, found.score, found.bound_solver, terms)
 
 
-def _able(offers: Offers, terms: Terms, seconds: float, stopwatch: Callable[[], float]) -> Ints | None:
-    """Candidates that meet the request whatever they cost; None where none were found.
-
-    Local moves first, which mostly do; else the very model that tells the most, stopped where it is enough.
-    """
-    end = stopwatch() + 0.3 * seconds
-    count = terms.request_kw.size
-    free = replace(offers, cost=np.zeros(offers.site.size))
-    only = replace(terms, shortfall_price_per_kw=np.ones(count), over_price_per_kw=np.zeros(count))
-    searched = search(free, only, cheapest(only), 0.3 * seconds, FEASIBLE_KW, stopwatch)
-    if searched.bound.value > FEASIBLE_KW * count:
-        return None
-    order = np.argsort(searched.bound.regret(offers.site), kind="stable").astype(np.int64)
-    start = repaired(offers, terms, _rounded(offers, searched.x))
-    near = improve(free, only, start, order, can_bind(offers, terms), lambda: stopwatch() > end)
-    if score(free, only, near).met:
-        return near
-    asked = float(terms.request_kw.max())
-    able = most_of(offers, terms.headroom_kw, terms.request_kw, max(seconds, ABLE_SECONDS), enough=asked)
-    return able.chosen if score(free, only, able.chosen).met else None
-
-
-def _solve(
-    offers: Offers,
-    terms: Terms,
-    gross: Floats,
-    searched: Searched,
-    end: float,
-    target_gap: float,
-    known: Sequence[Ints],
-    bound_solver: float,
-    stopwatch: Callable[[], float],
+def _told(
+    offers: Offers, terms: Terms, firm: Terms, searched: Searched, chosen: Ints, bound_solver: float
 ) -> _Answer:
-    """Answers from ever smaller open sets of candidates until the gap is small or the time `end` has come."""
-    regret = searched.bound.regret(offers.site)
-    order = np.argsort(regret, kind="stable").astype(np.int64)
-    coupled = can_bind(offers, terms)
-    began = stopwatch()
-    best = _Incumbent(offers, terms)
-
-    def better(chosen: Ints) -> None:
-        """Takes an answer, brought within the limits, and what local moves make of it."""
-        kept = repaired(offers, terms, chosen)
-        best.offer(kept)
-        stop = stopwatch() + max(0.1 * (end - stopwatch()), 0.02 * (end - began))
-        best.offer(improve(offers, terms, kept, order, coupled, lambda: stopwatch() > stop))
-
-    for start in (*known, _rounded(offers, searched.x)):
-        better(start)
-    rows = searched.rows
-    for attempt in range(6):
-        bound = max(searched.bound.value, bound_solver)
-        if _gap(best.score, best.chosen, gross, terms, bound) <= target_gap or stopwatch() >= end:
-            break
-        open_columns = order[regret[order] <= best.score.objective - searched.bound.value + 1e-9]
-        whole = open_columns.size <= (FIRST_MODEL if attempt == 0 else WHOLE_MODEL)
-        columns = np.union1d(open_columns if whole else open_columns[:FIRST_MODEL], best.chosen)
-        left = max(end - stopwatch(), 0.0)
-        if attempt > 0 and left < LEAST_SHARE * (end - began):
-            break
-        before = best.score.objective
-        told = integer(
-            as_choices(offers, terms, columns, rows if whole else rows_that_bind(offers, terms, columns)),
-            gap=0.5 * target_gap * float(gross[best.chosen].sum()),
-            seconds=left if whole else 0.5 * left,
-            start=np.searchsorted(columns, best.chosen),
-        )
-        broken = np.zeros((0, 2), dtype=np.int64)
-        if told.status.is_ok:
-            broken = _broken(offers, terms, columns[told.chosen], coupled)
-            better(columns[told.chosen])
-            if whole:
-                bound_solver = max(bound_solver, min(told.bound_solver, before))
-        if broken.size == 0 and (whole or attempt > 0) and best.score.objective >= before - 1e-9:
-            break
-        rows = np.unique(np.concatenate([rows, broken]), axis=0)
-    return _Answer(searched, best.chosen, best.score, bound_solver, terms)
+    """An answer that meets the request, at the given shortfall price where the bound's prices keep within it."""
+    inside = bool((searched.prices.shed <= terms.shortfall_price_per_kw).all())
+    if inside and bound_solver <= searched.bound.value:
+        return _Answer(searched, chosen, score(offers, terms, chosen), -np.inf, terms)
+    return _Answer(searched, chosen, score(offers, firm, chosen), bound_solver, firm)
 
 
-def _tolerance(gross: Floats) -> float:
-    """Money by which the search for prices may stop short: a ten-thousandth of a usual candidate's cost."""
-    return 1e-4 * float(np.median(gross)) if gross.size else 0.0
+def _dearest(offers: Offers, terms: Terms) -> float:
+    """What no choice that meets the request can cost more than: a bound above it proves that there is none."""
+    top = np.zeros(offers.site_count)
+    np.maximum.at(top, offers.site, offers.cost)
+    most = np.zeros((offers.site_count, offers.kw.shape[1]))
+    np.maximum.at(most, offers.site, offers.kw)
+    return float(top.sum() + most.sum(axis=0) @ terms.over_price_per_kw)
 
 
-def _rounded(offers: Offers, x: Floats) -> Ints:
-    """Candidates that hold at least half of their site in the relaxation, one a site."""
-    columns = np.flatnonzero(x >= 0.5)
-    _, first = np.unique(offers.site[columns], return_index=True)
-    return columns[first].astype(np.int64)
-
-
-def _broken(offers: Offers, terms: Terms, chosen: Ints, coupled: Bools) -> Ints:
-    """Feeder rows (L, 2: node, interval) that a choice breaks."""
-    node = score(offers, terms, chosen).node_kw
-    return np.argwhere(coupled & (node > terms.headroom_kw + FEASIBLE_KW)).astype(np.int64)
+def _able(offers: Offers, terms: Terms, effort: Effort) -> Ints | None:
+    """Candidates that meet the request whatever they cost; None where none were found."""
+    asked = float(terms.request_kw.max())
+    able = most_of(offers, terms.headroom_kw, terms.request_kw, effort, enough=asked)
+    return able.chosen if score(offers, terms, able.chosen).met else None
 
 
 def _proof(

@@ -47,7 +47,7 @@ def call(
     purpose: str,
     home: Path,
     accept_less: bool = False,
-    seconds: float = 8.0,
+    within: float | None = None,
     progress: Progress = lambda text: None,
 ) -> Call:
     """Allocate a request over a survey's quotes and write the event record below `home`.
@@ -58,7 +58,7 @@ def call(
     ask = _request(survey, requested_kw, event_id, purpose)
     records.check_free(home, ask.event_id)
     progress("allocating")
-    allocation = _allocate(survey, ask, seconds)
+    allocation = _allocate(survey, ask, within)
     if not allocation.met and not (accept_less and len(allocation.chosen)):
         raise _cannot(survey, allocation)
     progress("writing the record")
@@ -145,7 +145,7 @@ def _request(survey: Survey, requested_kw: float | Floats, event_id: str | None,
     )
 
 
-def _allocate(survey: Survey, ask: Request, seconds: float) -> Allocation:
+def _allocate(survey: Survey, ask: Request, within: float | None) -> Allocation:
     buildings = survey.fleet.roster.buildings
     return allocate(
         survey.quoted.quotes,
@@ -158,7 +158,7 @@ def _allocate(survey: Survey, ask: Request, seconds: float) -> Allocation:
         survey.eligible.allowed,
         site_ids=buildings.site_id,
         over_delivery_fraction=survey.folder.settings.over_delivery_fraction,
-        seconds=seconds,
+        seconds=within,
     )
 
 

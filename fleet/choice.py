@@ -6,7 +6,7 @@ whoever asks recomputes balance, limits and cost from the chosen candidates.
     minimise   sum cost x + sum shortfall_price s + sum over_price o        x in {0,1} or [0,1]; s, o >= 0
     subject to sum kw x + s >= request            each interval            price_shed >= 0
                sum kw x - o <= request + allowance                          price_over >= 0
-               A x <= room                        each coupling row         price_rows >= 0
+               A x <= room (+ priced slack)       each coupling row         price_rows >= 0
                sum of a site's x <= 1
 """
 
@@ -15,8 +15,8 @@ import os
 import sys
 import time
 import warnings
-from collections.abc import Iterator
-from dataclasses import dataclass
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass, replace
 from enum import StrEnum
 from typing import Any, Final
 
@@ -25,6 +25,9 @@ import pulp
 
 from sites.units import Floats, Ints
 
+LEAST_SECONDS: Final = 0.1
+HIGHS_FEASIBLE: Final = 2
+"""What HiGHS calls a solution that keeps the rows (kSolutionStatusFeasible)."""
 HIGHS_OPTIONS: Final = frozenset(
     {
         "log_to_console",
@@ -72,6 +75,20 @@ class Choices:
     """(L, C) of A x <= room"""
     room: Floats
     """(L,)"""
+    row_price: float | None = None
+    """Money per unit by which a coupling row is broken; None = never. For searches only: an answer keeps the rows"""
+
+
+@dataclass(frozen=True)
+class Work:
+    """How much a solver may do: nodes, checks of its limits (its own count of work), seconds. Zero is no limit.
+
+    Nodes and checks do not depend on the machine's load: the same model stops at the same place.
+    """
+
+    nodes: int = 0
+    checks: int = 0
+    seconds: float = 0.0
 
 
 @dataclass(frozen=True)
@@ -116,7 +133,7 @@ def relaxation(choices: Choices, solver: str = "highs", profile: Floats | None =
     With a profile: the model of most_kw, objective = -factor, and a site's best value is min(0, -price_shed.kw + ...).
     """
     model = _Model(choices, whole=False, profile=profile)
-    status, _ = model.solve(solver, seconds=60.0, gap=0.0)
+    status, _ = model.solve(solver, Work(), gap=0.0)
     none = np.zeros(0)
     if status is not Status.PROVEN:
         return Relaxed(Status.FAILED if status.is_ok else status, np.nan, none, none, none, none)
@@ -129,23 +146,25 @@ def relaxation(choices: Choices, solver: str = "highs", profile: Floats | None =
 
 
 def integer(
-    choices: Choices, gap: float, seconds: float, start: Ints | None = None, solver: str = "highs"
+    choices: Choices, gap: float, work: Work = Work(), start: Ints | None = None, solver: str = "highs"
 ) -> Chosen:
-    """Whole candidates; stops at `gap` (money) between answer and bound, or after `seconds`, building included.
+    """Whole candidates; stops at `gap` (money) between answer and bound, or where `work` is done.
 
     start: columns of a known feasible answer, given to the solver where it takes one.
     """
     began = time.perf_counter()
     model = _Model(choices, whole=True)
-    left = seconds - (time.perf_counter() - began)
-    status, bound = model.solve(solver, left, gap / model.money_scale, start)
+    if work.seconds > 0.0:
+        left = work.seconds - (time.perf_counter() - began)
+        work = replace(work, seconds=max(left, LEAST_SECONDS))
+    status, bound = model.solve(solver, work, gap / model.money_scale, start)
     if not status.is_ok:
         return Chosen(status, np.zeros(0, dtype=np.int64), np.nan, bound * model.money_scale)
     return Chosen(status, _picked(choices, model.x), model.objective(), bound * model.money_scale)
 
 
 def most_kw(
-    choices: Choices, profile: Floats, seconds: float = 5.0, enough: float = np.inf, solver: str = "highs"
+    choices: Choices, profile: Floats, work: Work = Work(), enough: float = np.inf, solver: str = "highs"
 ) -> Most:
     """Largest factor f with sum kw x >= f profile in all intervals with profile > 0, coupling rows kept.
 
@@ -157,7 +176,7 @@ def most_kw(
     if choices.site.size == 0 or not (profile > 0.0).any():
         return Most(Status.PROVEN, 0.0, nothing)
     model = _Model(choices, whole=True, profile=profile)
-    status, _ = model.solve(solver, seconds, 0.0, relative_gap=1e-4, target=-enough / model.money_scale)
+    status, _ = model.solve(solver, work, 0.0, relative_gap=1e-4, target=-enough / model.money_scale)
     if not status.is_ok:
         return Most(status, 0.0, nothing)
     chosen = _picked(choices, model.x)
@@ -200,7 +219,8 @@ class _Model:
     def __init__(self, choices: Choices, whole: bool, profile: Floats | None = None) -> None:
         self.whole = whole
         most = float(np.abs(choices.kw).max(initial=0.0))
-        self.kw_scale = _power_of_two(float(choices.request_kw.max(initial=0.0)) if profile is None else most)
+        asked = float(np.abs(choices.request_kw).max(initial=0.0))
+        self.kw_scale = _power_of_two(asked if profile is None and asked > 0.0 else most)
         usual_price = float(choices.shortfall_price_per_kw.max(initial=0.0)) if profile is None else 0.0
         self.money_scale = _power_of_two(
             max(float(np.abs(choices.cost).max(initial=0.0)), usual_price * 1e-3)
@@ -221,7 +241,10 @@ class _Model:
         else:
             self._profile(choices, profile)
         rows = zip(choices.rows / self.kw_scale, choices.room / self.kw_scale, strict=True)
-        self.coupling_rows = [self._row(row, [], -1, float(room)) for row, room in rows]
+        soft = self._soft(choices)
+        self.coupling_rows = [
+            self._row(row, more, -1, float(room)) for (row, room), more in zip(rows, soft, strict=True)
+        ]
         self._one_each(choices)
 
     def _priced(self, choices: Choices) -> None:
@@ -256,6 +279,18 @@ class _Model:
             for e in range(profile.size)
         ]
 
+    def _soft(self, choices: Choices) -> list[list[tuple[Any, float]]]:
+        """What lets each coupling row be broken at a price: one variable each, or nothing."""
+        self.broken = []
+        if choices.row_price is None:
+            return [[] for _ in range(choices.room.size)]
+        price = choices.row_price * self.kw_scale / self.money_scale
+        self.broken = [self.problem.add_variable(f"b{r}", 0) for r in range(choices.room.size)]
+        self.problem.setObjective(
+            self.problem.objective + pulp.LpAffineExpression([(slack, price) for slack in self.broken])
+        )
+        return [[(slack, -1.0)] for slack in self.broken]
+
     def _row(self, row: Floats, more: list[tuple[Any, float]], sense: int, right: float) -> Any:
         used = np.flatnonzero(row)
         terms = [
@@ -287,7 +322,7 @@ class _Model:
     def solve(
         self,
         solver: str,
-        seconds: float,
+        work: Work,
         gap: float,
         start: Ints | None = None,
         relative_gap: float = 0.0,
@@ -297,26 +332,29 @@ class _Model:
         if not self.possible:
             return Status.INFEASIBLE, np.inf
         known = self._start_values(start)
-        if solver == "highs" and pulp.HiGHS().available():
-            options = {
-                "log_to_console": False,
-                "mip_feasibility_tolerance": 1e-9,
-                "primal_feasibility_tolerance": 1e-9,
-                "random_seed": 1,
-                "threads": 1,
-                "time_limit": max(seconds, 0.1),
-                "mip_abs_gap": gap,
-                "mip_rel_gap": relative_gap,
-                "objective_target": target,
-            }
-            self.problem.solve(_highs(self.whole, options, known))
-            bound = float(self.problem.solverModel.getInfo().mip_dual_bound) if self.whole else -np.inf
-        else:
-            self.problem.solve(self._cbc(seconds, gap, relative_gap, known))
-            bound = -np.inf
-        return self._state(), bound
+        if solver != "highs" or not pulp.HiGHS().available():
+            self.problem.solve(self._cbc(work, gap, relative_gap, known))
+            return self._state(), -np.inf
+        options: dict[str, float | int | bool] = {
+            "log_to_console": False,
+            "mip_feasibility_tolerance": 1e-9,
+            "primal_feasibility_tolerance": 1e-9,
+            "random_seed": 1,
+            "threads": 1,
+            "mip_abs_gap": gap,
+            "mip_rel_gap": relative_gap,
+            "objective_target": target,
+        }
+        if work.seconds > 0.0:
+            options["time_limit"] = work.seconds
+        self.problem.solve(_highs(self.whole, options, known, work))
+        told = self.problem.solverModel.getInfo()
+        if self.whole and told.primal_solution_status != HIGHS_FEASIBLE:
+            state = self._state()
+            return (state if state is Status.INFEASIBLE else Status.FAILED), -np.inf
+        return self._state(), float(told.mip_dual_bound) if self.whole else -np.inf
 
-    def _cbc(self, seconds: float, gap: float, relative_gap: float, known: dict[Any, float] | None) -> Any:
+    def _cbc(self, work: Work, gap: float, relative_gap: float, known: dict[Any, float] | None) -> Any:
         """The solver that comes with PuLP, for where HiGHS is missing; it tells no bound."""
         for variable, value in (known or {}).items():
             variable.setInitialValue(value, check=False)
@@ -326,7 +364,8 @@ class _Model:
                 mip=self.whole,
                 msg=False,
                 threads=1,
-                timeLimit=max(seconds, 0.1),
+                timeLimit=work.seconds or None,
+                maxNodes=work.nodes or None,
                 gapAbs=gap,
                 gapRel=relative_gap,
                 warmStart=known is not None,
@@ -334,7 +373,7 @@ class _Model:
 
     def _start_values(self, start: Ints | None) -> dict[Any, float] | None:
         """Value of every variable of a known answer; None where none is given."""
-        if start is None or not self.whole or not self.short:
+        if start is None or not self.whole or not self.short or self.broken:
             return None
         taken = np.zeros(len(self.x))
         taken[start] = 1.0
@@ -363,8 +402,10 @@ def _most_by_site(site: Ints, values: Floats) -> Floats:
     return total
 
 
-def _highs(whole: bool, options: dict[str, float | int | bool], start: dict[Any, float] | None) -> Any:
-    """HiGHS within this process, quiet, with checked options and a known answer to start from."""
+def _highs(
+    whole: bool, options: dict[str, float | int | bool], start: dict[Any, float] | None, work: Work = Work()
+) -> Any:
+    """HiGHS within this process, quiet, with checked options, a known answer to start from and counted work."""
     unknown = sorted(set(options) - HIGHS_OPTIONS)
     if unknown:
         raise ValueError(f"options {', '.join(unknown)} are not in the checked list of HiGHS options")
@@ -381,11 +422,26 @@ def _highs(whole: bool, options: dict[str, float | int | bool], start: dict[Any,
             problem.solverModel.setSolution(
                 len(start), index, np.array(list(start.values()), dtype=np.float64)
             )
+        if whole and (work.nodes or work.checks):
+            problem.solverModel.cbMipInterrupt.subscribe(_counting(work))
         problem.solverModel.run()
 
     solver.createAndConfigureSolver = configure_quietly
     solver.callSolver = run
     return solver
+
+
+def _counting(work: Work) -> Callable[[Any], None]:
+    """Stops HiGHS after so many nodes, or so many checks of whether to stop: counts that no load changes."""
+    checks = 0
+
+    def check(event: Any) -> None:
+        nonlocal checks
+        checks += 1
+        if 0 < work.nodes <= event.data_out.mip_node_count or 0 < work.checks <= checks:
+            event.interrupt()
+
+    return check
 
 
 @contextlib.contextmanager

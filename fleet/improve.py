@@ -17,6 +17,8 @@ from sites.units import Bools, Floats, Ints
 LEAST_GAIN: Final = 1e-9
 PAIRS_TRIED: Final = 300
 MOST_MOVES: Final = 900
+MOST_STEPS: Final = 300
+MOST_PAIRS: Final = 40
 
 
 @dataclass(frozen=True)
@@ -59,10 +61,10 @@ def score(offers: Offers, terms: Terms, chosen: Ints) -> Score:
 
 def repaired(offers: Offers, terms: Terms, chosen: Ints) -> Ints:
     """A choice without the candidates that add most where a feeder row is broken worst, until none is."""
+    weight = np.zeros(offers.site.size)
+    weight[chosen] = 1.0
+    excess = node_change_kw(offers, weight) - terms.headroom_kw
     while chosen.size:
-        weight = np.zeros(offers.site.size)
-        weight[chosen] = 1.0
-        excess = node_change_kw(offers, weight) - terms.headroom_kw
         node, interval = np.unravel_index(int(excess.argmax()), excess.shape)
         if excess[node, interval] <= FEASIBLE_KW:
             break
@@ -70,6 +72,8 @@ def repaired(offers: Offers, terms: Terms, chosen: Ints) -> Ints:
         enough = added >= excess[node, interval]
         cost_of_loss = offers.kw[chosen].sum(axis=1)
         drop = int(np.where(enough, cost_of_loss, np.inf).argmin()) if enough.any() else int(added.argmax())
+        gone = chosen[drop]
+        excess -= offers.below[:, offers.site[gone], None] * offers.change_kw[gone]
         chosen = np.delete(chosen, drop)
     return chosen
 
@@ -88,21 +92,29 @@ class _Moves:
 
 
 def improve(
-    offers: Offers, terms: Terms, chosen: Ints, columns: Ints, coupled: Bools, stop: Callable[[], bool]
+    offers: Offers,
+    terms: Terms,
+    chosen: Ints,
+    columns: Ints,
+    coupled: Bools,
+    stop: Callable[[], bool] = lambda: False,
 ) -> Ints:
     """A choice at least as good as `chosen`, reached by moves to candidates `columns` (indices, best first).
 
-    chosen must keep the feeder rows; coupled (J, T) are the rows that can bind at all. stop() ends it early.
+    chosen must keep the feeder rows; coupled (J, T) are the rows that can bind at all. At most MOST_STEPS steps, of
+    two sites MOST_PAIRS of them; stop() ends it earlier.
     """
     columns = np.concatenate([chosen, columns[~np.isin(columns, chosen)][:MOST_MOVES]])
     moves = _moves(offers, terms, columns, coupled)
     current = np.full(offers.site_count, -1, dtype=np.int64)
     current[offers.site[chosen]] = chosen
-    while offers.site.size and not stop():
+    steps = pairs = 0
+    while offers.site.size and steps < MOST_STEPS and pairs < MOST_PAIRS and not stop():
         step = _best_step(offers, terms, moves, current)
         if step.size == 0:
             break
         current[moves.site[step]] = moves.candidate[step]
+        steps, pairs = steps + 1, pairs + int(step.size > 1)
     return np.sort(current[current >= 0])
 
 

@@ -10,6 +10,7 @@ import numpy as np
 
 from fleet.bound import Offers, Terms
 from fleet.choice import Most, Status, factor_of, most_kw
+from fleet.effort import STEADY, Effort, within
 from fleet.feeders import Feeders
 from fleet.improve import repaired
 from fleet.offers import offered, offers_of
@@ -18,7 +19,9 @@ from sites.quotes import DenseQuotes
 from sites.units import Bools, Floats, Ints
 
 MODEL_COLUMNS: Final = 1200
-MOST_SECONDS: Final = 5.0
+MOST_WORK: Final = (1000, 400)
+ALONE_WORK: Final = (100, 150)
+"""Nodes and checks of a model's solver: of all intervals together, and of one alone."""
 
 
 @dataclass(frozen=True)
@@ -38,7 +41,7 @@ def most(
     node_id: str,
     delivery_factor: Floats,
     allowed: Bools,
-    seconds: float = MOST_SECONDS,
+    seconds: float | None = None,
 ) -> Available:
     """What allowed sites (N,) at or below a node can give there, feeder limits (J, T) kept.
 
@@ -48,8 +51,9 @@ def most(
     kept = offered(quotes, feeders, node_id, allowed)
     offers = offers_of(quotes, feeders, delivery_factor, np.zeros(quotes.site_count), kept)
     intervals = offers.kw.shape[1]
-    together = most_of(offers, headroom_kw, np.ones(intervals), seconds)
-    available, proven = _alone(offers, headroom_kw, seconds / intervals, together.chosen)
+    effort = within(seconds)
+    together = most_of(offers, headroom_kw, np.ones(intervals), effort.sooner(0.5))
+    available, proven = _alone(offers, headroom_kw, effort, together.chosen)
     return Available(available, together.kw, proven and together.status is Status.PROVEN)
 
 
@@ -57,14 +61,15 @@ def most_of(
     offers: Offers,
     headroom_kw: Floats,
     profile: Floats,
-    seconds: float = MOST_SECONDS,
+    effort: Effort = STEADY,
     enough: float = np.inf,
+    allowed_work: tuple[int, int] = MOST_WORK,
 ) -> Most:
     """The most of a profile (E,) that keeps every feeder row, in kW of the profile's largest value.
 
     Prices first, then one model of the candidates of least regret and all feeder rows they could break. `chosen`
     are indices into the offers. Stops where `enough` kW is reached, and before any model where prices prove that
-    it cannot be. What is chosen does not depend on the time taken unless the model is cut short.
+    it cannot be.
     """
     nothing = np.zeros(0, dtype=np.int64)
     if offers.site.size == 0:
@@ -72,7 +77,7 @@ def most_of(
     shape = profile / profile.max()
     free = replace(offers, cost=np.zeros(offers.site.size))
     terms = _no_terms(offers, headroom_kw, shape)
-    searched = search(free, terms, largest(shape), np.inf, 0.0, lambda: 0.0)
+    searched = search(free, terms, largest(shape), 0.0, effort)
     ceiling = -searched.bound.value
     if np.isfinite(enough) and ceiling < enough - FEASIBLE_KW:
         return Most(Status.INFEASIBLE, 0.0, nothing)
@@ -80,7 +85,7 @@ def most_of(
     columns = np.union1d(np.argsort(regret, kind="stable")[:MODEL_COLUMNS], np.flatnonzero(searched.x > 0.0))
     rows = rows_that_bind(free, terms, columns)
     model = as_choices(free, terms, columns, rows)
-    told = most_kw(model, shape, seconds, min(enough, 0.9999 * ceiling))
+    told = most_kw(model, shape, effort.work(*allowed_work), min(enough, 0.9999 * ceiling))
     chosen = repaired(offers, terms, columns[told.chosen]) if told.chosen.size else nothing
     kw = factor_of(offers.kw[chosen], shape)
     if not told.status.is_ok:
@@ -99,7 +104,7 @@ def _no_terms(offers: Offers, headroom_kw: Floats, shape: Floats) -> Terms:
     return Terms(none, none, cap, none, headroom_kw)
 
 
-def _alone(offers: Offers, headroom_kw: Floats, seconds: float, known: Ints) -> tuple[Floats, bool]:
+def _alone(offers: Offers, headroom_kw: Floats, effort: Effort, known: Ints) -> tuple[Floats, bool]:
     """(E,) most of each interval alone: every site's best where that keeps the feeders, else by model.
 
     A model cut short is never taken for nothing: every site's best less what breaks a feeder, and the choice
@@ -115,7 +120,9 @@ def _alone(offers: Offers, headroom_kw: Floats, seconds: float, known: Ints) -> 
         only = np.eye(intervals)[e]
         result[e] = max(factor_of(offers.kw[kept], only), factor_of(offers.kw[known], only))
         if kept.size < best.size:
-            answer = most_of(offers, headroom_kw, only, seconds)
+            answer = most_of(
+                offers, headroom_kw, only, effort.sooner(1.0 / (intervals - e)), allowed_work=ALONE_WORK
+            )
             result[e] = max(result[e], answer.kw)
             proven = proven and answer.status is Status.PROVEN
     return result, proven

@@ -1,8 +1,9 @@
 """The search for prices: which shed, over and import prices make the bound as large as it gets.
 
-Owns column and row generation around the linear relaxation: few candidates and few feeder rows are in the model
-at a time, every candidate is priced in numpy, and what a price calls for is added. Leaves the bound to bound.py
-and the models to choice.py. Any prices found give a valid bound, also when time runs out.
+Owns what follows the climb to near-best prices: the linear relaxation of the sites that those leave undecided, with
+column and row generation (few candidates and feeder rows in the model at a time, every candidate priced in numpy,
+and what a price calls for added). Leaves the bound to bound.py, the climb to climb.py, the models to choice.py. Any
+prices found give a valid bound, also when time runs out.
 """
 
 from collections.abc import Callable
@@ -13,6 +14,8 @@ import numpy as np
 
 from fleet.bound import Bound, Offers, Prices, Terms, bound_from_prices
 from fleet.choice import Choices, Relaxed, relaxation
+from fleet.climb import WIDE, climb
+from fleet.effort import Effort
 from sites.units import Bools, Floats, Ints
 
 FEASIBLE_KW: Final = 1e-6
@@ -20,7 +23,13 @@ FEASIBLE_KW: Final = 1e-6
 NEAR_SHARE: Final = 0.8
 """Feeder rows that the relaxation fills by more than this stand in the models of whole candidates."""
 FIRST_PRICE_SHARES: Final = (0.0, 0.01, 0.03, 0.1, 0.2, 0.4, 1.0)
+ROW_PRICES: Final = 20.0
+"""A broken feeder row costs this many times the dearest kW in a search; no answer breaks one."""
 MOST_ROUNDS: Final = 200
+POLISH_ROUNDS: Final = 12
+FIRST_COLUMNS: Final = 1500
+POLISH_COLUMNS: Final = 4000
+"""Candidates of undecided sites, at the start and at the end, whose relaxation is solved exactly after the climb."""
 
 
 @dataclass(frozen=True)
@@ -126,17 +135,115 @@ def node_change_kw(offers: Offers, weight: Floats) -> Floats:
     return result
 
 
-def search(
-    offers: Offers, terms: Terms, aim: Aim, seconds: float, tolerance: float, stopwatch: Callable[[], float]
-) -> Searched:
-    """Prices whose bound is within `tolerance` of the relaxation's optimum, or the best found in `seconds`."""
-    end = stopwatch() + seconds
+def priced(offers: Offers, terms: Terms, effort: Effort) -> Searched:
+    """Prices for the least money: climbed to, then made exact on the sites that they leave undecided."""
+    coupled = can_bind(offers, terms)
+    climbed = climb(offers, terms, np.argwhere(coupled), effort.stop)
+    prices, best = climbed.prices, bound_from_prices(offers, terms, climbed.prices)
+    rounds, x = 0, _shares(best, offers)
+    columns = _open_some(best, offers, climbed.tau)
+    rows = prices.importing > 0.0
+    while rounds < POLISH_ROUNDS and 0 < columns.sum() <= POLISH_COLUMNS and not effort.over:
+        rounds += 1
+        members, taken, rest = _undecided(offers, terms, best, columns)
+        held = np.argwhere(rows)
+        model = replace(as_choices(offers, rest, members, held), row_price=row_price(terms, prices))
+        relaxed = relaxation(model)
+        if not relaxed.status.is_ok:
+            break
+        x = np.zeros(offers.site.size)
+        x[taken], x[members] = 1.0, relaxed.x
+        told = _prices(relaxed, held, terms, cheapest(terms))
+        total = relaxed.objective + float(offers.cost[taken].sum())
+        broken = coupled & ~rows & (node_change_kw(offers, x) > terms.headroom_kw + FEASIBLE_KW)
+        wanted = np.zeros_like(columns)
+        for trial in (_between(prices, told), told):
+            there = bound_from_prices(offers, terms, trial)
+            wanted |= _wanted(there, offers)
+            if there.value > best.value:
+                best, prices = there, trial
+        new = wanted & (x < 1.0) & ~columns
+        if not broken.any() and (not new.any() or total - best.value <= 1e-9 * (1.0 + abs(total))):
+            break
+        columns |= new | _rivals(best, offers, new)
+        rows |= broken
+    near = coupled & (node_change_kw(offers, x) > NEAR_SHARE * terms.headroom_kw)
+    return Searched(prices, best, np.argwhere(near | rows), x, climbed.steps + rounds)
+
+
+def row_price(terms: Terms, prices: Prices) -> float:
+    """Money for each kW by which a feeder row is broken in a search: far beyond any price found, and any kW's."""
+    dearest = max(float(prices.importing.max(initial=0.0)), float(prices.shed.max(initial=0.0)))
+    return ROW_PRICES * max(dearest, float(terms.over_price_per_kw.max(initial=0.0)), 1e-6)
+
+
+def _wanted(bound: Bound, offers: Offers) -> Bools:
+    """Candidates that are their site's best answer, better than staying out."""
+    wanted: Bools = (bound.candidate_value <= bound.best[offers.site]) & (bound.candidate_value < 0.0)
+    return wanted
+
+
+def _shares(bound: Bound, offers: Offers) -> Floats:
+    """1 for each site's best answer (the first of equal ones), 0 for the others."""
+    x = np.zeros(offers.site.size)
+    columns = np.flatnonzero(_wanted(bound, offers))
+    _, first = np.unique(offers.site[columns], return_index=True)
+    x[columns[first]] = 1.0
+    return x
+
+
+def _open(bound: Bound, offers: Offers, reach: float) -> Bools:
+    """Candidates within reach of the best, of sites where they are not the only answer within reach."""
+    near = bound.regret(offers.site) <= reach
+    answers = np.bincount(offers.site[near], minlength=offers.site_count)
+    answers += bound.best >= -reach
+    return np.asarray(near & (answers[offers.site] > 1), dtype=np.bool_)
+
+
+def _open_some(bound: Bound, offers: Offers, tau: float) -> Bools:
+    """The same, with a reach that leaves FIRST_COLUMNS at most; the climb's prices are good to some tau."""
+    reach = 2.0 * WIDE * tau
+    columns = _open(bound, offers, reach)
+    while columns.sum() > FIRST_COLUMNS and reach > tau:
+        reach *= 0.7
+        columns = _open(bound, offers, reach)
+    return columns
+
+
+def _rivals(bound: Bound, offers: Offers, wanted: Bools) -> Bools:
+    """The best answers of sites that were held fixed and now have another one too."""
+    sites = np.zeros(offers.site_count, dtype=np.bool_)
+    sites[offers.site[wanted]] = True
+    return _wanted(bound, offers) & sites[offers.site]
+
+
+def _undecided(offers: Offers, terms: Terms, bound: Bound, columns: Bools) -> tuple[Ints, Ints, Terms]:
+    """Open candidates, those taken of all other sites, and what is left to ask once these are taken."""
+    free = np.zeros(offers.site_count, dtype=np.bool_)
+    free[offers.site[columns]] = True
+    taken = np.flatnonzero((_shares(bound, offers) > 0.0) & ~free[offers.site])
+    return np.flatnonzero(columns), taken, less(offers, terms, taken)
+
+
+def less(offers: Offers, terms: Terms, taken: Ints) -> Terms:
+    """What is left to ask, and what room, once some candidates are taken."""
+    weight = np.zeros(offers.site.size)
+    weight[taken] = 1.0
+    return replace(
+        terms,
+        request_kw=terms.request_kw - offers.kw[taken].sum(axis=0),
+        headroom_kw=terms.headroom_kw - node_change_kw(offers, weight),
+    )
+
+
+def search(offers: Offers, terms: Terms, aim: Aim, tolerance: float, effort: Effort) -> Searched:
+    """Prices whose bound is within `tolerance` of the relaxation's optimum, or the best found in time."""
     coupled = can_bind(offers, terms)
     columns, best, prices = _first_columns(offers, terms, aim)
     rows = np.zeros((0, 2), dtype=np.int64)
     x = np.zeros(offers.site.size)
     rounds = 0
-    while rounds < MOST_ROUNDS and stopwatch() < end:
+    while rounds < MOST_ROUNDS and not effort.over:
         rounds += 1
         members = np.flatnonzero(columns)
         relaxed = aim.relax(as_choices(offers, terms, members, rows))

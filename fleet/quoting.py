@@ -27,7 +27,7 @@ class Offer:
     """(site,) least net cost per kWh shed among the site's candidates, NaN = none"""
 
 
-def offer(survey: Survey, seconds: float = 5.0) -> Offer:
+def offer(survey: Survey, seconds: float | None = None) -> Offer:
     """Summarise a survey; the figures hold feeder limits and call limits."""
     quotes, buildings = survey.quoted.quotes, survey.fleet.roster.buildings
     available = most(
