@@ -68,7 +68,9 @@ def survey(
     Raises Refused and FleetError for anything wrong with folder or ask.
     """
     if ask.direction is Direction.ABSORB and asked_kw is not None:
-        raise FleetError("direction absorb can be quoted but not called yet: its orders are not written; use quote")
+        raise FleetError(
+            "direction absorb can be quoted but not called yet: its orders are not written; use quote"
+        )
     progress("reading the fleet")
     folder = open_folder(path, without=("meters",))
     settings = folder.settings
