@@ -228,7 +228,7 @@ def _proof(
         bound=bound,
         bound_by="solver" if answer.bound_solver > by_prices else "prices",
         bound_prices=by_prices,
-        bound_solver=answer.bound_solver if np.isfinite(answer.bound_solver) else None,
+        bound_solver=answer.bound_solver if answer.bound_solver > by_prices else None,
         gap_money=lack,
         gross_cost=gross_cost,
         gap=lack / gross_cost if gross_cost > 0.0 else None,

@@ -185,6 +185,9 @@ def horizon(case: Case, found: Findings) -> None:
     found.value("horizon", _file(case), "interval_minutes", told["interval_minutes"], book.clock.step_minutes)
     quoted = len(book.record.frames["quotes"])
     found.value("horizon", _file(case), "candidates_quoted", told["candidates_quoted"], quoted)
+    if "quoted_unmet_kwh_th" in told:
+        unmet = float(book.record.frames["quotes"]["unmet_kwh_th"].sum())
+        found.value("horizon", _file(case), "quoted_unmet_kwh_th", told["quoted_unmet_kwh_th"], unmet)
     found.value("horizon", _file(case), "met", told["met"], not bool(_sum(case).shortfall_kw.any()))
 
 

@@ -253,6 +253,8 @@ def proof_of(survey: Survey, allocation: Allocation) -> dict[str, Any]:
         "interval_minutes": clock.step_minutes,
         "probability": None,
         "over_delivery_fraction": survey.folder.settings.over_delivery_fraction,
+        "requested_kwh": float(allocation.requested_kw.sum()) * clock.step_h,
+        "quoted_unmet_kwh_th": float(survey.quoted.quotes.unmet_kwh_th.sum()),
         "candidates_tried": survey.quoted.tried,
         "candidates_quoted": len(survey.quoted.quotes.site),
         "versions": {name: version(name) for name in PACKAGES},

@@ -129,6 +129,8 @@ def _proof(quoted: Quoted, found: Allocation) -> dict[str, Any]:
         "interval_minutes": clock.step_minutes,
         "probability": None,
         "over_delivery_fraction": 0.05,
+        "requested_kwh": float(found.requested_kw.sum()) * clock.step_h,
+        "quoted_unmet_kwh_th": float(quoted.quotes.unmet_kwh_th.sum()),
         "candidates_tried": quoted.tried,
         "candidates_quoted": len(quoted.quotes.site),
         "versions": {"shedwright": "0"},

@@ -25,7 +25,6 @@ from mutations import (
 import fleet
 from fleet import audit as front
 from fleet import audit_limits, audit_proof, audit_settlement
-from fleet.allocate import Proof
 from fleet.audit import Audit, audit
 from fleet.audit_case import case
 from fleet.audit_evidence import evidence
@@ -39,7 +38,6 @@ from fleet.tables import read_parquet, write_parquet
 PINNED_BY = {
     ("windows", "inventory_low_start_kwh_th"): ("call", "quotes", "inventory_low_start_kwh_th"),
     ("day_intervals", "kw"): ("settlement", "days", "day_kwh"),
-    ("request", "requested_kw"): ("call", "proof", "requested_kwh"),
 }
 """Columns that nothing else in the record holds until this one repeats them."""
 FORBIDDEN = {
@@ -165,9 +163,7 @@ def cells(kind: str) -> list[tuple[Table, str]]:
 
 def pinned(of: Table, column: str) -> bool:
     by = PINNED_BY.get((of.name, column))
-    if by is None or by[1] == "proof":
-        return by is None or by[2] in Proof.__dataclass_fields__
-    return by[2] in tables(by[0])[by[1]].names
+    return by is None or by[2] in tables(by[0])[by[1]].names
 
 
 def mutated(frames, of: Table, column: str, seed: int):
