@@ -360,6 +360,7 @@ def test_no_permission_to_read_a_table_or_the_settings(tmp_path):
 
 
 @pytest.mark.skipif(not hasattr(os, "fork"), reason="needs fork")
+@pytest.mark.slow
 def test_a_real_user_without_permission_is_told_so(tmp_path):
     """In a child that gives up the superuser's rights, with real permission bits."""
     fleet = write_small_fleet(tmp_path / "fleet")
