@@ -14,11 +14,11 @@ from typing import Any
 
 from fleet.check import report
 from fleet.errors import FleetError
-from fleet.intake import take
-from fleet.mapping import Line, as_text, read_mapping, suggest
 from fleet.settings import FILE, parse_settings
 from fleet.starter import example_files, settings_text
-from fleet.workbook import read_workbook
+from fleet.workbook.intake import take
+from fleet.workbook.mapping import Line, as_text, read_mapping, suggest
+from fleet.workbook.sheets import read_workbook
 
 
 @dataclass(frozen=True)

@@ -24,12 +24,11 @@ from mutations import (
 
 import fleet
 from fleet import audit as front
-from fleet import audit_limits, audit_proof, audit_settlement
-from fleet.audit import Audit, audit
-from fleet.audit_case import case
-from fleet.audit_evidence import evidence
-from fleet.audit_findings import Fault, Findings, Sheet
-from fleet.audit_settled import Settled
+from fleet.audit import Audit, audit, limits, proof, settlement
+from fleet.audit.case import case
+from fleet.audit.evidence import evidence
+from fleet.audit.findings import Fault, Findings, Sheet
+from fleet.audit.settled import Settled
 from fleet.errors import FleetError
 from fleet.records import CallRecord, SettlementRecord, read_call, read_settlement
 from fleet.schema import Table, tables
@@ -110,7 +109,7 @@ def faults_of_settlement(
 ) -> list[Fault]:
     found = Findings()
     made = Settled(call, record, record.path.name, before, None)
-    for rule in audit_settlement.RULES:
+    for rule in settlement.RULES:
         front._tried(found, record.path.name, front._name(rule), partial(rule, made, found))
     return found.faults
 
@@ -239,7 +238,7 @@ def test_every_number_of_a_settlement_is_pinned(call, settlements, of, column, s
 
 def test_every_number_of_the_proof_is_pinned(call):
     names = proof_numbers(dict(call.proof))
-    rules = (*audit_proof.RULES, audit_limits.candidates_tried)
+    rules = (*proof.RULES, limits.candidates_tried)
     whole = evidence(call, "call-001", Findings())
     assert whole is not None
     known = case(whole)

@@ -10,9 +10,9 @@ import pytest
 from made_settlement import NEW_YORK, call, times, utc, worked_call, worked_readings
 from random_settlements import random_case
 
-from fleet import audit_settlement
-from fleet.audit_findings import Findings
-from fleet.audit_settled import Settled
+from fleet.audit import settlement
+from fleet.audit.findings import Findings
+from fleet.audit.settled import Settled
 from fleet.money import Prices
 from fleet.records import CallRecord, SettlementRecord
 from fleet.rules import PRESETS, SettlementRule
@@ -68,7 +68,7 @@ def audited(facts: CallFacts, frames: Mapping[str, pd.DataFrame]) -> list[str]:
     kept = {name: stable(frame, table("settlement", name)) for name, frame in frames.items()}
     record = SettlementRecord(Path("settlement"), facts.event_id, 1, kept, {})
     made, found = Settled(call_record(facts), record, "settlement-001", None, None), Findings()
-    for rule in audit_settlement.RULES:
+    for rule in settlement.RULES:
         rule(made, found)
     return [str(fault) for fault in found.faults]
 

@@ -5,10 +5,10 @@ import pytest
 from made_workbook import two_sites, write_workbook
 
 from fleet.begin import begin_from, suggest_mapping
-from fleet.cells import reader
 from fleet.errors import FleetError, Refused
 from fleet.schema import table
-from fleet.workbook import Percent, read_workbook
+from fleet.workbook.cells import reader
+from fleet.workbook.sheets import Percent, read_workbook
 
 
 def read(name, column, value, unit="", our_unit=None):

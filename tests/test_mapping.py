@@ -5,9 +5,9 @@ import pytest
 from made_workbook import two_sites, write_workbook
 
 from fleet.errors import FleetError, Refused
-from fleet.mapping import as_text, known_tables, read_mapping, suggest
-from fleet.trade_words import COLUMN_WORDS, TABLE_WORDS, VALUE_WORDS
-from fleet.workbook import read_workbook
+from fleet.workbook.mapping import as_text, known_tables, read_mapping, suggest
+from fleet.workbook.sheets import read_workbook
+from fleet.workbook.trade_words import COLUMN_WORDS, TABLE_WORDS, VALUE_WORDS
 
 
 @pytest.fixture

@@ -1,6 +1,6 @@
 import pytest
 
-from fleet.units_named import ACCEPTED, accepted, parted
+from fleet.workbook.units_named import ACCEPTED, accepted, parted
 
 
 @pytest.mark.parametrize(

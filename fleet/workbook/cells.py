@@ -13,9 +13,9 @@ from typing import Final
 
 from fleet.errors import Problem
 from fleet.schema import Column
-from fleet.units_named import Conversion, accepted
 from fleet.wall_time import TIME_PATTERN
-from fleet.workbook import Percent
+from fleet.workbook.sheets import Percent
+from fleet.workbook.units_named import Conversion, accepted
 
 _SERIAL_DAY_0: Final = datetime(1899, 12, 30)
 """Day 0 of Excel's date serials (1900 system, from 1 March 1900 on)."""

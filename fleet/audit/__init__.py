@@ -13,24 +13,24 @@ from typing import TypeVar
 
 import pandas as pd
 
-from fleet import (
-    audit_courses,
-    audit_limits,
-    audit_network,
-    audit_proof,
-    audit_quotes,
-    audit_settlement,
-    audit_steps,
-    audit_tanks,
-    audit_windows,
-    audit_zones,
+from fleet.audit import (
+    courses,
+    limits,
+    network,
+    proof,
+    quotes,
+    settlement,
+    steps,
+    tanks,
+    windows,
+    zones,
 )
-from fleet.audit_case import Case, case
-from fleet.audit_evidence import evidence
-from fleet.audit_findings import Fault, Findings
-from fleet.audit_inputs import changed_inputs, frozen_digests
-from fleet.audit_orders import orders_say_the_call
-from fleet.audit_settled import Settled
+from fleet.audit.case import Case, case
+from fleet.audit.evidence import evidence
+from fleet.audit.findings import Fault, Findings
+from fleet.audit.inputs import changed_inputs, frozen_digests
+from fleet.audit.orders import orders_say_the_call
+from fleet.audit.settled import Settled
 from fleet.records import CallRecord, SettlementRecord, event_folder, read_call, read_settlement, verify_seals
 from fleet.seals import record_folders
 
@@ -40,15 +40,15 @@ Found = TypeVar("Found")
 Rule = Callable[[Case, Findings], None]
 
 CALL_RULES: Sequence[Rule] = (
-    *audit_windows.RULES,
-    *audit_limits.RULES,
-    *audit_courses.RULES,
-    *audit_tanks.RULES,
-    *audit_zones.RULES,
-    *audit_quotes.RULES,
-    *audit_network.RULES,
-    *audit_proof.RULES,
-    *audit_steps.RULES,
+    *windows.RULES,
+    *limits.RULES,
+    *courses.RULES,
+    *tanks.RULES,
+    *zones.RULES,
+    *quotes.RULES,
+    *network.RULES,
+    *proof.RULES,
+    *steps.RULES,
 )
 
 
@@ -143,7 +143,7 @@ def _audit_settlements(
         if record is None:
             continue
         made = Settled(call, record, name, before, meters)
-        for rule in audit_settlement.RULES:
+        for rule in settlement.RULES:
             _tried(found, name, _name(rule), partial(rule, made, found))
         before = record
 

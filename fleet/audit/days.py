@@ -7,9 +7,9 @@ S called sites, D local days (the event's last).
 import numpy as np
 import pandas as pd
 
-from fleet.audit_evidence import utc_naive
-from fleet.audit_findings import Findings
-from fleet.audit_settled import Days, Settled, days_of, local_day
+from fleet.audit.evidence import utc_naive
+from fleet.audit.findings import Findings
+from fleet.audit.settled import Days, Settled, days_of, local_day
 from fleet.rules import SettlementRule
 from sites.units import AnyArray, Bools, Floats, Ints
 

@@ -9,9 +9,9 @@ from typing import Final
 import numpy as np
 import pandas as pd
 
-from fleet.audit_case import Case, over_sites
-from fleet.audit_evidence import utc_naive
-from fleet.audit_findings import Findings
+from fleet.audit.case import Case, over_sites
+from fleet.audit.evidence import utc_naive
+from fleet.audit.findings import Findings
 from sites.units import Floats, Ints
 
 PARTS: Final = ("before", "during", "recovery", "demand", "fee", "comfort")

@@ -1,6 +1,6 @@
 """Rules on a settlement: what was delivered, how it was performed, what is paid, and what is posted.
 
-Baselines are audit_baselines.py's. Money is worked out with the frozen rule and settings by money.py's functions,
+Baselines are baselines.py's. Money is worked out with the frozen rule and settings by money.py's functions,
 to the cent. Shapes: S called sites sorted by id, T shown intervals.
 """
 
@@ -10,10 +10,10 @@ from typing import Final
 import numpy as np
 import pandas as pd
 
-from fleet import audit_baselines
-from fleet.audit_evidence import utc_naive
-from fleet.audit_findings import Findings, Sheet
-from fleet.audit_settled import Settled, days_of, local_day
+from fleet.audit import baselines
+from fleet.audit.evidence import utc_naive
+from fleet.audit.findings import Findings, Sheet
+from fleet.audit.settled import Settled, days_of, local_day
 from fleet.money import Prices, earned, firm_level_charge, performance_factor
 from sites.units import AnyArray, Floats, Ints
 
@@ -317,7 +317,7 @@ def _amounts(rule: str, sheet: Sheet, column: str, expected: AnyArray, found: Fi
 RULES = (
     rows,
     in_force,
-    *audit_baselines.RULES,
+    *baselines.RULES,
     delivered,
     against_meters,
     performance,

@@ -1,14 +1,14 @@
 """Rules on what the called sites' plants do in each interval: tables intervals and machines.
 
 Balances, sums over machines and tanks, what a machine may give, and what it draws: worked out again from the
-frozen machines and weather. Tanks are audit_tanks.py's, zones audit_zones.py's. Shapes: R called sites, U machines,
+frozen machines and weather. Tanks are tanks.py's, zones zones.py's. Shapes: R called sites, U machines,
 T intervals.
 """
 
 import numpy as np
 
-from fleet.audit_case import Case
-from fleet.audit_findings import Findings
+from fleet.audit.case import Case
+from fleet.audit.findings import Findings
 from sites import chiller
 from sites.units import Bools, Floats
 

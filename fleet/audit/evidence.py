@@ -12,7 +12,7 @@ from typing import Any, Final
 import numpy as np
 import pandas as pd
 
-from fleet.audit_findings import Findings, Sheet
+from fleet.audit.findings import Findings, Sheet
 from fleet.errors import FleetError
 from fleet.records import CallRecord
 from sites.clock import Clock, span

@@ -9,10 +9,10 @@ from typing import Any, Final
 import numpy as np
 import pandas as pd
 
-from fleet.audit_case import Case
-from fleet.audit_evidence import utc_naive
-from fleet.audit_findings import Findings
-from fleet.audit_quotes import DEMAND_LIMITS
+from fleet.audit.case import Case
+from fleet.audit.evidence import utc_naive
+from fleet.audit.findings import Findings
+from fleet.audit.quotes import DEMAND_LIMITS
 from sites.units import Bools, Floats
 
 COUNTED: Final = ("real", "test")

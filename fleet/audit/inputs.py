@@ -7,7 +7,7 @@ a note, for the event rests on the frozen rows.
 import hashlib
 from pathlib import Path
 
-from fleet.audit_findings import Findings
+from fleet.audit.findings import Findings
 from fleet.records import CallRecord
 
 RULE = "frozen files"

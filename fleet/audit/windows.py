@@ -1,7 +1,7 @@
 """Rules on who is called when: tables request and windows.
 
 Notice, length and machines of each window; and every number of a window from the courses and from the quote it
-names. Call limits are audit_limits.py's. Shapes: R called sites, T intervals.
+names. Call limits are limits.py's. Shapes: R called sites, T intervals.
 """
 
 from typing import Any, Final
@@ -9,10 +9,10 @@ from typing import Any, Final
 import numpy as np
 import pandas as pd
 
-from fleet.audit_case import Case
-from fleet.audit_evidence import utc_naive
-from fleet.audit_findings import Findings, allowed
-from fleet.audit_quotes import lists
+from fleet.audit.case import Case
+from fleet.audit.evidence import utc_naive
+from fleet.audit.findings import Findings, allowed
+from fleet.audit.quotes import lists
 from fleet.schema import choices
 from sites.units import Floats
 

@@ -12,8 +12,8 @@ from typing import Any, Final
 import numpy as np
 import pandas as pd
 
-from fleet.audit_evidence import local, utc_naive
-from fleet.audit_findings import Sheet
+from fleet.audit.evidence import local, utc_naive
+from fleet.audit.findings import Sheet
 from fleet.records import CallRecord, SettlementRecord
 from fleet.rules import SettlementRule
 from sites.clock import Clock, span

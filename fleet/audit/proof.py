@@ -11,10 +11,10 @@ from typing import Any, Final
 import numpy as np
 import pandas as pd
 
-from fleet.audit_case import Case
-from fleet.audit_evidence import utc_naive
-from fleet.audit_findings import Findings
-from fleet.audit_quotes import PARTS, change_kw, lists, site_of
+from fleet.audit.case import Case
+from fleet.audit.evidence import utc_naive
+from fleet.audit.findings import Findings
+from fleet.audit.quotes import PARTS, change_kw, lists, site_of
 from fleet.bound import Offers, Prices, Terms, bound_from_prices, steering
 from sites.units import Floats, Ints
 

@@ -10,10 +10,10 @@ from typing import Final
 import numpy as np
 import pandas as pd
 
-from fleet.audit_days import by_day, days_chosen, free_days, sites_of
-from fleet.audit_findings import Findings
-from fleet.audit_levels import guards, levels, weather
-from fleet.audit_settled import Days, Settled, days_of, local_day, slots_of
+from fleet.audit.days import by_day, days_chosen, free_days, sites_of
+from fleet.audit.findings import Findings
+from fleet.audit.levels import guards, levels, weather
+from fleet.audit.settled import Days, Settled, days_of, local_day, slots_of
 from fleet.rules import SettlementRule
 from sites.units import AnyArray, Bools, Floats, Ints
 

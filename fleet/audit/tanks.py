@@ -8,8 +8,8 @@ from typing import Final
 
 import numpy as np
 
-from fleet.audit_case import Case
-from fleet.audit_findings import Findings, allowed
+from fleet.audit.case import Case
+from fleet.audit.findings import Findings, allowed
 from sites import tank
 from sites.conditions import RETURN_GLIDE_K
 from sites.units import Floats

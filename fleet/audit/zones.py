@@ -8,8 +8,8 @@ from typing import Any
 
 import numpy as np
 
-from fleet.audit_case import Case
-from fleet.audit_findings import Findings
+from fleet.audit.case import Case
+from fleet.audit.findings import Findings
 from sites import comfort
 from sites.roster import Buildings
 from sites.units import Floats

@@ -8,8 +8,8 @@ from typing import Final
 import numpy as np
 import pandas as pd
 
-from fleet.audit_case import Case
-from fleet.audit_findings import Findings
+from fleet.audit.case import Case
+from fleet.audit.findings import Findings
 
 RUNS_KW_TH: Final = 1e-6
 KEYS: Final = ["site_id", "unit_id", "action"]

@@ -1,7 +1,7 @@
 """What the used days say a meter would have shown, worked out again from the recorded readings and dry bulb.
 
 Owns the levels before adjustment by kind of rule, and the weather columns. Which days are used is
-audit_baselines.py's. Shapes: R sites of one rule, T shown intervals, D local days (the event's last), L slots a day.
+baselines.py's. Shapes: R sites of one rule, T shown intervals, D local days (the event's last), L slots a day.
 """
 
 from dataclasses import dataclass
@@ -9,8 +9,8 @@ from dataclasses import dataclass
 import numpy as np
 import pandas as pd
 
-from fleet.audit_findings import Findings
-from fleet.audit_settled import Days, Settled, days_of, local_day, slots_of
+from fleet.audit.findings import Findings
+from fleet.audit.settled import Days, Settled, days_of, local_day, slots_of
 from fleet.rules import SettlementRule
 from sites.units import AnyArray, Floats, Ints
 

@@ -9,7 +9,7 @@ from typing import Any
 
 import pandas as pd
 
-from fleet.audit_findings import Findings, names
+from fleet.audit.findings import Findings, names
 from fleet.records import CallRecord
 from fleet.words import plain
 

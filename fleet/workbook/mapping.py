@@ -16,9 +16,9 @@ from fleet.errors import FleetError, Problem, Refused
 from fleet.schema import Column, Table, tables
 from fleet.settings import FILE
 from fleet.tables import read_raw
-from fleet.trade_words import COLUMN_WORDS, TABLE_WORDS, VALUE_WORDS
-from fleet.units_named import MUST_BE_SAID, accepted, parted, plain_words, unit_of
-from fleet.workbook import Sheet
+from fleet.workbook.sheets import Sheet
+from fleet.workbook.trade_words import COLUMN_WORDS, TABLE_WORDS, VALUE_WORDS
+from fleet.workbook.units_named import MUST_BE_SAID, accepted, parted, plain_words, unit_of
 
 SAME, SYNONYM, ALIKE, LACKS_UNIT, CONSTANT, UNKNOWN, UNUSED = (
     "same name",

@@ -6,9 +6,9 @@ interval of the horizon. The tree is feeders.py's. Shapes: J nodes, N sites, T i
 
 import numpy as np
 
-from fleet.audit_case import Case
-from fleet.audit_evidence import carried
-from fleet.audit_findings import Findings
+from fleet.audit.case import Case
+from fleet.audit.evidence import carried
+from fleet.audit.findings import Findings
 
 KEPT_KW = 1e-6
 """A limit is kept to within this."""

@@ -9,7 +9,7 @@ from dataclasses import dataclass
 import numpy as np
 import pandas as pd
 
-from fleet.audit_evidence import (
+from fleet.audit.evidence import (
     Evidence,
     available,
     carried,

@@ -10,14 +10,14 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Final
 
-from fleet.cells import Reader, reader
 from fleet.errors import Problem, Refused
-from fleet.mapping import EQUALS, Line, known_tables, unit_for
 from fleet.schema import Table
 from fleet.settings import FILE
 from fleet.starter import csv_text, settings_text
-from fleet.units_named import Conversion
-from fleet.workbook import Sheet, place
+from fleet.workbook.cells import Reader, reader
+from fleet.workbook.mapping import EQUALS, Line, known_tables, unit_for
+from fleet.workbook.sheets import Sheet, place
+from fleet.workbook.units_named import Conversion
 
 ASKED: Final = ("timezone", "currency")
 """Settings that nothing stands in for."""
