@@ -31,6 +31,9 @@ class Ground:
     overstated_kw: Floats
     """(site, interval) by how much the usual power may be too high: its tanks are held to their limits at the END
     of each interval, and a machine that starts in the middle of an interval counts for all of it"""
+    overheld_kwh_th: Floats
+    """(site, interval) by how much the usual inventory may be too high at an interval's start, for
+    the same reason: tanks held to their limits at the END of each interval have given too little before"""
     in_force: Stages
     """Stages of other calls in force, one row a site: part of the usual case"""
 
@@ -44,7 +47,9 @@ def ground(roster: Roster, outlook: Outlook, standing: Standing, in_force: Stage
         _usual(roster, here, standing, stages, start) for start in (standing.best_kwh_th, standing.low_kwh_th)
     )
     overstated = _by_tank_kw(here, usual) + _by_staging_kw(roster, here, usual)
-    return Ground(roster, outlook, standing, here, usual, low, overstated, stages)
+    overheld = np.cumsum(_withheld_kw_th(here, usual), axis=1) * here.step_h
+    overheld = np.pad(overheld, ((0, 0), (1, 0)))[:, :-1]
+    return Ground(roster, outlook, standing, here, usual, low, overstated, overheld, stages)
 
 
 def usual_high(base: Ground) -> Course:
@@ -57,16 +62,21 @@ def _usual(roster: Roster, here: Conditions, standing: Standing, stages: Stages,
     return course(simulate(rows, here, stages, at_rest(start), None))
 
 
-def _by_tank_kw(here: Conditions, usual: Course) -> Floats:
-    """Where the usual plan asks its tanks for more than their limit, the limit in the interval's middle is higher
-    by about drawn x dt / 2 over the inventory (a limit in proportion to inventory), and machines do that much
-    less, at their mean full-load power; (site, interval)."""
+def _withheld_kw_th(here: Conditions, usual: Course) -> Floats:
+    """What the tanks could have given beside what they gave, (site, interval): where the usual plan asks them for
+    more than their limit, the limit in the interval's middle is higher by about drawn x dt / 2 over the inventory (a
+    limit in proportion to inventory)."""
     drawn = usual.discharge_kw_th.sum(axis=1)
     held = np.maximum(usual.inventory_kwh_th.sum(axis=1), 1e-9)
     kw_th = np.minimum(usual.wanted_kw_th - drawn, drawn * drawn * here.step_h / 2.0 / held)
+    return np.asarray(np.maximum(kw_th, 0.0))
+
+
+def _by_tank_kw(here: Conditions, usual: Course) -> Floats:
+    """What machines do less where the tanks give more, at their mean full-load power; (site, interval)."""
     made, full = here.direct_kw_th.sum(axis=1), here.direct_full_kw.sum(axis=1)
     specific = np.divide(full, made, out=np.zeros_like(made), where=made > 0.0)
-    return np.asarray(np.maximum(kw_th, 0.0) * specific)
+    return np.asarray(_withheld_kw_th(here, usual) * specific)
 
 
 def _by_staging_kw(roster: Roster, here: Conditions, usual: Course) -> Floats:

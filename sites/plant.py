@@ -139,35 +139,25 @@ def _advance(
     room_kw: Floats,
     t: int,
 ) -> Moment:
-    tanks = rows.roster.tanks
-    start = state.inventory_kwh_th
+    tanks, start = rows.roster.tanks, state.inventory_kwh_th
     loss = tank.standing_loss_kw_th(
         tanks.kind, start, tanks.capacity_kwh_th, tanks.loss_fraction_per_h, here.step_h
     )
     staged, limit, made_to = stages.at(t)
     direct_cap = here.direct_kw_th[rows.site, :, t] * limit
-    ready = total(direct_cap)
-    load = here.load_kw_th[rows.site, t]
+    ready, load = total(direct_cap), here.load_kw_th[rows.site, t]
     wanted = _wanted_from_tank(rows, here, staged, ready, load, start, t)
     tanks_gave = storage.discharge(rows, series, here.step_h, staged, ready, load, wanted, start, loss)
-    discharge = tanks_gave.drawn_kw_th
     drawn = tanks_gave.total_kw_th
     served = np.minimum(load - drawn, ready)
     unmet = np.maximum(load - drawn - served, 0.0)
     extra = unmet - usual.unmet_kw_th[rows.site, t] if usual else np.zeros_like(unmet)
     pull_down = _pull_down(rows, here, state, staged, extra, ready - served)
     air, mass, air_mean = comfort.advance(rows.zone, state.air_k, state.mass_k, extra - pull_down)
-    charging = _charging(rows, here, staged, usual, state, t)
-    asked = _charge_asked(rows, here, usual, load, start, t)
-    if usual is not None:
-        charging, asked = _made_up(rows, here, usual, staged, (start, loss, drawn), (charging, asked), t)
-    charging = charging | (made_to & _not_full(rows, start))
-    asked = np.where(made_to, np.inf, asked)
-    task = Task(charging, direct_cap, limit, served + pull_down, asked, start, loss, discharge)
+    charging, asked = _plan_to_charge(rows, here, usual, state, (staged, made_to), (load, loss, drawn), t)
+    task = Task(charging, direct_cap, limit, served + pull_down, asked, start, loss, tanks_gave.drawn_kw_th)
     made = make_within(rows, here, task, room_kw[:, t], rows.recovery == CAPPED, t)
-    charge = made.charge_kw_th
-    inventory = start + (charge - discharge - loss) * here.step_h
-    largest = direct_cap.max(axis=1, initial=0.0)
+    inventory = start + (made.charge_kw_th - tanks_gave.drawn_kw_th - loss) * here.step_h
     return Moment(
         interval=t,
         staged=staged,
@@ -177,8 +167,8 @@ def _advance(
         making_ice=made.ice_mode,
         machine_kw=made.machine_kw,
         power_kw=made.power_kw,
-        charge_kw_th=charge,
-        discharge_kw_th=discharge,
+        charge_kw_th=made.charge_kw_th,
+        discharge_kw_th=tanks_gave.drawn_kw_th,
         loss_kw_th=loss,
         inventory_start_kwh_th=start,
         inventory_kwh_th=inventory,
@@ -186,7 +176,7 @@ def _advance(
         lmtd_k=tanks_gave.lmtd_k,
         wanted_kw_th=wanted,
         spare_direct_kw_th=ready - served - pull_down,
-        firm_kw_th=ready - largest + total(tanks_gave.most_kw_th),
+        firm_kw_th=ready - direct_cap.max(axis=1, initial=0.0) + total(tanks_gave.most_kw_th),
         load_kw_th=load,
         unmet_kw_th=unmet,
         pull_down_kw_th=pull_down,
@@ -230,6 +220,26 @@ def _pull_down(
     target = np.where(state.air_k < SETTLED_K, 0.0, state.air_k * np.exp(-here.step_h / PULL_DOWN_H))
     needed = extra - comfort.net_for_air(rows.zone, state.air_k, state.mass_k, target)
     return np.where(warm, np.clip(needed, 0.0, np.maximum(spare, 0.0)), 0.0)
+
+
+def _plan_to_charge(
+    rows: Plants,
+    here: Conditions,
+    usual: Usual | None,
+    state: State,
+    stage: tuple[Bools, Bools],
+    flows: tuple[Floats, Floats, Floats],
+    t: int,
+) -> tuple[Bools, Floats]:
+    """Charging mode and charge asked for, each (row,): by strategy, by a recovery, or because a stage makes the
+    tanks charge. `stage`: rows in a stage, rows made to charge; `flows`: load (row,), loss (row, tank), discharge
+    (row,)."""
+    (staged, made_to), (load, loss, drawn), start = stage, flows, state.inventory_kwh_th
+    charging = _charging(rows, here, staged, usual, state, t)
+    asked = _charge_asked(rows, here, usual, load, start, t)
+    if usual is not None:
+        charging, asked = _made_up(rows, here, usual, staged, (start, loss, drawn), (charging, asked), t)
+    return charging | (made_to & _not_full(rows, start)), np.where(made_to, np.inf, asked)
 
 
 def _charging(

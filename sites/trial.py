@@ -21,12 +21,15 @@ from sites.quotes import LIMITED_BY
 from sites.roster import Rows
 from sites.rows import Plants, plants
 from sites.tally import Sums, Tally, add, broken, sums, tank_cause
-from sites.units import Floats, Ints
+from sites.units import Bools, Floats, Ints
 
 LEAST_KW = 1.0
 """A candidate gives at least this much in every interval of its window, else its machines are as good as off."""
 UNSURE_FRACTION = 0.02
 """Share of a candidate's energy that may rest on usual power that is too high (ground.py), else it is refused."""
+OVERHELD_FRACTION = 0.02
+"""Share of a bound tank's inventory at window start that may be too high (ground.py), else it is refused: what such
+a tank gives goes with what it holds."""
 LOW_TOLERANCE = 0.01
 """Share by which the other inventory's kW may lie below the best's."""
 
@@ -129,7 +132,8 @@ class _Runs:
         hour = np.arange(first, last)[None, :]
         inside = (hour >= trial.start[:, None]) & (hour < trial.end[:, None])
         least = np.where(inside, expected, np.inf).min(axis=1, initial=np.inf)
-        found = broken(trial.sums.tally(), trial.rows, self.base.here, promised is None)
+        tally = trial.sums.tally()
+        found = broken(tally, trial.rows, self.base.here, promised is None)
         small, less = least < LEAST_KW, np.zeros(len(index), dtype=np.bool_)
         if promised is not None:
             slack = LOW_TOLERANCE * np.abs(promised) + LEAST_KW
@@ -142,6 +146,7 @@ class _Runs:
             full = held >= STOP_CHARGE_AT * storage.held(trial.rows, size.capacity_kwh_th)
             reasons = ((small & full, "full"), (small, "already_on"), (found > 0, ""), (less, "full"))
         else:
+            less = less | self._overheld(trial, tally)
             reasons = ((small, "already_off"), (found > 0, ""), (less, "inventory"), (unsure, "already_off"))
         verdict[index] = np.select(
             [mask for mask, _ in reasons],
@@ -150,6 +155,12 @@ class _Runs:
         )
         alive = np.flatnonzero(verdict[index] == 0)
         return trial.take(alive), index[alive], expected
+
+    def _overheld(self, trial: Trial, tally: Tally) -> Bools:
+        """Rows (row,) whose tanks give less than asked, from a level at window start that may be too high."""
+        level = self.base.overheld_kwh_th[trial.rows.site, trial.start]
+        too_high = level > OVERHELD_FRACTION * tally.inventory_at_start_kwh_th
+        return np.asarray((tank_cause(tally) > 0) & too_high)
 
     def rest(self, trial: Trial, index: Ints, usual: Course, verdict: Ints) -> Trial:
         """Run what is left after the event to the horizon's end, and write refusals into `verdict`."""
