@@ -16,6 +16,7 @@ from fleet import limits, records
 from fleet.assemble import Fleet, assemble
 from fleet.errors import FleetError
 from fleet.folder import FleetFolder, open_folder
+from fleet.plant_history import with_history
 from fleet.wall_time import local_day, local_day_start, on_grid, up_to_grid, utc_timestamp
 from sites.blocks import Terms
 from sites.candidate import Stages
@@ -80,7 +81,8 @@ def survey(
     start = up_to_grid(ask.at, settings.interval_minutes)
     last_day = local_day(ask.event_to - np.timedelta64(1, "us"), settings.timezone)
     end = local_day_start(last_day + np.timedelta64(2, "D"), settings.timezone)
-    fleet = assemble(folder, start, end)
+    past = records.events(path)
+    fleet = with_history(folder, assemble(folder, start, end), past[past["purpose"].isin(limits.COUNTED)])
     buildings = fleet.roster.buildings
     tree = network.feeders(
         folder.frames["nodes"],
@@ -92,7 +94,6 @@ def survey(
     node_id = tree.root if ask.node_id is None else ask.node_id
     tree.index(node_id)
     _check_rated(fleet, tree, node_id, asked_kw)
-    past = records.events(path)
     resolved = fleet.resolved["sites"]
     event = (utc_timestamp(ask.event_from), utc_timestamp(ask.event_to))
     eligible = limits.eligible_sites(resolved, past, utc_timestamp(ask.at), event, settings.timezone)

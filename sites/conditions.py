@@ -78,7 +78,7 @@ def conditions(roster: Roster, outlook: Outlook, standing: Standing) -> Conditio
         rest_kw=outlook.rest_kw,
         billed_peak_kw=outlook.billed_peak_kw,
         occupied=_occupied(roster, outlook),
-        level_kw_th=_level(roster, outlook),
+        level_kw_th=level_kw_th(roster, outlook),
         discharge=tank.discharge_curves(tanks),
         charge=tank.charge_curves(tanks),
         charge_lmtd_k=np.asarray(tank.lmtd_k(-brine, np.maximum(-brine - RETURN_GLIDE_K, 0.5))),
@@ -104,11 +104,11 @@ def _occupied(roster: Roster, outlook: Outlook) -> Bools:
     return hours & (workday[None, :] | buildings.occupied_all_week[:, None])
 
 
-def _level(roster: Roster, outlook: Outlook) -> Floats:
-    """Flat rate over the first 24 h of the horizon, one whole cycle of the load (Energy Management Handbook
+def level_kw_th(roster: Roster, outlook: Outlook, first: int = 0) -> Floats:
+    """Flat rate (site,) over the 24 h from interval `first` on, one whole cycle of the load (Energy Management Handbook
     ch. 19: day's ton-hours / 24); zero for other strategies."""
     day = min(outlook.clock.count, round(24.0 / outlook.clock.step_h))
-    mean = outlook.cooling_load_kw_th[:, :day].mean(axis=1)
+    mean = outlook.cooling_load_kw_th[:, first : first + day].mean(axis=1)
     tanks = roster.tanks
     loss = (tanks.capacity_kwh_th * tanks.loss_fraction_per_h).sum(axis=1)
     levelling = roster.buildings.strategy == STRATEGIES.index("load_levelling")

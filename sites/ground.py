@@ -1,11 +1,11 @@
 """What quotes stand on: conditions and the usual case of every site, worked out once for all candidates."""
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from sites.candidate import Stages, no_stages
-from sites.conditions import Conditions, conditions
+from sites.conditions import Conditions, conditions, level_kw_th
 from sites.course import Course, course
 from sites.dispatch import plant_power_kw, staged_load_kw_th
 from sites.outlook import Outlook
@@ -50,6 +50,15 @@ def ground(roster: Roster, outlook: Outlook, standing: Standing, in_force: Stage
     overheld = np.cumsum(_withheld_kw_th(here, usual), axis=1) * here.step_h
     overheld = np.pad(overheld, ((0, 0), (1, 0)))[:, :-1]
     return Ground(roster, outlook, standing, here, usual, low, overstated, overheld, stages)
+
+
+def usual_course(roster: Roster, outlook: Outlook, standing: Standing, level_from: int = 0) -> Course:
+    """Usual operation alone, from the best estimate of the inventory, no call in force; load levelling runs at the flat
+    rate of the 24 h from interval `level_from` on."""
+    none = no_stages(roster.count, roster.chillers.exists.shape[1])
+    here = conditions(roster, outlook, standing)
+    here = replace(here, level_kw_th=level_kw_th(roster, outlook, level_from))
+    return _usual(roster, here, standing, none, standing.best_kwh_th)
 
 
 def usual_high(base: Ground) -> Course:
