@@ -5,7 +5,7 @@ readings, rules' arithmetic or money.
 """
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 import pandas as pd
@@ -15,7 +15,7 @@ from fleet.money import Prices
 from fleet.rules import SettlementRule
 from sites.clock import Clock, span
 from sites.direction import Direction
-from sites.units import AnyArray, Bools, Floats, Strings, Times
+from sites.units import AnyArray, Bools, Floats, Ints, Strings, Times
 
 
 @dataclass(frozen=True)
@@ -71,6 +71,24 @@ class Plan:
     """(site, interval)"""
     full_again_at: Times
     """(site,) NaT where the tank is not full again within the horizon, or the call does not say"""
+    every_site_id: tuple[str, ...] = ()
+    """All called sites, where this is a plan of some of them"""
+
+    def of(self, rows: Ints) -> "Plan":
+        """The same of some of the sites; itself where they are all."""
+        if len(rows) == len(self.site_ids):
+            return self
+        return replace(
+            self,
+            site_ids=tuple(self.site_ids[row] for row in rows),
+            rules=tuple(self.rules[row] for row in rows),
+            window_start=self.window_start[rows],
+            window_end=self.window_end[rows],
+            delivery_factor=self.delivery_factor[rows],
+            committed_kw=self.committed_kw[rows],
+            full_again_at=self.full_again_at[rows],
+            every_site_id=self.site_ids,
+        )
 
     def in_event(self, clock: Clock) -> Bools:
         """(interval,) of that clock: within the whole event."""

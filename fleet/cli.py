@@ -246,7 +246,13 @@ def settle(
     excuse: Annotated[
         list[str] | None, typer.Option("--excuse", help="A site that earns and owes nothing; repeatable.")
     ] = None,
-    why: Annotated[str, typer.Option("--why", help="Why the sites are excused; kept in the record.")] = "",
+    readmit: Annotated[
+        list[str] | None, typer.Option("--readmit", help="An excused site that counts again; repeatable.")
+    ] = None,
+    why: Annotated[
+        str, typer.Option("--why", help="Why the sites are excused or readmitted; kept in the record.")
+    ] = "",
+    who: Annotated[str, typer.Option("--who", help="Who decided that; kept in the record.")] = "",
     again: Annotated[
         int | None,
         typer.Option(
@@ -269,8 +275,10 @@ def settle(
         )
         terminal.put([text], {"revision": again, "different": different})
         raise typer.Exit(FAULT if different else 0)
-    excused = dict.fromkeys(excuse or [], why)
-    settled = settling.settle_event(fleet, event, meter, terminal.progress, excuse=excused)
+    excused, readmitted = dict.fromkeys(excuse or [], why), dict.fromkeys(readmit or [], why)
+    settled = settling.settle_event(
+        fleet, event, meter, terminal.progress, excuse=excused, readmit=readmitted, who=who
+    )
     terminal.put(show.settle_lines(settled), show.settle_json(settled))
 
 

@@ -32,11 +32,13 @@ __all__ = [
     "Meters",
     "local_parts",
     "local_text",
+    "meter_files",
     "on_grid",
     "open_folder",
     "parse_time",
     "problems",
     "read_meters",
+    "reading_of",
     "survey_folder",
 ]
 
@@ -179,6 +181,15 @@ def read_meters(
     return Meters(frame, _digests(source, base), read.notes)
 
 
+def meter_files(folder: FleetFolder) -> tuple[list[Path], dict[str, str]]:
+    """The Parquet files of the folder's meters table and their digests; none where it is no Parquet."""
+    source = _sources(folder.path)[0].get("meters")
+    if source is None or not (source.is_dir() or source.suffix == ".parquet"):
+        return [], {}
+    files = sorted(source.glob("*.parquet")) if source.is_dir() else [source]
+    return files, _digests(source, folder.path)
+
+
 def _settings_text(path: Path) -> tuple[str, dict[str, str]]:
     try:
         content = (path / FILE).read_bytes()
@@ -236,8 +247,16 @@ def _read(
         raw = read_raw(source, span)
     except Refused as refused:
         return Typed(pd.DataFrame(), refused.problems, [])
-    reading = Reading(source.name, settings.time_reading(name), settings.timezone, settings.interval_minutes)
-    return typed(raw, table("fleet", name), reading)
+    return typed(raw, table("fleet", name), _reading(source.name, name, settings))
+
+
+def _reading(file: str, name: str, settings: Settings) -> Reading:
+    return Reading(file, settings.time_reading(name), settings.timezone, settings.interval_minutes)
+
+
+def reading_of(folder: FleetFolder, table_name: str) -> Reading:
+    """How a table of the folder is to be read."""
+    return _reading(folder.file(table_name), table_name, folder.settings)
 
 
 def _checked_together(

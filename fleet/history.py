@@ -14,7 +14,8 @@ import pandas as pd
 from fleet.baseline import Charging, DayFacts, EventFacts, Weather
 from fleet.callfacts import CallFacts, Plan, local_days, marked, modes
 from fleet.errors import Problem, Refused
-from fleet.meters import EDITED, LocalGrid, Streams, by_local_day, estimate, local_grid, streams
+from fleet.estimation import estimate
+from fleet.meters import EDITED, MISSING, LocalGrid, Streams, by_local_day, local_grid, streams
 from fleet.rules import SettlementRule
 from fleet.series import on_clock
 from sites.clock import Clock
@@ -49,7 +50,10 @@ class History:
     @property
     def measured(self) -> Floats:
         """(site, interval) readings that are no estimate, else NaN."""
-        found: Floats = np.where(self.raw.quality <= EDITED, self.raw.kw, np.nan)
+        quality = self.raw.quality
+        if not ((quality > EDITED) & (quality < MISSING)).any():
+            return self.raw.kw
+        found: Floats = np.where(quality <= EDITED, self.raw.kw, np.nan)
         return found
 
     @property
@@ -58,11 +62,8 @@ class History:
         return np.arange(self.event_day - 1, -1, -1)
 
 
-def history(call: CallFacts, plan: Plan, readings: pd.DataFrame) -> History:
-    """Readings of the called sites from the longest look-back's first local midnight to the horizon's end.
-
-    Raises Refused for readings that cannot be placed and where a rule needs weather that is not there.
-    """
+def period(call: CallFacts, plan: Plan) -> tuple[np.datetime64, np.datetime64]:
+    """What is read: from the longest look-back's first local midnight to the horizon's end, or a window after."""
     day = pd.Timestamp(plan.event_start, tz="UTC").tz_convert(call.timezone).tz_localize(None).normalize()
     back = max(SHORTEST_HISTORY_DAYS, *(rule.look_back_days for rule in plan.rules))
     midnight = (day - pd.Timedelta(days=back)).tz_localize(
@@ -70,7 +71,16 @@ def history(call: CallFacts, plan: Plan, readings: pd.DataFrame) -> History:
     )
     since = np.datetime64(midnight.tz_convert("UTC").tz_localize(None).floor(f"{call.step_minutes}min"), "us")
     after = max(hours(rule.after_h + rule.after_buffer_h) for rule in plan.rules)
-    until = max(plan.clock.end, plan.event_end + after)
+    return since, max(plan.clock.end, plan.event_end + after)
+
+
+def history(
+    call: CallFacts, plan: Plan, readings: pd.DataFrame, since: np.datetime64, until: np.datetime64
+) -> History:
+    """Readings of the plan's sites over a period (see `period`), by meters that may be any of the fleet's.
+
+    Raises Refused for readings that cannot be placed and where a rule needs weather that is not there.
+    """
     known = call.fleet_site_ids or plan.site_ids
     every = streams(
         readings,
@@ -84,7 +94,6 @@ def history(call: CallFacts, plan: Plan, readings: pd.DataFrame) -> History:
     )
     raw = every.pick(plan.site_ids, [rule.stream for rule in plan.rules])
     guard = _guards(plan, every)
-    taken = every.pick(plan.site_ids, guard.tolist())
     grid = local_grid(raw.clock, call.timezone)
     event_day = int(grid.day[raw.clock.index(plan.event_start)])
     holiday = np.zeros(len(grid.days), dtype=np.bool_)
@@ -100,7 +109,7 @@ def history(call: CallFacts, plan: Plan, readings: pd.DataFrame) -> History:
         past=marked(call.past_event_days, plan.site_ids, grid.days),
         modes=modes(call.plant_days, plan.site_ids, grid.days),
         guard=guard,
-        charging_kw=np.where(taken.quality <= EDITED, taken.kw, np.nan),
+        charging_kw=_charging_kw(plan, every, guard),
         dry_bulb_c=_dry_bulb(call, plan, raw.clock, grid, event_day),
         has_weather=any(rule.needs_weather for rule in plan.rules),
     )
@@ -124,12 +133,20 @@ def _guards(plan: Plan, every: Streams) -> Strings:
     return np.array(found, dtype=object)
 
 
+def _charging_kw(plan: Plan, every: Streams, guard: Strings) -> Floats:
+    """(site, interval) what the guard's meters read; NaN where they did not, or there is none."""
+    if (guard == "none").all():
+        return np.broadcast_to(np.nan, (len(guard), every.clock.count))
+    taken = every.pick(plan.site_ids, guard.tolist())
+    return np.where(taken.quality <= EDITED, taken.kw, np.nan)
+
+
 def _dry_bulb(call: CallFacts, plan: Plan, clock: Clock, grid: LocalGrid, event_day: int) -> Floats:
     """(site, interval) dry bulb for the sites whose rule needs it; Refused where the event's day is not known."""
-    found = np.full((len(plan.site_ids), clock.count), np.nan)
     needing = [at for at, rule in enumerate(plan.rules) if rule.needs_weather]
     if not needing:
-        return found
+        return np.broadcast_to(np.nan, (len(plan.site_ids), clock.count))
+    found = np.full((len(plan.site_ids), clock.count), np.nan)
     names = [str(call.stations.get(plan.site_ids[at]) or "") for at in needing]
     stations = np.array(sorted(set(names)), dtype=object)
     known = np.full((len(stations), clock.count), np.nan)
@@ -169,7 +186,9 @@ def filled(plan: Plan, found: History) -> Streams:
 
 
 def part(found: History, rows: Ints) -> History:
-    """The same of some of the sites."""
+    """The same of some of the sites; itself where they are all."""
+    if np.array_equal(rows, np.arange(len(found.past))):
+        return found
     raw = found.raw
     return replace(
         found,

@@ -1,30 +1,30 @@
-"""Meter readings onto the UTC grid, one row per site and stream; gaps estimated; the local-day view.
+"""Meter readings onto the UTC grid, one row per site and stream; the local-day view.
 
-Owns validation (every fault at once), signed sums over meters, estimation and the quality of each interval.
-Leaves the use of the values to baseline.py and settle.py, which never let an estimate raise what was delivered.
+Owns validation (every fault at once), signed sums over meters and the quality of each interval. Leaves gaps to
+estimation.py and the use of the values to baseline.py and measured.py, which never let an estimate raise what was
+delivered.
 """
 
 from collections.abc import Callable, Collection, Mapping, Sequence
 from dataclasses import dataclass, replace
-from typing import Final
+from typing import Final, TypeAlias
 
 import numpy as np
 import pandas as pd
+from numpy.typing import NDArray
 
 from fleet.errors import FleetError, Problem, Refused
 from sites.clock import Clock, span
 from sites.units import AnyArray, Bools, Floats, Ints, Strings, Times
 
+Codes: TypeAlias = NDArray[np.int8]
+"""Indices into a short list of names."""
 QUALITIES: Final = ("measured", "edited", "estimated_line", "estimated_like_day", "missing")
 EDITED: Final = 1
 """Codes up to this one are readings, the next ones estimates."""
 LINE: Final = 2
 LIKE_DAY: Final = 3
 MISSING: Final = 4
-LONGEST_LINE_MINUTES: Final = 120
-"""Gaps up to 2 h are filled by a straight line (common practice)."""
-LIKE_DAYS: Final = 3
-"""Longer ones by the mean of three like days (from memory of utility practice)."""
 
 
 @dataclass(frozen=True)
@@ -39,7 +39,7 @@ class Streams:
     timezone: str
     kw: Floats
     """(row, interval) mean kW"""
-    quality: Ints
+    quality: Codes
     """(row, interval) index into QUALITIES"""
     counts: Mapping[str, int]
 
@@ -47,11 +47,13 @@ class Streams:
         """One row per pair of site and stream; a site without such a meter is missing throughout."""
         place = {key: row for row, key in enumerate(zip(self.site_id.tolist(), self.stream.tolist()))}
         rows = np.array([place.get(key, -1) for key in zip(site_ids, stream)], dtype=np.int64)
+        sites, names = np.array(site_ids, dtype=object), np.array(stream, dtype=object)
+        if np.array_equal(rows, np.arange(len(self.kw))):
+            return replace(self, site_id=sites, stream=names)
         # One more row, all missing, which -1 finds.
         nothing = np.full((1, self.clock.count), np.nan)
         kw = np.concatenate([self.kw, nothing])[rows]
-        quality = np.concatenate([self.quality, np.full(nothing.shape, MISSING, dtype=np.int64)])[rows]
-        sites, names = np.array(site_ids, dtype=object), np.array(stream, dtype=object)
+        quality = np.concatenate([self.quality, np.full(nothing.shape, MISSING, dtype=np.int8)])[rows]
         return replace(self, site_id=sites, stream=names, kw=kw, quality=quality)
 
 
@@ -78,13 +80,23 @@ class _Rows:
     meter: Ints
     step: Ints
     kw: Floats
-    quality: Ints
+    quality: Codes
 
     def take(self, rows: AnyArray) -> "_Rows":
         """The rows of a mask or an order; itself where a mask holds them all."""
         if rows.dtype == np.bool_ and rows.all():
             return self
         return _Rows(self.number[rows], self.meter[rows], self.step[rows], self.kw[rows], self.quality[rows])
+
+
+@dataclass(frozen=True)
+class _Metered:
+    """Readings of the meters in use on the clock; NaN and MISSING where there is none."""
+
+    kw: Floats
+    """(meter, interval)"""
+    quality: Codes
+    counts: Mapping[str, int]
 
 
 def streams(
@@ -108,6 +120,18 @@ def streams(
     clock = span(since, until, step_minutes)
     meters = _meter_table(meter_map, known_site_ids if known_site_ids is not None else site_ids)
     ids = pd.Index(meters["meter_id"].unique())
+    used = meters[meters["site_id"].isin(list(site_ids))]
+    names = pd.Index(used["meter_id"].unique())
+    found = _blocks(readings, ids, names, clock) or _row_by_row(readings, ids, names, clock)
+    keys = pd.MultiIndex.from_frame(used[["site_id", "role"]])
+    unique = keys.unique().sort_values()
+    kw, quality = _summed(found, names, used, unique.get_indexer(keys), len(unique))
+    site, stream = (unique.get_level_values(k).to_numpy(dtype=object) for k in (0, 1))
+    return Streams(site, stream, clock, timezone, kw, quality, found.counts)
+
+
+def _row_by_row(readings: pd.DataFrame, ids: pd.Index, names: pd.Index, clock: Clock) -> _Metered:
+    """Readings in any order, each row placed for itself; Refused for what is wrong with them."""
     rows, problems = _rows(readings, ids, clock)
     inside = (rows.step >= 0) & (rows.step < clock.count)
     counts = {"readings": len(readings), "outside_period": int((~inside).sum())}
@@ -118,12 +142,55 @@ def streams(
         raise Refused(problems)
     counts["duplicates_dropped"] = doubles
     counts["missing_values"] = int(np.isnan(rows.kw).sum())
-    used = meters[meters["site_id"].isin(list(site_ids))]
-    keys = pd.MultiIndex.from_frame(used[["site_id", "role"]])
-    unique = keys.unique().sort_values()
-    kw, quality = _summed(rows, ids, used, unique.get_indexer(keys), (len(unique), clock.count))
-    site, stream = (unique.get_level_values(k).to_numpy(dtype=object) for k in (0, 1))
-    return Streams(site, stream, clock, timezone, kw, quality, counts)
+    place = names.get_indexer(ids)[rows.meter]
+    rows, place = rows.take(place >= 0), place[place >= 0]
+    shape = (len(names), clock.count)
+    kw, quality = np.full(shape, np.nan), np.full(shape, MISSING, dtype=np.int8)
+    kw[place, rows.step], quality[place, rows.step] = rows.kw, rows.quality
+    return _Metered(kw, quality, counts)
+
+
+def _blocks(readings: pd.DataFrame, ids: pd.Index, names: pd.Index, clock: Clock) -> _Metered | None:
+    """Readings that are one whole block a meter, all on the same regular times: reshaped, no row looked at alone.
+
+    None where they are not, or where anything is wrong with them.
+    """
+    if readings.empty or clock.count == 0:
+        return None
+    codes, of_file = pd.factorize(readings["meter_id"])
+    ends = np.append(np.flatnonzero(codes[1:] != codes[:-1]) + 1, len(codes))
+    length = int(ends[0])
+    if len(ends) != len(of_file) or (np.diff(ends, prepend=0) != length).any() or codes[0] < 0:
+        return None
+    meter: Ints = np.asarray(ids.get_indexer(pd.Index(of_file)), dtype=np.int64)
+    times = _times(readings).view(np.int64).reshape(-1, length)
+    step, first = int(clock.step.astype(np.int64)), int(times[0, 0] - clock.start.astype(np.int64))
+    regular = (np.diff(times[0]) == step).all() and (times == times[0]).all() and first % step == 0
+    kw = pd.to_numeric(readings["kw"]).to_numpy(dtype=np.float64, na_value=np.nan).reshape(-1, length)
+    quality = _quality_codes(readings).reshape(-1, length)
+    gap = np.isnan(kw)
+    odd = np.isinf(kw).any() or (quality < 0).any() or ((quality == MISSING) & ~gap).any()
+    if not regular or odd or (meter < 0).any():
+        return None
+    quality = np.where(gap, np.int8(MISSING), quality)
+    low, high = np.clip([first // step, first // step + length], 0, clock.count)
+    taken = slice(low - first // step, high - first // step)
+    counts = {
+        "readings": len(readings),
+        "outside_period": len(meter) * (length - int(high - low)),
+        "out_of_order": 0,
+        "duplicates_dropped": 0,
+        "missing_values": int(gap[:, taken].sum()),
+    }
+    place = pd.Index(of_file).get_indexer(names)
+    if high - low == clock.count and np.array_equal(place, np.arange(len(kw))):
+        return _Metered(kw[:, taken], quality[:, taken], counts)
+    shape = (len(names), clock.count)
+    whole_kw, whole_quality = np.full(shape, np.nan), np.full(shape, MISSING, dtype=np.int8)
+    there = np.flatnonzero(place >= 0)
+    whole_kw[there, low:high] = kw[place[there], taken]
+    whole_quality[there, low:high] = quality[place[there], taken]
+    return _Metered(whole_kw, whole_quality, counts)
 
 
 def _meter_table(meter_map: pd.DataFrame, known: Collection[str]) -> pd.DataFrame:
@@ -151,9 +218,7 @@ def _rows(readings: pd.DataFrame, ids: pd.Index, clock: Clock) -> tuple[_Rows, l
     """Rows that can be placed on the grid, and a problem for each that cannot."""
     codes, names = pd.factorize(readings["meter_id"])
     meter = np.append(ids.get_indexer(pd.Index(names)), -1)[codes]
-    times = (
-        pd.to_datetime(readings["interval_start"], utc=True).dt.tz_localize(None).to_numpy("datetime64[us]")
-    )
+    times = _times(readings)
     offset = (times - clock.start).astype(np.int64)
     length = int(clock.step.astype(np.int64))
     kw = pd.to_numeric(readings["kw"]).to_numpy(dtype=np.float64, na_value=np.nan)
@@ -206,6 +271,12 @@ def _rows(readings: pd.DataFrame, ids: pd.Index, clock: Clock) -> tuple[_Rows, l
     return _Rows(number, meter.astype(np.int64), step, kw, quality).take(good), problems
 
 
+def _times(readings: pd.DataFrame) -> Times:
+    utc = pd.to_datetime(readings["interval_start"], utc=True).dt.tz_localize(None)
+    found: Times = utc.to_numpy("datetime64[us]")
+    return found
+
+
 def _given_quality(readings: pd.DataFrame) -> AnyArray:
     if "quality" not in readings:
         return np.full(len(readings), "measured", dtype=object)
@@ -214,12 +285,15 @@ def _given_quality(readings: pd.DataFrame) -> AnyArray:
     return filled
 
 
-def _quality_codes(readings: pd.DataFrame) -> Ints:
+def _quality_codes(readings: pd.DataFrame) -> Codes:
+    """(row,) index into QUALITIES, -1 for a quality that is none; nothing given is measured."""
     if "quality" not in readings:
-        return np.zeros(len(readings), dtype=np.int64)
-    codes, names = pd.factorize(_given_quality(readings))
-    known = [QUALITIES.index(name) if name in QUALITIES else -1 for name in names]
-    return np.array(known, dtype=np.int64)[codes]
+        return np.zeros(len(readings), dtype=np.int8)
+    codes, names = pd.factorize(readings["quality"], use_na_sentinel=True)
+    known = [QUALITIES.index(name) if name in QUALITIES else 0 if name == "" else -1 for name in names]
+    # The last one is what -1, nothing given, finds.
+    found: Codes = np.array([*known, 0], dtype=np.int8)[codes]
+    return found
 
 
 def _number(row: object) -> int | None:
@@ -262,25 +336,21 @@ def _without_doubles(rows: _Rows, ids: pd.Index, clock: Clock, problems: list[Pr
 
 
 def _summed(
-    rows: _Rows, ids: pd.Index, used: pd.DataFrame, row_of: AnyArray, shape: tuple[int, int]
-) -> tuple[Floats, Ints]:
+    found: _Metered, names: pd.Index, used: pd.DataFrame, row_of: AnyArray, rows: int
+) -> tuple[Floats, Codes]:
     """Signed sums over the meters of each stream (row, interval); the worst quality of the summands."""
-    names = pd.Index(used["meter_id"].unique())
-    place = names.get_indexer(ids)[rows.meter]
-    rows, place = rows.take(place >= 0), place[place >= 0]
-    meter_kw = np.full((len(names), shape[1]), np.nan)
-    meter_quality = np.full((len(names), shape[1]), MISSING, dtype=np.int64)
-    meter_kw[place, rows.step] = rows.kw
-    meter_quality[place, rows.step] = rows.quality
     at = names.get_indexer(pd.Index(used["meter_id"]))
-    kw, quality = np.zeros(shape), np.zeros(shape, dtype=np.int64)
     sign = used["sign"].to_numpy(dtype=np.float64)
-    if len(at) == shape[0]:
+    if (sign == 1.0).all() and np.array_equal(at[np.argsort(row_of)], np.arange(len(found.kw))):
+        return found.kw, found.quality
+    shape = (rows, found.kw.shape[1])
+    kw, quality = np.zeros(shape), np.zeros(shape, dtype=np.int8)
+    if len(at) == rows:
         # One meter a stream, the usual case: no sum, each in its row.
-        kw[row_of], quality[row_of] = sign[:, None] * meter_kw[at], meter_quality[at]
+        kw[row_of], quality[row_of] = sign[:, None] * found.kw[at], found.quality[at]
         return kw, quality
-    np.add.at(kw, row_of, sign[:, None] * meter_kw[at])
-    np.maximum.at(quality, row_of, meter_quality[at])
+    np.add.at(kw, row_of, sign[:, None] * found.kw[at])
+    np.maximum.at(quality, row_of, found.quality[at])
     return kw, quality
 
 
@@ -302,86 +372,27 @@ def local_grid(clock: Clock, timezone: str) -> LocalGrid:
     return LocalGrid(days, slots, index, slot, times.astype(np.int64))
 
 
-def by_local_day(kw: Floats, quality: Ints, grid: LocalGrid) -> tuple[Floats, Ints]:
+def by_local_day(kw: Floats, quality: Codes, grid: LocalGrid) -> tuple[Floats, Codes]:
     """Values (row, interval) as (row, day, slot) of local wall time, and their quality.
 
     A slot that the spring change leaves out is NaN and missing (grid.times 0: absent, not lost). The two halves
     of autumn's repeated hour are averaged, missing if either is, with the worse quality.
     """
     flat = grid.day * grid.slots + grid.slot
+    rows, cells = len(kw), len(grid.days) * grid.slots
+    full = (rows, len(grid.days), grid.slots)
+    day_kw, day_quality = np.empty((rows, cells)), np.empty((rows, cells), dtype=np.int8)
+    if flat[-1] - flat[0] + 1 == len(flat) and (np.diff(flat) == 1).all():
+        # No clock change: the intervals follow one another as they are.
+        own = slice(int(flat[0]), int(flat[-1]) + 1)
+        for whole, part, nothing in ((day_kw, kw, np.nan), (day_quality, quality, MISSING)):
+            whole[:, : own.start], whole[:, own], whole[:, own.stop :] = nothing, part, nothing
+        return day_kw.reshape(full), day_quality.reshape(full)
     _, first = np.unique(flat, return_index=True)
     again = np.setdiff1d(np.arange(len(flat)), first)
-    shape = (len(kw), len(grid.days) * grid.slots)
-    day_kw, day_quality = np.full(shape, np.nan), np.full(shape, MISSING, dtype=np.int64)
+    day_kw[:], day_quality[:] = np.nan, MISSING
     day_kw[:, flat[first]] = kw[:, first]
     day_quality[:, flat[first]] = quality[:, first]
     day_kw[:, flat[again]] = (day_kw[:, flat[again]] + kw[:, again]) / 2.0
     day_quality[:, flat[again]] = np.maximum(day_quality[:, flat[again]], quality[:, again])
-    full = (len(kw), len(grid.days), grid.slots)
     return day_kw.reshape(full), day_quality.reshape(full)
-
-
-def estimate(
-    found: Streams, breaks: Ints, shut: Bools, day_class: Ints, event_day: Bools, grid: LocalGrid
-) -> Streams:
-    """Gaps up to 2 h by a straight line, longer ones by the mean of the three like days before.
-
-    breaks (row, interval): a running number that changes where an event starts or ends; no line joins two
-    readings of different number. shut (row, interval): no like-day estimate here (the event). day_class (day,):
-    like days share it. event_day (row, day): days that serve as no pattern. What cannot be filled stays missing.
-    """
-    kw, quality = _line(found.kw, found.quality, breaks, LONGEST_LINE_MINUTES // found.clock.step_minutes)
-    day_kw, day_quality = by_local_day(found.kw, found.quality, grid)
-    pattern = _like_day_mean(np.where(day_quality <= EDITED, day_kw, np.nan), day_class, event_day)
-    guess = pattern[:, grid.day, grid.slot]
-    fill = np.isnan(kw) & ~np.isnan(guess) & ~shut
-    kw, quality = np.where(fill, guess, kw), np.where(fill, LIKE_DAY, quality)
-    counts = {
-        **found.counts,
-        "estimated_line": int((quality == LINE).sum()),
-        "estimated_like_day": int((quality == LIKE_DAY).sum()),
-        "still_missing": int(np.isnan(kw).sum()),
-    }
-    return replace(found, kw=kw, quality=quality, counts=counts)
-
-
-def _line(kw: Floats, quality: Ints, breaks: Ints, longest: int) -> tuple[Floats, Ints]:
-    """Straight lines between readings at most `longest` missing intervals apart, within one number of breaks."""
-    count = kw.shape[1]
-    at = np.arange(count)
-    read = ~np.isnan(kw) & (quality <= EDITED)
-    left = np.maximum.accumulate(np.where(read, at, -1), axis=1)
-    right = np.minimum.accumulate(np.where(read, at, count)[:, ::-1], axis=1)[:, ::-1]
-    held = (left >= 0) & (right < count) & (right - left - 1 <= longest) & np.isnan(kw)
-    left, right = np.where(held, left, 0), np.where(held, right, 0)
-    rows = np.arange(len(kw))[:, None]
-    held &= breaks[rows, left] == breaks[rows, right]
-    share = (at - left) / np.maximum(right - left, 1)
-    line = kw[rows, left] + (kw[rows, right] - kw[rows, left]) * share
-    return np.where(held, line, kw), np.where(held, LINE, quality)
-
-
-def _like_day_mean(read_kw: Floats, day_class: Ints, event_day: Bools) -> Floats:
-    """Mean of the last three like days with a reading at the slot, for each (row, day, slot); NaN if fewer."""
-    rows, _, slots = read_kw.shape
-    mean = np.full(read_kw.shape, np.nan)
-    for kind in np.unique(day_class):
-        recent = np.full((LIKE_DAYS, rows, slots), np.nan)
-        for day in np.flatnonzero(day_class == kind):
-            mean[:, day] = recent.mean(axis=0)
-            new = ~np.isnan(read_kw[:, day]) & ~event_day[:, day, None]
-            shifted = np.concatenate([read_kw[None, :, day], recent[:-1]])
-            recent = np.where(new, shifted, recent)
-    return mean
-
-
-def spikes(day_kw: Floats) -> Bools:
-    """Rows (row, slot) of which (highest - third highest) / third highest is above 1.80: flagged, never edited.
-
-    From memory of utility validation rules; a chiller's restart or ice charging can trip it.
-    """
-    ranked = np.sort(np.where(np.isnan(day_kw), -np.inf, day_kw), axis=1)
-    highest, third = ranked[:, -1], ranked[:, -3]
-    usable = third > 0.0
-    found: Bools = usable & (np.where(usable, highest, 0.0) - np.where(usable, third, 0.0) > 1.8 * third)
-    return found

@@ -7,6 +7,7 @@ exact sum of its lines. Leaves delivered energy to settle.py.
 from collections.abc import Sequence
 from dataclasses import dataclass
 from decimal import ROUND_FLOOR, ROUND_HALF_UP, Decimal
+from functools import lru_cache
 from typing import Final
 
 import numpy as np
@@ -51,6 +52,7 @@ class Lines:
     total: AnyArray
 
 
+@lru_cache(maxsize=256)
 def minor_digits(currency: str) -> tuple[int, str | None]:
     """Decimals of the currency's minor unit (ISO 4217), and a note where the code is unknown and 2 is taken."""
     if currency in _TWO.split():

@@ -3,7 +3,7 @@
 Owns the shape of the six tables (see the table of columns, folder settlement) and the postings between revisions.
 """
 
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from decimal import Decimal
 from typing import Any
@@ -13,9 +13,9 @@ import pandas as pd
 
 from fleet.baseline import METHODS, REASONS, USED, Baseline
 from fleet.callfacts import Plan, microseconds
-from fleet.meters import QUALITIES, LocalGrid
+from fleet.meters import QUALITIES, Codes, LocalGrid
 from fleet.money import Lines
-from sites.units import AnyArray, Bools, Floats, Ints, Strings, Times
+from sites.units import AnyArray, Bools, Floats, Strings, Times
 
 UNREAD = [REASONS.index(name) for name in ("other_day_type", "holiday")]
 """Days whose readings are not looked at, and not recorded."""
@@ -27,7 +27,7 @@ class SiteResult:
     """What each site delivered and earns; arrays over (site,) or (site, shown interval)."""
 
     metered_kw: Floats
-    quality: Ints
+    quality: Codes
     delivered_kw: Floats
     in_event: Bools
     """(interval,)"""
@@ -57,7 +57,7 @@ class Trace:
     event_day: int
     kw: Floats
     """(site, day, slot)"""
-    quality: Ints
+    quality: Codes
     modes: Strings
     """(site, day)"""
     window_kw: Floats
@@ -123,6 +123,8 @@ def day_table(event_id: str, revision: int, plan: Plan, found: Baseline, trace: 
     own = age == 0
     at = np.maximum(age - 1, 0)
     reason = np.where(own, REASONS.index("event_day"), found.reason[site, at])
+    # Days whose readings are not recorded show no figure of them either: nobody could work it out again.
+    unread = ~own & np.isin(reason, UNREAD)
     return pd.DataFrame(
         {
             **_head(event_id, revision, _objects(plan.site_ids)[site]),
@@ -130,16 +132,16 @@ def day_table(event_id: str, revision: int, plan: Plan, found: Baseline, trace: 
             "used": reason == USED,
             "reason": _objects(REASONS)[reason],
             "mode": trace.modes[site, day],
-            "rank_value": np.where(own, np.nan, found.rank_value[site, at]),
-            "window_base_kw": np.where(own, trace.window_kw[site], found.day_window_kw[site, at]),
+            "rank_value": np.where(own | unread, np.nan, found.rank_value[site, at]),
+            "window_base_kw": np.where(
+                unread, np.nan, np.where(own, trace.window_kw[site], found.day_window_kw[site, at])
+            ),
             "window_charging_kw": np.where(
                 (own | (reason == USED)) & ~np.isnan(found.adjustment_charged[site]),
                 trace.charging_kw[site, day],
                 np.nan,
             ),
-            "day_kwh": np.where(
-                own | ~np.isin(reason, UNREAD), np.nansum(trace.kw, axis=2)[site, day] * trace.step_h, np.nan
-            ),
+            "day_kwh": np.where(~unread, np.nansum(trace.kw, axis=2)[site, day] * trace.step_h, np.nan),
             "peak_dry_bulb_c": trace.peak_dry_bulb_c[site, day],
         }
     )
@@ -151,19 +153,39 @@ def day_interval_table(
     """Slot by slot the days whose readings were looked at, and the event's day; slots that exist that day."""
     looked = _considered(plan, trace)
     looked[:, : trace.event_day] &= ~np.isin(found.reason, UNREAD)[:, ::-1]
-    site, day, slot = np.nonzero(looked[:, :, None] & (trace.grid.times > 0)[None])
+    site, day = np.nonzero(looked)
+    slots = trace.grid.slots
+    columns: dict[str, AnyArray] = {
+        "site": np.repeat(site, slots),
+        "day": np.repeat(trace.grid.days[day].astype("datetime64[s]"), slots),
+        "slot": np.tile(np.arange(slots), len(day)),
+        "kw": trace.kw[site, day].ravel(),
+        "quality": trace.quality[site, day].ravel(),
+        "dry_bulb_c": trace.dry_bulb_c[site, day].ravel(),
+    }
+    there = trace.grid.times[day] > 0
+    if not there.all():
+        columns = {name: values[there.ravel()] for name, values in columns.items()}
+    every = plan.every_site_id or plan.site_ids
+    site_code = pd.Index(every).get_indexer(pd.Index(plan.site_ids))[columns["site"]]
     return pd.DataFrame(
         {
-            "event_id": _texts(np.full(len(site), event_id, dtype=object)),
+            "event_id": _coded(np.zeros(len(site_code), dtype=np.int8), (event_id,)),
             "revision": revision,
-            "site_id": _texts(_objects(plan.site_ids)[site]),
-            "day": trace.grid.days[day].astype("datetime64[s]"),
-            "slot": slot,
-            "kw": trace.kw[site, day, slot],
-            "quality": _texts(_objects(QUALITIES)[trace.quality[site, day, slot]]),
-            "dry_bulb_c": trace.dry_bulb_c[site, day, slot],
-        }
+            "site_id": _coded(site_code, every),
+            "day": columns["day"],
+            "slot": columns["slot"],
+            "kw": columns["kw"],
+            "quality": _coded(columns["quality"], QUALITIES),
+            "dry_bulb_c": columns["dry_bulb_c"],
+        },
+        copy=False,
     )
+
+
+def _coded(codes: AnyArray, names: Sequence[str]) -> Any:
+    """A column of few texts by their numbers: millions of text objects are slow."""
+    return pd.Categorical.from_codes(codes, dtype=pd.CategoricalDtype(list(names)), validate=False)
 
 
 def _considered(plan: Plan, trace: Trace) -> Bools:
@@ -265,11 +287,6 @@ def _streams(plan: Plan) -> Strings:
 
 def _objects(names: object) -> Strings:
     return np.array(names, dtype=object)
-
-
-def _texts(names: Strings) -> pd.Series:
-    """A column of texts as it is: looking through millions of them for a type is slow."""
-    return pd.Series(names, dtype=object)
 
 
 def _utc(times: Times) -> pd.DatetimeIndex:

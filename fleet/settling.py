@@ -10,7 +10,7 @@ from dataclasses import dataclass, replace
 from importlib.metadata import version
 from pathlib import Path
 from tempfile import TemporaryDirectory
-from typing import Final
+from typing import Any, Final
 
 import numpy as np
 import pandas as pd
@@ -19,13 +19,15 @@ from fleet import records
 from fleet.callfacts import CallFacts
 from fleet.desk import Progress
 from fleet.errors import FleetError
-from fleet.folder import FleetFolder, open_folder, read_meters
+from fleet.folder import FleetFolder, meter_files, open_folder, read_meters, reading_of
 from fleet.meter_files import read_meter_file
+from fleet.meter_groups import GroupedReadings
 from fleet.money import Prices
+from fleet.readings import FrameReadings, Overlaid, Readings
 from fleet.records import CallRecord, SettlementRecord
 from fleet.rules import SettlementRule
 from fleet.schema import table
-from fleet.settings import Settings
+from fleet.settings import FILE, Settings
 from fleet.settle import settle
 from fleet.settlement import Settlement
 from fleet.statement import statements
@@ -34,7 +36,6 @@ from fleet.wall_time import local_day_start
 from sites.clock import as_us
 from sites.direction import Direction
 
-KEY = ["meter_id", "interval_start"]
 CALL_TABLES: Final = ("request", "windows", "intervals")
 INPUTS: Final = "inputs.json"
 """Which call revision, readings, excuses and version a settlement was made of."""
@@ -66,20 +67,25 @@ def settle_event(
     progress: Progress = lambda text: None,
     meters_of: Path | None = None,
     excuse: Mapping[str, str] | None = None,
+    readmit: Mapping[str, str] | None = None,
+    who: str = "",
 ) -> Settled:
     """Settle the newest call of an event on the folder's readings and write the next revision below `home`.
 
     meter_file: readings that take the place of the folder's own for the same meter and interval (counted in
-    the notes); meters_of: the fleet folder whose readings are used where that is not `home`; excuse: site_id ->
-    why it earns and owes nothing, kept by every later revision. Raises Refused and FleetError for readings, a
-    record or an excuse that cannot be used; nothing is written then.
+    the notes); meters_of: the fleet folder whose readings are used where that is not `home` (a folder below
+    `rehearsals` uses those of the fleet it lies in); excuse: site_id -> why it earns and owes nothing, kept by
+    every later revision until it is readmitted, again with a reason; who decided that. Raises Refused and
+    FleetError for readings, a record or an excuse that cannot be used; nothing is written then.
     """
     record = records.read_call(home, event_id, only=CALL_TABLES)
     revision = records.next_revision(home, event_id, "settlement")
     last = records.read_settlement(home, event_id) if revision > 1 else None
     before = None if last is None else last.frames
-    excused = {**_excused(before), **_excuses(excuse)}
-    made = _make(home, record, revision, before, excused, meter_file, meters_of, progress)
+    decided = _decided(
+        event_id, _excused(before), _reasons("--excuse", excuse), _reasons("--readmit", readmit), who
+    )
+    made = _make(home, record, revision, before, decided, meter_file, meters_of, progress)
     with records.lock(home) as swept:
         path = records.write_settlement(home, event_id, made.settlement.frames, made.texts)
     return Settled(path, revision, made.settlement, (*swept, *made.notes, *_left_aside(last, made)))
@@ -95,7 +101,10 @@ def settle_again(home: Path, event_id: str, revision: int, meter_file: Path | No
     inputs = json.loads(there.statements[INPUTS])
     record = records.read_call(home, event_id, inputs["call_revision"], only=CALL_TABLES)
     before = records.read_settlement(home, event_id, revision - 1).frames if revision > 1 else None
-    made = _make(home, record, revision, before, inputs["excused"], meter_file, None, lambda text: None)
+    decided = {name: inputs.get(name, {}) for name in ("excused", "readmitted")} | {
+        "who": inputs.get("who", "")
+    }
+    made = _make(home, record, revision, before, decided, meter_file, None, lambda text: None)
     now = json.loads(made.texts[INPUTS])
     if now["sha256"] != inputs["sha256"]:
         raise FleetError(
@@ -128,23 +137,26 @@ def _make(
     record: CallRecord,
     revision: int,
     before: Mapping[str, pd.DataFrame] | None,
-    excused: Mapping[str, str],
+    decided: Mapping[str, Any],
     meter_file: Path | None,
     meters_of: Path | None,
     progress: Progress,
 ) -> _Made:
-    frozen = frozen_folder(meters_of or home, record)
+    source = meters_of or _fleet_of(home)
+    frozen = frozen_folder(source, record)
     progress("reading meters")
-    facts = call_facts(record, meters_of or home, excused)
-    readings, notes, digests = _readings(frozen, facts, meter_file)
+    facts = call_facts(record, source, decided["excused"])
+    given = _readings(frozen, facts, meter_file)
     progress(f"settling {len(facts.windows)} sites")
-    settlement = settle(facts, readings, revision, None if before is None else before["sites"])
-    notes = (*notes, *settlement.notes)
+    settlement = settle(facts, given.readings, revision, None if before is None else before["sites"])
+    notes = (*given.told(), *_decisions(decided), *settlement.notes)
     texts = statements(replace(settlement, notes=notes), facts, before)
     inputs = {
         "call_revision": record.revision,
-        "excused": dict(sorted(excused.items())),
-        "sha256": dict(sorted(digests.items())),
+        "excused": dict(sorted(decided["excused"].items())),
+        "readmitted": dict(sorted(decided["readmitted"].items())),
+        "who": decided["who"],
+        "sha256": dict(sorted((given.digests | _weather_digests(facts, source)).items())),
         "shedwright": version("shedwright"),
     }
     texts[INPUTS] = json.dumps(inputs, indent=1, sort_keys=True) + "\n"
@@ -174,11 +186,51 @@ def _excused(before: Mapping[str, pd.DataFrame] | None) -> dict[str, str]:
     return dict(zip(held["site_id"].astype(str), held["why"].astype(str)))
 
 
-def _excuses(excuse: Mapping[str, str] | None) -> dict[str, str]:
-    without = [site for site, why in (excuse or {}).items() if not why.strip()]
+def _reasons(option: str, given: Mapping[str, str] | None) -> dict[str, str]:
+    without = [site for site, why in (given or {}).items() if not why.strip()]
     if without:
-        raise FleetError(f"--excuse {without[0]}: no reason is given; say why with --why")
-    return {site: why.strip() for site, why in (excuse or {}).items()}
+        raise FleetError(f"{option} {without[0]}: no reason is given; say why with --why")
+    return {site: why.strip() for site, why in (given or {}).items()}
+
+
+def _decided(
+    event_id: str, before: Mapping[str, str], excuse: Mapping[str, str], readmit: Mapping[str, str], who: str
+) -> dict[str, Any]:
+    """Sites excused in this revision and those that count again, with why and by whom."""
+    strangers = sorted(set(readmit) - set(before))
+    if strangers:
+        raise FleetError(
+            f"event {event_id}: site {', '.join(strangers)} is not excused, so it cannot be readmitted; excused are "
+            f"{', '.join(before) or 'none'}"
+        )
+    both = sorted(set(readmit) & set(excuse))
+    if both:
+        raise FleetError(
+            f"event {event_id}: site {', '.join(both)} is to be excused and readmitted; say one of them"
+        )
+    excused = {site: why for site, why in {**before, **excuse}.items() if site not in readmit}
+    return {"excused": excused, "readmitted": dict(readmit), "who": who.strip()}
+
+
+def _decisions(decided: Mapping[str, Any]) -> list[str]:
+    """Who readmitted or excused which site, as notes."""
+    by = f", by {decided['who']}" if decided["who"] else ""
+    notes = [f"counts again: {site}: {why}{by}" for site, why in sorted(decided["readmitted"].items())]
+    return notes or ([f"decided by {decided['who']}"] if by else [])
+
+
+def _fleet_of(home: Path) -> Path:
+    """The fleet folder whose tables a settlement reads: the one around, where `home` is a rehearsal's."""
+    inside = home.resolve().parent
+    return inside.parent if inside.name == "rehearsals" and not (home / FILE).exists() else home
+
+
+def _weather_digests(facts: CallFacts, source: Path) -> dict[str, str]:
+    """Digests of the fleet's weather table, where a rule in use reads it."""
+    if not any(rule.needs_weather for rule in facts.rules.values()):
+        return {}
+    found = open_folder(source, names=("weather",), needed=()).digests
+    return {name: digest for name, digest in found.items() if name != FILE}
 
 
 def frozen_folder(home: Path, record: CallRecord) -> FleetFolder:
@@ -259,26 +311,52 @@ def _utc(time: pd.Timestamp) -> np.datetime64:
     return as_us(time.tz_convert("UTC").tz_localize(None).to_datetime64())
 
 
-def _readings(
-    folder: FleetFolder, facts: CallFacts, meter_file: Path | None
-) -> tuple[pd.DataFrame, tuple[str, ...], dict[str, str]]:
-    """Readings from the longest look-back to the horizon's end and a day more, the named file's first; notes;
-    digests of the files."""
+@dataclass(frozen=True)
+class _Given:
+    """Readings to settle on, what is to be said of them, and the digests of their files."""
+
+    readings: Readings
+    notes: tuple[str, ...]
+    digests: dict[str, str]
+    over: tuple[Overlaid, str] | None = None
+    """The readings that took the place of others, and the name of their file."""
+
+    def told(self) -> tuple[str, ...]:
+        """Notes, once the readings have been used."""
+        if self.over is None:
+            return self.notes
+        replaced = f"{self.over[0].replaced} readings of the folder were replaced by {self.over[1]}"
+        return (*self.notes, replaced)
+
+
+def _readings(folder: FleetFolder, facts: CallFacts, meter_file: Path | None) -> _Given:
+    """Readings from the longest look-back to the horizon's end and a day more, the named file's first."""
     back = max(rule.look_back_days for rule in facts.rules.values())
     start = facts.request["interval_start"].min()
     local = start.tz_convert(facts.timezone).tz_localize(None).normalize() - pd.Timedelta(days=back + 1)
     since = local_day_start(np.datetime64(local, "D"), facts.timezone)
     until = _utc(facts.intervals["interval_start"].max() + pd.Timedelta(days=1))
     if meter_file is None:
-        found = read_meters(folder, since, until)
-        return found.frame, tuple(found.notes), found.digests
+        return _own_readings(folder, since, until)
     given = read_meter_file(folder, since, until, meter_file)
     try:
-        own = read_meters(folder, since, until)
+        own = _own_readings(folder, since, until)
     except FleetError as error:
         alone = f"readings of {meter_file.name} alone: {error}"
-        return given.frame, (*given.notes, alone), given.digests
-    replaced = own.frame.set_index(KEY).index.isin(given.frame.set_index(KEY).index)
-    frame = pd.concat([own.frame[~replaced], given.frame])
-    taken = f"{int(replaced.sum())} readings of the folder were replaced by {meter_file.name}"
-    return frame, (*own.notes, *given.notes, taken), own.digests | given.digests
+        return _Given(FrameReadings(given.frame), (*given.notes, alone), given.digests)
+    both = Overlaid(own.readings, given.frame)
+    return _Given(both, (*own.notes, *given.notes), own.digests | given.digests, (both, meter_file.name))
+
+
+def _own_readings(folder: FleetFolder, since: np.datetime64, until: np.datetime64) -> _Given:
+    """The folder's own: row group by row group where they are Parquet in the table's own form."""
+    files, digests = meter_files(folder)
+    if files:
+        reading = reading_of(folder, "meters")
+        grouped = GroupedReadings(
+            files, reading, folder.frames["meter_map"], folder.frames["sites"]["site_id"]
+        )
+        if grouped.plain:
+            return _Given(grouped, (), digests)
+    found = read_meters(folder, since, until)
+    return _Given(FrameReadings(found.frame), tuple(found.notes), found.digests)

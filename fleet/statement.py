@@ -6,7 +6,8 @@ Owns the layout only; every figure is a row of the settlement's tables.
 import json
 from collections.abc import Hashable, Iterator, Mapping, Sequence
 from decimal import Decimal
-from typing import Any
+from textwrap import wrap
+from typing import Any, Final
 
 import pandas as pd
 
@@ -16,7 +17,7 @@ from fleet.money import told
 from fleet.settlement import Settlement
 from fleet.words import plain
 
-WIDTH = 118
+WIDTH: Final = 90
 
 
 def statements(
@@ -36,72 +37,118 @@ def statement_text(settlement: Settlement, facts: CallFacts, changed: Sequence[d
     sites, currency = settlement.sites, facts.prices.currency
     revision = int(sites["revision"].iloc[0])
     lines = [
-        f"STATEMENT  event {facts.event_id}  settlement revision {revision}  amounts in {currency}, "
-        "from the site's side",
+        f"STATEMENT  event {facts.event_id}, settlement revision {revision}",
+        f"amounts in {currency}, from the site's side",
         "",
-        f"{'site':<14}{'rule':<20}{'state':<13}{'committed':>11}{'delivered':>11}{'factor':>8}{'adjust':>8}"
-        f"{'capacity':>11}{'energy':>10}{'penalty':>10}{'total':>11}",
-        f"{'':<47}{'kWh':>11}{'kWh':>11}",
-    ]
-    lines += [_site_line(row) for row in sites.to_dict("records")]
-    total = sum(sites["total"], Decimal(0))
-    delivered = settlement.fleet["delivered_kw"].sum() * facts.step_minutes / 60.0
-    asked = settlement.fleet["requested_kw"].sum() * facts.step_minutes / 60.0
-    lines += [
+        *_energy_table(sites),
         "",
-        f"fleet: asked {asked:,.1f} kWh, delivered {delivered:,.1f} kWh over the event "
-        f"(rebounds inside it netted); paid {total} {currency}",
+        *_money_table(sites, currency),
         "",
-        *_recovery_lines(sites),
+        *_wrapped(_fleet_line(settlement, facts)),
+        *_wrapped(_recovery_line(sites)),
         *_guard_lines(sites),
-        *[f"excused: {plain(str(row.site_id))}: {plain(str(row.why))}" for row in _excused(sites)],
+        *[
+            line
+            for row in _excused(sites)
+            for line in _wrapped(f"excused: {plain(str(row.site_id))}: {plain(str(row.why))}")
+        ],
     ]
     if settlement.postings["from_revision"].notna().any():
         posted = sum(settlement.postings["amount"], Decimal(0))
-        lines += [f"changed against revision {revision - 1}, posting {told(posted, currency)} {currency}:"]
-        lines += change_lines(list(changed)) or ["  nothing"]
+        lines += [
+            "",
+            f"changed against revision {revision - 1}, posting {told(posted, currency)} {currency}:",
+        ]
+        lines += [part for line in change_lines(list(changed)) or ["  nothing"] for part in _wrapped(line)]
     lines += ["", "how it was worked out:"]
     used = {str(facts.rules[str(site)].name): facts.rules[str(site)] for site in sites["site_id"]}
-    lines += [f"  {name}: {rule.order_of_rounding}" for name, rule in sorted(used.items())]
-    lines += [f"  {name}: {rule.source}" for name, rule in sorted(used.items()) if rule.source]
-    lines += [f"note: {plain(note)}" for note in settlement.notes]
+    for name, rule in sorted(used.items()):
+        lines += _wrapped(f"  {name}: {rule.order_of_rounding}")
+        lines += _wrapped(f"  {name}: {rule.source}") if rule.source else []
+    lines += [line for note in settlement.notes for line in _wrapped(f"note: {plain(note)}")]
     return "\n".join(lines) + "\n"
+
+
+def _wrapped(text: str) -> list[str]:
+    """A long line in pieces no wider than WIDTH, the later ones set in; words longer than that stay whole."""
+    indent = " " * (len(text) - len(text.lstrip()) + 4)
+    return wrap(text, WIDTH, subsequent_indent=indent, break_long_words=False, break_on_hyphens=False)
+
+
+def _fleet_line(settlement: Settlement, facts: CallFacts) -> str:
+    total = sum(settlement.sites["total"], Decimal(0))
+    hours = facts.step_minutes / 60.0
+    delivered, asked = (settlement.fleet[name].sum() * hours for name in ("delivered_kw", "requested_kw"))
+    currency = facts.prices.currency
+    return (
+        f"fleet: asked {asked:,.1f} kWh, delivered {delivered:,.1f} kWh over the event (rebounds inside it netted); "
+        f"paid {told(total, currency)} {currency}"
+    )
 
 
 def _excused(sites: pd.DataFrame) -> Iterator[Any]:
     return sites[sites["why"].notna()].itertuples()
 
 
-def _recovery_lines(sites: pd.DataFrame) -> list[str]:
+def _recovery_line(sites: pd.DataFrame) -> str:
     """Energy taken back after the windows, beside what was delivered and not netted."""
     midnight, full = sites["recovery_until_midnight_kwh"], sites["recovery_until_full_kwh"]
-    return [
+    return (
         f"energy taken back after the own windows, not netted: {midnight.sum():,.1f} kWh until midnight "
         f"({int(midnight.notna().sum())} sites), {full.sum():,.1f} kWh until the tank is full "
         f"({int(full.notna().sum())} sites)"
-    ]
+    )
 
 
 def _guard_lines(sites: pd.DataFrame) -> list[str]:
     """Both adjustments of the sites whose charging was taken out of the adjustment window."""
+    rows = sites[(sites["guard"] != "none") & (sites["adjustment_kind"] != "none")]
     return [
-        f"adjustment without charging ({row.guard} meter taken out): {plain(str(row.site_id))} "
-        f"{row.adjustment:.3f}, with it {row.adjustment_charged:.3f} ({row.adjustment_kind})"
-        for row in sites[(sites["guard"] != "none") & (sites["adjustment_kind"] != "none")].itertuples()
+        line
+        for row in rows.itertuples()
+        for line in _wrapped(
+            f"adjustment without charging ({row.guard} meter taken out): {plain(str(row.site_id))} "
+            f"{row.adjustment:.3f}, with it {row.adjustment_charged:.3f} ({row.adjustment_kind})"
+        )
     ]
 
 
-def _site_line(row: Mapping[Hashable, Any]) -> str:
-    def number(name: str, width: int, digits: int) -> str:
-        value = row[name]
-        return f"{'-':>{width}}" if pd.isna(value) else f"{value:>{width},.{digits}f}"
-
-    return (
-        f"{plain(str(row['site_id']))[:13]:<14}{str(row['rule'])[:19]:<20}{row['state']!s:<13}"
-        f"{number('committed_kwh', 11, 1)}{number('delivered_kwh', 11, 1)}{number('performance_factor', 8, 3)}"
-        f"{number('adjustment', 8, 3)}{row['capacity_payment']!s:>11}{row['energy_payment']!s:>10}"
-        f"{row['penalty']!s:>10}{row['total']!s:>11}"
+def _energy_table(sites: pd.DataFrame) -> list[str]:
+    """What each site delivered by which rule."""
+    head = (
+        f"{'site':<15}{'rule':<22}{'state':<14}{'committed':>10}{'delivered':>10}{'factor':>8}{'adjust':>8}"
     )
+    units = f"{'':<51}{'kWh':>10}{'kWh':>10}"
+    rows = [
+        f"{_cut(row['site_id'], 15)}{_cut(row['rule'], 22)}{row['state']!s:<14}"
+        f"{_number(row, 'committed_kwh', 10, 1)}{_number(row, 'delivered_kwh', 10, 1)}"
+        f"{_number(row, 'performance_factor', 8, 3)}{_number(row, 'adjustment', 8, 3)}"
+        for row in sites.to_dict("records")
+    ]
+    return [head, units, *rows]
+
+
+def _money_table(sites: pd.DataFrame, currency: str) -> list[str]:
+    """The lines of each site's amount and their sums."""
+    names = ("capacity_payment", "energy_payment", "penalty", "total")
+    head = f"{'site':<15}{'capacity':>14}{'energy':>14}{'penalty':>14}{'total':>14}"
+    rows = [
+        _cut(row["site_id"], 15) + "".join(f"{told(row[name], currency):>14}" for name in names)
+        for row in sites.to_dict("records")
+    ]
+    sums = [told(sum(sites[name], Decimal(0)), currency) for name in names]
+    return [head, *rows, f"{'all':<15}" + "".join(f"{amount:>14}" for amount in sums)]
+
+
+def _cut(text: object, width: int) -> str:
+    """A name in a column of its own width, shortened where it is longer."""
+    shown = plain(str(text))
+    return f"{shown if len(shown) < width else shown[: width - 2] + '~':<{width}}"
+
+
+def _number(row: Mapping[Hashable, Any], name: str, width: int, digits: int) -> str:
+    value = row[name]
+    return f"{'-':>{width}}" if pd.isna(value) else f"{value:>{width},.{digits}f}"
 
 
 def statement_json(

@@ -7,9 +7,8 @@ In memory: time datetime64[us, UTC]; day datetime64[s] at midnight, no zone; num
 whole Int64; flag bool, or boolean where values are missing; text, decimal and lists object (None = none).
 """
 
-import csv
 import io
-from collections.abc import Callable
+from collections.abc import Callable, Sequence
 from decimal import Decimal
 from pathlib import Path
 from typing import Any, Final
@@ -21,10 +20,12 @@ import pyarrow.compute as pc
 import pyarrow.csv as pacsv
 import pyarrow.parquet as pq
 
-from fleet.errors import FleetError, Problem, Refused
+from fleet.csv_rows import csv_frame, csv_text, unreadable
+from fleet.errors import FleetError
 from fleet.schema import SCHEMA_VERSION, Column, Table
 from sites.units import AnyArray
 
+_ROW_GROUP: Final = 1 << 20
 _QUICK_FROM: Final = 100_000
 """Characters from which a CSV goes to the fast reader first."""
 MONEY_DIGITS: Final = 18
@@ -71,8 +72,48 @@ def write_parquet(frame: pd.DataFrame, path: Path, table: Table) -> None:
             f"missing: {', '.join(missing) or 'none'}; unknown: {', '.join(unknown) or 'none'}"
         )
     schema = arrow_schema(table)
+    if any(isinstance(frame[name].dtype, pd.CategoricalDtype) for name in table.names):
+        _write_coded(frame, path, table, schema)
+        return
     arrays = [_array(frame[column.name], column, path) for column in table.columns]
     pq.write_table(pa.Table.from_arrays(arrays, schema=schema), path, compression="zstd")
+
+
+def _write_coded(frame: pd.DataFrame, path: Path, table: Table, schema: Any) -> None:
+    """As write_parquet, some row groups after another, texts that come as numbers of a short list left so.
+
+    In the file they are texts like any other.
+    """
+    coded = [name for name in table.names if isinstance(frame[name].dtype, pd.CategoricalDtype)]
+    for name in coded:
+        kind = pa.dictionary(pa.int32(), pa.string())
+        schema = schema.set(schema.get_field_index(name), schema.field(name).with_type(kind))
+    plain = [column.name for column in table.columns if column.type not in ("number", "decimal")]
+    with pq.ParquetWriter(
+        path, schema, compression="zstd", use_dictionary=plain, write_statistics=coded, store_schema=False
+    ) as writer:
+        writer.add_key_value_metadata(schema.metadata)
+        for first in range(0, max(len(frame), 1), _ROW_GROUP):
+            rows = frame.iloc[first : first + _ROW_GROUP]
+            arrays = [
+                _coded(rows[column.name], column, path)
+                if column.name in coded
+                else _array(rows[column.name], column, path)
+                for column in table.columns
+            ]
+            writer.write_table(pa.Table.from_arrays(arrays, schema=schema), row_group_size=_ROW_GROUP)
+
+
+def _coded(series: pd.Series, column: Column, path: Path) -> Any:
+    codes = series.cat.codes.to_numpy()
+    if column.required == "yes" and (codes < 0).any():
+        raise FleetError(
+            f"{path.name}, column {column.name}: a row is null; the column must have a value in each row"
+        )
+    indices = pa.array(codes.astype(np.int32), mask=codes < 0)
+    return pa.DictionaryArray.from_arrays(
+        indices, pa.array(series.cat.categories.to_numpy(dtype=object), pa.string())
+    )
 
 
 def read_parquet(path: Path, table: Table) -> pd.DataFrame:
@@ -125,7 +166,7 @@ def read_raw(path: Path, span: tuple[pd.Timestamp, pd.Timestamp] | None = None) 
         parts = sorted(path.glob("*.parquet"))
         if not parts:
             came, advice = "a folder without .parquet files", "put some there, or remove it"
-            raise _unreadable(path.name, None, came, "a table", advice)
+            raise unreadable(path.name, None, came, "a table", advice)
     elif path.suffix == ".parquet":
         parts = [path]
     else:
@@ -136,6 +177,40 @@ def read_raw(path: Path, span: tuple[pd.Timestamp, pd.Timestamp] | None = None) 
         frames.append(frame)
         before += count
     return pd.concat(frames)
+
+
+TEXTS: Final = ("string", "large_string", "dictionary<values=string, indices=int32, ordered=0>")
+"""Types of a column of texts, as pyarrow names them."""
+
+
+class RowGroups:
+    """A Parquet file read a row group at a time, texts as numbers of a short list; FleetError where it cannot be."""
+
+    def __init__(self, path: Path) -> None:
+        try:
+            with pq.ParquetFile(path) as file:
+                self._metadata, schema = file.metadata, file.schema_arrow
+        except (pa.ArrowInvalid, OSError) as error:
+            raise FleetError(f"{path}: is not a readable Parquet file ({error})") from error
+        self._path = path
+        self.types = {str(name): str(kind) for name, kind in zip(schema.names, schema.types)}
+        self.count = int(self._metadata.num_row_groups)
+
+    def rows(self, group: int) -> int:
+        """How many rows a group has."""
+        return int(self._metadata.row_group(group).num_rows)
+
+    def bounds(self, group: int, name: str) -> tuple[Any, Any] | None:
+        """Lowest and highest value of a column in a group, as its statistics have them; None = not known."""
+        own = self._metadata.row_group(group).column(list(self.types).index(name)).statistics
+        return None if own is None or not own.has_min_max else (own.min, own.max)
+
+    def read(self, group: int, names: Sequence[str]) -> pd.DataFrame:
+        """Some columns of a group; a handle of its own for each call, so that threads may read side by side."""
+        coded = [name for name in names if self.types[name] in TEXTS]
+        with pq.ParquetFile(self._path, metadata=self._metadata, read_dictionary=coded) as file:
+            found = file.read_row_group(group, columns=list(names), use_threads=False)
+        return pd.DataFrame(found.replace_schema_metadata(None).unify_dictionaries().to_pandas())
 
 
 def empty_frame(table: Table) -> pd.DataFrame:
@@ -181,6 +256,8 @@ def _convert(series: pd.Series, column: Column) -> Any:
         if np.isinf(numbers).any():
             raise ValueError("infinite; leave the value empty where there is none")
         return pa.array(numbers, type=kind, from_pandas=True)
+    if column.type == "whole" and isinstance(series.dtype, np.dtype) and series.dtype.kind == "i":
+        return pa.array(series.to_numpy(), type=kind)
     if column.type == "whole":
         return pa.array(series.astype("Int64"), type=kind, from_pandas=True)
     if column.type == "flag":
@@ -207,6 +284,10 @@ def _plain_value(value: Any, kind: str) -> Any:
 
 def _days(series: pd.Series, kind: Any) -> Any:
     """Local dates, the whole column at once; dates alone, with no zone and no time of day."""
+    if series.dtype == np.dtype("datetime64[s]"):
+        seconds = series.to_numpy()
+        if not (seconds.astype("datetime64[D]") != seconds).any():
+            return pa.array(seconds.astype("datetime64[D]"), type=kind)
     given = series.astype(object) if series.dtype.kind not in "MO" else series
     days = pd.to_datetime(given) if given.dtype.kind == "O" else given
     midnight = days.dt.normalize()
@@ -265,7 +346,7 @@ def _plain(
         found = _read(path)
     except FleetError as error:
         came, advice = f"no readable Parquet ({error.__cause__})", "export it again, or restore it"
-        raise _unreadable(path.name, None, came, "a whole Parquet file", advice) from error
+        raise unreadable(path.name, None, came, "a whole Parquet file", advice) from error
     names = [name.strip() for name in found.column_names]
     columns = [_scalars(column) for column in found.columns]
     found = pa.Table.from_arrays(columns, names=names)
@@ -297,37 +378,9 @@ def _numbered(found: Any, rows: AnyArray) -> pd.DataFrame:
 
 
 def _read_csv(path: Path) -> pd.DataFrame:
-    try:
-        text = path.read_bytes().decode("utf-8-sig")
-    except OSError as error:
-        came = f"a file that cannot be read ({error.strerror})"
-        raise _unreadable(
-            path.name, None, came, "a table", "check that it is there and may be read"
-        ) from error
-    except UnicodeDecodeError as error:
-        came = f"bytes that are not UTF-8 ({error.reason})"
-        raise _unreadable(path.name, None, came, "text in UTF-8", "save it as CSV UTF-8") from error
-    if "\0" in text:
-        row = text.count("\n", 0, text.index("\0")) + 1
-        came = "a zero byte, as UTF-16 text has them"
-        raise _unreadable(path.name, row, came, "text in UTF-8", "save it as CSV UTF-8")
+    text = csv_text(path)
     quick = _csv_quickly(text)
-    if quick is not None:
-        return quick
-    heading, lines, rows = _csv_rows(text, path.name)
-    width = len(heading)
-    wrong = [(line, len(row)) for line, row in zip(lines, rows) if len(row) != width]
-    if wrong:
-        line, cells = wrong[0]
-        came, expected = f"{cells} cells", f"{width} as in the heading (rows like this: {len(wrong)})"
-        advice = "put quotes around a text that holds a comma, and write numbers with a decimal point"
-        raise _unreadable(path.name, line, came, expected, advice)
-    columns = list(zip(*rows)) if rows else [()] * width
-    cells_of = (pd.Series([cell.strip() for cell in column], dtype=object) for column in columns)
-    frame = pd.DataFrame(dict(enumerate(cells_of)))
-    frame.columns = pd.Index(heading)
-    frame.index = pd.Index(lines, dtype="int64")
-    return frame
+    return csv_frame(text, path.name) if quick is None else quick
 
 
 def _csv_quickly(text: str) -> pd.DataFrame | None:
@@ -349,34 +402,3 @@ def _csv_quickly(text: str) -> pd.DataFrame | None:
     frame.index = pd.RangeIndex(2, len(frame) + 2)
     kept: pd.DataFrame = frame[~(frame == "").all(axis=1)]
     return kept
-
-
-def _csv_rows(text: str, name: str) -> tuple[list[str], list[int], list[list[str]]]:
-    """Heading, the file line each row starts on, and the rows that are not blank."""
-    reader = csv.reader(io.StringIO(text, newline=""), strict=True)
-    lines, rows, line = [], [], 1
-    heading: list[str] | None = None
-    try:
-        for row in reader:
-            if any(cell.strip() for cell in row):
-                if heading is None:
-                    heading = [cell.strip() for cell in row]
-                else:
-                    lines.append(line)
-                    rows.append(row)
-            line = reader.line_num + 1
-    except csv.Error as error:
-        advice = "mend the quotes of that row, or save the file again as CSV"
-        raise _unreadable(name, line, str(error), "a row of CSV", advice) from error
-    if heading is None:
-        advice = "give it its heading and rows, or remove it"
-        raise _unreadable(name, None, "an empty file", "a heading at least", advice)
-    if len(heading) == 1 and ";" in heading[0]:
-        came, advice = "cells parted by semicolons", "save it with commas and decimal points"
-        raise _unreadable(name, 1, came, "cells parted by commas", advice)
-    return heading, lines, rows
-
-
-def _unreadable(file: str, row: int | None, came: str, expected: str, advice: str) -> Refused:
-    """What to raise where an input file is no table at all."""
-    return Refused([Problem(file, row, None, came, expected, advice)])

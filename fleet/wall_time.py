@@ -84,7 +84,9 @@ def up_to_grid(time: np.datetime64, step_minutes: int) -> np.datetime64:
 def off_grid(times: Times, step_minutes: int) -> Bools:
     """Mask of the times, any shape, that are not on the grid; NaT is not counted."""
     micros = times.astype("datetime64[us]")
-    mask: Bools = (micros.astype(np.int64) % (step_minutes * 60_000_000) != 0) & ~np.isnat(micros)
+    whole, step = micros.astype(np.int64), step_minutes * 60_000_000
+    # Not by %: numpy divides millions of numbers by one far faster.
+    mask: Bools = (whole // step * step != whole) & ~np.isnat(micros)
     return mask
 
 

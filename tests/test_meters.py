@@ -6,7 +6,8 @@ import pytest
 from made_settlement import NEW_YORK, readings, times, utc
 
 from fleet.errors import FleetError, Refused
-from fleet.meters import QUALITIES, Streams, by_local_day, estimate, local_grid, spikes, streams
+from fleet.estimation import estimate, spikes
+from fleet.meters import QUALITIES, Streams, by_local_day, local_grid, streams
 from sites.clock import Clock, span
 
 SINCE, UNTIL = np.datetime64("2025-07-10T12:00", "us"), np.datetime64("2025-07-10T14:00", "us")

@@ -100,6 +100,52 @@ def test_the_rule_is_the_frozen_one_and_the_audit_holds(home: Path) -> None:
     assert audit(home, EVENT).holds
 
 
+def test_a_site_counts_again_with_a_reason_and_by_whom(home: Path, tmp_path: Path) -> None:
+    path = tmp_path / "fleet"
+    shutil.copytree(home, path)
+    site = a_site(path)
+    with pytest.raises(FleetError, match=f"--readmit {site}: no reason is given; say why with --why"):
+        settle_event(path, EVENT, path / "corrected.parquet", readmit={site: " "})
+    with pytest.raises(FleetError) as caught:
+        settle_event(path, EVENT, path / "corrected.parquet", readmit={"castle": "why not"})
+    assert str(caught.value) == (
+        f"event practice: site castle is not excused, so it cannot be readmitted; excused are {site}"
+    )
+    again = {site: "the cut was elsewhere"}
+    made = settle_event(path, EVENT, path / "corrected.parquet", readmit=again, who="A. Analyst")
+    row = sites(path, made.revision).loc[site]
+    assert row["state"] == "final" and pd.isna(row["why"])
+    assert row["total"] == sites(path, 1).loc[site, "total"]
+    texts = records.read_settlement(path, EVENT, made.revision).statements
+    inputs = json.loads(texts["inputs.json"])
+    assert (inputs["excused"], inputs["readmitted"], inputs["who"]) == ({}, again, "A. Analyst")
+    assert f"note: counts again: {site}: the cut was elsewhere, by A. Analyst" in texts["statement.txt"]
+    assert settle_again(path, EVENT, made.revision, path / "corrected.parquet") == []
+    assert audit(path, EVENT).holds
+
+
+def test_the_statement_reads_well_in_ninety_columns_and_adds_up(home: Path) -> None:
+    text = records.read_settlement(home, EVENT, 3).statements["statement.txt"]
+    lines = text.split("\n")
+    assert max(map(len, lines)) <= 90
+    first = next(at for at, line in enumerate(lines) if line.startswith("site") and "capacity" in line)
+    rows = [line.split() for line in lines[first + 1 : first + 2 + len(sites(home, 3))]]
+    assert rows[-1][0] == "all"
+    for column in range(1, 5):
+        amounts = [Decimal(row[column]) for row in rows]
+        assert sum(amounts[:-1], Decimal(0)) == amounts[-1]
+    assert Decimal(rows[-1][4]) == sum(sites(home, 3)["total"], Decimal(0))
+
+
+def test_a_rehearsal_below_its_fleet_finds_the_readings_of_its_fleet(home: Path, tmp_path: Path) -> None:
+    fleet = tmp_path / "fleet"
+    shutil.copytree(home, fleet)
+    below = fleet / "rehearsals" / "1"
+    below.mkdir(parents=True)
+    (fleet / "events").rename(below / "events")
+    assert settle_again(below, EVENT, 1, fleet / "meters-event.parquet") == []
+
+
 def test_an_excuse_needs_a_called_site_and_a_reason(home: Path) -> None:
     meters = home / "meters-event.parquet"
     with pytest.raises(FleetError, match=r"^--excuse x: no reason is given; say why with --why$"):
