@@ -20,6 +20,9 @@ COLD_BRINE_C: Final = (1.0, 2.0)
 RESTART_LIMIT_FRACTION: Final = 0.5
 RESTART_MINUTES: Final = 15
 
+PEAK_MINUTES: Final = 15
+"""The building over its highest kW for so long ends an absorb: a common demand interval."""
+
 BANNERS: Final = {
     "real": "REAL EVENT",
     "test": "TEST - THIS IS A TEST EVENT - carry it out as you would a real one - TEST",
@@ -66,6 +69,36 @@ PHRASES: Final = {
         "tank's own level signal",
         "ring",
     ),
+    "charge_start": (
+        "Start charging: {tags} into the tank",
+        "flow through the tank, % load up, levels as in usual charging",
+        "wait for its timer, never force it; ring",
+    ),
+    "charge_to": (
+        "Chillers carry the building first; charge {tags} at the end",
+        "tank level rises. At its full signal: stop charging, serve the building",
+        "ring",
+    ),
+    "spare_tank": (
+        "Chillers carry the building; the tank gives nothing: {tags} at the end",
+        "tank level steady, % load up",
+        "ring",
+    ),
+    "charge_end": (
+        "End this charging: {tags} back to the usual plan",
+        "controller on its own schedule again",
+        "ring",
+    ),
+    "usual_by": (
+        "Down at its usual level: {tags}",
+        "tank's own level signal",
+        "ring",
+    ),
+    "above_usual": (
+        "Still above its usual level at the end of the plan: {tags} then",
+        "tank level about there",
+        "no need to ring",
+    ),
     "not_full": (
         "NOT full by the end of the plan: {tags} then",
         "tank level about there",
@@ -74,8 +107,21 @@ PHRASES: Final = {
 }
 
 
+def phrase(site: CalledSite, action: str) -> tuple[str, str, str]:
+    """What to do, what is then seen, what if not: of an action at a site."""
+    never = pd.isna(site.window.full_again_at)
+    if action == "full_by" and never:
+        return PHRASES["not_full"]
+    if action == "usual_by" and never:
+        return PHRASES["above_usual"]
+    charges = any(step.action == "charge_start" for step in site.steps)
+    return PHRASES["spare_tank" if action == "charge_to" and not charges else action]
+
+
 def before(site: CalledSite) -> tuple[str, ...]:
     """Conditions before the start."""
+    if site.absorbs:
+        return _before_charging(site)
     low, asked = float(site.window.inventory_low_start_kwh_th), []
     if site.tanks:
         tags = ", ".join(plain(tank.tank_id) for tank in site.tanks)
@@ -89,10 +135,25 @@ def before(site: CalledSite) -> tuple[str, ...]:
     return tuple(asked)
 
 
+def _before_charging(site: CalledSite) -> tuple[str, ...]:
+    """Conditions before the tanks are made to charge: room in them by the high estimate, and what guards them."""
+    tags = ", ".join(plain(tank.tank_id) for tank in site.tanks)
+    most = site.level(float(site.window.inventory_low_start_kwh_th))
+    return (
+        f"{tags}: at most {most}, of {site.words.energy(site.capacity_kwh_th)}",
+        "the tank's own full signal works",
+        "no alarm standing on any machine, pump or tank",
+        "brine flow proven, freeze protection on" if site.has_ice else "water flow through the tank proven",
+    )
+
+
 def stop(site: CalledSite) -> tuple[str, ...]:
     """Levels and temperatures at which the operator ends the event early."""
     say, facts, levels = site.words, site.facts, []
-    if site.tanks and facts.held_back_kwh_th > 0.0:
+    if site.absorbs:
+        levels.append("the tank's own full signal: charging ends, the building is served on")
+        levels.append(f"the building's meter over {site.highest_kw:,.0f} kW for {PEAK_MINUTES} min")
+    elif site.tanks and facts.held_back_kwh_th > 0.0:
         levels.append(f"tanks down to {site.level(facts.held_back_kwh_th)}: that much is held back")
     elif site.tanks:
         levels.append("tanks used up")
@@ -100,13 +161,17 @@ def stop(site: CalledSite) -> tuple[str, ...]:
     levels.append(f"a zone more than {say.rise(facts.rise_limit_k)} over its set-point")
     if facts.critical_kw_th > 0.0:
         levels.append(f"critical cooling ({say.cooling(facts.critical_kw_th)}) not fully served")
-    if site.has_ice:
+    if site.absorbs and site.has_ice:
+        levels.append(f"water to the building under {say.temperature(COLD_BRINE_C[0])}")
+    elif site.has_ice:
         levels.append(f"leaving brine under {say.temperature(COLD_BRINE_C[0])} while the building is served")
     return (*levels, "any alarm")
 
 
 def restart(site: CalledSite) -> str:
-    """How the machines come back, after the event and after an early end alike."""
+    """How the machines come back, after the event and after an early end alike; of an absorb, how they start."""
+    if site.absorbs:
+        return _start(site)
     stopped = {step.unit_id for step in site.steps if step.action == "off"}
     if not stopped:
         return "No machine is stopped by this order."
@@ -123,8 +188,43 @@ def restart(site: CalledSite) -> str:
     )
 
 
+def _start(site: CalledSite) -> str:
+    """How the machines that are to charge start."""
+    starting = {step.unit_id for step in site.steps if step.action == "charge_start"}
+    if not starting:
+        return "No machine need be started by this order: those that run carry what the tank does not give."
+    limited = any(step.action == "demand_limit" for step in site.steps)
+    ramp = "then ramp to its demand limit." if limited else "then ramp."
+    gap = f", {site.facts.restart_gap_minutes:g} min apart" if len(starting) > 1 else ""
+    return (
+        f"One machine at a time{gap}, none before its least off time is over or with no start left. Load limit "
+        f"{100 * RESTART_LIMIT_FRACTION:.0f} % for {RESTART_MINUTES} min, {ramp}"
+    )
+
+
+def _after(site: CalledSite) -> str:
+    """What follows an absorb: the usual plan, when it charges again, and what if the tank is full before."""
+    end = site.window.window_end.to_pydatetime()
+    again = [step for step in site.steps if step.action == "recharge_may_start"]
+    first = min((step.at for step in again), default=None)
+    said = f"Usual plan again from {site.words.time(end)}"
+    if first is None:
+        said += "; no charging in it. "
+    elif first <= end:
+        said += ", which goes on charging. "
+    else:
+        caps = ", ".join(f"{plain(step.unit_id)} {site.words.cooling(step.value or 0.0)}" for step in again)
+        said += f"; no charging before {site.words.time(first)}, then at most {caps}. "
+    said += "The tank starts fuller, so less is charged than usual. Full early: stop charging and ring; "
+    if site.has_ice:
+        return said + "never past full, and never lower the low-brine trip to charge faster."
+    return said + "never past full."
+
+
 def recharge(site: CalledSite) -> str:
-    """When the tanks may be filled again, how fast, by when, and what if not."""
+    """When the tanks may be filled again, how fast, by when, and what if not; of an absorb, what follows it."""
+    if site.absorbs:
+        return _after(site)
     if not site.tanks:
         return "No tank on this site."
     starts = [step for step in site.steps if step.action == "recharge_may_start"]

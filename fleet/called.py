@@ -37,11 +37,19 @@ class CalledSite:
     tanks: tuple[Any, ...]
     steps: tuple[Step, ...]
     words: Words
+    direction: str
+    highest_kw: float
+    """What the building draws at most in the plan's window, or has been billed for already if that is more"""
 
     @property
     def capacity_kwh_th(self) -> float:
         """All tanks together, full."""
         return float(sum(tank.capacity_kwh_th for tank in self.tanks))
+
+    @property
+    def absorbs(self) -> bool:
+        """The tanks are made to charge, and nothing is stopped."""
+        return self.direction == "absorb"
 
     @property
     def has_ice(self) -> bool:
@@ -61,6 +69,8 @@ def called_sites(record: CallRecord) -> list[CalledSite]:
     tanks = _by_site(record.frozen["tanks"])
     steps = _by_site(record.frames["steps"])
     windows = record.frames["windows"].sort_values("site_id", kind="stable")
+    direction = str(record.frames["request"]["direction"].iloc[0])
+    highest = _highest_kw(record) if direction == "absorb" else {}
     lost = sorted(set(windows["site_id"]) - set(facts))
     if lost:
         raise FleetError(
@@ -74,9 +84,30 @@ def called_sites(record: CallRecord) -> list[CalledSite]:
             tanks=tanks.get(window.site_id, ()),
             steps=tuple(_step(row) for row in steps.get(window.site_id, ())),
             words=words(_text(facts[window.site_id].site_words), zone, window.window_start.to_pydatetime()),
+            direction=direction,
+            highest_kw=highest.get(window.site_id, 0.0),
         )
         for window in _rows(windows)
     ]
+
+
+def _highest_kw(record: CallRecord) -> dict[str, float]:
+    """Highest kW of each called building in its own window, or its billed peak of the running cycle."""
+    windows = record.frames["windows"][["site_id", "window_start", "window_end"]]
+    rows = record.frames["intervals"].merge(windows, on="site_id", validate="many_to_one")
+    start = rows["interval_start"]
+    inside = rows[(start >= rows["window_start"]) & (start < rows["window_end"])]
+    found = (inside["event_kw"] + inside["rest_kw"]).groupby(inside["site_id"]).max()
+    bills = record.frozen.get("bills")
+    if bills is not None and not bills.empty:
+        zone = str(_setting(record, "timezone"))
+        today = (
+            record.frames["intervals"]["interval_start"].min().tz_convert(zone).tz_localize(None).normalize()
+        )
+        running = bills[(bills["cycle_start"] <= today) & (today <= bills["cycle_end"])]
+        billed = running.groupby("site_id")["billed_peak_kw"].max().reindex(found.index).fillna(0.0)
+        found = found.where(found >= billed, billed)
+    return {str(site): float(kw) for site, kw in found.items()}
 
 
 def _step(row: Any) -> Step:

@@ -72,6 +72,7 @@ def call(
         frames["machines"],
         frames["tanks"],
         survey.folder.settings.interval_minutes,
+        str(survey.ask.direction),
     )
     frames["prices"] = prices_frame(choice, allocation)
     proof = proof_of(survey, allocation)

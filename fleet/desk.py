@@ -68,10 +68,6 @@ def survey(
 
     Raises Refused and FleetError for anything wrong with folder or ask.
     """
-    if ask.direction is Direction.ABSORB and asked_kw is not None:
-        raise FleetError(
-            "direction absorb can be quoted but not called yet: its orders are not written; use quote"
-        )
     progress("reading the fleet")
     folder = open_folder(path, without=("meters",))
     settings = folder.settings
@@ -149,9 +145,13 @@ def _in_force(path: Path, fleet: Fleet, past: pd.DataFrame, start: np.datetime64
     return Stages(*(np.concatenate(column, axis=1) for column in zip(*parts, strict=True)))
 
 
-def _stages_of(path: Path, event_id: str, fleet: Fleet) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
-    """One stage per site from a call's record: its window and each machine's load limit within it."""
-    record = records.read_call(path, event_id, only=("windows", "machines"))
+def _stages_of(
+    path: Path, event_id: str, fleet: Fleet
+) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+    """One stage per site from a call's record: its window, each machine's load limit within it, and whether its
+    tanks are made to charge."""
+    record = records.read_call(path, event_id, only=("request", "windows", "machines"))
+    absorb = record.frames["request"]["direction"].iloc[0] == Direction.ABSORB
     windows = record.frames["windows"].set_index("site_id")
     machines = record.frames["machines"]
     low = machines.groupby(["site_id", "chiller_id"])["load_limit_fraction"].min()
@@ -162,7 +162,8 @@ def _stages_of(path: Path, event_id: str, fleet: Fleet) -> tuple[np.ndarray, np.
         [np.repeat(site_id, roster.chillers.exists.shape[1]), roster.chillers.chiller_id.ravel()]
     )
     limit = low.reindex(keys).fillna(1.0).to_numpy().reshape(roster.chillers.exists.shape)
-    return edges[0][:, None], edges[1][:, None], limit[:, None, :]
+    charge = np.full((len(site_id), 1), absorb, dtype=np.bool_)
+    return edges[0][:, None], edges[1][:, None], limit[:, None, :], charge
 
 
 _EDGES = ("window_start", "window_end")

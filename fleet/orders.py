@@ -28,7 +28,10 @@ MOST_LINES: Final = 10
 TIME_WIDTH: Final = 10
 DONE: Final = "__:__ ____"
 NOT_IN_FILE_NAMES: Final = re.compile(r"[^A-Za-z0-9_-]+")
-MERGEABLE: Final = (("restart", "recharge_may_start", "full_by"), ("off", "inhibit", "demand_limit"))
+MERGEABLE: Final = (
+    ("restart", "recharge_may_start", "full_by", "usual_by"),
+    ("off", "inhibit", "demand_limit", "charge_start"),
+)
 
 
 @dataclass(frozen=True)
@@ -53,6 +56,7 @@ class Order:
     site_id: str
     quote_id: str
     purpose: str
+    direction: str
     banner: str
     title: str
     start: str
@@ -125,6 +129,7 @@ def _order(
         site_id=plain(window.site_id),
         quote_id=plain(window.quote_id),
         purpose=purpose,
+        direction=direction,
         banner=advice.BANNERS[purpose],
         title=f"{what}, {say.day(start)}",
         start=say.time(start),
@@ -146,7 +151,7 @@ def _order(
 def _lines(site: CalledSite) -> tuple[Line, ...]:
     """Lines to act on: one per moment and action; where that gives over MOST_LINES, moments of an action join.
 
-    Eight actions exist, so that joined lines are never more than MOST_LINES.
+    Eight actions of a shed exist and seven of an absorb, so that joined lines are never more than MOST_LINES.
     """
     joined: tuple[str, ...] = ()
     for more in ((), *MERGEABLE, ("demand_limit_removed", "inhibit_removed")):
@@ -169,8 +174,7 @@ def _line(site: CalledSite, steps: list[Step]) -> Line:
     """One line from steps of one action."""
     moments = sorted({step.at for step in steps})
     tags = ", ".join(_tag(site, step, len(moments) > 1) for step in steps)
-    never_full = steps[0].action == "full_by" and pd.isna(site.window.full_again_at)
-    do, see, if_not = advice.PHRASES["not_full" if never_full else steps[0].action]
+    do, see, if_not = advice.phrase(site, steps[0].action)
     return Line(site.words.time(moments[0]), do.format(tags=tags), see, if_not, tuple(steps))
 
 
@@ -179,9 +183,13 @@ def _tag(site: CalledSite, step: Step, timed: bool) -> str:
     tag, value = plain(step.unit_id), step.value
     if value is not None and step.action in ("demand_limit", "demand_limit_removed"):
         tag += f" to {100.0 * value:g} %"
+    elif value is not None and step.action == "charge_start":
+        tag += f" up to {site.words.cooling(value)}"
+    elif value is not None and step.action == "charge_to":
+        tag += f" to about {site.words.energy(value)}"
     elif value is not None and step.action == "recharge_may_start":
         tag += f" at most {site.words.cooling(value)}"
-    elif value is not None and step.action == "full_by":
+    elif value is not None and step.action in ("full_by", "usual_by"):
         tag += f" at {site.words.energy(value)}"
     return f"{tag} {site.words.time(step.at)}" if timed else tag
 

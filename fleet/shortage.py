@@ -12,6 +12,7 @@ import numpy as np
 from fleet.allocate import Allocation
 from fleet.feeders import Feeders
 from fleet.most import Available, most
+from fleet.words import limit_words
 from sites.quotes import LIMITED_BY, DenseQuotes
 from sites.units import Bools, Floats
 
@@ -44,7 +45,8 @@ class Shortage:
                 lines.append(f"+{more:,.1f} kW if {name} did not bind")
         counted = sorted(self.limited_by.items(), key=lambda pair: (-pair[1], pair[0]))
         if counted:
-            lines.append("sites limited by: " + ", ".join(f"{name} {count}" for name, count in counted))
+            said = ", ".join(f"{limit_words(name)} {count}" for name, count in counted)
+            lines.append("sites limited by: " + said)
         return lines
 
 

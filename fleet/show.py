@@ -17,6 +17,7 @@ from fleet.rehearsal import Rehearsed
 from fleet.schema import describe
 from fleet.settling import Settled
 from fleet.wall_time import local_text
+from fleet.words import limit_words
 from sites.quotes import COST_PARTS, LIMITED_BY
 from sites.units import KW_TH_PER_TON
 
@@ -57,7 +58,7 @@ def quote_lines(survey: Survey, offer: Offer, tons: bool) -> list[str]:
             ]
         ),
         "",
-        f"{'site':<14}{'usual':>8}{'shed':>8}{'window':>14}{'off':>5}{'limit':>7}{'cost/kWh':>10}"
+        f"{'site':<14}{'usual':>8}{survey.ask.direction:>8}{'window':>14}{'off':>5}{'limit':>7}{'cost/kWh':>10}"
         f"{'recovery':>10}{'tank':>16}{'rise':>6}  what limits it",
         f"{'':<14}{'kW':>8}{'kW':>8}{'':>14}{'':>5}{'':>7}{survey.folder.settings.currency:>10}"
         f"{'kWh':>10}{'ton-h' if tons else 'kWh_th':>16}{'K':>6}",
@@ -78,7 +79,7 @@ def quote_lines(survey: Survey, offer: Offer, tons: bool) -> list[str]:
 def _site_line(survey: Survey, offer: Offer, i: int, tons: bool) -> str:
     roster, quotes = survey.fleet.roster, survey.quoted.quotes
     name = f"{str(roster.buildings.site_id[i])[:13]:<14}{offer.usual_kw[i]:>8,.0f}"
-    reason = LIMITED_BY[int(quotes.site_limited_by[i])].replace("_", " ")
+    reason = limit_words(LIMITED_BY[int(quotes.site_limited_by[i])]).replace("_", " ")
     why = survey.eligible.reason.get(str(roster.buildings.site_id[i]))
     if offer.best[i] < 0:
         return f"{name}{'-':>8}{'':>68}  {why or reason}"

@@ -19,14 +19,20 @@ ORDER: Final = (
     "off",
     "demand_limit_removed",
     "inhibit_removed",
+    "charge_start",
+    "charge_to",
+    "charge_end",
     "restart",
     "recharge_may_start",
     "full_by",
+    "usual_by",
 )
-"""Order of the actions of one moment: a lag machine is inhibited before the stop that would start it."""
+"""Order of the actions of one moment: a lag machine is inhibited before the stop that would start it, and a limit
+stands before the charge that it limits."""
 RUNS_KW_TH: Final = 1e-6
 """A machine or a charge below this stands still: the courses are floats."""
 NOT_FULL: Final = "not full within the horizon"
+NOT_USUAL: Final = "still above its usual level at the end of the horizon"
 UNIT: Final = ["site_id", "chiller_id"]
 TANK: Final = ["site_id", "tank_id"]
 
@@ -38,6 +44,7 @@ def steps(
     machines: pd.DataFrame,
     tanks: pd.DataFrame,
     step_minutes: int,
+    direction: str = "shed",
 ) -> pd.DataFrame:
     """Rows of table call/steps of all called sites, sorted by site, time, action and loading order.
 
@@ -52,6 +59,10 @@ def steps(
     taken in order of ready time, then loading order. Each tank has `recharge_may_start` at its first charged
     interval from window_end, and `full_by` at full_again_at, or at the end of the horizon where that is null.
 
+    Direction absorb: each machine that makes charge in the window has `charge_start` at the first interval it does,
+    each tank charged `charge_to` its level at window_end, from window_start, and `charge_end` at window_end; no
+    machine is inhibited, and `usual_by` stands in the place of `full_by`.
+
     Raises FleetError where the tables of the call contradict each other or lack rows of a called site.
     """
     inside = _in_window(windows, chillers, machines)
@@ -64,9 +75,11 @@ def steps(
             value=np.nan,
         ),
         _restarts(off, sites),
-        *_held(inside),
-        *_tank_steps(windows, tanks, step_minutes),
+        *_held(inside, direction),
+        *_tank_steps(windows, tanks, step_minutes, direction),
     ]
+    if direction == "absorb":
+        parts += [_charging(inside), *_charged(windows, tanks, step_minutes)]
     return _sorted(parts, windows)
 
 
@@ -141,8 +154,9 @@ def _restarts(off: pd.DataFrame, sites: pd.DataFrame) -> pd.DataFrame:
     return rows.assign(at=at.dt.ceil("min"), action="restart", detail=detail, value=np.nan)
 
 
-def _held(inside: pd.DataFrame) -> list[pd.DataFrame]:
-    """inhibit and demand_limit of the machines that are never off in the window, and their removal."""
+def _held(inside: pd.DataFrame, direction: str) -> list[pd.DataFrame]:
+    """inhibit and demand_limit of the machines that are never off in the window, and their removal; an absorb
+    inhibits none."""
     each = inside.groupby(UNIT, as_index=False).agg(
         lowest=("load_limit_fraction", "min"),
         direct=("direct_kw_th", "max"),
@@ -153,7 +167,7 @@ def _held(inside: pd.DataFrame) -> list[pd.DataFrame]:
     )
     each = each[each["lowest"] > 0.0].rename(columns={"chiller_id": "unit_id"})
     runs = (each["direct"] > RUNS_KW_TH) | (each["charge"] > RUNS_KW_TH)
-    idle, limited = each[~runs], each[runs & (each["lowest"] < 1.0)]
+    idle, limited = each[~runs & (direction != "absorb")], each[runs & (each["lowest"] < 1.0)]
     percent = _said(100.0 * limited["lowest"], "{:g}")
     return [
         idle.assign(
@@ -177,8 +191,52 @@ def _held(inside: pd.DataFrame) -> list[pd.DataFrame]:
     ]
 
 
-def _tank_steps(windows: pd.DataFrame, tanks: pd.DataFrame, step_minutes: int) -> list[pd.DataFrame]:
-    """recharge_may_start and full_by of every tank of the called sites."""
+def _charging(inside: pd.DataFrame) -> pd.DataFrame:
+    """charge_start of the machines that charge in their window of an absorb, with the most they put into tanks."""
+    made = inside[inside["charge_kw_th"] > RUNS_KW_TH]
+    each = made.groupby(UNIT, as_index=False).agg(
+        at=("interval_start", "min"),
+        value=("charge_kw_th", "max"),
+        loading_order=("loading_order", "first"),
+        ice=("making_ice", "any"),
+    )
+    how = each["ice"].map({True: "make ice", False: "cool the tank"}).astype(object)
+    each["detail"] = how + ": up to " + _said(each["value"], "{:.0f}") + " kW_th into the tank"
+    return each.rename(columns={"chiller_id": "unit_id"}).assign(action="charge_start")
+
+
+def _charged(windows: pd.DataFrame, tanks: pd.DataFrame, step_minutes: int) -> list[pd.DataFrame]:
+    """charge_to and charge_end of the tanks that are charged in a window of an absorb; where a site's machines have
+    nothing to spare for charging, of all its tanks: they give less than usual."""
+    window = windows[["site_id", "window_start", "window_end"]]
+    rows = tanks.merge(window, on="site_id", validate="many_to_one").rename(columns={"tank_id": "unit_id"})
+    inside = (rows["interval_start"] >= rows["window_start"]) & (rows["interval_start"] < rows["window_end"])
+    rows = rows[inside].sort_values("interval_start", kind="stable").assign(loading_order=0)
+    last = rows["interval_start"] + pd.Timedelta(minutes=step_minutes) == rows["window_end"]
+    filled = rows.groupby(["site_id", "unit_id"])["charge_kw_th"].transform("max") > RUNS_KW_TH
+    none = ~filled.groupby(rows["site_id"]).transform("any")
+    each = rows[last & (filled | none)]
+    level = _said(each["inventory_kwh_th"], "{:.0f}")
+    return [
+        each.assign(
+            at=each["window_start"],
+            action="charge_to",
+            detail="to " + level + " kWh_th by the end, never past the tank's own full signal",
+            value=each["inventory_kwh_th"],
+        ),
+        each.assign(
+            at=each["window_end"],
+            action="charge_end",
+            detail="back to the usual plan: no charging by this order any more",
+            value=np.nan,
+        ),
+    ]
+
+
+def _tank_steps(
+    windows: pd.DataFrame, tanks: pd.DataFrame, step_minutes: int, direction: str
+) -> list[pd.DataFrame]:
+    """recharge_may_start and full_by (of an absorb usual_by) of every tank of the called sites."""
     rows = tanks.merge(
         windows[["site_id", "window_end", "full_again_at"]], on="site_id", validate="many_to_one"
     ).rename(columns={"tank_id": "unit_id"})
@@ -200,8 +258,10 @@ def _tank_steps(windows: pd.DataFrame, tanks: pd.DataFrame, step_minutes: int) -
         )
     level = _said(full["inventory_kwh_th"], "{:.0f}") + " kWh_th"
     back = "back at its usual level of " + level
-    full["detail"] = back.where(full["full_again_at"].notna(), NOT_FULL + "; " + level + " then")
-    return [start, full.assign(at=full["end"], action="full_by", value=full["inventory_kwh_th"])]
+    never = NOT_USUAL if direction == "absorb" else NOT_FULL
+    full["detail"] = back.where(full["full_again_at"].notna(), never + "; " + level + " then")
+    action = "usual_by" if direction == "absorb" else "full_by"
+    return [start, full.assign(at=full["end"], action=action, value=full["inventory_kwh_th"])]
 
 
 def _said(numbers: pd.Series, form: str) -> pd.Series:

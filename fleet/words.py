@@ -16,6 +16,11 @@ NOTES_LENGTH: Final = 200
 DAYS: Final = ("Mon", "Tue", "Wed", "Thu", "Fri", "Sat", "Sun")
 MONTHS: Final = ("Jan", "Feb", "Mar", "Apr", "May", "Jun", "Jul", "Aug", "Sep", "Oct", "Nov", "Dec")
 
+LIMIT_WORDS: Final = {
+    "full": "tank full, nothing to absorb",
+    "already_on": "no machine capacity to spare, or charging already",
+}
+
 
 @dataclass(frozen=True)
 class Words:
@@ -91,3 +96,8 @@ def plain(text: str) -> str:
     return "".join(
         letter if letter.isprintable() else letter.encode("unicode_escape").decode("ascii") for letter in text
     )
+
+
+def limit_words(limit: str) -> str:
+    """What keeps a site from giving more, a word of limited_by, told so that it can be read alone."""
+    return LIMIT_WORDS.get(limit, limit)

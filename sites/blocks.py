@@ -81,7 +81,7 @@ def _charging(roster: Roster, standing: Standing, terms: Terms) -> Candidates:
     """Blocks in which the tanks are made to charge: sites with a tank and machines that can charge it."""
     chillers, tanks = roster.chillers, roster.tanks
     tank = tanks.exists & standing.tank_available
-    ice = np.asarray((tank & kind_is(tanks.kind, TANK_KINDS, ICE_KINDS)).any(axis=1))
+    ice = np.asarray((tanks.exists & kind_is(tanks.kind, TANK_KINDS, ICE_KINDS)).any(axis=1))
     ready = chillers.exists & standing.chiller_available
     able = ready & (chillers.makes_ice | ~ice[:, None])
     startable = np.where(able, chillers.starts_left >= 1, True).all(axis=1)
@@ -90,7 +90,7 @@ def _charging(roster: Roster, standing: Standing, terms: Terms) -> Candidates:
     parts = []
     for limit in LOAD_LIMITS:
         site, first, last = _blocks(terms, has, shortest)
-        machine_limit = np.where(ready[site], limit, 1.0)
+        machine_limit = np.full(ready[site].shape, limit)
         parts.append((site, first, last, np.full(len(site), limit), machine_limit))
     found = _sorted(parts, chillers.exists.shape[1], terms.recoveries)
     return replace(

@@ -22,7 +22,7 @@ EMPTY_FRACTION = 1e-3
 REMNANT_FRACTION = 0.1
 """A tank that still gives this share of what is asked in the interval it runs empty in ran out in its middle."""
 FULL_AGAIN_FRACTION = 1e-3
-"""A tank is full again when it lies within this share of capacity of the usual case (and always, below)."""
+"""A tank is back when it lies within this share of capacity of the usual case, or has come past it."""
 
 
 @dataclass(frozen=True)
@@ -76,6 +76,8 @@ class Sums(Rows):
     at_end: Floats
     full_again: Ints
     lack_kwh_th: Floats
+    from_above: Bools
+    """The tanks come back to the usual case's level from above: after an absorb"""
 
     def tally(self) -> "Tally":
         """What has been summed up so far."""
@@ -97,8 +99,8 @@ class Sums(Rows):
         )
 
 
-def sums(power_kw: Floats) -> Sums:
-    """Empty sums of rows whose power (row, interval) is `power_kw` until they are run."""
+def sums(power_kw: Floats, from_above: Bools) -> Sums:
+    """Empty sums of rows whose power (row, interval) is `power_kw` until they are run; `from_above` (row,)."""
     rows = len(power_kw)
 
     def zeros() -> Floats:
@@ -122,6 +124,7 @@ def sums(power_kw: Floats) -> Sums:
         at_end=zeros(),
         full_again=np.full(rows, -1, dtype=np.int64),
         lack_kwh_th=zeros(),
+        from_above=from_above,
     )
 
 
@@ -156,7 +159,8 @@ def add(
     sums.rate_bound[:] |= short & ~empty & ~at_reserve
     np.copyto(sums.at_start, total(moment.inventory_start_kwh_th), where=start == t)
     np.copyto(sums.at_end, held, where=end - 1 == t)
-    back = (t >= end) & (sums.full_again < 0) & (held >= usual_held - FULL_AGAIN_FRACTION * capacity)
+    above = np.where(sums.from_above, usual_held - held, held - usual_held)
+    back = (t >= end) & (sums.full_again < 0) & (above >= -FULL_AGAIN_FRACTION * capacity)
     sums.full_again[back] = t
     sums.lack_kwh_th[:] = np.maximum(usual_held - held, 0.0)
 

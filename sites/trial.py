@@ -9,19 +9,18 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from sites import storage
 from sites.blocks import Candidates
 from sites.candidate import Stages
 from sites.conditions import Conditions
 from sites.course import Course
 from sites.direction import Direction
 from sites.ground import Ground, usual_high
-from sites.plant import STOP_CHARGE_AT, State, at_rest, simulate, state_after
+from sites.plant import State, at_rest, simulate, state_after
 from sites.quotes import LIMITED_BY
 from sites.roster import Rows
 from sites.rows import Plants, plants
 from sites.tally import Sums, Tally, add, broken, sums, tank_cause
-from sites.units import Bools, Floats, Ints
+from sites.units import Bools, Floats, Ints, total
 
 LEAST_KW = 1.0
 """A candidate gives at least this much in every interval of its window, else its machines are as good as off."""
@@ -30,6 +29,8 @@ UNSURE_FRACTION = 0.02
 OVERHELD_FRACTION = 0.02
 """Share of a bound tank's inventory at window start that may be too high (ground.py), else it is refused: what such
 a tank gives goes with what it holds."""
+NEARLY_FULL = 0.95
+"""A charge that comes to nothing with tanks this full at its end is held up by them, not by the machines."""
 LOW_TOLERANCE = 0.01
 """Share by which the other inventory's kW may lie below the best's."""
 
@@ -63,7 +64,8 @@ def begin(base: Ground, offered: Candidates, usual: Course, first: int, inventor
     held = usual.inventory_kwh_th[site, :, first - 1] if first else inventory[site]
     charging = usual.charging[site, first - 1] if first else None
     state = at_rest(np.array(held), charging)
-    return Trial(rows, stages, offered.start, offered.end, state, sums(usual.power_kw[site]))
+    made_to = np.asarray(offered.stages.charge.any(axis=1), dtype=np.bool_)
+    return Trial(rows, stages, offered.start, offered.end, state, sums(usual.power_kw[site], made_to))
 
 
 @dataclass(frozen=True)
@@ -142,8 +144,8 @@ class _Runs:
         over = (self.base.overstated_kw[trial.rows.site, first:last] * inside).sum(axis=1)
         unsure = over > UNSURE_FRACTION * np.maximum((expected * inside).sum(axis=1), 0.0)
         if self.direction is Direction.ABSORB:
-            held, size = storage.held(trial.rows, trial.state.inventory_kwh_th), trial.rows.roster.tanks
-            full = held >= STOP_CHARGE_AT * storage.held(trial.rows, size.capacity_kwh_th)
+            size = trial.rows.roster.tanks.capacity_kwh_th
+            full = trial.sums.at_end >= NEARLY_FULL * total(size)
             reasons = ((small & full, "full"), (small, "already_on"), (found > 0, ""), (less, "full"))
         else:
             less = less | self._overheld(trial, tally)

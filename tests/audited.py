@@ -1,7 +1,8 @@
 """Makes an event record by the real rooms on made-up sites: quoted, allocated, written, settled twice.
 
-Six sites, one per strategy, in UTC, event Wed 2026-07-15 16:00 to 19:00, called at 13:00. Also re-seals a record
-after a change, so that only the audit can tell.
+Six sites, one per strategy, in UTC, event Wed 2026-07-15 16:00 to 19:00, called at 13:00; a shed, or on a mild day
+with tanks two fifths full and a negative price an absorb. Also re-seals a record after a change, so that only the
+audit can tell.
 """
 
 import json
@@ -26,6 +27,7 @@ from fleet.statement import statements
 from fleet.steps import steps
 from fleet.tables import stable
 from sites import blocks
+from sites.direction import Direction
 from sites.outlook import Outlook
 from sites.quote import Quoted, ground, quote
 from sites.roster import CHILLER_KINDS, LAYOUTS, STRATEGIES, TANK_KINDS, Roster, Standing
@@ -49,7 +51,7 @@ SETTINGS = {
 }
 NODE_OF = ("north", "north", "east", "grid", "north", "north")
 LIMIT_KW = {"grid": np.nan, "north": 1310.0, "east": 260.0}
-ASKED_KW = (100.0,) * 5 + (60.0,) * 7
+ASKED_KW = {"shed": (100.0,) * 5 + (60.0,) * 7, "absorb": (150.0,) * 5 + (100.0,) * 7}
 RULE_OF = ("ten_of_ten", "high_five_of_ten", "meter_before_after", "ten_of_ten", "ten_of_ten", "ten_of_ten")
 CALLS = (
     ("EV-0", "real", "2026-06-24T16:00+00:00", "2026-06-24T18:00+00:00"),
@@ -57,14 +59,16 @@ CALLS = (
 )
 
 
-def made_event(home: Path, settlements: int = 2) -> Path:
+def made_event(home: Path, settlements: int = 2, direction: str = "shed") -> Path:
     """An event below `home`, settled; returns its folder."""
     roster = made_roster(delivery_factor=0.97, held_back_kwh_th=150.0, critical_kw_th=40.0)
     roster = replace(roster, buildings=replace(roster.buildings, node_id=np.array(NODE_OF, dtype=object)))
     outlook, standing = made_outlook(roster), made_standing(roster)
+    if direction == "absorb":
+        outlook, standing = sunny(outlook), made_standing(roster, 0.4)
     standing.chiller_available[2, 2] = False
     base = ground(roster, outlook, standing)
-    quoted = quote(base, _terms(outlook, roster.count))
+    quoted = quote(base, _terms(outlook, roster.count), Direction(direction))
     frozen = frozen_frames(roster, outlook)
     tree = feeders.feeders(
         frozen["nodes"],
@@ -74,13 +78,19 @@ def made_event(home: Path, settlements: int = 2) -> Path:
         roster.buildings.site_id,
     )
     room = feeders.headroom_kw(tree, base.usual.power_kw + outlook.rest_kw)
-    ask = request(EVENT_ID, "grid", "shed", "real", AT, START, END, list(ASKED_KW), 15)
+    ask = request(EVENT_ID, "grid", direction, "real", AT, START, END, list(ASKED_KW[direction]), 15)
     found = _allocated(quoted, tree, room.kw, ask, roster, outlook)
     assert found.met
     choice = event.chosen(ask, quoted, tree, found.chosen)
     frames = event.frames(choice)
     frames["steps"] = steps(
-        frames["windows"], frozen["chillers"], frozen["sites"], frames["machines"], frames["tanks"], 15
+        frames["windows"],
+        frozen["chillers"],
+        frozen["sites"],
+        frames["machines"],
+        frames["tanks"],
+        15,
+        direction,
     )
     frames["prices"] = prices_frame(choice, found)
     records.write_call(home, EVENT_ID, frames, _proof(quoted, found), frozen, frozen_json(roster, standing))
@@ -89,6 +99,14 @@ def made_event(home: Path, settlements: int = 2) -> Path:
     for revision in range(1, settlements + 1):
         _settle(home, revision)
     return path
+
+
+def sunny(outlook: Outlook) -> Outlook:
+    """The same day mild and with a negative price while the event lasts."""
+    price = outlook.price_per_kwh.copy()
+    price[:, outlook.clock.index(START) : outlook.clock.index(END)] = -0.04
+    load = 0.45 * outlook.cooling_load_kw_th
+    return replace(outlook, cooling_load_kw_th=load, price_per_kwh=price)
 
 
 def _terms(outlook: Outlook, count: int) -> blocks.Terms:
@@ -253,8 +271,9 @@ def frozen_json(roster: Roster, standing: Standing) -> dict[str, dict[str, Any]]
 
 
 def readings(home: Path, revision: int) -> pd.DataFrame:
-    """Meters of the called sites: usual-like days with noise, a shed on the event's day, two gaps."""
+    """Meters of the called sites: usual-like days with noise, the event on its day, two gaps."""
     record = records.read_call(home, EVENT_ID)
+    sign = Direction(record.frames["request"]["direction"].iloc[0]).sign
     usual = record.frames["usual"].set_index(["site_id", "interval_start"])
     starts = pd.date_range("2026-06-01", "2026-07-17", freq="15min", tz="UTC", inclusive="left")
     rng = np.random.default_rng(7)
@@ -269,7 +288,7 @@ def readings(home: Path, revision: int) -> pd.DataFrame:
         course = record.frames["intervals"]
         course = course[course["site_id"] == site]
         at = starts.get_indexer(pd.DatetimeIndex(course["interval_start"]))
-        kw[at] -= course["committed_kw"].to_numpy() * 0.9
+        kw[at] += sign * course["committed_kw"].to_numpy() * 0.9
         frames.append(
             pd.DataFrame({"meter_id": f"M-{site}", "interval_start": starts, "kw": kw, "quality": "measured"})
         )

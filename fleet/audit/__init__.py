@@ -14,6 +14,7 @@ from typing import TypeVar
 import pandas as pd
 
 from fleet.audit import (
+    charging,
     courses,
     limits,
     network,
@@ -43,6 +44,7 @@ CALL_RULES: Sequence[Rule] = (
     *windows.RULES,
     *limits.RULES,
     *courses.RULES,
+    *charging.RULES,
     *tanks.RULES,
     *zones.RULES,
     *quotes.RULES,

@@ -72,6 +72,18 @@ class Case:
     """(U,) the quote's limit on what stays on"""
 
     @property
+    def absorb(self) -> bool:
+        """The event's direction is absorb: tanks are made to charge and no machine is stopped."""
+        return self.evidence.sign > 0.0
+
+    @property
+    def can_charge(self) -> Bools:
+        """(A,) machines in service that could charge their site's tanks: where one holds ice, ice makers only."""
+        makes_ice = self.chillers.makes_ice[:, 0]
+        able: Bools = self.machine_up & (makes_ice | ~self.ice_site[self.machine_site])
+        return able
+
+    @property
     def ready_kw_th(self) -> Floats:
         """(U, T) direct cooling that each machine of a called site may give under its load limit."""
         limit = self.evidence.grid("machines", "load_limit_fraction")

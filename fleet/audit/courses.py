@@ -108,8 +108,6 @@ def machine_capability(case: Case, found: Findings) -> None:
     )
     warm = ~ice & case.ice_site[book.machines.site][:, None] & (charge > 0.0)
     found.wrong("ice making", sheet, "making_ice", warm.ravel(), "false", "true while it charges an ice tank")
-    outside = book.inside()[case.machine_row] & (charge > 0.0)
-    found.wrong("no charging in the window", sheet, "charge_kw_th", outside.ravel(), charge.ravel(), "0")
 
 
 def machine_power(case: Case, found: Findings) -> None:

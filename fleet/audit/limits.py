@@ -10,10 +10,10 @@ import numpy as np
 import pandas as pd
 
 from fleet.audit.case import Case
-from fleet.audit.evidence import utc_naive
+from fleet.audit.evidence import available, utc_naive
 from fleet.audit.findings import Findings
 from fleet.audit.quotes import DEMAND_LIMITS
-from sites.units import Bools, Floats
+from sites.units import Bools, Floats, Ints
 
 COUNTED: Final = ("real", "test")
 WEEK: Final = pd.Timedelta(days=7)
@@ -51,8 +51,9 @@ def call_limits(case: Case, found: Findings) -> None:
 def candidates_tried(case: Case, found: Findings) -> None:
     """How many windows, machines and limits the terms of the call let each site be tried for.
 
-    Blocks [a, b) of the event from the site's notice on, at least as long as site and stopped machines need, at most
-    as the hours left allow; the last k machines in service off, for each k; three limits where others stay on.
+    Blocks [a, b) of the event from the site's notice on, at least as long as site and machines need, at most as the
+    hours left allow. Shed: the last k machines in service off, for each k; three limits where others stay on. Absorb:
+    sites with a tank in service and machines that can charge it; three limits.
     """
     book = case.evidence
     step = book.clock.step_minutes
@@ -69,17 +70,17 @@ def candidates_tried(case: Case, found: Findings) -> None:
     edges = np.arange(book.event_from, book.event_to + 1)
     first, last = (edge.ravel() for edge in np.meshgrid(edges, edges, indexing="ij"))
     total = 0.0
-    for site, off, rests, startable in _stops(case):
-        shortest = np.maximum(least[site], rests)
+    for site, offered, minutes, startable in [_charges(case)] if case.absorb else _stops(case):
+        shortest = np.maximum(least[site], np.ceil(minutes / step))
         long_enough = (last - first >= shortest[:, None]) & (last - first <= longest[site][:, None])
         blocks = (long_enough & (first >= soonest[site][:, None])).sum(axis=1)
-        total += float((blocks * off * (free[site] & startable)).sum())
+        total += float((blocks * offered * (free[site] & startable)).sum())
     told = book.record.proof["candidates_tried"]
     found.value("candidates tried", f"{book.folder}/proof.json", "candidates_tried", told, total)
 
 
 def _stops(case: Case) -> Any:
-    """For each k: sites (S,) with k machines in service, limits offered (S,), intervals their rest takes, startable."""
+    """For each k: sites (S,) with k machines in service, limits offered (S,), minutes their rest takes, startable."""
     facts = pd.DataFrame(
         {
             "site": case.machine_site,
@@ -92,9 +93,32 @@ def _stops(case: Case) -> Any:
     for k in range(1, int(facts["count"].max() if len(facts) else 0) + 1):
         last = facts[(facts["from_end"] <= k) & (facts["count"] >= k)].groupby("site")
         of = last.agg(minutes=("minutes", "max"), starts=("starts", "min"), count=("count", "first"))
-        rests = np.ceil(of["minutes"].to_numpy() / case.evidence.clock.step_minutes)
         offered = np.where(of["count"].to_numpy() > k, len(DEMAND_LIMITS), 1)
-        yield of.index.to_numpy(dtype=np.int64), offered, rests, of["starts"].to_numpy() >= 1.0
+        yield (
+            of.index.to_numpy(dtype=np.int64),
+            offered,
+            of["minutes"].to_numpy(),
+            of["starts"].to_numpy() >= 1.0,
+        )
+
+
+def _charges(case: Case) -> tuple[Ints, Ints, Floats, Bools]:
+    """Absorb: sites (S,) that could charge a tank, limits offered (S,), least minutes their machines run, startable."""
+    able = case.can_charge
+    facts = pd.DataFrame(
+        {
+            "site": case.machine_site,
+            "minutes": case.chillers.min_on_minutes[:, 0],
+            "starts": case.chillers.starts_left[:, 0],
+        }
+    )[able]
+    book = case.evidence
+    tank_up = available(book.tank_facts, "tank_id", book.standing)
+    facts = facts[facts["site"].isin(case.tank_site[tank_up])]
+    of = facts.groupby("site").agg(minutes=("minutes", "max"), starts=("starts", "min"))
+    site = of.index.to_numpy(dtype=np.int64)
+    offered = np.full(site.size, len(DEMAND_LIMITS), dtype=np.int64)
+    return site, offered, of["minutes"].to_numpy(dtype=np.float64), of["starts"].to_numpy() >= 1.0
 
 
 def _left(most: Floats, used: Floats) -> Floats:

@@ -17,8 +17,8 @@ from sites.units import Floats, Ints
 PARTS: Final = ("before", "during", "recovery", "demand", "fee", "comfort")
 DEMAND_LIMITS: Final = (1.0, 0.75, 0.5)
 """Demand limits that are offered to machines that stay on."""
-LEAST_SHED_KW: Final = 1.0
-"""A candidate sheds at least this in every interval of its window, else its machines are as good as off."""
+LEAST_KW: Final = 1.0
+"""A candidate gives at least this in every interval of its window."""
 
 
 def ids(case: Case, found: Findings) -> None:
@@ -40,7 +40,8 @@ def ids(case: Case, found: Findings) -> None:
 
 
 def machines(case: Case, found: Findings) -> None:
-    """Machines of a candidate are the last in loading order of those in service; limits are those offered."""
+    """Machines of a candidate are the last in loading order of those in service, of an absorb none; limits are those
+    offered."""
     book, sheet = case.evidence, case.evidence.sheets["quotes"]
     limit = sheet.numbers("load_limit_fraction")
     offered = np.isclose(limit[:, None], np.array(DEMAND_LIMITS)[None, :], rtol=0.0, atol=1e-12).any(axis=1)
@@ -48,16 +49,19 @@ def machines(case: Case, found: Findings) -> None:
     up = book.machine_facts[case.machine_up].groupby("site_id", sort=False)["chiller_id"].agg(list)
     ready = sheet.frame["site_id"].map(up)
     pairs = zip(sheet.frame["chiller_ids"], ready, strict=True)
-    right = np.array(
-        [len(off) > 0 and list(off) == _last(there, len(off)) for off, there in pairs], dtype=np.bool_
-    )
+    if case.absorb:
+        right = np.array([len(off) == 0 for off, _ in pairs], dtype=np.bool_)
+    else:
+        right = np.array(
+            [len(off) > 0 and list(off) == _last(there, len(off)) for off, there in pairs], dtype=np.bool_
+        )
     found.wrong(
         "quoted machines",
         sheet,
         "chiller_ids",
         ~right,
         sheet.frame["chiller_ids"].to_numpy(),
-        "the last of those up",
+        "none" if case.absorb else "the last of those up",
     )
 
 
@@ -92,9 +96,7 @@ def windows(case: Case, found: Findings) -> None:
     in_event = np.arange(book.event_from, book.event_to)[None, :]
     inside = (in_event >= start[:, None]) & (in_event < end[:, None])
     least = np.where(inside, expected, np.inf).min(axis=1, initial=np.inf)
-    found.wrong(
-        "least kW", sheet, "expected_kw", least < LEAST_SHED_KW - 1e-9, least, f"{LEAST_SHED_KW:g} or more"
-    )
+    found.wrong("least kW", sheet, "expected_kw", least < LEAST_KW - 1e-9, least, f"{LEAST_KW:g} or more")
 
 
 def expected_kw(case: Case, found: Findings) -> None:
@@ -164,7 +166,8 @@ def unmet_and_reason(case: Case, found: Findings) -> None:
 
 
 def low_level(case: Case, found: Findings) -> None:
-    """Candidates of a site that start together start from one low inventory, and the window repeats it."""
+    """Candidates of a site that start together start from one low inventory (of an absorb: one high), and the window
+    repeats it."""
     sheet = case.evidence.sheets["quotes"]
     if "inventory_low_start_kwh_th" not in sheet.frame.columns:
         return

@@ -20,7 +20,10 @@ def steps(case: Case, found: Findings) -> None:
     """Exactly the steps that follow from the courses, each once, at its time and with its value."""
     sheet = case.evidence.sheets["steps"]
     frame = sheet.frame
-    wanted = pd.concat([_machine_steps(case), _restarts(case), _tank_steps(case)], ignore_index=True)
+    parts = [_machine_steps(case), _restarts(case), _tank_steps(case)]
+    if case.absorb:
+        parts += [_charge_starts(case), _charged_tanks(case)]
+    wanted = pd.concat(parts, ignore_index=True)
     twice = frame.duplicated(KEYS, keep=False).to_numpy()
     found.wrong("steps", sheet, "action", twice, frame["action"].to_numpy(), "each action once a unit")
     target = frame[KEYS].merge(wanted.drop_duplicates(KEYS), on=KEYS, how="left", indicator=True)
@@ -90,10 +93,11 @@ def _machine_steps(case: Case) -> pd.DataFrame:
     off_at = stamps[np.argmax(limit == 0.0, axis=1)]
     on = lowest > 0.0
     none = np.full(lowest.size, np.nan)
+    idle = on & ~runs & (not case.absorb)
     parts = [
         _rows(case, lowest == 0.0, "off", off_at, none),
-        _rows(case, on & ~runs, "inhibit", start, none),
-        _rows(case, on & ~runs, "inhibit_removed", end, none),
+        _rows(case, idle, "inhibit", start, none),
+        _rows(case, idle, "inhibit_removed", end, none),
         _rows(case, on & runs & (lowest < 1.0), "demand_limit", start, lowest),
         _rows(case, on & runs & (lowest < 1.0), "demand_limit_removed", end, np.ones(lowest.size)),
     ]
@@ -158,9 +162,41 @@ def _tank_steps(case: Case) -> pd.DataFrame:
     last = pd.Timestamp(book.clock.end).tz_localize("UTC")
     back = frame["full_again_at"].astype("datetime64[us, UTC]").fillna(last)
     full = frame[ends == back].assign(at=ends[ends == back], value=lambda rows: rows["inventory_kwh_th"])
-    return pd.concat(
-        [begin.assign(action="recharge_may_start"), full.assign(action="full_by")], ignore_index=True
-    )[COLUMNS]
+    by = "usual_by" if case.absorb else "full_by"
+    return pd.concat([begin.assign(action="recharge_may_start"), full.assign(action=by)], ignore_index=True)[
+        COLUMNS
+    ]
+
+
+def _charge_starts(case: Case) -> pd.DataFrame:
+    """Absorb: the first interval of the window in which a machine charges, with its highest rate there."""
+    book = case.evidence
+    charge = np.where(book.inside()[case.machine_row], book.grid("machines", "charge_kw_th"), 0.0)
+    most = charge.max(axis=1, initial=0.0)
+    stamps = pd.DatetimeIndex(book.clock.starts).tz_localize("UTC")
+    first = stamps[np.argmax(charge > RUNS_KW_TH, axis=1)]
+    return _rows(case, most > RUNS_KW_TH, "charge_start", first, most)
+
+
+def _charged_tanks(case: Case) -> pd.DataFrame:
+    """Absorb: the level each charged tank is brought to by the window's end; all tanks where none is charged."""
+    book = case.evidence
+    windows = book.record.frames["windows"]
+    charge = np.where(book.inside()[case.tank_row], book.grid("tanks", "charge_kw_th"), 0.0)
+    filled = charge.max(axis=1, initial=0.0) > RUNS_KW_TH
+    some = np.bincount(case.tank_row, filled, book.called.size) > 0
+    start, end = (windows[name].to_numpy()[case.tank_row] for name in ("window_start", "window_end"))
+    _, last = book.window()
+    level = book.grid("tanks", "inventory_kwh_th")[np.arange(filled.size), last[case.tank_row] - 1]
+    frame = pd.DataFrame({"site_id": book.site_id[book.tanks.site], "unit_id": book.tanks.unit_id})
+    frame = frame.assign(
+        start=pd.Series(start).astype("datetime64[us, UTC]"), end=pd.Series(end).astype("datetime64[us, UTC]")
+    )
+    to = frame.assign(action="charge_to", at=frame["start"], value=level)
+    back = frame.assign(action="charge_end", at=frame["end"], value=np.nan)
+    named = filled | ~some[case.tank_row]
+    both: pd.DataFrame = pd.concat([to[named], back[named]], ignore_index=True)
+    return both[COLUMNS]
 
 
 RULES = (steps, restart_order)

@@ -67,13 +67,8 @@ def discharge_limit(case: Case, found: Findings) -> None:
 def charge_limit(case: Case, found: Findings) -> None:
     """Charge within the limit at end-of-interval inventory; nothing into a tank out of service."""
     book, sheet = case.evidence, case.evidence.sheets["tanks"]
-    own = case.tanks.take(case.own_tanks)
-    brine = book.fact("charge_brine_c", book.tanks.site)
-    lmtd = tank.lmtd_k(-brine, np.maximum(-brine - RETURN_GLIDE_K, LEAST_BELOW_FREEZING_K))
-    knots = tank.knots_kw_th(
-        tank.charge_curves(own), own.capacity_kwh_th, own.charge_limit_kw_th, lmtd[:, None]
-    )
-    limit = tank.limit_kw_th(book.grid("tanks", "inventory_kwh_th"), own.capacity_kwh_th, knots)
+    capacity = case.tanks.capacity_kwh_th[case.own_tanks]
+    limit = tank.limit_kw_th(book.grid("tanks", "inventory_kwh_th"), capacity, charge_knots(case))
     limit = np.where(book.tanks.available[:, None], limit, 0.0)
     found.most("charge within its limit", sheet, "charge_kw_th", limit.ravel(), own_scale(case))
 
@@ -159,6 +154,16 @@ def own_scale(case: Case) -> Floats:
     """(U x T) the size of what moves a tank's limit: its inventory over a step."""
     capacity = case.tanks.capacity_kwh_th[case.own_tanks, 0] / case.evidence.clock.step_h
     return np.repeat(capacity, case.evidence.clock.count)
+
+
+def charge_knots(case: Case) -> Floats:
+    """Charge curves (U, 1, knot) at the frozen brine temperature."""
+    own = case.tanks.take(case.own_tanks)
+    brine = case.evidence.fact("charge_brine_c", case.evidence.tanks.site)
+    lmtd = tank.lmtd_k(-brine, np.maximum(-brine - RETURN_GLIDE_K, LEAST_BELOW_FREEZING_K))
+    return tank.knots_kw_th(
+        tank.charge_curves(own), own.capacity_kwh_th, own.charge_limit_kw_th, lmtd[:, None]
+    )
 
 
 def _discharge_knots(case: Case) -> Floats:

@@ -14,7 +14,7 @@ from fleet.audit.evidence import utc_naive
 from fleet.audit.findings import Findings, allowed
 from fleet.audit.quotes import lists
 from fleet.schema import choices
-from sites.units import Floats
+from sites.units import Bools, Floats
 
 FULL_AGAIN_FRACTION: Final = 1e-3
 """Full again: within this share of capacity of the usual case, or above it."""
@@ -126,17 +126,27 @@ def window_terms(case: Case, found: Findings) -> None:
     notice = called_at + _minutes(book.fact("notice_minutes", book.called))
     found.wrong("notice", sheet, "window_start", start < notice, start, notice)
     least = book.fact("minimum_window_minutes", book.called)
-    off_min = np.zeros(book.called.size)
-    minutes = case.chillers.min_off_minutes[case.own_machines, 0]
-    np.maximum.at(off_min, case.machine_row[case.off], minutes[case.off])
-    for rule, needed in (("minimum window", least), ("minimum off time", off_min)):
+    switched, minutes = _switched(case)
+    longest = np.zeros(book.called.size)
+    np.maximum.at(longest, case.machine_row[switched], minutes[switched])
+    machine_rule = "minimum on time" if case.absorb else "minimum off time"
+    for rule, needed in (("minimum window", least), (machine_rule, longest)):
         soonest = start + _minutes(needed)
         found.wrong(rule, sheet, "window_end", end < soonest, end, soonest)
     starts_left = case.chillers.starts_left[case.own_machines, 0]
-    none_left = np.bincount(case.machine_row[case.off & (starts_left < 1)], minlength=book.called.size) > 0
+    none_left = np.bincount(case.machine_row[switched & (starts_left < 1)], minlength=book.called.size) > 0
     found.wrong(
         "starts left", sheet, "chiller_ids", none_left, "a machine with no start left", "one start each"
     )
+
+
+def _switched(case: Case) -> tuple[Bools, Floats]:
+    """Machines (U,) that an order stops, or of an absorb starts (those in service that can charge), and the least
+    minutes that each then stays so."""
+    own = case.own_machines
+    if not case.absorb:
+        return case.off, case.chillers.min_off_minutes[own, 0]
+    return case.can_charge[own], case.chillers.min_on_minutes[own, 0]
 
 
 def machines_named(case: Case, found: Findings) -> None:
@@ -180,19 +190,22 @@ def window_numbers(case: Case, found: Findings) -> None:
 
 
 def full_again(case: Case, found: Findings, held: Floats, usual: Floats) -> None:
-    """full_again_at: the first interval end after the window at which the inventory is back; none if never."""
+    """full_again_at: the first interval end after the window at which the inventory is back at the usual case's, from
+    below after a shed, from above after an absorb; none if never."""
     book, sheet = case.evidence, case.evidence.sheets["windows"]
     _, end = book.window()
     capacity = np.zeros(book.called.size)
     np.add.at(capacity, case.tank_row, case.tanks.capacity_kwh_th[case.own_tanks, 0])
-    line = usual - FULL_AGAIN_FRACTION * capacity[:, None]
+    # After an absorb the tank comes back to the usual level from above.
+    above = -1.0 if case.absorb else 1.0
+    line = usual - above * FULL_AGAIN_FRACTION * capacity[:, None]
     after = np.arange(book.clock.count)[None, :] >= end[:, None]
     slack = allowed(held, line, capacity[:, None])
     ends = np.append(
         utc_naive(book.record.frames["intervals"]["interval_start"])[: book.clock.count] + book.clock.step,
         np.datetime64("NaT", "us"),
     )
-    first = [_first(after & (held >= line + sign * slack)) for sign in (-1.0, 1.0)]
+    first = [_first(after & (above * (held - line) >= sign * slack)) for sign in (-1.0, 1.0)]
     told = utc_naive(sheet.frame["full_again_at"])
     times = [ends[at] for at in first]
     alike = [(told == time) | (np.isnat(told) & np.isnat(time)) for time in times]
