@@ -14,10 +14,7 @@ from sites.units import Bools, Floats, Ints, Times
 ZONE: Final = "Europe/Athens"
 HISTORY_FROM: Final = "2026-02-12"
 EVENT_DAY: Final = "2026-07-15"
-"""A hot Wednesday."""
-CALL_HOUR: Final = 13
-EVENT_FROM_HOUR: Final = 16
-EVENT_TO_HOUR: Final = 19
+"""A Wednesday; how hot, the scene says."""
 STEP_MINUTES: Final = 15
 CYCLE_START: Final = "2026-07-01"
 CYCLE_END: Final = "2026-07-31"
@@ -31,6 +28,25 @@ HOLIDAYS: Final = (
 )
 TANK_OUT_FROM: Final = "2026-07-06"
 TANK_OUT_DAYS: Final = 7
+
+
+@dataclass(frozen=True)
+class Scene:
+    """Local hours of a call and its event, the day's warmth, and what energy costs around midday of that day."""
+
+    call_hour: int
+    from_hour: int
+    to_hour: int
+    peak_c: float
+    """highest dry bulb of the day, about"""
+    sun_price_per_kwh: float | None
+    """None: as on any other day"""
+
+
+EVENING: Final = Scene(13, 16, 19, 36.0, None)
+"""A peak at the end of a hot afternoon."""
+MIDDAY: Final = Scene(9, 12, 15, 32.0, -0.03)
+"""A summer day like others, and more sun than the grid can carry away: who takes energy then is paid for it."""
 
 
 @dataclass(frozen=True)

@@ -74,7 +74,9 @@ def play(
     frame = _with_gap(folder, frame, gap, windows)
     write_parquet(frame, out / READINGS)
     write_parquet(_truth(days, with_event, without), out / ".truth" / "truth.parquet")
-    write_parquet(windows[["site_id", "window_start", "window_end"]], out / ".truth" / "windows.parquet")
+    sign = 1.0 if (steps["action"] == "charge_to").any() else -1.0
+    spans = windows[["site_id", "window_start", "window_end"]].assign(sign=sign)
+    write_parquet(spans, out / ".truth" / "windows.parquet")
     late = days.hidden[days.hidden["site_id"].isin(windows["site_id"]) & (days.hidden["late_minutes"] > 0)]
     tell("done", 1.0)
     return Played(
@@ -84,7 +86,7 @@ def play(
 
 
 def true_kwh(out: Path) -> tuple["pd.Series[Any]", float]:
-    """Energy [kWh] each called site really shed in its window (index site_id), and the sum."""
+    """Energy [kWh] each called site really shed (or absorbed) in its window (index site_id), and the sum."""
     frame = pd.read_parquet(out / ".truth" / "truth.parquet")
     windows = pd.read_parquet(out / ".truth" / "windows.parquet")
     joined = frame.merge(windows, on="site_id")
@@ -92,8 +94,8 @@ def true_kwh(out: Path) -> tuple["pd.Series[Any]", float]:
         joined["interval_start"] < joined["window_end"]
     )
     joined = joined[inside]
-    shed = (joined["without_event_kw"] - joined["with_event_kw"]) * calendar.STEP_MINUTES / 60.0
-    each = shed.groupby(joined["site_id"]).sum().rename("shed_kwh")
+    change = (joined["with_event_kw"] - joined["without_event_kw"]) * calendar.STEP_MINUTES / 60.0
+    each = (joined["sign"] * change).groupby(joined["site_id"]).sum().rename("true_kwh")
     return each, float(each.sum())
 
 

@@ -16,7 +16,7 @@ from demo_fleet.plant import STRATEGIES
 from demo_fleet.truth import Orders
 from sites.units import AnyArray, Bools, Ints
 
-AT_START: Final = ("off", "demand_limit", "inhibit")
+AT_START: Final = ("off", "demand_limit", "inhibit", "charge_start", "charge_to")
 """Steps that a late operator takes late."""
 FEWEST_TO_DECLINE: Final = 3
 
@@ -29,6 +29,7 @@ class Acts:
     inhibit: Bools
     hold: Bools
     force: Bools
+    charge: Bools
     declined: str
     """the site that refuses, empty where none does"""
 
@@ -37,10 +38,9 @@ class Acts:
         usual = rows < 0
         limit = np.where(usual[:, None], 1.0, self.limit[minute, rows])
         inhibit = self.inhibit[minute, rows] & ~usual[:, None]
-        staged = (limit < 1.0).any(axis=1) | inhibit.any(axis=1)
-        return Orders(
-            limit, inhibit, self.hold[minute, rows] & ~usual, self.force[minute, rows] & ~usual, staged
-        )
+        hold, force, charge = (one[minute, rows] & ~usual for one in (self.hold, self.force, self.charge))
+        staged = (limit < 1.0).any(axis=1) | inhibit.any(axis=1) | charge
+        return Orders(limit, inhibit, hold, force, staged, charge)
 
 
 def acts(days: Days, steps: pd.DataFrame, windows: pd.DataFrame) -> Acts:
@@ -61,7 +61,7 @@ def acts(days: Days, steps: pd.DataFrame, windows: pd.DataFrame) -> Acts:
         machine = np.flatnonzero(days.made.chiller_id[int(str(step.row))] == step.unit_id)
         _switch(limit, inhibit, step, machine)
     hold, force = _recharge(days, taken, windows, length)
-    return Acts(limit, inhibit, hold, force, declined)
+    return Acts(limit, inhibit, hold, force, _charge(taken, hold.shape), declined)
 
 
 def _switch(limit: AnyArray, inhibit: Bools, step: Any, machine: Ints) -> None:
@@ -78,8 +78,8 @@ def _switch(limit: AnyArray, inhibit: Bools, step: Any, machine: Ints) -> None:
 
 
 def _recharge(days: Days, taken: pd.DataFrame, windows: pd.DataFrame, length: int) -> tuple[Bools, Bools]:
-    """Minutes without charging (from a site's first step to its recharge), and with charging outside its hours
-    (from a recharge ordered outside them to their next start)."""
+    """Minutes without charging (from a site's first step, or after charging by order its end, to its recharge), and
+    with charging outside its hours (from a recharge ordered outside them to their next start)."""
     hold = np.zeros((length, len(days.site_ids)), dtype=np.bool_)
     force = hold.copy()
     ends = windows.set_index("site_id")["window_end"]
@@ -91,7 +91,8 @@ def _recharge(days: Days, taken: pd.DataFrame, windows: pd.DataFrame, length: in
         until = int((end - days.times[0]) / np.timedelta64(1, "m"))
         may = group.loc[group["action"] == "recharge_may_start", "minute"]
         start = int(may.min()) if len(may) else until
-        hold[max(int(group["minute"].min()), 0) : max(start, 0), site] = True
+        charged = bool((group["action"] == "charge_to").any())
+        hold[max(until if charged else int(group["minute"].min()), 0) : max(start, 0), site] = True
         if (
             not len(may)
             or not 0 <= start < length
@@ -102,3 +103,13 @@ def _recharge(days: Days, taken: pd.DataFrame, windows: pd.DataFrame, length: in
         first = int(np.argmax(usual)) if usual.any() else 0
         force[start : start + first, site] = True
     return hold, force
+
+
+def _charge(taken: pd.DataFrame, shape: tuple[int, ...]) -> Bools:
+    """Minutes (minute, N) in which a site's tanks are made to charge, from `charge_to` to `charge_end`."""
+    charge = np.zeros(shape, dtype=np.bool_)
+    first = taken[taken["action"] == "charge_to"].groupby("row")["minute"].min()
+    last = taken[taken["action"] == "charge_end"].groupby("row")["minute"].max()
+    for row, start, end in zip(first.index, first, last.reindex(first.index), strict=True):
+        charge[max(int(start), 0) : int(end), int(row)] = True
+    return charge

@@ -22,8 +22,8 @@ TARIFFS: Final = {
 """Price per kWh: night 22 to 7, evening 16 to 21, sun 10 to 16, day the rest."""
 
 
-def tariffs(times: Times, local: Local) -> pd.DataFrame:
-    """Hourly tariffs table."""
+def tariffs(times: Times, local: Local, sun_price_per_kwh: float | None = None) -> pd.DataFrame:
+    """Hourly tariffs table; `sun_price_per_kwh` stands for every tariff's sun price on the event's day."""
     whole = local.hour == np.floor(local.hour)
     hour = local.hour[whole]
     band = np.select(
@@ -31,12 +31,18 @@ def tariffs(times: Times, local: Local) -> pd.DataFrame:
         ["night", "evening", "sun"],
         default="day",
     )
+    today = local.day[whole] == np.datetime64(calendar.EVENT_DAY, "D").astype(np.int64)
+    given = np.where(
+        today & (band == "sun") & (sun_price_per_kwh is not None), sun_price_per_kwh or 0.0, np.nan
+    )
     frames = [
         pd.DataFrame(
             {
                 "tariff_id": tariff,
                 "interval_start": utc(times[whole]),
-                "price_per_kwh": pd.Series(band).map(prices).astype(np.float64),
+                "price_per_kwh": np.where(
+                    np.isnan(given), pd.Series(band).map(prices).to_numpy(dtype=np.float64), given
+                ),
             }
         )
         for tariff, prices in TARIFFS.items()

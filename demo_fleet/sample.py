@@ -56,6 +56,7 @@ class _World:
     """Everything drawn before any history is run."""
 
     seed: int
+    scene: calendar.Scene
     times: Times
     local: Local
     called: int
@@ -83,8 +84,10 @@ def sample(
     seed: int = 1,
     progress: Progress | None = None,
     history_days: int | None = None,
+    scene: calendar.Scene = calendar.EVENING,
 ) -> SampleFacts:
-    """Write a fleet folder of `sites` invented sites to `path`; DemoError where it is not empty.
+    """Write a fleet folder of `sites` invented sites to `path`, ready for the call of `scene`; DemoError where it is
+    not empty.
 
     The history starts on calendar.HISTORY_FROM, or `history_days` before the event (at least 3).
     """
@@ -97,7 +100,7 @@ def sample(
         first = calendar.next_day(calendar.EVENT_DAY, -max(history_days, 3))
     tell = progress or (lambda text, share: None)
     tell("buildings and plants", 0.0)
-    world, tables = _world(sites, seed, first)
+    world, tables = _world(sites, seed, first, scene)
     billed, rows, peak, last = _histories(path, world, tell)
     tell("the last hours in minutes", 0.85)
     late = _finer(path, world, last)
@@ -108,14 +111,16 @@ def sample(
     tell("done", 1.0)
     return SampleFacts(
         path=path, sites=sites, seed=seed, event_day=calendar.EVENT_DAY,
-        called_at=calendar.moment(calendar.EVENT_DAY, calendar.CALL_HOUR),
-        event_from=calendar.moment(calendar.EVENT_DAY, calendar.EVENT_FROM_HOUR),
-        event_to=calendar.moment(calendar.EVENT_DAY, calendar.EVENT_TO_HOUR),
+        called_at=calendar.moment(calendar.EVENT_DAY, scene.call_hour),
+        event_from=calendar.moment(calendar.EVENT_DAY, scene.from_hour),
+        event_to=calendar.moment(calendar.EVENT_DAY, scene.to_hour),
         node_id=network.SUBSTATIONS[0], meter_rows=rows, plant_peak_kw=float(peak),
     )  # fmt: skip
 
 
-def _world(count: int, seed: int, first: str) -> tuple[_World, dict[str, pd.DataFrame]]:
+def _world(
+    count: int, seed: int, first: str, scene: calendar.Scene
+) -> tuple[_World, dict[str, pd.DataFrame]]:
     rng = np.random.default_rng([seed, 1])
     plan = mix(count)
     sites = pd.concat([buildings(plan, rng), habits(plan)], axis=1)
@@ -129,7 +134,7 @@ def _world(count: int, seed: int, first: str) -> tuple[_World, dict[str, pd.Data
     start = calendar.midnight(first)
     end = calendar.midnight(calendar.next_day(calendar.EVENT_DAY, 2))
     times = calendar.quarters(start, end)
-    called_at = calendar.moment(calendar.EVENT_DAY, calendar.CALL_HOUR)
+    called_at = calendar.moment(calendar.EVENT_DAY, scene.call_hour)
     before = calendar.midnight(calendar.next_day(calendar.EVENT_DAY, -1))
     finer = (
         -(-int((before - start) / np.timedelta64(15, "m")) // history.QUARTERS_A_DAY) * history.QUARTERS_A_DAY
@@ -140,10 +145,10 @@ def _world(count: int, seed: int, first: str) -> tuple[_World, dict[str, pd.Data
     spare = sized.machines_kw_th * (1.0 - 1.0 / plan["chillers"].to_numpy()) / peak
     spare = np.where(sites["no_unmet"], 0.0, spare)
     world = _World(
-        seed=seed, times=times, local=calendar.local(times),
+        seed=seed, scene=scene, times=times, local=calendar.local(times),
         called=int((called_at - start) / np.timedelta64(15, "m")), finer=finer,
         made=hidden_file.made(sites, machines, vessels, hidden), sites=sites, hidden=hidden, station=station,
-        weather=weather_file.weather(times, called_at, np.random.default_rng([seed, 2])),
+        weather=weather_file.weather(times, called_at, np.random.default_rng([seed, 2]), scene.peak_c),
         city=course.city_noise(len(times), np.random.default_rng([seed, 3])),
         tank_out=int(stored[min(5, len(stored) - 1)]) if len(stored) else 0,
         machine_out=int(np.argmax(spare)),
@@ -326,7 +331,7 @@ def _write_tables(
     write_csv(network.nodes(fleet_peak, others), path / "nodes.csv")
     write_csv(network.node_loads(world.times[recent], others), path / "node_loads.csv")
     write_csv(weather_file.table(world.weather, forecast=True), path / "weather.csv")
-    write_csv(papers.tariffs(world.times, world.local), path / "tariffs.csv")
+    write_csv(papers.tariffs(world.times, world.local, world.scene.sun_price_per_kwh), path / "tariffs.csv")
     write_csv(papers.bills(ids, july_kw), path / "bills.csv")
     write_csv(
         papers.status(world.made, inventory_kwh_th, window, until, machine_out, rng), path / "status.csv"

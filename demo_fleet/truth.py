@@ -68,6 +68,8 @@ class Orders:
     """charging allowed outside its hours"""
     staged: Bools
     """in its window"""
+    charge: Bools
+    """made to charge"""
 
 
 @dataclass(frozen=True)
@@ -91,7 +93,7 @@ class Flows:
 def no_orders(plant: Plant) -> Orders:
     """A usual step."""
     shape, none = plant.capacity_kw_th.shape, np.zeros(plant.rows, dtype=np.bool_)
-    return Orders(np.ones(shape), np.zeros(shape, dtype=np.bool_), none, none, none)
+    return Orders(np.ones(shape), np.zeros(shape, dtype=np.bool_), none, none, none, none)
 
 
 def now_of(plant: Plant, drive: Drive, quarter: int) -> Now:
@@ -144,7 +146,8 @@ def _wants_charge(plant: Plant, now: Now, state: State, orders: Orders, held: Fl
     hours = now.charge_hours | orders.force
     low = state.charging | (held < CHARGE_BELOW * plant.held_kwh_th) | orders.force
     wants = np.where(plant.strategy == _LEVEL, hours | (now.load < now.level), hours & low)
-    result: Bools = wants & (held < FULL * plant.held_kwh_th) & ~orders.hold & ~orders.staged
+    wants = (wants & ~orders.hold & ~orders.staged) | orders.charge
+    result: Bools = wants & (held < FULL * plant.held_kwh_th)
     return result
 
 
@@ -197,10 +200,10 @@ def _most_into_tank(plant: Plant, state: State, step_h: float) -> Floats:
 
 def _asked_charge(plant: Plant, now: Now, orders: Orders, held: Floats) -> Floats:
     """How fast rows want to charge, (R,): as fast as they can, load levelling only up to its flat rate or as
-    fast as must be to be full in time."""
+    fast as must be to be full in time, unless it is made to."""
     due = np.where(now.charge_hours | orders.force, (plant.held_kwh_th - held) / now.charge_left_h, 0.0)
     flat = np.maximum(np.maximum(now.level - now.load, 0.0), due)
-    return np.where(plant.strategy == _LEVEL, flat, np.inf)
+    return np.where((plant.strategy == _LEVEL) & ~orders.charge, flat, np.inf)
 
 
 def _stage(plant: Plant, state: State, orders: Orders, target: Floats, capacity: Floats) -> Floats:

@@ -1,6 +1,6 @@
 """Invented weather: seasons, synoptic swings, the day's course, humidity; and the error of its forecast.
 
-Owns the true weather and what was forecast of it. The event day is made hot. Axis: interval.
+Owns the true weather and what was forecast of it. The event day is made as hot as asked. Axis: interval.
 """
 
 from dataclasses import dataclass
@@ -17,7 +17,6 @@ STATIONS: Final = ("Quay", "Upland")
 OFFSET_K: Final = (0.0, -0.8)
 DESIGN_C: Final = 38.0
 """Dry bulb of the design hour, by which the plants were sized."""
-EVENT_PEAK_C: Final = 36.0
 
 
 @dataclass(frozen=True)
@@ -54,8 +53,11 @@ def humidity_pct(dry_bulb_c: Floats, dew_point_c: Floats) -> Floats:
     return result
 
 
-def weather(times: Times, called_at: np.datetime64, rng: np.random.Generator) -> Weather:
-    """The truth at `times`, and the forecast: the truth up to the call, with a shared error after it."""
+def weather(
+    times: Times, called_at: np.datetime64, rng: np.random.Generator, peak_c: float = calendar.EVENING.peak_c
+) -> Weather:
+    """The truth at `times`, and the forecast: the truth up to the call, with a shared error after it; about `peak_c`
+    at the hottest of the event day."""
     here = calendar.local(times)
     day = here.day - here.day[0]
     to_event = here.day - np.datetime64(calendar.EVENT_DAY, "D").astype(np.int64)
@@ -68,7 +70,7 @@ def weather(times: Times, called_at: np.datetime64, rng: np.random.Generator) ->
         4.0 * np.pi * (here.hour - 15.3) / 24.0
     )
     base = mean[day] + swing[day] * (1.0 - np.exp(-((to_event / 2.5) ** 2)))
-    hot = (EVENT_PEAK_C - 1.12 * 5.6 - mean[day]) * np.exp(-((to_event / 2.2) ** 2))
+    hot = (peak_c - 1.12 * 5.6 - mean[day]) * np.exp(-((to_event / 2.2) ** 2))
     dry = base + hot + amplitude[day] * cloud[day] * course + _ar1(rng, len(times), 0.98, 0.25)
     dew = np.minimum(0.62 * (mean[day] + 1.5) - 1.5 + _ar1(rng, days, 0.7, 1.8)[day], 19.0)
     dry_all = dry[None, :] + np.array(OFFSET_K)[:, None]

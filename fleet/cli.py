@@ -43,6 +43,9 @@ def rehearse(
         Path | None, typer.Argument(metavar="[DIR]", help="A fleet folder; none: an invented fleet.")
     ] = None,
     seed: Annotated[int, typer.Option(help="Seed of the invented fleet and of the simulated meters.")] = 1,
+    midday: Annotated[
+        bool, typer.Option("--midday", help="An absorb at midday of a day with too much sun, not a shed.")
+    ] = False,
     json: Json = False,
 ) -> None:
     """Play a whole practice event: quote, call, orders, simulated meters, settlement, audit.
@@ -53,9 +56,9 @@ def rehearse(
 
     terminal = Terminal(json)
     played = (
-        rehearsal.rehearse_new(Path("rehearsal"), seed, terminal.progress)
+        rehearsal.rehearse_new(Path("rehearsal"), seed, terminal.progress, midday)
         if directory is None
-        else rehearsal.rehearse_own(directory, seed, terminal.progress)
+        else rehearsal.rehearse_own(directory, seed, terminal.progress, midday)
     )
     terminal.put(show.rehearsal_lines(played), show.rehearsal_json(played))
     if not played.audit.holds:

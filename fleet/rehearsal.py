@@ -10,7 +10,7 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 
-from demo_fleet.calendar import CALL_HOUR, EVENT_DAY, EVENT_FROM_HOUR, EVENT_TO_HOUR
+from demo_fleet.calendar import EVENING, EVENT_DAY, MIDDAY, Scene
 from demo_fleet.events import Played, play
 from demo_fleet.files import DemoError
 from demo_fleet.sample import SampleFacts
@@ -47,34 +47,41 @@ class Rehearsed:
     seconds: float
 
 
-def new_sample(directory: Path, sites: int, seed: int, progress: Progress) -> SampleFacts:
+def new_sample(
+    directory: Path, sites: int, seed: int, progress: Progress, scene: Scene = EVENING
+) -> SampleFacts:
     """Write an invented fleet folder; FleetError where the folder exists already."""
     if directory.exists():
         raise FleetError(f"{directory}: exists already; name a folder that does not, or remove it first")
-    return write_sample(directory, sites, seed, lambda text, share: progress(f"{text} ({share:.0%})"))
+    return write_sample(
+        directory, sites, seed, lambda text, share: progress(f"{text} ({share:.0%})"), scene=scene
+    )
 
 
-def rehearse_new(directory: Path, seed: int, progress: Progress) -> Rehearsed:
-    """Write an invented fleet of 40 sites to `directory` and play a practice event on it."""
+def rehearse_new(directory: Path, seed: int, progress: Progress, midday: bool = False) -> Rehearsed:
+    """Write an invented fleet of 40 sites to `directory` and play a practice event on it: a shed, or at `midday` an
+    absorb."""
     started = time.perf_counter()
-    new_sample(directory, 40, seed, progress)
+    scene = MIDDAY if midday else EVENING
+    new_sample(directory, 40, seed, progress, scene)
     zone = open_folder(directory, names=(), needed=()).settings.timezone
     ask = Ask(
-        DEMO_NODE,
-        Direction.SHED,
-        _at_hour(np.datetime64(EVENT_DAY), CALL_HOUR, zone),
-        _at_hour(np.datetime64(EVENT_DAY), EVENT_FROM_HOUR, zone),
-        _at_hour(np.datetime64(EVENT_DAY), EVENT_TO_HOUR, zone),
+        None if midday else DEMO_NODE,
+        _direction(midday),
+        _at_hour(np.datetime64(EVENT_DAY), scene.call_hour, zone),
+        _at_hour(np.datetime64(EVENT_DAY), scene.from_hour, zone),
+        _at_hour(np.datetime64(EVENT_DAY), scene.to_hour, zone),
     )
     return _play(directory, directory, ask, None, progress, started)
 
 
-def rehearse_own(fleet: Path, seed: int, progress: Progress) -> Rehearsed:
+def rehearse_own(fleet: Path, seed: int, progress: Progress, midday: bool = False) -> Rehearsed:
     """Play a practice event on a fleet folder; writes only to `fleet`/rehearsals/<n>/.
 
-    The event is 16:00 to 19:00 local on the last day whose next day the weather table still covers, called
-    as long before as the fleet's notice asks, three hours at least.
+    The event is a shed 16:00 to 19:00 local, or at `midday` an absorb 12:00 to 15:00, on the last day whose next day
+    the weather table still covers, called as long before as the fleet's notice asks, three hours at least.
     """
+    scene = MIDDAY if midday else EVENING
     started = time.perf_counter()
     folder = open_folder(fleet, without=("meters",))
     zone = folder.settings.timezone
@@ -83,11 +90,15 @@ def rehearse_own(fleet: Path, seed: int, progress: Progress) -> Rehearsed:
         raise FleetError(f"{fleet}: there is no weather table; a rehearsal needs weather over its two days")
     last = weather.max() + pd.Timedelta(minutes=folder.settings.interval_minutes)
     day = local_day(np.datetime64(last.tz_localize(None), "us"), zone) - np.timedelta64(2, "D")
-    start = _at_hour(day, EVENT_FROM_HOUR, zone)
-    wait = max(folder.settings.notice_minutes, 60.0 * (EVENT_FROM_HOUR - CALL_HOUR))
+    start = _at_hour(day, scene.from_hour, zone)
+    wait = max(folder.settings.notice_minutes, 60.0 * (scene.from_hour - scene.call_hour))
     at = start - np.timedelta64(int(wait), "m")
-    ask = Ask(None, Direction.SHED, at, start, _at_hour(day, EVENT_TO_HOUR, zone))
+    ask = Ask(None, _direction(midday), at, start, _at_hour(day, scene.to_hour, zone))
     return _play(fleet, _next_home(fleet), ask, seed, progress, started)
+
+
+def _direction(midday: bool) -> Direction:
+    return Direction.ABSORB if midday else Direction.SHED
 
 
 def _at_hour(day: np.datetime64, hour: int, zone: str) -> np.datetime64:

@@ -18,6 +18,7 @@ from fleet.schema import describe
 from fleet.settling import Settled
 from fleet.wall_time import local_text
 from fleet.words import limit_words
+from sites.direction import Direction
 from sites.quotes import COST_PARTS, LIMITED_BY
 from sites.units import KW_TH_PER_TON
 
@@ -255,6 +256,7 @@ def rehearsal_lines(played: Rehearsed) -> list[str]:
     committed, delivered = float(sites["committed_kwh"].sum()), float(sites["delivered_kwh"].sum())
     paid = sum(sites["total"], Decimal(0))
     home = played.home
+    way = " --direction absorb" if survey.ask.direction is Direction.ABSORB else ""
     return [
         f"REHEARSAL  {_event_line(survey)}",
         "",
@@ -277,7 +279,7 @@ def rehearsal_lines(played: Rehearsed) -> list[str]:
         f"  meters     {played.played.readings}",
         f"  settlement {settled.path}",
         "",
-        f"look further: shedwright quote {played.fleet} --from {_iso(survey.ask.event_from)} "
+        f"look further: shedwright quote {played.fleet}{way} --from {_iso(survey.ask.event_from)} "
         f"--to {_iso(survey.ask.event_to)} --at {_iso(survey.ask.at)}",
         f"              shedwright audit {home} {call.event_id}",
         f"done in {played.seconds:.0f} s",
