@@ -7,15 +7,19 @@ fault; 1 is a defect. Rooms are imported inside the commands, so that help needs
 import sys
 from datetime import UTC, datetime
 from pathlib import Path
-from typing import Annotated
+from typing import Annotated, Any, cast
 
 import typer
 
 from fleet.errors import CannotBeMet, FleetError, Refused
+from fleet.harmless import harmless
 from fleet.terminal import Terminal
 from sites.errors import SitesError
 
+NAME = "shedwright"
 REFUSED, NOT_MET, FAULT = 2, 3, 4
+WRONG_USAGE = cast(type[Exception], typer.BadParameter.__base__)
+"""What typer raises where options or arguments do not fit."""
 
 app = typer.Typer(
     no_args_is_help=True,
@@ -40,7 +44,7 @@ Way = Annotated[str, typer.Option("--direction", help="shed or absorb.")]
 @app.command()
 def rehearse(
     directory: Annotated[
-        Path | None, typer.Argument(metavar="[DIR]", help="A fleet folder; none: an invented fleet.")
+        Path | None, typer.Argument(metavar="DIR", help="A fleet folder; none: an invented fleet.")
     ] = None,
     seed: Annotated[int, typer.Option(help="Seed of the invented fleet and of the simulated meters.")] = 1,
     midday: Annotated[
@@ -125,7 +129,7 @@ def begin(
 @app.command()
 def columns(
     table: Annotated[
-        str | None, typer.Argument(metavar="[TABLE]", help="One table; none: all of them.")
+        str | None, typer.Argument(metavar="TABLE", help="One table; none: all of them.")
     ] = None,
     json: Json = False,
 ) -> None:
@@ -347,13 +351,26 @@ def _ask(fleet: Path, start: str, end: str, node: str | None, at: str | None, di
 def main() -> None:
     """Entry point of `shedwright`: known errors become a message on stderr and an exit code."""
     try:
-        app()
+        raise SystemExit(app(prog_name=NAME, standalone_mode=False))
+    except WRONG_USAGE as error:
+        lines, message = _usage(error)
+        _fail("\n".join(lines), {"refused": [{"message": message}]}, REFUSED)
     except CannotBeMet as error:
         _fail(str(error), {"cannot_be_met": error.detail}, NOT_MET)
     except Refused as error:
         _fail(str(error), {"refused": [vars(problem) for problem in error.problems]}, REFUSED)
     except (FleetError, SitesError) as error:
         _fail(str(error), {"refused": [{"message": str(error)}]}, REFUSED)
+
+
+def _usage(error: Any) -> tuple[list[str], str]:
+    """What to say of arguments that do not fit, as lines and in a sentence; what came is made harmless first."""
+    message = error.format_message()
+    if not sys.argv[1:]:
+        return message.split("\n"), message
+    told = [] if error.ctx is None else [error.ctx.get_usage()]
+    command = NAME if error.ctx is None else error.ctx.command_path
+    return [*told, f"Try '{command} --help' for help.", "", f"Error: {harmless(message)}"], harmless(message)
 
 
 def _fail(message: str, document: dict[str, object], code: int) -> None:

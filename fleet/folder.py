@@ -175,6 +175,7 @@ def read_meters(
     faults = read.problems + unmapped_meters(
         frame, folder.frames["meter_map"], folder.frames["sites"]["site_id"], source.name
     )
+    faults += plausible.meters_in_mega(folder.frames | {"meters": frame}, source.name)
     if faults:
         raise Refused(faults)
     base = folder.path if source.is_relative_to(folder.path) else source.parent

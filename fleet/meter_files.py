@@ -16,6 +16,7 @@ import pandas as pd
 from fleet.errors import FleetError, Problem, Refused
 from fleet.espi import RANK, read_feed
 from fleet.folder import FleetFolder, Meters, read_meters
+from fleet.plausible import meters_in_mega
 from fleet.references import unmapped_meters
 from fleet.schema import table
 from fleet.tables import read_raw
@@ -37,6 +38,7 @@ def read_meter_file(folder: FleetFolder, since: np.datetime64, until: np.datetim
     else:
         raw = read_raw(path)
         rows, notes = _table(raw, folder, path)
+        _check_unit(rows, folder, path, "kwh" if "kwh" in raw.columns else "kw")
         lengths = set(rows["seconds"])
         if not set(FORMS) & set(raw.columns) and lengths <= {folder.settings.interval_minutes * 60}:
             found = read_meters(folder, since, until, path)
@@ -53,6 +55,13 @@ def read_meter_file(folder: FleetFolder, since: np.datetime64, until: np.datetim
     with path.open("rb") as stream:
         digest = hashlib.file_digest(stream, "sha256").hexdigest()
     return Meters(frame, {path.name: digest}, [*notes, *told])
+
+
+def _check_unit(rows: pd.DataFrame, folder: FleetFolder, path: Path, column: str) -> None:
+    """Refused where a building's highest reading is no building's power: MW in a column of kW."""
+    problems = meters_in_mega(folder.frames | {"meters": rows}, path.name, column)
+    if problems:
+        raise Refused(problems)
 
 
 def _check_period(

@@ -52,7 +52,7 @@ def impossible(frames: Frames, files: Mapping[str, str]) -> list[Problem]:
         *_tiny_tanks(frames["tanks"], peak, files["tanks"]),
         *_limits(frames, files["nodes"]),
         *_loads(frames["loads"], peak, files["loads"]),
-        *_meters(frames, files["meters"]),
+        *meters_in_mega(frames, files["meters"]),
     ]
 
 
@@ -263,8 +263,8 @@ def _limits(frames: Frames, file: str) -> list[Problem]:
     ]
 
 
-def _meters(frames: Frames, file: str) -> list[Problem]:
-    """Building meters that never show a building's power."""
+def meters_in_mega(frames: Frames, file: str, column: str = "kw") -> list[Problem]:
+    """Building meters that never show a building's power; frames: meters, meter_map, chillers."""
     meters, mapped = frames["meters"], frames["meter_map"]
     if meters.empty:
         return []
@@ -281,7 +281,7 @@ def _meters(frames: Frames, file: str) -> list[Problem]:
         row = int(meters.index[meters["meter_id"] == meter][0])
         came = f"{most[meter]:.6g} as the highest of {meter}"
         wanted = f"at least {LEAST_METER_SHARE:.1%} of the rated power of its chillers, {least[meter]:.6g} kW"
-        problems.append(Problem(file, row, "kw", came, wanted, _MEGA))
+        problems.append(Problem(file, row, column, came, wanted, _MEGA))
     return problems
 
 

@@ -234,6 +234,8 @@ def event_folder(fleet_path: Path, event_id: str) -> Path:
     path = fleet_path / EVENTS / event_id
     if EVENT_ID.fullmatch(event_id) and path.is_dir():
         return path
+    if not fleet_path.is_dir():
+        raise FleetError(f"{fleet_path}: there is no such fleet folder; check the path")
     known = _event_ids(fleet_path)
     if not known:
         raise FleetError(

@@ -8,6 +8,7 @@ import re
 import tomllib
 from dataclasses import dataclass
 from difflib import get_close_matches
+from functools import cache
 from typing import Annotated, Any, Final, Literal
 from zoneinfo import available_timezones
 
@@ -64,7 +65,7 @@ class Settings(BaseModel):
     @field_validator("timezone")
     @classmethod
     def _known_zone(cls, value: str) -> str:
-        zones = available_timezones()
+        zones = _zones()
         if value not in zones:
             raise ValueError(f"an IANA time zone such as Europe/Athens; {_nearest(value, sorted(zones))}")
         return value
@@ -135,6 +136,12 @@ _EXPECTED: Final = {
     "currency": "three capital letters (ISO 4217)",
     "interval_minutes": "5, 10, 15, 30 or 60",
 }
+
+
+@cache
+def _zones() -> set[str]:
+    """Every IANA name; gathering them reads the whole zone data, some hundreds of files."""
+    return available_timezones()
 
 
 def _tables_with_times() -> list[str]:

@@ -122,7 +122,7 @@ def example_files() -> dict[str, str]:
     files = {FILE: settings_text({})}
     for name, table in tables("fleet").items():
         row = [_example(name, column) for column in table.names]
-        files[f"{name}.csv"] = csv_text([(1, table.names), (2, tuple(row))])
+        files[f"{name}.csv"] = table_text([(1, table.names), (2, tuple(row))])
     return files
 
 
@@ -138,7 +138,7 @@ def _example(table_name: str, column: str) -> str:
     return _EXAMPLES.get(column, "")
 
 
-def csv_text(rows: list[tuple[int, tuple[str, ...]]]) -> str:
+def table_text(rows: list[tuple[int, tuple[str, ...]]]) -> str:
     """CSV of rows with the line each shall stand on, rising; lines between are blank. No cell holds a line break."""
     out = io.StringIO()
     writer = csv.writer(out, lineterminator="\n")

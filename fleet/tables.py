@@ -10,6 +10,7 @@ whole Int64; flag bool, or boolean where values are missing; text, decimal and l
 import io
 from collections.abc import Callable, Sequence
 from decimal import Decimal
+from functools import cache
 from pathlib import Path
 from typing import Any, Final
 
@@ -76,7 +77,9 @@ def write_parquet(frame: pd.DataFrame, path: Path, table: Table) -> None:
         _write_coded(frame, path, table, schema)
         return
     arrays = [_array(frame[column.name], column, path) for column in table.columns]
-    pq.write_table(pa.Table.from_arrays(arrays, schema=schema), path, compression="zstd")
+    # Through a file of Python's: its errors say in plain words what the system refused, and where.
+    with path.open("wb") as out:
+        pq.write_table(pa.Table.from_arrays(arrays, schema=schema), out, compression="zstd")
 
 
 def _write_coded(frame: pd.DataFrame, path: Path, table: Table, schema: Any) -> None:
@@ -215,6 +218,12 @@ class RowGroups:
 
 def empty_frame(table: Table) -> pd.DataFrame:
     """A frame of no rows with the table's columns in the stable types."""
+    return _nothing(table).copy()
+
+
+@cache
+def _nothing(table: Table) -> pd.DataFrame:
+    """Made once a table: a command opens a folder with a dozen of them left out."""
     return pd.DataFrame({column.name: _empty(column) for column in table.columns})[list(table.names)]
 
 

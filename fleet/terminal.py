@@ -1,6 +1,6 @@
 """The terminal: progress on stderr where a person watches, text or one JSON document on stdout.
 
-Owns how things are shown, never what. Control characters in any text are made harmless here.
+Owns how things are shown, never what. Control characters in any text are made harmless on the way out.
 """
 
 import json
@@ -8,12 +8,9 @@ import os
 import sys
 from collections.abc import Iterable
 from contextlib import suppress
-from typing import Final
 
 from fleet.errors import FleetError
-
-FORMULA_SIGNS: Final = ("=", "+", "-", "@", "\t", "\r")
-"""A cell of CSV that starts with one of these is a formula to a spreadsheet."""
+from fleet.harmless import harmless
 
 
 class Terminal:
@@ -74,17 +71,6 @@ def _to_nowhere() -> None:
     """Let what is still buffered for stdout go nowhere, so that the end of the program does not trip over it."""
     with suppress(OSError, ValueError):
         os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
-
-
-def harmless(text: str) -> str:
-    """Text with control characters (escape codes too) shown as their numbers."""
-    return "".join(char if char.isprintable() else f"\\x{ord(char):02x}" for char in text)
-
-
-def csv_text(text: str) -> str:
-    """A text as a cell of CSV: harmless, and with an apostrophe before what a spreadsheet would work out."""
-    plain = harmless(text)
-    return f"'{plain}" if text.startswith(FORMULA_SIGNS) else plain
 
 
 def _plain(value: object) -> object:

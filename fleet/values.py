@@ -14,6 +14,7 @@ import numpy as np
 import pandas as pd
 
 from fleet.errors import Problem
+from fleet.harmless import text_of_csv
 from fleet.schema import Column, Table
 from fleet.tables import stable
 from fleet.wall_time import END_DAY, FIRST_DAY, SERIAL_PATTERN, not_a_serial, off_grid, read_times
@@ -133,9 +134,9 @@ def _texts(given: pd.Series, column: Column) -> tuple[pd.Series, Bools]:
 
 
 def _text(value: object) -> str | None:
-    """A cell as text: whole numbers of Parquet count as ids; None where it is neither."""
+    """A cell as text, a spreadsheet's apostrophe taken off; whole numbers of Parquet count as ids; else None."""
     if isinstance(value, str):
-        return value.strip()
+        return text_of_csv(value.strip())
     if isinstance(value, (int, np.integer)) and not isinstance(value, bool):
         return str(value)
     return None

@@ -1,31 +1,43 @@
 """Fleet folders damaged at random (a cell, a row, a column, a file), checked, quoted and called.
 
 Run as a script for a long run: `python fuzz.py FIRST COUNT` prints one line for each fault found and the sums.
-Every folder follows from its number alone, so that a fault can be looked at again.
+Every folder follows from its number alone, so that a fault can be looked at again. What is the same in every
+folder (the tables without damage) is read once and remembered; commands run as a person's do, in this process.
 """
 
 import io
+import json
 import shutil
 import sys
 import time
-from dataclasses import dataclass
+from collections import Counter
+from collections.abc import Iterator
+from contextlib import contextmanager
+from dataclasses import dataclass, replace
 from functools import cache
 from pathlib import Path
 from tempfile import mkdtemp
+from typing import Any
+from unittest import mock
 
 import numpy as np
 import pandas as pd
+from commands import Ran, run
 from fleet_folders import SETTINGS, small_tables
+from typer.main import get_command
 
-from fleet import calling, check, desk
-from fleet.errors import CannotBeMet, FleetError
-from fleet.wall_time import parse_time
-from sites.direction import Direction
-from sites.errors import SitesError
+from fleet import folder as fleet_folder
+from fleet.audit import audit
+from fleet.values import Typed
 
-ZONE = "Europe/Athens"
-KW = 60.0
+ASK = ("--from", "2026-07-14T16:00", "--to", "2026-07-14T18:00", "--at", "2026-07-14T13:00")
+CALL = ("--kw", "60", *ASK, "--event", "F")
+LOOKED_AT = 8
+"""Every eighth folder meets the other commands too: called though check refused it, or quoted, ordered, settled."""
 LONGEST_S = 60.0
+LEFT_OUT = {"meters.csv", "meters.parquet"}
+"""Files that a call does not read."""
+SAID_TO_USERS = {0: "called", 2: "refused", 3: "not met"}
 NASTY = (
     "", " ", "-1", "0", "1e308", "-1e308", "1e-300", "nan", "inf", "-inf", "1,5", "1.2.3", "abc", "true", "NULL",
     "9" * 400, "46217.5", "2026-07-14", "2026-07-14T10:00Z", "2026-07-14T10:07Z", "2026-02-30", "9999-12-31T23:00Z",
@@ -192,12 +204,43 @@ def _parquet(text: str, rng: np.random.Generator) -> bytes:
 _LEVELS = {"cell": _cell, "row": _row, "column": _column, "file": _file}
 
 
+@contextmanager
+def remembering() -> Iterator[None]:
+    """Tables whose bytes were read before are taken from memory, and nothing waits for the disk."""
+    real, known = fleet_folder._read, {}
+
+    def read(source: Path, name: str, settings: Any, span: Any = None) -> Typed:
+        if not source.is_file():
+            return real(source, name, settings, span)
+        reading = (settings.time_reading(name), settings.timezone, settings.interval_minutes)
+        key = (name, source.name, source.read_bytes(), reading, span)
+        if key not in known:
+            found = real(source, name, settings, span)
+            if source.suffix != ".csv" or source.read_text("utf-8", "replace") != texts()[source.name]:
+                return found
+            known[key] = found
+        found = known[key]
+        return replace(
+            found, frame=found.frame.copy(), problems=list(found.problems), notes=list(found.notes)
+        )
+
+    with (
+        mock.patch.object(fleet_folder, "_read", read),
+        mock.patch("os.fsync", lambda handle: None),
+        mock.patch("typer.main.get_command", cache(get_command)),
+    ):
+        yield
+
+
 def tried(number: int, base: Path) -> Outcome:
     """Damage, check, quote and call one folder; what is not a refusal, an answer or a whole record is a fault."""
     folder = base / f"{number}"
     damage = damaged(number, folder)
     started = time.perf_counter()
-    end, fault = _end(folder)
+    try:
+        end, fault = _end(folder, number)
+    except Exception as error:
+        end, fault = "defect", f"{type(error).__name__}: {error}"[:300]
     seconds = time.perf_counter() - started
     left = [path for path in folder.rglob("*") if ".making-" in path.name]
     records = list(folder.glob("events/*/call-*"))
@@ -211,38 +254,51 @@ def tried(number: int, base: Path) -> Outcome:
     return Outcome(number, damage, end, fault, seconds)
 
 
-def _end(folder: Path) -> tuple[str, str]:
+def _end(folder: Path, number: int) -> tuple[str, str]:
     """How it ended, and the fault where it ended otherwise than it may."""
-    clean = None
-    try:
-        found = check.report(folder)
-        check.lines(found)
-        clean = found.is_ok
-        if not clean:
-            return "refused by check", ""
-        at, start, end = (parse_time(f"2026-07-14T{hour}:00+03:00", ZONE) for hour in (13, 16, 18))
-        survey = desk.survey(folder, desk.Ask(None, Direction.SHED, at, start, end), asked_kw=KW)
-        calling.call(survey, KW, "F", "real", folder)
-    except CannotBeMet:
-        return "not met", ""
-    except (FleetError, SitesError) as error:
-        return ("refused" if clean else "refused by check"), "" if str(error) else "an empty message"
-    except Exception as error:
-        return "defect", f"{type(error).__name__}: {error}"[:300]
-    return "called", ""
+    closely = number % LOOKED_AT == 0
+    checked = run("check", folder, "--json")
+    if checked.code not in (0, 2) or not checked.out:
+        return "defect", f"check ended with {checked}"[:300]
+    found = json.loads(checked.out)
+    files = {problem.get("file") for problem in found.get("problems", [{}])}
+    if checked.code == 2 and not closely:
+        return "refused by check", ""
+    called = run("call", folder, *CALL)
+    if called.code not in SAID_TO_USERS or bool(called.err) == (called.code == 0):
+        return "defect", f"call ended with {called}"[:300]
+    end = SAID_TO_USERS[called.code]
+    if checked.code == 2 and not files <= LEFT_OUT:
+        return "refused by check", "" if end == "refused" else f"{end} all the same"
+    return end, _after(folder, called) if closely else ""
+
+
+def _after(folder: Path, called: Ran) -> str:
+    """The fault, if any, of the commands that stand beside a call, and of its record."""
+    ends = {"quote": run("quote", folder, *ASK).code}
+    if called.code == 0:
+        ends |= {name: run(name, folder, "F").code for name in ("orders", "settle")}
+        found = audit(folder, "F")
+        if not found.holds:
+            return f"the audit found {found.faults[:3]}"
+    return "" if set(ends.values()) <= {0, 2} else f"ended with {ends}"
 
 
 def main(first: int, count: int) -> None:
-    """A long run: one line for each fault, then how many ended how."""
-    base, ends, slowest = Path(mkdtemp(prefix="fuzz-")), {}, 0.0
-    for number in range(first, first + count):
-        outcome = tried(number, base)
-        ends[outcome.end] = ends.get(outcome.end, 0) + 1
-        slowest = max(slowest, outcome.seconds)
-        if outcome.fault:
-            print(f"{number} ({outcome.damage}): {outcome.fault}", flush=True)
+    """A long run: one line for each fault and each hundred, then how many ended how."""
+    base, ends, slowest, faults = Path(mkdtemp(prefix="fuzz-")), Counter[str](), 0.0, 0
+    with remembering():
+        for number in range(first, first + count):
+            outcome = tried(number, base)
+            ends[outcome.end] += 1
+            slowest = max(slowest, outcome.seconds)
+            if outcome.fault:
+                faults += 1
+                print(f"{number} ({outcome.damage}): {outcome.fault}", flush=True)
+            if (number + 1 - first) % 100 == 0:
+                print(f"to {number}: {dict(ends)}; {faults} faults; slowest {slowest:.1f} s", flush=True)
     base.rmdir()
-    print(f"{count} folders from {first}: {ends}; slowest {slowest:.1f} s", flush=True)
+    print(f"{count} folders from {first}: {dict(ends)}; {faults} faults; slowest {slowest:.1f} s", flush=True)
 
 
 if __name__ == "__main__":

@@ -6,17 +6,21 @@ import resource
 import shutil
 import subprocess
 import sys
+import traceback
 from pathlib import Path
+from tempfile import mkdtemp
+from unittest import mock
 
 import pandas as pd
 import pytest
-from breaking import EVENT
-from commands import ASK, called_fleet, run
+from breaking import EVENT, Breaker, breaking
+from commands import ASK, Ran, called_fleet, run
 from fleet_folders import write_small_fleet
 
 from fleet import calling, desk
 from fleet.audit import audit
 from fleet.errors import FleetError
+from fleet.lock import HOLDER, lock
 from fleet.records import events, read_call, read_settlement, verify_seals
 from fleet.schema import SCHEMA_VERSION
 from fleet.wall_time import parse_time
@@ -25,6 +29,15 @@ from sites.direction import Direction
 HERE = Path(__file__).parent
 OLD = HERE / "reference" / "records"
 MOMENTS = 50
+NOBODY = 65534
+HOLD = """
+import sys
+from pathlib import Path
+from fleet.lock import lock
+with lock(Path(sys.argv[1])):
+    print("held", flush=True)
+    sys.stdin.readline()
+"""
 COMMAND = (sys.executable, "-c", "from fleet.cli import main; main()")
 
 
@@ -112,31 +125,135 @@ def test_two_commands_at_once_write_one_event(tmp_path):
     assert len(events(fleet)["event_id"].unique()) == 1
 
 
-@pytest.mark.parametrize("largest", [1000, 9000])
-def test_a_disk_that_refuses_in_the_middle_leaves_nothing(tmp_path, largest):
-    """The system itself refuses files over a size: in a child, with real writes of Parquet and text."""
-    fleet = write_small_fleet(tmp_path / "fleet")
-    said = tmp_path / "said"
-    said.touch()
-    child = os.fork()
-    if child == 0:
+@pytest.fixture(scope="module")
+def just_called(tmp_path_factory):
+    """The small fleet with its event A called; everything that writing loads late is loaded by now."""
+    fleet = called_fleet(tmp_path_factory.mktemp("called"))
+    for later in ("orders-001", "settlement-001"):
+        shutil.rmtree(fleet / "events" / "A" / later)
+    return fleet
+
+
+WRITERS = {
+    "call": ("call", ("--kw", "10", *ASK, "--event", "E", "--purpose", "rehearsal"), "E"),
+    "orders": ("orders", ("A",), "A/orders-001"),
+    "settle": ("settle", ("A",), "A/settlement-001"),
+}
+"""Command, arguments behind the fleet, and the folder below `events` that it makes."""
+
+
+def child(work, told: Path) -> list:
+    """What `work` gives in a forked child, through the file `told`."""
+    pid = os.fork()
+    if pid == 0:
         try:
-            with said.open("w") as out:
-                resource.setrlimit(resource.RLIMIT_FSIZE, (largest, resource.RLIM_INFINITY))
-                ran = run("call", fleet, "--kw", "100", *ASK, "--event", "E")
-                resource.setrlimit(resource.RLIMIT_FSIZE, (resource.RLIM_INFINITY, resource.RLIM_INFINITY))
-                json.dump([ran.code, ran.out, ran.err], out)
+            with told.open("w") as out:
+                try:
+                    given = work()
+                except BaseException:
+                    given = traceback.format_exc()
+                json.dump(given, out)
         finally:
             os._exit(0)
-    os.waitpid(child, 0)
-    code, out, err = json.loads(said.read_text())
-    assert (code, out) == (2, "")
-    assert err.startswith(f"{fleet}/events/E: could not be written (")
+    os.waitpid(pid, 0)
+    given = json.loads(told.read_text())
+    assert isinstance(given, list), given
+    return given
+
+
+@pytest.mark.parametrize("largest", [700, 2500])
+@pytest.mark.parametrize("writer", WRITERS)
+def test_a_disk_that_refuses_in_the_middle_leaves_nothing(tmp_path, just_called, writer, largest):
+    """The system itself refuses files over a size: in a child, with real writes of Parquet and text."""
+    command, rest, made = WRITERS[writer]
+    fleet = tmp_path / "fleet"
+    shutil.copytree(just_called, fleet)
+
+    def limited() -> list:
+        resource.setrlimit(resource.RLIMIT_FSIZE, (largest, resource.RLIM_INFINITY))
+        ran = run(command, fleet, *rest)
+        resource.setrlimit(resource.RLIMIT_FSIZE, (resource.RLIM_INFINITY, resource.RLIM_INFINITY))
+        return [ran.code, ran.out, ran.err]
+
+    code, out, err = child(limited, tmp_path / "told")
+    assert (code, out) == (2, ""), (code, out, err)
+    assert err.startswith(f"{fleet}/events/{made}: could not be written (")
     assert err.endswith(
         "nothing was left behind; free some space or mend the permissions, then run the same command again\n"
     )
-    assert not (fleet / "events").exists()
-    assert run("call", fleet, "--kw", "100", *ASK, "--event", "E").code == 0
+    assert not (fleet / "events" / made).exists()
+    assert list(fleet.rglob(".making-*")) == []
+    assert run(command, fleet, *rest).code == 0
+
+
+@pytest.fixture
+def open_place():
+    """A folder that a user without rights may walk into, which those of pytest are not."""
+    place = Path(mkdtemp())
+    place.chmod(0o755)
+    yield place
+    shutil.rmtree(place)
+
+
+@pytest.mark.parametrize("where", ["beside it", "in it"])
+@pytest.mark.parametrize("writer", WRITERS)
+def test_permission_lost_in_the_middle_leaves_no_record(open_place, just_called, writer, where):
+    """Real permission bits, taken away in the middle by a child without a superuser's rights."""
+    command, rest, made = WRITERS[writer]
+    at = 9 if writer == "call" else 4
+    fleet = open_place / "fleet"
+    shutil.copytree(just_called, fleet)
+    parent = (fleet / "events" / made).parent
+
+    def taken_away() -> None:
+        for path in [parent] if where == "beside it" else parent.glob(".making-*/**/"):
+            path.chmod(0o500)
+
+    def unprivileged() -> list:
+        if os.getuid() == 0:
+            for path in (fleet, *fleet.rglob("*")):
+                os.chown(path, NOBODY, NOBODY)
+            os.setgroups([])
+            os.setgid(NOBODY)
+            os.setuid(NOBODY)
+        with breaking(Breaker(at, taken_away)):
+            ran = run(command, fleet, *rest)
+        for path in (parent, *parent.glob(".making-*/**/")):
+            path.chmod(0o700)
+        return [ran.code, ran.out, ran.err, [path.name for path in parent.glob(".making-*")]]
+
+    code, out, err, left = child(unprivileged, open_place / "told")
+    assert (code, out, len(left)) == (2, "", 1), err
+    assert err.startswith(f"{fleet}/events/{made}: could not be written (Permission denied at ")
+    assert err.endswith(
+        "a hidden making folder stays and is swept by the next run; free some space or mend the permissions, then "
+        "run the same command again\n"
+    )
+    assert not (fleet / "events" / made).exists()
+    again = run(command, fleet, *rest)
+    assert again.code == 0, again.err
+    swept = f"{(parent / left[0]).relative_to(fleet)}: left by a run that was killed; removed"
+    assert swept in again.out
+    assert list(fleet.rglob(".making-*")) == []
+
+
+def test_a_command_that_waits_in_vain_names_the_holder_and_how_long_it_waited(tmp_path, just_called):
+    fleet = tmp_path / "fleet"
+    shutil.copytree(just_called, fleet)
+    holder = subprocess.Popen(
+        [sys.executable, "-c", HOLD, str(fleet)], stdin=subprocess.PIPE, stdout=subprocess.PIPE, text=True
+    )
+    assert holder.stdout is not None
+    assert holder.stdout.readline() == "held\n"
+    held = json.loads((fleet / HOLDER).read_text())
+    with mock.patch.object(lock.__wrapped__, "__defaults__", (0.3,)):
+        told = {writer: run(command, fleet, *rest) for writer, (command, rest, _) in WRITERS.items()}
+    holder.communicate("\n")
+    said = (
+        f"{fleet}: is in use by {held['user']}, process {holder.pid} (-c {fleet}), since {held['since']}; "
+        "waited 0.3 s; run again when that has finished\n"
+    )
+    assert told == {writer: Ran(2, "", said) for writer in WRITERS}
 
 
 @pytest.mark.parametrize("version", range(1, SCHEMA_VERSION + 1))

@@ -6,6 +6,7 @@ import pty
 import re
 import subprocess
 import sys
+from typing import get_args, get_type_hints
 
 import pytest
 import typer
@@ -81,7 +82,7 @@ def test_help_has_no_escape_code_at_any_width(width, colour):
 
 
 def documents(path):
-    """Arguments of every command, with the code it ends with."""
+    """Arguments of every command but `rehearse`, whose document conftest.py reads, with the code it ends with."""
     fleet = called_fleet(path)
     bad = write_small_fleet(path / "bad", settings="name =")
     return {
@@ -95,9 +96,12 @@ def documents(path):
         "call refused": (("call", fleet, "--kw", "0", *ASK), 2),
         "orders": (("orders", fleet, "A"), 0),
         "settle": (("settle", fleet, "A"), 0),
+        "reckon": (("reckon", fleet, "A", "harbour"), 0),
         "audit": (("audit", fleet, "A"), 0),
         "sample": (("sample", path / "sample", "--sites", "1"), 0),
         "begin": (("begin", path / "begun"), 0),
+        "no such option": (("check", fleet, "--bogus"), 2),
+        "no such command": (("frob",), 2),
     }
 
 
@@ -110,6 +114,70 @@ def test_json_is_one_document_and_nothing_else_on_stdout(tmp_path):
             name,
             ran.err,
         )
+
+
+USAGE = {
+    ("frob",): ("shedwright", "[OPTIONS] COMMAND [ARGS]...", "No such command 'frob'."),
+    ("check", "x", "--jsn"): (
+        "shedwright check", "[OPTIONS] {FLEET}", "No such option: --jsn (Possible options: --json)",
+    ),
+    ("orders", "x"): ("shedwright orders", "[OPTIONS] {FLEET} {EVENT}", "Missing argument 'EVENT'."),
+    ("orders", "x", "A", "B"): (
+        "shedwright orders", "[OPTIONS] {FLEET} {EVENT}", "Got unexpected extra argument(s) (B)",
+    ),
+    ("call", "x", "--kw", "10"): ("shedwright call", "[OPTIONS] {FLEET}", "Missing option '--from'."),
+    ("call", "x", "--kw"): ("shedwright", "", "Option '--kw' requires an argument."),
+}  # fmt: skip
+
+
+@pytest.mark.parametrize("arguments", USAGE, ids=" ".join)
+def test_wrong_usage_is_told_with_the_way_to_help_and_exit_code_2(arguments):
+    command, rest, message = USAGE[arguments]
+    ran = run(*arguments)
+    assert (ran.code, ran.out) == (2, "")
+    usage = f"Usage: {command} {rest}\n" if rest else ""
+    assert ran.err == f"{usage}Try '{command} --help' for help.\n\nError: {message}\n"
+    if arguments[-1] != "--kw":
+        assert json.loads(run(*arguments, "--json").out)["refused"] == [{"message": message}]
+
+
+def options():
+    """Command and name of every option that takes a number, as the functions declare them."""
+    found = []
+    for name in NAMES:
+        for parameter, hint in get_type_hints(getattr(cli, name)).items():
+            if {int, float} & {hint, *get_args(hint)}:
+                given = COMMAND.commands[name].params  # type: ignore[attr-defined]
+                found += [(name, one.opts[0]) for one in given if one.name == parameter]
+    return found
+
+
+def test_a_number_that_is_none_is_refused_for_every_option():
+    tried = options()
+    assert {("call", "--kw"), ("sample", "--sites"), ("settle", "--again"), ("begin", "--price")} <= set(
+        tried
+    )
+    for name, option in tried:
+        ran = run(name, "x", option, "many")
+        assert (ran.code, ran.out) == (2, ""), (name, option)
+        assert f"Error: Invalid value for '{option}': " in ran.err
+
+
+@pytest.mark.parametrize(
+    "arguments",
+    [
+        ("\x1b[31mx",),
+        ("check", "--\x1b]0;t\x07"),
+        ("orders", "a", "b", "\x9b2J\nx"),
+        ("sample", "x", "--sites", "\u202e"),
+    ],
+)
+def test_arguments_that_would_steer_a_terminal_are_told_harmlessly(arguments):
+    for more in ((), ("--json",)):
+        ran = run(*arguments, *more)
+        assert ran.code == 2
+        assert not re.search("[\x00-\x09\x0b-\x1f\x7f-\x9f\u202a-\u202e]", ran.out + ran.err), ran
+        assert ran.err.count("\n") == 4, "a line's end in an argument makes no line"
 
 
 def test_a_refusal_in_json_holds_its_parts():

@@ -1,5 +1,6 @@
 """Text that would steer a terminal, a spreadsheet or a page is shown harmlessly, wherever a field lets text in."""
 
+import csv
 import json
 import re
 from pathlib import Path
@@ -9,11 +10,13 @@ import pytest
 from commands import ASK, run
 from fleet_folders import SETTINGS, small_tables, write_small_fleet
 from hypothesis import given, settings
+from made_workbook import two_sites, write_workbook
 from strategies import HOSTILE, hostile
 
+from fleet.folder import open_folder
+from fleet.harmless import csv_text, harmless, text_of_csv
 from fleet.schema import tables
 from fleet.seals import json_text
-from fleet.terminal import csv_text, harmless
 
 STEERING = re.compile("[\x00-\x09\x0b-\x1f\x7f-\x9f\u200e\u200f\u202a-\u202e\u2066-\u2069]")
 """Control characters but the line's end, and marks that turn text round."""
@@ -106,3 +109,30 @@ def test_plain_text_is_left_as_it_is(text):
     assert csv_text("a-b") == "a-b"
     if text.isprintable() and text[0] not in "=+-@":
         assert csv_text(text) == text
+
+
+def test_a_workbook_full_of_formulas_makes_csv_without_any(tmp_path):
+    """In what is suggested and in what is begun; the fleet reads the texts back as the workbook has them."""
+    rows, by = two_sites(), {"Maple Court": "-1+1", "River Annex": "@maple \u202e-"}
+    for name in ("Buildings", "Chillers", "Ice tanks"):
+        rows[name] = [[by.get(str(row[0]).strip(), row[0]), *row[1:]] if row else row for row in rows[name]]
+    rows["Buildings"][1][5] = "+cmd\x9b2J"
+    write_workbook(tmp_path / "towers.xlsx", rows)
+    suggested = run("begin", tmp_path / "mine", "--from", tmp_path / "towers.xlsx")
+    mapping = tmp_path / "towers.mapping.csv"
+    begun = run("begin", tmp_path / "mine", "--from", tmp_path / "towers.xlsx", "--mapping", mapping)
+    assert (suggested.code, begun.code) == (2, 0), begun.err
+    written = [mapping, *(tmp_path / "mine").glob("*.csv")]
+    cells = [cell for path in written for row in csv.reader(path.open(newline="")) for cell in row]
+    assert [cell for cell in cells if cell.startswith(("=", "@", "\t", "\r"))] == []
+    assert [cell for cell in cells if re.match(r"[+-](?![\d.]+$)", cell)] == [], "but for numbers"
+    assert {"'-1+1", "'@maple \\x202e-", "'=TES-#", "'+cmd\\x9b2J"} <= set(cells)
+    assert not STEERING.search("".join(cells) + suggested.out + begun.out)
+    sites = open_folder(tmp_path / "mine").frames["sites"]["site_id"]
+    assert sites.tolist() == ["-1+1", "@maple \\x202e-"]
+
+
+@given(hostile)
+def test_a_cell_of_csv_is_read_back_as_the_text_it_was(text):
+    assert text_of_csv(csv_text(text)) == harmless(text)
+    assert text_of_csv("it's") == "it's"

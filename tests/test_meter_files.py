@@ -5,6 +5,7 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 import pytest
+from commands import called_fleet, run
 from feeds import START, block, feed, meter_reading, reading_type, usage_point
 
 from fleet.errors import FleetError
@@ -13,6 +14,7 @@ from fleet.meter_files import read_meter_file
 from fleet.schema import tables
 from fleet.settings import Settings
 from fleet.tables import empty_frame
+from sites.chiller import RATED_COP_MINIMUM
 
 SINCE, UNTIL = np.datetime64("2025-07-10T00:00", "us"), np.datetime64("2025-07-11T00:00", "us")
 
@@ -120,3 +122,28 @@ def test_a_file_of_another_year_is_refused(tmp_path: Path, column: str) -> None:
         "2025-07-10T00:00:00.000000Z to before 2025-07-11T00:00:00.000000Z, the days that the settlement looks at; "
         "name the file of the event"
     )
+
+
+def test_megawatts_in_a_column_of_kw_are_refused_on_both_ways(tmp_path: Path) -> None:
+    """Held against the rated power of the chillers as the call froze them."""
+    fleet = called_fleet(tmp_path)
+    given = tmp_path / "late.csv"
+    rows = [f"ward,2026-07-14T{hour}:{minute:02d}Z" for hour in (13, 14) for minute in (0, 15, 30, 45)]
+    given.write_text("meter_id,interval_start,kw\n" + "".join(f"{row},0.87\n" for row in rows))
+    least = 0.005 * (800.0 + 900.0) / RATED_COP_MINIMUM["water_cooled_centrifugal"]
+    ran = run("settle", fleet, "A", "--meter", given)
+    assert (ran.code, ran.out) == (2, "")
+    assert ran.err == (
+        "late.csv, row 2, column kw: came 0.87 as the highest of ward; expected at least 0.5% of the rated power of "
+        f"its chillers, {least:.6g} kW; is it in MW? give it in kW\n"
+    )
+    meters = pd.read_csv(fleet / "meters.csv")
+    meters.assign(kw=meters["kw"] / 1000.0).to_csv(fleet / "meters.csv", index=False)
+    ran = run("settle", fleet, "A")
+    assert (ran.code, ran.out) == (2, "")
+    assert [line.split(" as ")[0] for line in ran.err.splitlines()] == [
+        "meters.csv, row 2, column kw: came 0.532",
+        "meters.csv, row 290, column kw: came 0.336",
+        "meters.csv, row 578, column kw: came 0.868",
+    ]
+    assert not (fleet / "events" / "A" / "settlement-002").exists()

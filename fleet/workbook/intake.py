@@ -11,9 +11,10 @@ from pathlib import Path
 from typing import Final
 
 from fleet.errors import Problem, Refused
+from fleet.harmless import csv_text
 from fleet.schema import Table
 from fleet.settings import FILE
-from fleet.starter import csv_text, settings_text
+from fleet.starter import settings_text, table_text
 from fleet.workbook.cells import Reader, reader
 from fleet.workbook.mapping import EQUALS, Line, known_tables, unit_for
 from fleet.workbook.sheets import Sheet, place
@@ -52,7 +53,7 @@ def take(book: Path, sheets: Iterable[Sheet], lines: list[Line], given: dict[str
         if name == FILE:
             settings = _settings(cells, known[name])
             continue
-        files[f"{name}.csv"], rows[name] = _filled(sheet, own, cells)
+        files[f"{name}.csv"], rows[name] = _filled(sheet, own, cells, known[name])
         if any(one.has_local for one in readers.values()):
             local.append(name)
     settings = {"name": book.stem} | settings | given
@@ -93,9 +94,13 @@ def _columns(sheet: Sheet, readers: dict[str, Reader]) -> dict[str, list[str]]:
     }
 
 
-def _filled(sheet: Sheet, own: list[Line], cells: dict[str, list[str]]) -> tuple[str, int]:
+def _filled(sheet: Sheet, own: list[Line], cells: dict[str, list[str]], table: Table) -> tuple[str, int]:
     """A table's CSV text and its number of rows; a row without any value of its columns is left blank."""
-    made_up = {line.column: line.heading[1:] for line in own if line.heading.startswith("=")}
+    made_up = {line.column: csv_text(line.heading[1:]) for line in own if line.heading.startswith("=")}
+    words = set(table.of_type("text"))
+    cells = {
+        name: [csv_text(text) for text in texts] if name in words else texts for name, texts in cells.items()
+    }
     kept = [at for at in range(len(sheet.rows)) if any(texts[at] for texts in cells.values())]
     count: Counter[str] = Counter()
     written: list[tuple[int, tuple[str, ...]]] = [(sheet.heading_row, (*made_up, *cells))]
@@ -104,7 +109,7 @@ def _filled(sheet: Sheet, own: list[Line], cells: dict[str, list[str]]) -> tuple
         count[site] += 1
         ids = (pattern.replace("#", str(count[site])) for pattern in made_up.values())
         written.append((sheet.rows[at][0], (*ids, *(texts[at] for texts in cells.values()))))
-    return csv_text(written), len(kept)
+    return table_text(written), len(kept)
 
 
 def _settings(cells: dict[str, list[str]], table: Table) -> dict[str, str | float]:

@@ -13,6 +13,7 @@ from pathlib import Path
 from typing import Final
 
 from fleet.errors import FleetError, Problem, Refused
+from fleet.harmless import csv_text, text_of_csv
 from fleet.schema import Column, Table, tables
 from fleet.settings import FILE
 from fleet.tables import read_raw
@@ -118,7 +119,7 @@ def as_text(lines: Iterable[Line]) -> str:
     out = io.StringIO()
     writer = csv.writer(out, lineterminator="\n")
     writer.writerow(_HEADINGS)
-    writer.writerows(astuple(line)[: len(_HEADINGS)] for line in lines)
+    writer.writerows([csv_text(cell) for cell in astuple(line)[: len(_HEADINGS)]] for line in lines)
     return out.getvalue()
 
 
@@ -136,7 +137,7 @@ def read_mapping(path: Path, sheets: Iterable[Sheet], book: str) -> list[Line]:
             f"{path.name}: has no column {', '.join(lacking)}; keep the heading {','.join(_HEADINGS)}"
         )
     raw["status"] = raw["status"] if "status" in raw.columns else ""
-    columns = [[str(cell) for cell in raw[name]] for name in _HEADINGS]
+    columns = [[text_of_csv(str(cell)) for cell in raw[name]] for name in _HEADINGS]
     lines = [replace(Line(*cells), row=int(row)) for row, *cells in zip(raw.index, *columns, strict=True)]
     problems = _faults(path.name, lines, {sheet.title: sheet for sheet in sheets}, book)
     if problems:

@@ -11,6 +11,7 @@ from pathlib import Path
 from typing import Any, Final
 
 from fleet.errors import FleetError, Problem, Refused
+from fleet.harmless import harmless
 
 SETTINGS_SHEETS: Final = ("fleet", "settings", "general", "programme", "program", "project")
 """Sheets of this name hold one setting a row: its name, then its value."""
@@ -107,7 +108,7 @@ def _cells(path: Path, saved_values: bool) -> dict[str, Rows]:
     try:
         book = openpyxl.load_workbook(path, read_only=True, data_only=saved_values)
         from_1904 = book.epoch.year != _EPOCH_YEAR
-        found = {sheet.title: [_plain_row(row) for row in sheet.iter_rows()] for sheet in book.worksheets}
+        found = {harmless(one.title): [_plain_row(row) for row in one.iter_rows()] for one in book.worksheets}
         book.close()
     except Exception as error:
         # The library lets errors of every kind through for a damaged file.
@@ -128,7 +129,7 @@ def _plain_row(row: Iterable[Any]) -> tuple[object, ...]:
 def _plain(cell: Any) -> object:
     value = cell.value
     if isinstance(value, str):
-        return " ".join(value.replace("\u00a0", " ").split()) or None
+        return harmless(" ".join(value.replace("\u00a0", " ").split())) or None
     if isinstance(value, (int, float)) and not isinstance(value, bool) and "%" in str(cell.number_format):
         return Percent(value)
     return value
