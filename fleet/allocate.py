@@ -7,11 +7,12 @@ recomputed in numpy. The bound is bound.py's, the prices are prices.py's, the se
 import time
 from collections.abc import Callable
 from dataclasses import dataclass, replace
-from typing import Final
+from typing import Any, Final
 
 import numpy as np
 
-from fleet.bound import Offers, Prices, Terms, steering
+from fleet import wishes as wishing
+from fleet.bound import Offers, Prices, Terms, steering, worst_node
 from fleet.choice import Status
 from fleet.effort import Effort, within
 from fleet.feeders import Feeders
@@ -21,6 +22,7 @@ from fleet.narrow import solve
 from fleet.offers import allowance_kw, check_fit, offered, offers_of
 from fleet.prices import Searched, priced
 from fleet.request import Request
+from fleet.wishes import Wishes
 from sites.quotes import COST_PARTS, DenseQuotes
 from sites.units import Bools, Floats, Ints, Strings
 
@@ -48,12 +50,25 @@ class Proof:
     shortfall_price_per_kwh: float
     """The price of the choice, above the one given where that would have left a request short in vain"""
     over_price_per_kwh: float
+    worst_node: str | None
+    """The limited node whose part of the choice lies furthest above its part of the bound; None: none has a part"""
+    worst_node_gap: float | None
+    """By how much, relative to the gross cost of the called sites below it; at the recorded prices"""
+    include: tuple[str, ...]
+    exclude: tuple[str, ...]
+    fewest: bool
+    over_cap_kw: float | None
+    steering_per_call: float
+    include_bonus: float
     seconds: float
 
 
 @dataclass(frozen=True)
 class Allocation:
-    """Chosen candidates and what they come to. N sites, E event and T horizon intervals, J nodes."""
+    """Chosen candidates and what they come to. N sites, T horizon intervals, J nodes.
+
+    E is event intervals, node after node where several are asked.
+    """
 
     candidate: Ints
     """(N,) index into the quotes' candidates, -1 = not called"""
@@ -113,6 +128,8 @@ def allocate(
     over_delivery_fraction: float = 0.05,
     seconds: float | None = None,
     target_gap: float = 0.001,
+    wishes: Wishes = wishing.NONE,
+    rough: bool = False,
     stopwatch: Callable[[], float] = time.perf_counter,
 ) -> Allocation:
     """The cheapest set of candidates found that meets the request, with its proof.
@@ -122,24 +139,54 @@ def allocate(
     FIRM_FACTOR; the price used stands in the proof. A request that cannot be met comes back short (`met` False).
 
     seconds None: work is counted, and the same inputs give the same answer on any load. Else the best answer found
-    by then, cut short where that is. Raises FleetError where quotes and request do not fit together.
+    by then, cut short where that is. rough: a quick answer, for a figure to tell rather than to call. Raises FleetError
+    where quotes and request do not fit together, and for wishes that contradict each other.
     """
     started = stopwatch()
     check_fit(quotes, request)
-    kept = offered(quotes, feeders, request.node_id, allowed)
-    offers = offers_of(quotes, feeders, delivery_factor, steering(site_ids), kept)
-    step_h = quotes.clock.step_h
+    wishing.check(wishes, site_ids)
+    allowed = allowed & ~wishing.named(wishes.exclude, site_ids)
+    kept = offered(quotes, feeders, request.node_ids, allowed)
+    per_call, bonus = wishing.weights(wishes, quotes.net_cost[kept])
+    steer = steering(site_ids, per_call, np.array(wishes.include, dtype=object), bonus)
+    offers = offers_of(quotes, feeders, delivery_factor, steer, kept, request.node_ids)
+    step_h, count = quotes.clock.step_h, request.requested_kw.size
+    asked = np.asarray(request.requested_kw > 0.0, dtype=np.float64)
+    free_kw = allowance_kw(offers, request.requested_kw, over_delivery_fraction)
+    over = wishing.over_price_per_kwh(wishes, over_price_per_kwh, shortfall_price_per_kwh, FIRM_FACTOR)
     terms = Terms(
         request_kw=request.requested_kw,
-        allowance_kw=allowance_kw(offers, request.requested_kw, over_delivery_fraction),
-        shortfall_price_per_kw=np.full(request.interval_count, shortfall_price_per_kwh * step_h),
-        over_price_per_kw=np.full(request.interval_count, over_price_per_kwh * step_h),
+        allowance_kw=free_kw if wishes.over_cap_kw is None else np.full(count, wishes.over_cap_kw),
+        shortfall_price_per_kw=asked * shortfall_price_per_kwh * step_h,
+        over_price_per_kw=asked * over * step_h,
         headroom_kw=headroom_kw,
     )
     gross = _gross_costs(quotes, kept)
-    answer = _answer(offers, terms, gross, target_gap, within(seconds, stopwatch))
+    answer = _answer(offers, terms, gross, target_gap, within(seconds, stopwatch, rough))
     proof = _proof(quotes, kept, offers, answer, gross, target_gap, stopwatch() - started)
-    return _allocation(quotes, kept, answer, proof)
+    told = replace(_wished(proof, wishes, per_call, bonus), **_worst(offers, answer, gross, feeders))
+    return _allocation(quotes, kept, answer, told)
+
+
+def _wished(proof: Proof, wishes: Wishes, per_call: float, bonus: float) -> Proof:
+    """The proof with the wishes and what they weighed."""
+    return replace(
+        proof,
+        include=wishes.include,
+        exclude=wishes.exclude,
+        fewest=wishes.fewest,
+        over_cap_kw=wishes.over_cap_kw,
+        steering_per_call=per_call,
+        include_bonus=bonus,
+    )
+
+
+def _worst(offers: Offers, answer: _Answer, gross: Floats, feeders: Feeders) -> dict[str, Any]:
+    """The proof's worst node and its gap."""
+    node, gap = worst_node(offers, answer.terms, answer.searched.prices, answer.chosen, gross[answer.chosen])
+    if node < 0:
+        return {"worst_node": None, "worst_node_gap": None}
+    return {"worst_node": str(feeders.node_id[node]), "worst_node_gap": gap}
 
 
 def _gross_costs(quotes: DenseQuotes, kept: Ints) -> Floats:
@@ -233,8 +280,16 @@ def _proof(
         gross_cost=gross_cost,
         gap=lack / gross_cost if gross_cost > 0.0 else None,
         shortfall_kwh=float(result.shortfall_kw.sum()) * step_h,
-        shortfall_price_per_kwh=float(terms.shortfall_price_per_kw[0]) / step_h,
-        over_price_per_kwh=float(terms.over_price_per_kw[0]) / step_h,
+        shortfall_price_per_kwh=float(terms.shortfall_price_per_kw.max()) / step_h,
+        over_price_per_kwh=float(terms.over_price_per_kw.max()) / step_h,
+        worst_node=None,
+        worst_node_gap=None,
+        include=(),
+        exclude=(),
+        fewest=False,
+        over_cap_kw=None,
+        steering_per_call=0.0,
+        include_bonus=0.0,
         seconds=seconds,
     )
 

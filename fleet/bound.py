@@ -112,14 +112,52 @@ def bound_from_prices(offers: Offers, terms: Terms, prices: Prices) -> Bound:
     return Bound(float(best.sum()) + asked - room, best, value)
 
 
-def steering(site_id: Strings) -> Floats:
+def node_gaps(offers: Offers, terms: Terms, prices: Prices, chosen: Ints) -> Floats:
+    """(J,) money by which each node's part of a choice lies above its part of the bound.
+
+    Sites at or below: what the chosen answer (staying out is one) is worth above the best one at these prices. And the
+    node's own room that has a price but is not used.
+    """
+    bound = bound_from_prices(offers, terms, prices)
+    lack = -bound.best
+    lack[offers.site[chosen]] = bound.regret(offers.site)[chosen]
+    change = np.zeros((offers.site_count, offers.change_kw.shape[1]))
+    np.add.at(change, offers.site[chosen], offers.change_kw[chosen])
+    below = offers.below.astype(np.float64)
+    unused = np.where(prices.importing > 0.0, terms.headroom_kw - below @ change, 0.0)
+    result: Floats = below @ lack + (prices.importing * unused).sum(axis=1)
+    return result
+
+
+def worst_node(
+    offers: Offers, terms: Terms, prices: Prices, chosen: Ints, gross: Floats
+) -> tuple[int, float]:
+    """Index of the limited node with the largest gap, relative to the gross cost (chosen,) of the sites below, and it.
+
+    -1 and 0 where no limited node has a called site that costs anything.
+    """
+    below = offers.below[:, offers.site[chosen]].astype(np.float64) @ gross
+    real = np.isfinite(terms.headroom_kw).any(axis=1) & (below > 0.0)
+    if not real.any():
+        return -1, 0.0
+    gaps = np.divide(
+        node_gaps(offers, terms, prices, chosen), below, out=np.full(below.size, -1.0), where=real
+    )
+    return int(gaps.argmax()), max(float(gaps.max()), 0.0)
+
+
+def steering(
+    site_id: Strings, per_call: float = 0.0, include: Strings | None = None, bonus: float = 0.0
+) -> Floats:
     """(N,) money, 0 to STEERING_PER_CALL, that makes two equal sites unequal: a hash of the id (BLAKE2b).
 
-    Without it identical sites answer the same prices together and no price calls just one of them.
+    Without it identical sites answer the same prices together and no price calls just one of them. Wishes add to
+    it: money for each call where few are wanted, a bonus off for sites that must be in.
     """
     digests = [hashlib.blake2b(str(name).encode(), digest_size=6).digest() for name in site_id]
     shares = np.array([int.from_bytes(digest, "big") for digest in digests], dtype=np.float64) / 2.0**48
-    return np.asarray(STEERING_PER_CALL * shares, dtype=np.float64)
+    wanted = np.zeros(shares.size) if include is None else np.isin(site_id.astype(str), include.astype(str))
+    return np.asarray(STEERING_PER_CALL * shares + per_call - bonus * wanted, dtype=np.float64)
 
 
 def _check(terms: Terms, prices: Prices) -> None:

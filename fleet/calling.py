@@ -4,7 +4,8 @@ Owns what a record holds besides its tables: the proof and the frozen inputs. Re
 the choice allocate.py's, the tables event.py's and steps.py's, writing records.py's.
 """
 
-from dataclasses import asdict, dataclass
+from collections.abc import Sequence
+from dataclasses import asdict, dataclass, replace
 from importlib.metadata import version
 from pathlib import Path
 from typing import Any
@@ -15,16 +16,15 @@ import pandas as pd
 from fleet import event, records, rules
 from fleet.allocate import Allocation, allocate
 from fleet.desk import Progress, Survey
-from fleet.errors import CannotBeMet, FleetError
-from fleet.limits import COUNTED, IN_FORCE
+from fleet.errors import FleetError
+from fleet.explained import MORE_SHARE, Explained, explain
+from fleet.limits import COUNTED
+from fleet.refusal import cannot, cannot_cap, cannot_include, not_callable
 from fleet.request import Request, default_event_id, request
-from fleet.shortage import Shortage, explain
 from fleet.steps import steps
-from fleet.wall_time import local_text, utc_timestamp
+from fleet.wishes import NONE, Wishes, check, named
 from sites.units import Floats
 
-NAMED = 5
-"""Sites that a sentence names; the rest is counted."""
 PACKAGES = ("shedwright", "numpy", "pandas", "pulp", "highspy", "pyarrow")
 
 
@@ -38,6 +38,7 @@ class Call:
     chosen: event.Chosen
     proof: dict[str, Any]
     notes: tuple[str, ...]
+    explained: Explained | None
 
 
 def call(
@@ -48,21 +49,56 @@ def call(
     home: Path,
     accept_less: bool = False,
     within: float | None = None,
+    wishes: Wishes = NONE,
+    node_ids: Sequence[str | None] | None = None,
+    notes: Sequence[str] = (),
     progress: Progress = lambda text: None,
 ) -> Call:
     """Allocate a request over a survey's quotes and write the event record below `home`.
 
-    Raises Refused for a request that makes no sense, FleetError for an event that exists, CannotBeMet where the
-    fleet cannot give it and `accept_less` is False; nothing is written then.
+    requested_kw: one for all intervals, or (node, interval) for several node_ids. notes: of
+    whoever asks, told with the rest. within: seconds after which the best
+    answer found counts, also one that is short. Raises Refused for a request that makes no sense, FleetError for an
+    event that exists and for wishes that contradict each other, CannotBeMet where the fleet cannot give it and
+    `accept_less` is False; nothing is written then.
     """
-    ask = _request(survey, requested_kw, event_id, purpose)
+    ask = _request(survey, requested_kw, event_id, purpose, node_ids)
     records.check_free(home, ask.event_id)
+    check(wishes, survey.fleet.roster.buildings.site_id)
     progress("allocating")
-    allocation = _allocate(survey, ask, within)
-    if not allocation.met and not (accept_less and len(allocation.chosen)):
-        raise _cannot(survey, allocation)
+    allocation = _allocate(survey, ask, within, wishes)
+    _check_answer(survey, ask, allocation, wishes, accept_less or within is not None)
     progress("writing the record")
     choice = event.chosen(ask, survey.quoted, survey.feeders, allocation.chosen)
+    frames = _frames(survey, choice, allocation)
+    proof = proof_of(survey, allocation)
+    with records.lock(home) as swept:
+        _check_nothing_new(survey, home)
+        path = records.write_call(
+            home, ask.event_id, frames, proof, frozen_tables(survey), frozen_json(survey)
+        )
+    network = (*survey.feeders.notes, *survey.headroom.notes)
+    told = (*swept, *survey.folder.notes, *network, *not_callable(survey))
+    why = _explained(survey, ask, allocation, wishes, within)
+    return Call(path, ask.event_id, allocation, choice, proof, (*notes, *told), why)
+
+
+def _check_answer(
+    survey: Survey, ask: Request, allocation: Allocation, wishes: Wishes, less_will_do: bool
+) -> None:
+    """CannotBeMet where the answer is not what was asked for, or a wish did not come true."""
+    if not allocation.met and not (less_will_do and len(allocation.chosen)):
+        raise cannot(survey, ask, allocation, wishes)
+    called = set(survey.fleet.roster.buildings.site_id[allocation.called].tolist())
+    lacking = [name for name in wishes.include if name not in called]
+    if lacking:
+        raise cannot_include(survey, lacking)
+    if wishes.over_cap_kw is not None and allocation.over_kw.max() > 1e-6:
+        raise cannot_cap(allocation, wishes.over_cap_kw)
+
+
+def _frames(survey: Survey, choice: event.Chosen, allocation: Allocation) -> dict[str, pd.DataFrame]:
+    """All tables of the record."""
     frames = event.frames(choice)
     resolved = survey.fleet.resolved
     frames["steps"] = steps(
@@ -75,15 +111,25 @@ def call(
         str(survey.ask.direction),
     )
     frames["prices"] = prices_frame(choice, allocation)
-    proof = proof_of(survey, allocation)
-    with records.lock(home) as swept:
-        _check_nothing_new(survey, home)
-        path = records.write_call(
-            home, ask.event_id, frames, proof, frozen_tables(survey), frozen_json(survey)
-        )
-    network = (*survey.feeders.notes, *survey.headroom.notes)
-    notes = (*swept, *survey.folder.notes, *network, *not_callable(survey))
-    return Call(path, ask.event_id, allocation, choice, proof, notes)
+    return frames
+
+
+def _explained(
+    survey: Survey, ask: Request, allocation: Allocation, wishes: Wishes, within: float | None
+) -> Explained | None:
+    """Why the choice is as it is; None where it is short. In an emergency nothing more is tried."""
+    if not allocation.met:
+        return None
+    more = None
+    if within is None:
+        larger = replace(ask, requested_kw=(1.0 + MORE_SHARE) * ask.requested_kw)
+        more = _allocate(survey, larger, None, wishes, rough=True)
+    site_id = survey.fleet.roster.buildings.site_id
+    why = {place: survey.eligible.reason.get(str(name), "") for place, name in enumerate(site_id)}
+    left = np.flatnonzero(named(wishes.exclude, site_id)).tolist()
+    why |= dict.fromkeys(left, "on the list of sites to leave out")
+    below = np.any([survey.feeders.sites_below(name) for name in ask.node_ids], axis=0)
+    return explain(allocation, more, survey.quoted.quotes, survey.feeders, below, why)
 
 
 def _check_nothing_new(survey: Survey, home: Path) -> None:
@@ -104,38 +150,21 @@ def _binding(past: pd.DataFrame) -> set[tuple[str, int]]:
     return set(zip(counted["event_id"], counted["revision"], strict=True))
 
 
-def not_callable(survey: Survey) -> list[str]:
-    """A sentence for each reason why sites under the node may not be called, calls in force with their end."""
-    below = [str(name) for name in survey.fleet.roster.buildings.site_id[survey.under_node]]
-    reasons: dict[str, list[str]] = {}
-    for name in below:
-        if name in survey.eligible.reason:
-            reasons.setdefault(survey.eligible.reason[name], []).append(name)
-    said = [f"not called: {_few(names)}, which {why}" for why, names in reasons.items() if why != IN_FORCE]
-    past = survey.past
-    counted = past[past["purpose"].isin(COUNTED) & past["site_id"].isin(reasons.get(IN_FORCE, []))]
-    running = counted[counted["window_end"] > utc_timestamp(survey.ask.at)]
-    for event_id, windows in running.groupby("event_id"):
-        last = windows["window_end"].max().tz_localize(None).to_datetime64()
-        until = local_text(last, survey.folder.settings.timezone)
-        said.append(
-            f"not called: {_few(sorted(windows['site_id']))}, bound by the call in force {event_id} until {until}; "
-            "call them again from then on, or ask at a node without them"
-        )
-    return said
-
-
-def _few(names: list[str]) -> str:
-    """The first names, the rest counted."""
-    more = f" and {len(names) - NAMED} more" if len(names) > NAMED else ""
-    return ", ".join(names[:NAMED]) + more
-
-
-def _request(survey: Survey, requested_kw: float | Floats, event_id: str | None, purpose: str) -> Request:
+def _request(
+    survey: Survey,
+    requested_kw: float | Floats,
+    event_id: str | None,
+    purpose: str,
+    node_ids: Sequence[str | None] | None,
+) -> Request:
     ask = survey.ask
+    given = [survey.node_id] if node_ids is None else node_ids
+    nodes = [survey.feeders.root if name is None else name for name in given]
+    for name in nodes:
+        survey.feeders.index(name)
     return request(
-        default_event_id(ask.at, survey.node_id) if event_id is None else event_id,
-        survey.node_id,
+        default_event_id(ask.at, nodes[0]) if event_id is None else event_id,
+        nodes[0] if len(nodes) == 1 else nodes,
         ask.direction,
         purpose,
         ask.at,
@@ -146,7 +175,9 @@ def _request(survey: Survey, requested_kw: float | Floats, event_id: str | None,
     )
 
 
-def _allocate(survey: Survey, ask: Request, within: float | None) -> Allocation:
+def _allocate(
+    survey: Survey, ask: Request, within: float | None, wishes: Wishes, rough: bool = False
+) -> Allocation:
     buildings = survey.fleet.roster.buildings
     return allocate(
         survey.quoted.quotes,
@@ -160,67 +191,9 @@ def _allocate(survey: Survey, ask: Request, within: float | None) -> Allocation:
         site_ids=buildings.site_id,
         over_delivery_fraction=survey.folder.settings.over_delivery_fraction,
         seconds=within,
+        rough=rough,
+        wishes=wishes,
     )
-
-
-def _cannot(survey: Survey, allocation: Allocation) -> CannotBeMet:
-    """The refusal with, per interval, what is available and what binds."""
-    shortage = explain(
-        allocation,
-        survey.quoted.quotes,
-        survey.feeders,
-        survey.headroom.kw,
-        survey.node_id,
-        survey.fleet.roster.buildings.delivery_factor,
-        survey.eligible.allowed,
-    )
-    return CannotBeMet("\n".join(_shortage_lines(survey, shortage)), _shortage_detail(survey, shortage))
-
-
-def _shortage_lines(survey: Survey, shortage: Shortage) -> list[str]:
-    zone = survey.folder.settings.timezone
-    starts = survey.quoted.quotes.clock.starts[survey.quoted.quotes.event_from :]
-    lines = ["the request cannot be met as asked:", *shortage.sentences(), *not_callable(survey)]
-    lines.append("by interval (kW):")
-    rows = zip(
-        starts, shortage.requested_kw, shortage.available.available_kw, shortage.expected_kw, strict=False
-    )
-    for start, asked, alone, given in rows:
-        lines.append(
-            f"  {local_text(start, zone)}  asked {asked:,.1f}, at most {alone:,.1f} alone, best answer {given:,.1f}"
-        )
-    lines.append(
-        "ask for less, for a shorter time or at a wider node; or take the best answer with --accept-less"
-    )
-    return lines
-
-
-def _shortage_detail(survey: Survey, shortage: Shortage) -> dict[str, object]:
-    quotes = survey.quoted.quotes
-    starts = quotes.clock.starts[quotes.event_from : quotes.event_to]
-    return {
-        "sustained_kw": shortage.available.sustained_kw,
-        "intervals": [
-            {
-                "interval_start": f"{np.datetime_as_string(start, 's')}Z",
-                "requested_kw": float(asked),
-                "available_kw": float(alone),
-                "best_answer_kw": float(given),
-                "gap_kw": float(gap),
-            }
-            for start, asked, alone, given, gap in zip(
-                starts,
-                shortage.requested_kw,
-                shortage.available.available_kw,
-                shortage.expected_kw,
-                shortage.gap_kw,
-                strict=True,
-            )
-        ],
-        "sustained_kw_if_lifted": {name: found.sustained_kw for name, found in shortage.lifted.items()},
-        "sites_limited_by": shortage.limited_by,
-        "not_callable": not_callable(survey),
-    }
 
 
 def prices_frame(choice: event.Chosen, allocation: Allocation) -> pd.DataFrame:
@@ -228,9 +201,11 @@ def prices_frame(choice: event.Chosen, allocation: Allocation) -> pd.DataFrame:
     quotes, prices, feeders = choice.quoted.quotes, allocation.prices, choice.feeders
     in_event = quotes.clock.starts[quotes.event_from : quotes.event_to]
     node, hour = np.nonzero(prices.importing)
+    names = np.repeat(np.array(choice.request.node_ids, dtype=object), in_event.size)
+    often = np.tile(in_event, len(choice.request.node_ids))
     parts = [
-        _prices(choice.request.node_id, in_event, "shed", prices.shed),
-        _prices(choice.request.node_id, in_event, "over", prices.over),
+        _prices(names, often, "shed", prices.shed),
+        _prices(names, often, "over", prices.over),
         _prices(feeders.node_id[node], quotes.clock.starts[hour], "import", prices.importing[node, hour]),
     ]
     frame = pd.concat(parts, ignore_index=True)

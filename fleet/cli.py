@@ -34,6 +34,8 @@ EventId = Annotated[str, typer.Argument(metavar="EVENT", help="The event's id.")
 Json = Annotated[bool, typer.Option("--json", help="Print one JSON document on stdout and nothing else.")]
 From = Annotated[str, typer.Option("--from", help="Start of the event: ISO 8601 with offset, or local time.")]
 To = Annotated[str, typer.Option("--to", help="End of the event.")]
+MaybeFrom = Annotated[str | None, typer.Option("--from", help="Start of the event; with --kw and --to.")]
+MaybeTo = Annotated[str | None, typer.Option("--to", help="End of the event.")]
 Node = Annotated[
     str | None, typer.Option("--node", help="Where the request is held; default the whole fleet.")
 ]
@@ -193,10 +195,14 @@ def quote(
 @app.command()
 def call(
     fleet: FleetDir,
-    kw: Annotated[float, typer.Option("--kw", help="kW asked in every interval of the event.")],
-    start: From,
-    end: To,
+    kw: Annotated[float | None, typer.Option("--kw", help="kW asked in every interval of the event.")] = None,
+    start: MaybeFrom = None,
+    end: MaybeTo = None,
     node: Node = None,
+    file: Annotated[
+        Path | None,
+        typer.Option("--request", help="CSV or Parquet with interval_start, kw, node_id; no --kw then."),
+    ] = None,
     event: Annotated[
         str | None, typer.Option("--event", help="Id of the event; default from time and node.")
     ] = None,
@@ -206,6 +212,24 @@ def call(
     accept_less: Annotated[
         bool, typer.Option("--accept-less", help="Where it cannot be met, take the best answer.")
     ] = False,
+    within: Annotated[
+        float | None,
+        typer.Option(
+            "--within", help="Seconds for the choice: the best found by then counts, even if short."
+        ),
+    ] = None,
+    include: Annotated[
+        list[str] | None, typer.Option("--include", help="A site that must be called; repeat it.")
+    ] = None,
+    exclude: Annotated[
+        list[str] | None, typer.Option("--exclude", help="A site that must not be called; repeat it.")
+    ] = None,
+    fewest: Annotated[
+        bool, typer.Option("--fewest", help="As few sites as can be, whatever they cost.")
+    ] = False,
+    most_over: Annotated[
+        float | None, typer.Option("--most-over", help="kW above the request at most, in any interval.")
+    ] = None,
     json: Json = False,
 ) -> None:
     """Allocate a request over the sites and write the event record.
@@ -214,14 +238,29 @@ def call(
     --node North --at 2026-07-15T13:00 --event practice-2 --purpose rehearsal
     """
     from fleet import calling, desk, records, show
+    from fleet.asking import call_ask
     from fleet.request import check_words
+    from fleet.wishes import Wishes
 
     terminal = Terminal(json)
-    check_words(event, purpose, kw)
+    check_words(event, purpose, 1.0 if kw is None else kw, within)
     if event is not None:
         records.check_free(fleet, event)
-    survey = desk.survey(fleet, _ask(fleet, start, end, node, at, direction), terminal.progress, kw)
-    made = calling.call(survey, kw, event, purpose, fleet, accept_less, progress=terminal.progress)
+    ask, asked = call_ask(fleet, kw, start, end, file, node, at or _now(), direction)
+    survey = desk.survey(fleet, ask, terminal.progress, asked.largest_kw)
+    made = calling.call(
+        survey,
+        asked.kw,
+        event,
+        purpose,
+        fleet,
+        accept_less,
+        within,
+        Wishes(tuple(include or ()), tuple(exclude or ()), fewest, most_over),
+        asked.node_ids,
+        asked.notes,
+        progress=terminal.progress,
+    )
     terminal.put(show.call_lines(survey, made), show.call_json(survey, made))
 
 
@@ -329,23 +368,13 @@ def audit(fleet: FleetDir, event: EventId, json: Json = False) -> None:
 
 def _ask(fleet: Path, start: str, end: str, node: str | None, at: str | None, direction: str):  # type: ignore[no-untyped-def]
     """The ask of a command line: times in the fleet's zone, on its grid."""
-    from fleet.desk import Ask
-    from fleet.folder import open_folder, parse_time
-    from sites.direction import Direction
+    from fleet.asking import ask
 
-    settings = open_folder(fleet, names=(), needed=()).settings
-    zone, step = settings.timezone, settings.interval_minutes
-    known = [str(way) for way in Direction]
-    if direction not in known:
-        raise FleetError(f"--direction: came {direction!r}; expected one of {', '.join(known)}; choose one")
-    now = datetime.now(UTC).replace(second=0, microsecond=0).isoformat()
-    return Ask(
-        node_id=node,
-        direction=Direction(direction),
-        at=parse_time(at or now, zone),
-        event_from=parse_time(start, zone, step),
-        event_to=parse_time(end, zone, step),
-    )
+    return ask(fleet, start, end, node, at or _now(), direction)
+
+
+def _now() -> str:
+    return datetime.now(UTC).replace(second=0, microsecond=0).isoformat()
 
 
 def main() -> None:

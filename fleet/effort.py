@@ -13,9 +13,10 @@ from fleet.choice import LEAST_SECONDS, Work
 
 @dataclass(frozen=True)
 class Effort:
-    """`models` at most of the sites that prices leave undecided, and by when to stop (stopwatch seconds)."""
+    """How many narrow models, whether the whole one too, and by when to stop (stopwatch seconds)."""
 
     models: int = 5
+    whole: bool = True
     until: float | None = None
     stopwatch: Callable[[], float] = time.perf_counter
 
@@ -39,13 +40,17 @@ class Effort:
         if self.until is None:
             return self
         now = self.stopwatch()
-        return Effort(self.models, now + share * max(self.until - now, 0.0), self.stopwatch)
+        return Effort(self.models, self.whole, now + share * max(self.until - now, 0.0), self.stopwatch)
 
 
 STEADY: Final = Effort()
 """Counted work alone."""
 
 
-def within(seconds: float | None, stopwatch: Callable[[], float] = time.perf_counter) -> Effort:
-    """An effort that ends after so many seconds; None: counted work alone."""
-    return Effort(until=None if seconds is None else stopwatch() + seconds, stopwatch=stopwatch)
+def within(
+    seconds: float | None, stopwatch: Callable[[], float] = time.perf_counter, rough: bool = False
+) -> Effort:
+    """An effort that ends after so many seconds; None: counted work alone. rough: one narrow model at most."""
+    models, whole = (1, False) if rough else (Effort.models, Effort.whole)
+    until = None if seconds is None else stopwatch() + seconds
+    return Effort(models, whole, until, stopwatch)

@@ -98,26 +98,37 @@ def _grid(call: Chosen, keys: dict[str, AnyArray], values: dict[str, AnyArray]) 
 
 
 def request_frame(call: Chosen) -> pd.DataFrame:
-    """Table request: one row per event interval."""
+    """Table request: one row per requested node and event interval."""
     ask, quotes = call.request, call.quoted.quotes
     factor = call.quoted.ground.roster.buildings.delivery_factor[call.site]
     event = slice(quotes.event_from, quotes.event_to)
+    below = np.stack([call.feeders.sites_below(name)[call.site] for name in ask.node_ids])
+    count, nodes = ask.interval_count, len(ask.node_ids)
+    rows = count * nodes
     return pd.DataFrame(
         {
             "event_id": ask.event_id,
-            "node_id": ask.node_id,
+            "node_id": np.repeat(np.array(ask.node_ids, dtype=object), count),
+            "within_node_id": np.repeat(_within(call), count),
             "direction": str(ask.direction),
             "purpose": ask.purpose,
-            "called_at": _utc(np.full(ask.interval_count, ask.called_at)),
-            "effective_from": _utc(np.full(ask.interval_count, ask.called_at)),
-            "supersedes": pd.array([None] * ask.interval_count, dtype="Int64"),
-            "interval_start": _utc(ask.interval_starts),
-            "interval_end": _utc(ask.interval_ends),
+            "called_at": _utc(np.full(rows, ask.called_at)),
+            "effective_from": _utc(np.full(rows, ask.called_at)),
+            "supersedes": pd.array([None] * rows, dtype="Int64"),
+            "interval_start": _utc(np.tile(ask.interval_starts, nodes)),
+            "interval_end": _utc(np.tile(ask.interval_ends, nodes)),
             "requested_kw": ask.requested_kw,
-            "promised_kw": np.full(ask.interval_count, np.nan),
-            "expected_kw": factor @ call.expected_kw[:, event],
+            "promised_kw": np.full(rows, np.nan),
+            "expected_kw": ((below * factor) @ call.expected_kw[:, event]).ravel(),
         }
     )
+
+
+def _within(call: Chosen) -> Strings:
+    """(requested node,) the nearest requested node above each, None for an outermost one."""
+    names = call.request.node_ids
+    found = [call.feeders.nearest_above(name, names) for name in names]
+    return np.array(found, dtype=object)
 
 
 def windows_frame(call: Chosen) -> pd.DataFrame:

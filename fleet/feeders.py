@@ -4,7 +4,7 @@ The only networkx door. Owns the tree's checks and the headroom of each node; le
 with it to the allocation. Limits are on power drawn into a node; what flows out of it is not limited.
 """
 
-from collections.abc import Sequence
+from collections.abc import Collection, Sequence
 from dataclasses import dataclass, field
 from typing import Any, Final
 
@@ -52,6 +52,15 @@ class Feeders:
             more = f" and {len(self.node_id) - 12} more" if len(self.node_id) > 12 else ""
             raise FleetError(f"node {node_id!r} is not in the network; known nodes: {known}{more}")
         return int(found[0])
+
+    def nearest_above(self, node_id: str, names: Collection[str]) -> str | None:
+        """The nearest node strictly above that is among `names`; None where there is none."""
+        above = int(self.parent[self.index(node_id)])
+        while above >= 0:
+            if str(self.node_id[above]) in names:
+                return str(self.node_id[above])
+            above = int(self.parent[above])
+        return None
 
     def sites_below(self, node_id: str) -> Bools:
         """(N,) sites at or below a node; FleetError where it is unknown."""

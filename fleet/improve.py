@@ -43,12 +43,13 @@ class Score:
 def score(offers: Offers, terms: Terms, chosen: Ints) -> Score:
     """The objective of candidates `chosen` (indices, one a site at most) from the arrays alone.
 
-    A shortfall within 1e-6 kW counts as met.
+    A shortfall within 1e-6 kW counts as met; where nothing is asked nothing lacks and nothing is too much.
     """
     given = offers.kw[chosen].sum(axis=0)
     short = terms.request_kw - given
-    short = np.where(short > FEASIBLE_KW, short, 0.0)
+    short = np.where((short > FEASIBLE_KW) & (terms.request_kw > 0.0), short, 0.0)
     over = np.maximum(given - terms.request_kw - terms.allowance_kw, 0.0)
+    over = np.where(terms.request_kw > 0.0, over, 0.0)
     weight = np.zeros(offers.site.size)
     weight[chosen] = 1.0
     node = node_change_kw(offers, weight)

@@ -48,13 +48,27 @@ def most(
     Both figures are rounded down to 0.001 kW; a request for sustained_kw can be met. Raises FleetError on an
     unknown node.
     """
-    kept = offered(quotes, feeders, node_id, allowed)
+    kept = offered(quotes, feeders, [node_id], allowed)
     offers = offers_of(quotes, feeders, delivery_factor, np.zeros(quotes.site_count), kept)
     intervals = offers.kw.shape[1]
     effort = within(seconds)
     together = most_of(offers, headroom_kw, np.ones(intervals), effort.sooner(0.5))
     available, proven = _alone(offers, headroom_kw, effort, together.chosen)
     return Available(available, together.kw, proven and together.status is Status.PROVEN)
+
+
+def sustained(
+    quotes: DenseQuotes,
+    feeders: Feeders,
+    headroom_kw: Floats,
+    node_id: str,
+    delivery_factor: Floats,
+    allowed: Bools,
+) -> Most:
+    """The most in all intervals together, as `most` tells it, without that of each interval alone."""
+    kept = offered(quotes, feeders, [node_id], allowed)
+    offers = offers_of(quotes, feeders, delivery_factor, np.zeros(quotes.site_count), kept)
+    return most_of(offers, headroom_kw, np.ones(offers.kw.shape[1]))
 
 
 def most_of(

@@ -28,7 +28,7 @@ EACH: Final = 6
 SPLIT: Final = 1e-6
 """A site whose candidates have shares between this and one less this is undecided in the relaxation."""
 NARROW_WORK: Final = (300, 300)
-WHOLE_WORK: Final = (3000, 1500)
+WHOLE_WORK: Final = (3000, 900)
 """Nodes and checks of a model's solver."""
 
 
@@ -105,7 +105,7 @@ def solve(
         if done() or (step > 0 and _whole(offers, searched, best).size <= WHOLE_MODEL // 2):
             break
         _narrow(best, searched, free_sites, money * float(gross[best.chosen].sum()), by_prices=step == 0)
-    if not done():
+    if best.effort.whole and not done():
         bound_solver = max(bound_solver, _whole_model(best, searched, gross, target_gap))
     return Found(best.chosen, best.score, bound_solver)
 

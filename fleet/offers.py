@@ -3,6 +3,8 @@
 Owns the checks that quotes fit the request, and the over-delivery that costs nothing.
 """
 
+from collections.abc import Sequence
+
 import numpy as np
 
 from fleet.bound import Offers
@@ -29,8 +31,8 @@ def check_fit(quotes: DenseQuotes, request: Request) -> None:
         )
 
 
-def offered(quotes: DenseQuotes, feeders: Feeders, node_id: str, allowed: Bools) -> Ints:
-    """Indices of the candidates that may be chosen: of allowed sites (N,) at or below the node.
+def offered(quotes: DenseQuotes, feeders: Feeders, node_ids: Sequence[str], allowed: Bools) -> Ints:
+    """Indices of the candidates that may be chosen: of allowed sites (N,) at or below one of the nodes.
 
     Sites elsewhere are never called: nobody there was asked. Raises FleetError on an unknown node, on candidates
     that are not sorted by site and on values that are no numbers.
@@ -42,21 +44,34 @@ def offered(quotes: DenseQuotes, feeders: Feeders, node_id: str, allowed: Bools)
     if not sound.all():
         first = str(quotes.quote_id[int(np.flatnonzero(~sound)[0])])
         raise FleetError(f"quote {first} holds a value that is no number: it was not to be offered")
-    mask = allowed & feeders.sites_below(node_id)
+    mask = allowed & np.any([feeders.sites_below(name) for name in node_ids], axis=0)
     return np.flatnonzero(mask[quotes.site])
 
 
 def offers_of(
-    quotes: DenseQuotes, feeders: Feeders, delivery_factor: Floats, steering: Floats, kept: Ints
+    quotes: DenseQuotes,
+    feeders: Feeders,
+    delivery_factor: Floats,
+    steering: Floats,
+    kept: Ints,
+    node_ids: Sequence[str] = (),
 ) -> Offers:
-    """The offers of candidates `kept` (indices): kW at the requested node, cost with steering (N,)."""
+    """The offers of candidates `kept` (indices): kW at the requested node, cost with steering (N,).
+
+    Several nodes: kW (C, node x event interval), 0 at the nodes that a site is not below.
+    """
     site = quotes.site[kept]
+    whole = kept.size == quotes.site.size
+    kw = quotes.expected_kw[kept] * delivery_factor[site][:, None]
+    if len(node_ids) > 1:
+        inside = [feeders.sites_below(name)[site] for name in node_ids]
+        kw = np.concatenate([np.where(mask[:, None], kw, 0.0) for mask in inside], axis=1)
     return Offers(
         site=site,
         site_count=quotes.site_count,
         cost=quotes.net_cost[kept] + steering[site],
-        kw=quotes.expected_kw[kept] * delivery_factor[site][:, None],
-        change_kw=quotes.change_kw[kept],
+        kw=kw,
+        change_kw=quotes.change_kw if whole else quotes.change_kw[kept],
         below=feeders.below,
     )
 

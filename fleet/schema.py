@@ -15,7 +15,7 @@ from fleet.errors import FleetError
 SCHEMA_VERSION: Final = 1
 """Written into every Parquet file; raised when the meaning of a column changes."""
 
-FOLDERS: Final = ("fleet", "call", "settlement")
+FOLDERS: Final = ("fleet", "request", "call", "settlement")
 TYPES: Final = ("text", "number", "whole", "flag", "time", "day", "decimal", "list_text", "list_number")
 TYPE_WORDS: Final = {
     "text": "text",
@@ -95,7 +95,7 @@ class Table:
 
 
 def table(folder: str, name: str) -> Table:
-    """One table of a folder ("fleet", "call" or "settlement"); FleetError names the tables there are."""
+    """One table of a folder ("fleet", "request", "call" or "settlement"); FleetError names the tables there are."""
     found = tables(folder)
     if name not in found:
         raise FleetError(f"no table {name} among those of {folder}; there are {', '.join(found)}")

@@ -25,6 +25,7 @@ from fleet.meter_groups import GroupedReadings
 from fleet.money import Prices
 from fleet.readings import FrameReadings, Overlaid, Readings
 from fleet.records import CallRecord, SettlementRecord
+from fleet.request import outermost
 from fleet.rules import SettlementRule
 from fleet.schema import table
 from fleet.settings import FILE, Settings
@@ -248,7 +249,7 @@ def call_facts(
     settings = Settings.model_validate(record.frozen_json["settings"])
     named = record.frozen_json["rules"]
     rules = {name: SettlementRule.model_validate(rule) for name, rule in named["rules"].items()}
-    request = record.frames["request"]
+    request = outermost(record.frames["request"])
     first = request.iloc[0]
     return CallFacts(
         event_id=record.event_id,

@@ -11,7 +11,7 @@ import numpy as np
 
 from fleet.allocate import Allocation
 from fleet.feeders import Feeders
-from fleet.most import Available, most
+from fleet.most import Available, most, sustained
 from fleet.words import limit_words
 from sites.quotes import LIMITED_BY, DenseQuotes
 from sites.units import Bools, Floats
@@ -26,8 +26,8 @@ class Shortage:
     gap_kw: Floats
     """requested - expected where that is short, else 0"""
     available: Available
-    lifted: dict[str, Available]
-    """What could be had with one class of limits lifted, by the class's name"""
+    lifted: dict[str, float]
+    """kW that could be had in all intervals together with one class of limits lifted, by the class's name"""
     limited_by: dict[str, int]
     """Sites below the node, counted by what keeps them from giving more"""
 
@@ -39,8 +39,8 @@ class Shortage:
             f"{self.expected_kw[worst]:,.1f} kW given in event interval {worst + 1}; at most "
             f"{self.available.sustained_kw:,.1f} kW can be had in all intervals together"
         ]
-        for name, available in self.lifted.items():
-            more = available.sustained_kw - self.available.sustained_kw
+        for name, kw in self.lifted.items():
+            more = kw - self.available.sustained_kw
             if more > 0.0:
                 lines.append(f"+{more:,.1f} kW if {name} did not bind")
         counted = sorted(self.limited_by.items(), key=lambda pair: (-pair[1], pair[0]))
@@ -66,8 +66,8 @@ def explain(
     helps where the quotes hold candidates of these sites. "feeder limits" are always tried.
     """
 
-    def could(headroom: Floats, mask: Bools) -> Available:
-        return most(quotes, feeders, headroom, node_id, delivery_factor, mask)
+    def could(headroom: Floats, mask: Bools) -> float:
+        return sustained(quotes, feeders, headroom, node_id, delivery_factor, mask).kw
 
     lifted = {"feeder limits": could(np.full_like(headroom_kw, np.inf), allowed)}
     for name, mask in (wider or {}).items():
@@ -75,6 +75,6 @@ def explain(
     below = feeders.sites_below(node_id)
     codes, counts = np.unique(quotes.site_limited_by[below], return_counts=True)
     limited = {LIMITED_BY[code]: int(count) for code, count in zip(codes.tolist(), counts, strict=True)}
-    available = could(headroom_kw, allowed)
+    available = most(quotes, feeders, headroom_kw, node_id, delivery_factor, allowed)
     requested, expected, gap = allocation.requested_kw, allocation.expected_kw, allocation.shortfall_kw
     return Shortage(requested, expected, gap, available, lifted, limited)

@@ -11,6 +11,7 @@ import numpy as np
 
 from fleet.calling import Call
 from fleet.desk import Survey
+from fleet.explained_text import explained_json, explained_lines
 from fleet.ordering import Written
 from fleet.quoting import Offer
 from fleet.rehearsal import Rehearsed
@@ -174,6 +175,7 @@ def call_lines(survey: Survey, made: Call) -> list[str]:
     ]
     if not allocation.met:
         lines.append(f"SHORT by {proof['shortfall_kwh']:,.1f} kWh, accepted as asked")
+    lines += explained_lines(survey, made)
     lines += [f"note: {note}" for note in made.notes]
     lines += [f"record: {made.path}", f"next: shedwright orders {made.path.parents[2]} {made.event_id}"]
     return lines
@@ -188,6 +190,7 @@ def call_json(survey: Survey, made: Call) -> dict[str, Any]:
         "called_sites": sorted(str(name) for name in made.chosen.site_id),
         "requested_kw": made.allocation.requested_kw.tolist(),
         "expected_kw": made.allocation.expected_kw.tolist(),
+        "explained": explained_json(survey, made),
         "proof": made.proof,
         "notes": list(made.notes),
     }

@@ -91,7 +91,7 @@ def test_unknown_names_are_refused_with_what_there_is():
     with pytest.raises(FleetError) as caught:
         tables("settlements")
     assert str(caught.value) == (
-        "no folder settlements in the table of columns; there are fleet, call, settlement"
+        "no folder settlements in the table of columns; there are fleet, request, call, settlement"
     )
     with pytest.raises(FleetError) as caught:
         table("fleet", "holidays").column("day")

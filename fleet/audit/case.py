@@ -139,6 +139,19 @@ def case(evidence: Evidence) -> Case:
     )
 
 
+def requested_nodes(case: Case) -> Strings:
+    """Nodes of the network that the request names for most of its intervals, in the order of its rows.
+
+    A row that names another one is a fault of the rule on the request, and misleads no other rule.
+    """
+    book = case.evidence
+    named = book.record.frames["request"]["node_id"]
+    often = named.map(named.value_counts()) * 2 > book.event_to - book.event_from
+    kept = named[often & named.isin(case.tree.node_id)].drop_duplicates()
+    names: Strings = kept.to_numpy(dtype=object)
+    return names if names.size else np.array([case.tree.root], dtype=object)
+
+
 def over_sites(site: Ints, values: Floats, count: int) -> Floats:
     """Sum of (U, T) over the units of each of `count` sites, (N, T)."""
     total = np.zeros((count, values.shape[1]))

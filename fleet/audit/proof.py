@@ -11,11 +11,11 @@ from typing import Any, Final
 import numpy as np
 import pandas as pd
 
-from fleet.audit.case import Case
+from fleet.audit.case import Case, requested_nodes
 from fleet.audit.evidence import utc_naive
 from fleet.audit.findings import Findings
 from fleet.audit.quotes import PARTS, change_kw, lists, site_of
-from fleet.bound import Offers, Prices, Terms, bound_from_prices, steering
+from fleet.bound import Offers, Prices, Terms, bound_from_prices, steering, worst_node
 from sites.units import Floats, Ints
 
 SHORT_KW: Final = 1e-6
@@ -23,6 +23,8 @@ SHORT_KW: Final = 1e-6
 FIRM_FACTOR: Final = 1000.0
 """How many times the shortfall price is raised where the stated one would leave kW undelivered that can be had."""
 DEAREST_FACTOR: Final = 10.0
+LEAST_OVER_SHARE: Final = 0.01
+"""Least price of over-delivery above a cap, as a share of the shortfall price."""
 STATES: Final = ("proven", "feasible_cut_short")
 
 
@@ -57,11 +59,11 @@ def prices(case: Case, found: Findings) -> None:
     """One shed and one over price per event interval at the request's node; import prices at limited nodes only."""
     book, sheet = case.evidence, case.evidence.sheets["prices"]
     frame = sheet.frame
-    node = book.record.frames["request"]["node_id"].iloc[0]
+    asked = requested_nodes(case)
     starts = pd.DatetimeIndex(book.clock.starts).tz_localize("UTC")
     own = frame["kind"].isin(("shed", "over"))
-    elsewhere = (own & (frame["node_id"] != node)).to_numpy()
-    found.wrong("prices", sheet, "node_id", elsewhere, frame["node_id"].to_numpy(), str(node))
+    elsewhere = (own & ~frame["node_id"].isin(asked)).to_numpy()
+    found.wrong("prices", sheet, "node_id", elsewhere, frame["node_id"].to_numpy(), ", ".join(asked))
     late = np.where(
         own, ~frame["interval_start"].isin(starts[book.event]), ~frame["interval_start"].isin(starts)
     )
@@ -75,7 +77,7 @@ def prices(case: Case, found: Findings) -> None:
     )
     twice = frame.duplicated(["kind", "node_id", "interval_start"], keep=False).to_numpy()
     found.wrong("prices", sheet, "interval_start", twice, utc_naive(frame["interval_start"]), "each once")
-    missing = 2 * (book.event_to - book.event_from) - int(own.sum())
+    missing = 2 * len(asked) * (book.event_to - book.event_from) - int(own.sum())
     if missing:
         found.tell(
             "prices", sheet.file, None, f"{int(own.sum())} shed and over prices", "one each an event interval"
@@ -113,6 +115,8 @@ def price_settings(case: Case, found: Findings) -> None:
     )
     over = book.settings.get("over_delivery_price_per_kwh")
     over = max(dearest, 0.0) if over is None else float(over)
+    if book.record.proof.get("over_cap_kw") is not None:
+        over = FIRM_FACTOR * max(over, LEAST_OVER_SHARE * short)
     found.value(
         "prices of the proof",
         _file(case),
@@ -175,6 +179,54 @@ def figures(case: Case, found: Findings) -> None:
         found.notes.append("bound_solver is beside the point here, and nothing in the record vouches for it")
 
 
+def wishes(case: Case, found: Findings) -> None:
+    """Sites that must be in are called, those that must not are not; steering is none where nothing is wished."""
+    told = case.evidence.record.proof
+    called = set(case.evidence.site_id[case.evidence.called].tolist())
+    for name in told.get("include", ()):
+        if name not in called:
+            found.tell("wishes", _file(case), "include", f"{name} not called", "a called site")
+    for name in told.get("exclude", ()):
+        if name in called:
+            found.tell("wishes", _file(case), "exclude", f"{name} called", "a site that is not called")
+    for wish, weight in (("fewest", "steering_per_call"), ("include", "include_bonus")):
+        weighs = told.get(weight, 0.0) != 0.0
+        if bool(told.get(wish)) != weighs:
+            column = weight if weighs else wish
+            found.tell("wishes", _file(case), column, str(told[column]), f"{wish} and {weight}, both or none")
+
+
+def worst(case: Case, found: Findings) -> None:
+    """The node whose part lies furthest above the bound, and its gap, from prices and quotes."""
+    told = case.evidence.record.proof
+    if "worst_node_gap" not in told:
+        return
+    offers = _offers(case)
+    kept, chosen = _kept(case), _chosen(case)
+    parts = np.stack([_quote_numbers(case, f"cost_{part}")[kept][chosen] for part in PARTS])
+    node, gap = worst_node(
+        offers, _terms(case, offers), _prices(case), chosen, np.maximum(parts, 0.0).sum(axis=0)
+    )
+    name = None if node < 0 else str(case.tree.node_id[node])
+    found.value("worst feeder", _file(case), "worst_node", told["worst_node"], name)
+    found.value("worst feeder", _file(case), "worst_node_gap", told["worst_node_gap"], gap if name else None)
+
+
+def _chosen(case: Case) -> Ints:
+    """Indices into the kept quotes of those that windows name."""
+    frames, kept = case.evidence.record.frames, _kept(case)
+    named = frames["quotes"]["quote_id"].isin(frames["windows"]["quote_id"]).to_numpy()
+    return np.flatnonzero(named[kept])
+
+
+def _steering(case: Case) -> Floats:
+    """(N,) steering with the wishes of the proof."""
+    told = case.evidence.record.proof
+    include = np.array(list(told.get("include", ())), dtype=object)
+    per_call, bonus = float(told.get("steering_per_call", 0.0)), float(told.get("include_bonus", 0.0))
+    return steering(case.evidence.site_id, per_call, include, bonus)
+
+
 def horizon(case: Case, found: Findings) -> None:
     """Horizon, step, counts and whether the request is met."""
     book, told = case.evidence, case.evidence.record.proof
@@ -208,9 +260,9 @@ def _quote_numbers(case: Case, name: str) -> Floats:
 
 
 def _kept(case: Case) -> Ints:
-    """Rows of quotes of sites at or below the request's node."""
-    node = case.evidence.record.frames["request"]["node_id"].iloc[0]
-    return np.flatnonzero(case.tree.sites_below(node)[site_of(case)])
+    """Rows of quotes of sites at or below a requested node."""
+    inside = np.any([case.tree.sites_below(name) for name in requested_nodes(case)], axis=0)
+    return np.flatnonzero(inside[site_of(case)])
 
 
 def _offers(case: Case) -> Offers:
@@ -218,11 +270,13 @@ def _offers(case: Case) -> Offers:
     book, kept = case.evidence, _kept(case)
     site = site_of(case)[kept]
     expected = lists(book.record.frames["quotes"]["expected_kw"], book.event_to - book.event_from)[kept]
+    expected = expected * book.fact("delivery_factor", site)[:, None]
+    inside = [case.tree.sites_below(name)[site] for name in requested_nodes(case)]
     return Offers(
         site=site,
         site_count=len(book.sites),
-        cost=_quote_numbers(case, "net_cost")[kept] + steering(book.site_id)[site],
-        kw=expected * book.fact("delivery_factor", site)[:, None],
+        cost=_quote_numbers(case, "net_cost")[kept] + _steering(case)[site],
+        kw=np.concatenate([np.where(mask[:, None], expected, 0.0) for mask in inside], axis=1),
         change_kw=change_kw(case)[kept],
         below=case.tree.below,
     )
@@ -232,13 +286,15 @@ def _terms(case: Case, offers: Offers) -> Terms:
     """What was asked, its prices, and the room in every node, from request, proof and nodes."""
     book = case.evidence
     asked = book.sheets["request"].numbers("requested_kw")
-    count = np.ones(asked.size) * book.clock.step_h
+    count = np.where(asked > 0.0, book.clock.step_h, 0.0)
     other, usual, limit = (book.grid("nodes", name) for name in ("other_kw", "usual_kw", "import_limit_kw"))
     room = np.where(np.isnan(limit), np.inf, limit) - other - usual
     fraction = float(book.record.proof["over_delivery_fraction"])
+    cap = book.record.proof.get("over_cap_kw")
+    free = np.maximum(fraction * asked, offers.kw.max(axis=0, initial=0.0))
     return Terms(
         request_kw=asked,
-        allowance_kw=np.maximum(fraction * asked, offers.kw.max(axis=0, initial=0.0)),
+        allowance_kw=free if cap is None else np.full(asked.size, float(cap)),
         shortfall_price_per_kw=_price(case, "shortfall_price_per_kwh") * count,
         over_price_per_kw=_price(case, "over_price_per_kwh") * count,
         headroom_kw=np.maximum(room, 0.0),
@@ -251,11 +307,14 @@ def _prices(case: Case) -> Prices:
     frame = sheet.frame
     hour, value = book.index(utc_naive(frame["interval_start"])), sheet.numbers("price")
     node = pd.Index(case.tree.node_id).get_indexer(pd.Index(frame["node_id"]))
-    event = {}
+    event, asked = {}, requested_nodes(case)
+    place = pd.Index(asked).get_indexer(pd.Index(frame["node_id"]))
     for kind in ("shed", "over"):
         rows = (frame["kind"] == kind).to_numpy() & (hour >= book.event_from) & (hour < book.event_to)
-        event[kind] = np.zeros(book.event_to - book.event_from)
-        event[kind][hour[rows] - book.event_from] = value[rows]
+        rows &= place >= 0
+        table = np.zeros((len(asked), book.event_to - book.event_from))
+        table[place[rows], hour[rows] - book.event_from] = value[rows]
+        event[kind] = table.ravel()
     importing = np.zeros((len(case.tree.node_id), book.clock.count))
     rows = (frame["kind"] == "import").to_numpy() & (node >= 0) & (hour < book.clock.count)
     importing[node[rows], hour[rows]] = value[rows]
@@ -272,16 +331,18 @@ def _sum(case: Case) -> Sum:
     given = offers.kw[chosen[kept]].sum(axis=0)
     short = terms.request_kw - given
     parts = np.stack([_quote_numbers(case, f"cost_{part}")[chosen] for part in PARTS])
-    short = np.where(short > SHORT_KW, short, 0.0)
+    short = np.where((short > SHORT_KW) & (terms.request_kw > 0.0), short, 0.0)
     gross = float(np.maximum(parts, 0.0).sum()) + float(terms.shortfall_price_per_kw @ short)
     return Sum(
         money=float(_quote_numbers(case, "net_cost")[chosen].sum()),
-        steering=float(steering(book.site_id)[book.called].sum()),
+        steering=float(_steering(case)[book.called].sum()),
         shortfall_kw=short,
-        over_kw=np.maximum(given - terms.request_kw - terms.allowance_kw, 0.0),
+        over_kw=np.where(
+            terms.request_kw > 0.0, np.maximum(given - terms.request_kw - terms.allowance_kw, 0.0), 0.0
+        ),
         gross=gross,
         terms=terms,
     )
 
 
-RULES = (prices, price_settings, bound, figures, horizon)
+RULES = (prices, price_settings, bound, figures, wishes, worst, horizon)

@@ -15,6 +15,7 @@ from fleet.audit.evidence import utc_naive
 from fleet.audit.findings import Findings, Sheet
 from fleet.audit.settled import Settled, days_of, local_day
 from fleet.money import Prices, earned, firm_level_charge, performance_factor
+from fleet.request import outermost
 from sites.units import AnyArray, Floats, Ints
 
 MONEY: Final = ("capacity_payment", "energy_payment", "penalty", "total")
@@ -262,7 +263,7 @@ def fleet_sums(made: Settled, found: Findings) -> None:
     sheet = made.sheet("fleet")
     if not made.whole or len(sheet.frame) != int(made.in_event.sum()):
         return
-    request = made.call.frames["request"].sort_values("interval_start", kind="stable")
+    request = outermost(made.call.frames["request"])
     for name in ("requested_kw", "expected_kw"):
         found.equal("fleet sums", sheet, name, request[name].to_numpy(dtype=np.float64))
     factor = made.windows["delivery_factor"].to_numpy(dtype=np.float64)

@@ -9,7 +9,7 @@ from typing import Any, Final
 import numpy as np
 import pandas as pd
 
-from fleet.audit.case import Case
+from fleet.audit.case import Case, requested_nodes
 from fleet.audit.evidence import utc_naive
 from fleet.audit.findings import Findings, allowed
 from fleet.audit.quotes import lists
@@ -38,21 +38,24 @@ QUOTED: Final = (
 
 
 def request(case: Case, found: Findings) -> None:
-    """One node, direction, purpose and time of call; the intervals one after the other on the grid."""
+    """One direction, purpose and time of call; the intervals one after the other on the grid, node after node."""
     book, sheet = case.evidence, case.evidence.sheets["request"]
     frame = sheet.frame
-    for name in ("node_id", "direction", "purpose", "called_at", "effective_from", "supersedes"):
+    for name in ("direction", "purpose", "called_at", "effective_from", "supersedes"):
         found.same("request", sheet, name, frame[name].mode(dropna=False).iloc[0])
     for name in ("direction", "purpose"):
         unknown = ~frame[name].isin(choices("call", "request", name)).to_numpy()
         found.wrong("request", sheet, name, unknown, frame[name].to_numpy(), "a word of the closed list")
-    starts = book.clock.starts[book.event]
-    stamps = pd.DatetimeIndex(starts).tz_localize("UTC")
-    if len(starts) != len(frame):
-        found.tell(
-            "request", sheet.file, "interval_start", f"{len(frame)} rows", f"{len(starts)} event intervals"
-        )
+    starts, nodes = book.clock.starts[book.event], requested_nodes(case)
+    stamps = pd.DatetimeIndex(np.tile(starts, len(nodes))).tz_localize("UTC")
+    if len(stamps) != len(frame):
+        wanted = f"{len(starts)} event intervals of {len(nodes)} node(s)"
+        found.tell("request", sheet.file, "interval_start", f"{len(frame)} rows", wanted)
         return
+    found.same("request", sheet, "node_id", np.repeat(nodes, len(starts)))
+    if "within_node_id" in frame and frame["node_id"].isin(case.tree.node_id).all():
+        above = [case.tree.nearest_above(name, nodes.tolist()) for name in nodes]
+        found.same("request", sheet, "within_node_id", np.repeat(np.array(above, dtype=object), len(starts)))
     found.same("request", sheet, "interval_start", stamps)
     found.same("request", sheet, "interval_end", stamps + pd.Timedelta(minutes=book.clock.step_minutes))
     called, effective = utc_naive(frame["called_at"]), utc_naive(frame["effective_from"])
@@ -71,12 +74,13 @@ def delivered_as_asked(case: Case, found: Findings) -> None:
     """expected_kw = sum of delivery_factor x expected_kw of the called sites; it meets the request, or says not."""
     book, sheet = case.evidence, case.evidence.sheets["request"]
     factor = book.fact("delivery_factor", book.called)
-    expected = factor @ book.grid("intervals", "expected_kw")[:, book.event]
+    below = np.stack([case.tree.sites_below(name)[book.called] for name in requested_nodes(case)])
+    expected = ((below * factor) @ book.grid("intervals", "expected_kw")[:, book.event]).ravel()
     found.equal("expected at the node", sheet, "expected_kw", expected, np.abs(expected).max(initial=0.0))
     asked, given = sheet.numbers("requested_kw"), sheet.numbers("promised_kw")
     given = np.where(np.isnan(given), sheet.numbers("expected_kw"), given)
     gap = np.maximum(asked - given, 0.0)
-    gap = np.where(gap > 1e-6, gap, 0.0)
+    gap = np.where((gap > 1e-6) & (asked > 0.0), gap, 0.0)
     told = book.record.proof.get("shortfall_kwh", 0.0)
     total = gap.sum() * book.clock.step_h
     if not total and not told:
