@@ -129,7 +129,7 @@ def _explained(
     left = np.flatnonzero(named(wishes.exclude, site_id)).tolist()
     why |= dict.fromkeys(left, "on the list of sites to leave out")
     below = np.any([survey.feeders.sites_below(name) for name in ask.node_ids], axis=0)
-    return explain(allocation, more, survey.quoted.quotes, survey.feeders, below, why)
+    return explain(allocation, more, survey.quoted.quotes, survey.feeders, below, why, survey.headroom.kw)
 
 
 def _check_nothing_new(survey: Survey, home: Path) -> None:

@@ -12,10 +12,11 @@ from fleet.allocate import Allocation
 from fleet.bound import Prices
 from fleet.feeders import Feeders
 from sites.quotes import DenseQuotes
-from sites.units import Bools, Floats, Ints
+from sites.units import Bools, Floats
 
 MORE_SHARE: Final = 0.1
 LEFT_OUT: Final = 3
+ROUNDING_KW: Final = 1e-6
 
 
 @dataclass(frozen=True)
@@ -49,10 +50,12 @@ def explain(
     feeders: Feeders,
     below: Bools,
     why: dict[int, str],
+    headroom_kw: Floats,
 ) -> Explained:
     """What to tell; `more`: the same request with MORE_SHARE more, where it was tried; below (N,): sites asked.
 
-    why: by site, the reason for which it was not offered at all (limits, a list of sites to leave out).
+    headroom_kw (J, T): the room that was left before the call. why: by site, the reason for which it was not
+    offered at all (limits, a list of sites to leave out).
     """
     prices, step_h = allocation.prices, quotes.clock.step_h
     cost = None
@@ -64,7 +67,7 @@ def explain(
         marginal_per_kwh=prices.shed / step_h,
         more_cost=cost,
         more_tried=more is not None,
-        left_out=_left_out(allocation, quotes, feeders, below, why, shed),
+        left_out=_left_out(allocation, quotes, feeders, below, why, shed, headroom_kw),
     )
 
 
@@ -75,6 +78,7 @@ def _left_out(
     below: Bools,
     why: dict[int, str],
     shed: Floats,
+    headroom_kw: Floats,
 ) -> tuple[LeftOut, ...]:
     """The sites not called with the cheapest kWh, at most LEFT_OUT of them."""
     energy = quotes.expected_kw.sum(axis=1) * quotes.clock.step_h
@@ -85,32 +89,33 @@ def _left_out(
     _, first = np.unique(quotes.site[order], return_index=True)
     best = order[first]
     best = best[np.argsort(per_kwh[best], kind="stable")][:LEFT_OUT]
-    paths = _feeder_cost(quotes, feeders, allocation.prices, best)
+    room = headroom_kw - allocation.node_change_kw + ROUNDING_KW
     found = []
-    for c, path in zip(best.tolist(), paths.tolist(), strict=True):
+    for c in best.tolist():
         worth = float(shed @ quotes.expected_kw[c])
         found.append(
             LeftOut(
                 site=int(quotes.site[c]),
                 per_kwh=float(per_kwh[c]),
                 worth_per_kwh=worth / float(energy[c]),
-                reason=why.get(int(quotes.site[c])) or _reason(float(quotes.net_cost[c]), path, worth),
+                reason=why.get(int(quotes.site[c]))
+                or _reason(quotes, feeders, allocation.prices, room, c, worth),
             )
         )
     return tuple(found)
 
 
-def _feeder_cost(quotes: DenseQuotes, feeders: Feeders, prices: Prices, candidates: Ints) -> Floats:
-    """What candidates would pay for room in the feeders above them."""
-    over_path = feeders.below.T.astype(np.float64)[quotes.site[candidates]] @ prices.importing
-    paid: Floats = np.einsum("ct,ct->c", over_path, quotes.change_kw[candidates])
-    return paid
-
-
-def _reason(cost: float, path: float, worth: float) -> str:
-    """In words: dear, no room in a feeder, or too large a lump for what is left to fill."""
+def _reason(
+    quotes: DenseQuotes, feeders: Feeders, prices: Prices, room: Floats, candidate: int, worth: float
+) -> str:
+    """In words: dear, no room in a feeder (J, T kW beside the choice), or too large a lump for what is left."""
+    cost, change = float(quotes.net_cost[candidate]), quotes.change_kw[candidate]
     if cost > worth:
         return "dearer than the last kW called"
-    if cost + path > worth:
-        return "its recovery has no room in a feeder"
+    above = np.flatnonzero(feeders.below[:, quotes.site[candidate]])
+    paid = prices.importing[above] @ change
+    lack = (change - room[above]).max(axis=1)
+    if cost + float(paid.sum()) > worth or lack.max() > 0.0:
+        node = above[int(paid.argmax() if paid.max() > 0.0 else lack.argmax())]
+        return f"no room for its load under the limit of node {feeders.node_id[node]}"
     return "its kW come in a lump that does not fit what is left to fill"

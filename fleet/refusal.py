@@ -3,43 +3,66 @@
 Owns the refusal's sentences and its document. What could be had on other terms is nearest.py's to find out.
 """
 
+from collections.abc import Iterator
+from dataclasses import dataclass
+
 import numpy as np
 
 from fleet.allocate import Allocation
 from fleet.desk import Survey
 from fleet.errors import CannotBeMet
 from fleet.limits import COUNTED, IN_FORCE
-from fleet.nearest import Suggestion, lifted, nearest
+from fleet.nearest import Suggestion, Want, base_share, lifted, nearest
 from fleet.request import Request
 from fleet.shortage import Shortage, explain
 from fleet.wall_time import local_text, utc_timestamp
-from fleet.wishes import Wishes
+from fleet.wishes import Wishes, named
 from sites.quotes import LIMITED_BY
 
 NAMED = 5
 """Sites that a sentence names; the rest is counted."""
+LEAST_GAIN = 1e-3
+"""A lifted class that brings less than this share of the request is not told: figures are that rough."""
+
+
+@dataclass(frozen=True)
+class Told:
+    """All that a refusal tells."""
+
+    want: Want
+    shortage: Shortage
+    base_share: float
+    """The multiple of the request that can be given in all intervals together"""
+    lifted: dict[str, float]
+    near: list[Suggestion]
+
+    def rows(self) -> Iterator[tuple[str, np.datetime64, float, float, float, float]]:
+        """Node, interval and its kW: asked, most alone, best answer, gap; only where something is asked."""
+        ask, told = self.want.ask, self.shortage
+        nodes = np.repeat(np.array(ask.node_ids, dtype=object), ask.interval_count)
+        starts = np.tile(ask.interval_starts, len(ask.node_ids))
+        figures = (told.requested_kw, told.available_kw, told.expected_kw, told.gap_kw)
+        for node, start, *kw in zip(nodes, starts, *(one.tolist() for one in figures), strict=True):
+            if kw[0] > 0.0:
+                yield str(node), start, kw[0], kw[1], kw[2], kw[3]
 
 
 def cannot(survey: Survey, ask: Request, allocation: Allocation, wishes: Wishes) -> CannotBeMet:
-    """The refusal with, per interval, what is available and what binds."""
-    if len(ask.node_ids) > 1:
-        return _several(survey, ask, allocation)
-    allowed = survey.eligible.allowed & ~np.isin(survey.fleet.roster.buildings.site_id, wishes.exclude)
+    """The refusal with, per node and interval, what is available; what binds; and what can be met."""
+    want = Want(survey, ask, named(wishes.exclude, survey.fleet.roster.buildings.site_id))
     shortage = explain(
         allocation,
         survey.quoted.quotes,
         survey.feeders,
         survey.headroom.kw,
-        survey.node_id,
+        ask,
         survey.fleet.roster.buildings.delivery_factor,
-        allowed,
+        want.allowed,
     )
-    asked, sustained = float(ask.requested_kw.max()), shortage.available.sustained_kw
-    plain = not wishes.exclude
-    more = lifted(survey) if plain else {}
-    near = nearest(survey, asked, sustained) if plain else []
-    lines = _lines(survey, shortage, more, near)
-    return CannotBeMet("\n".join(lines), _detail(survey, shortage, more, near))
+    flat_share = float(shortage.sustained_kw[0]) / float(ask.requested_kw.max())
+    base = flat_share if want.is_flat else base_share(want)
+    told = Told(want, shortage, base, lifted(want), nearest(want, base, shortage.available_kw))
+    return CannotBeMet("\n".join(_lines(told)), _detail(told))
 
 
 def cannot_include(survey: Survey, names: list[str]) -> CannotBeMet:
@@ -77,55 +100,44 @@ def cannot_cap(allocation: Allocation, cap_kw: float) -> CannotBeMet:
     )
 
 
-def _several(survey: Survey, ask: Request, allocation: Allocation) -> CannotBeMet:
-    """The refusal of a request at several nodes: what lacks at each, interval by interval."""
-    zone = survey.folder.settings.timezone
-    lines, rows = ["the request cannot be met as asked:"], []
-    given = allocation.expected_kw.reshape(len(ask.node_ids), -1)
-    gap = allocation.shortfall_kw.reshape(len(ask.node_ids), -1)
-    for node, asked, got, lack in zip(ask.node_ids, ask.by_node_kw, given, gap, strict=True):
-        for start, a, g, short in zip(ask.interval_starts, asked, got, lack, strict=True):
-            rows.append(
-                {
-                    "node_id": node,
-                    "interval_start": f"{np.datetime_as_string(start, 's')}Z",
-                    "requested_kw": float(a),
-                    "best_answer_kw": float(g),
-                    "gap_kw": float(short),
-                }
-            )
-            if short > 0.0:
-                lines.append(f"  {node} {local_text(start, zone)}  asked {a:,.1f}, best answer {g:,.1f}")
-    lines += [*not_callable(survey), "ask each node alone with --node for what it can give"]
-    return CannotBeMet("\n".join(lines), {"intervals": rows, "not_callable": not_callable(survey)})
-
-
-def _lines(survey: Survey, shortage: Shortage, more: dict[str, float], near: list[Suggestion]) -> list[str]:
-    zone = survey.folder.settings.timezone
-    starts = survey.quoted.quotes.clock.starts[survey.quoted.quotes.event_from :]
-    lines = ["the request cannot be met as asked:", *shortage.sentences(), *not_callable(survey)]
-    for name, kw in more.items():
-        gain = kw - shortage.available.sustained_kw
-        if gain > 0.0:
-            lines.append(f"+{gain:,.1f} kW if {name} did not bind")
+def _lines(told: Told) -> list[str]:
+    """The refusal's sentences, most general first."""
+    survey, ask = told.want.survey, told.want.ask
+    lines = ["the request cannot be met as asked:", *told.shortage.sentences(), *not_callable(survey)]
+    if not told.want.is_flat:
+        lines.append(f"at most {told.base_share:.1%} of every kW asked can be had in all intervals together")
+    for name, share in told.lifted.items():
+        more = share - told.base_share
+        if more > LEAST_GAIN:
+            flat = f"{more * float(ask.requested_kw.max()):,.1f} kW"
+            lines.append(f"+{flat if told.want.is_flat else f'{more:.1%} of it'} if {name} did not bind")
     lines.append("by interval (kW):")
-    rows = zip(
-        starts, shortage.requested_kw, shortage.available.available_kw, shortage.expected_kw, strict=False
-    )
-    for start, asked, alone, given in rows:
+    for node, start, asked, alone, given, _ in told.rows():
+        where = "" if len(ask.node_ids) == 1 else f"{node} "
+        when = local_text(start, survey.folder.settings.timezone)
         lines.append(
-            f"  {local_text(start, zone)}  asked {asked:,.1f}, at most {alone:,.1f} alone, best answer {given:,.1f}"
+            f"  {where}{when}  asked {asked:,.1f}, at most {alone:,.1f} alone, best answer {given:,.1f}"
         )
-    if near:
+    if told.near:
         lines.append("what can be met:")
-    lines += [
-        f"  {one.change}: --kw {one.kw:g} --from {_iso(one.event_from)} --to {_iso(one.event_to)}"
-        for one in near
-    ]
+    lines += [f"  {one.change}: {_suggested(told.want, one)}" for one in told.near]
     lines.append(
         "ask for less, for a shorter time or at a wider node; or take the best answer with --accept-less"
     )
     return lines
+
+
+def _suggested(want: Want, one: Suggestion) -> str:
+    """A suggestion as options of the call, or as what to change in the request file."""
+    when = f"--from {_iso(one.event_from)} --to {_iso(one.event_to)}"
+    if want.is_flat:
+        return f"--kw {one.kw[0, 0]:g} {when}"
+    if one.change == "less":
+        return f"every kW of the request times {one.kw.sum() / want.ask.requested_kw.sum():.2f}"
+    first, last = (
+        local_text(t, want.survey.folder.settings.timezone) for t in (one.event_from, one.event_to)
+    )
+    return f"the same kW from {first} to {last}"
 
 
 def _iso(time: np.datetime64) -> str:
@@ -159,40 +171,35 @@ def _few(names: list[str]) -> str:
     return ", ".join(names[:NAMED]) + more
 
 
-def _detail(
-    survey: Survey, shortage: Shortage, more: dict[str, float], near: list[Suggestion]
-) -> dict[str, object]:
-    quotes = survey.quoted.quotes
-    starts = quotes.clock.starts[quotes.event_from : quotes.event_to]
-    return {
-        "sustained_kw": shortage.available.sustained_kw,
+def _detail(told: Told) -> dict[str, object]:
+    """The refusal as a document; shares are multiples of every kW asked."""
+    ask, shortage = told.want.ask, told.shortage
+    found: dict[str, object] = {
         "intervals": [
             {
-                "interval_start": f"{np.datetime_as_string(start, 's')}Z",
-                "requested_kw": float(asked),
-                "available_kw": float(alone),
-                "best_answer_kw": float(given),
-                "gap_kw": float(gap),
+                "node_id": node,
+                "interval_start": _iso(start),
+                "requested_kw": asked,
+                "available_kw": alone,
+                "best_answer_kw": given,
+                "gap_kw": gap,
             }
-            for start, asked, alone, given, gap in zip(
-                starts,
-                shortage.requested_kw,
-                shortage.available.available_kw,
-                shortage.expected_kw,
-                shortage.gap_kw,
-                strict=True,
-            )
+            for node, start, asked, alone, given, gap in told.rows()
         ],
-        "sustained_kw_if_lifted": shortage.lifted | more,
+        "sustained_share": told.base_share,
+        "sustained_share_if_lifted": told.lifted,
         "can_be_met": [
             {
                 "change": one.change,
-                "kw": one.kw,
+                "kw": one.kw.tolist(),
                 "event_from": _iso(one.event_from),
                 "event_to": _iso(one.event_to),
             }
-            for one in near
+            for one in told.near
         ],
         "sites_limited_by": shortage.limited_by,
-        "not_callable": not_callable(survey),
+        "not_callable": not_callable(told.want.survey),
     }
+    if len(ask.node_ids) == 1:
+        found["sustained_kw"] = float(shortage.sustained_kw[0])
+    return found
