@@ -7,26 +7,21 @@ recomputed in numpy. The bound is bound.py's, the prices are prices.py's, the se
 import time
 from collections.abc import Callable
 from dataclasses import dataclass, replace
-from typing import Any, Final
+from typing import Any
 
 import numpy as np
 
 from fleet import wishes as wishing
+from fleet.answer import FIRM_FACTOR, Answer, best_answer
 from fleet.bound import Offers, Prices, Terms, steering, worst_node
-from fleet.choice import Status
-from fleet.effort import Effort, within
+from fleet.choices import Status
+from fleet.effort import within
 from fleet.feeders import Feeders
-from fleet.improve import Score, score
-from fleet.most import most_of
-from fleet.narrow import solve
 from fleet.offers import allowance_kw, check_fit, offered, offers_of
-from fleet.prices import Searched, priced
 from fleet.request import Request
 from fleet.wishes import Wishes
 from sites.quotes import COST_PARTS, DenseQuotes
 from sites.units import Bools, Floats, Ints, Strings
-
-FIRM_FACTOR: Final = 1000.0
 
 
 @dataclass(frozen=True)
@@ -103,17 +98,6 @@ class Allocation:
         return not bool(self.shortfall_kw.any())
 
 
-@dataclass(frozen=True)
-class _Answer:
-    """The best choice found, its score, and the largest valid bound a solver gave."""
-
-    searched: Searched
-    chosen: Ints
-    score: Score
-    bound_solver: float
-    terms: Terms
-
-
 def allocate(
     quotes: DenseQuotes,
     feeders: Feeders,
@@ -162,7 +146,7 @@ def allocate(
         headroom_kw=headroom_kw,
     )
     gross = _gross_costs(quotes, kept)
-    answer = _answer(offers, terms, gross, target_gap, within(seconds, stopwatch, rough))
+    answer = best_answer(offers, terms, gross, target_gap, within(seconds, stopwatch, rough))
     proof = _proof(quotes, kept, offers, answer, gross, target_gap, stopwatch() - started)
     told = replace(_wished(proof, wishes, per_call, bonus), **_worst(offers, answer, gross, feeders))
     return _allocation(quotes, kept, answer, told)
@@ -181,7 +165,7 @@ def _wished(proof: Proof, wishes: Wishes, per_call: float, bonus: float) -> Proo
     )
 
 
-def _worst(offers: Offers, answer: _Answer, gross: Floats, feeders: Feeders) -> dict[str, Any]:
+def _worst(offers: Offers, answer: Answer, gross: Floats, feeders: Feeders) -> dict[str, Any]:
     """The proof's worst node and its gap."""
     node, gap = worst_node(offers, answer.terms, answer.searched.prices, answer.chosen, gross[answer.chosen])
     if node < 0:
@@ -195,57 +179,11 @@ def _gross_costs(quotes: DenseQuotes, kept: Ints) -> Floats:
     return gross
 
 
-def _answer(offers: Offers, terms: Terms, gross: Floats, target_gap: float, effort: Effort) -> _Answer:
-    """The best choice that meets the request, at firm prices; at the given ones where none meets it.
-
-    A bound at the given prices holds at firm ones too: a dearer shortfall makes no choice cheaper.
-    """
-    firm = replace(terms, shortfall_price_per_kw=terms.shortfall_price_per_kw * FIRM_FACTOR)
-    searched = priced(offers, firm, effort.sooner(0.5))
-    if searched.bound.value <= _dearest(offers, terms):
-        found = solve(offers, firm, gross, searched, target_gap, (), effort)
-        if not found.score.met:
-            able = _able(offers, terms, effort)
-            if able is not None:
-                found = solve(offers, firm, gross, searched, target_gap, (able,), effort, found.bound_solver)
-        if found.score.met:
-            return _told(offers, terms, firm, searched, found.chosen, found.bound_solver)
-    searched = priced(offers, terms, effort.sooner(0.5))
-    found = solve(offers, terms, gross, searched, target_gap, (), effort)
-    return _Answer(searched, found.chosen, found.score, found.bound_solver, terms)
-
-
-def _told(
-    offers: Offers, terms: Terms, firm: Terms, searched: Searched, chosen: Ints, bound_solver: float
-) -> _Answer:
-    """An answer that meets the request, at the given shortfall price where the bound's prices keep within it."""
-    inside = bool((searched.prices.shed <= terms.shortfall_price_per_kw).all())
-    if inside and bound_solver <= searched.bound.value:
-        return _Answer(searched, chosen, score(offers, terms, chosen), -np.inf, terms)
-    return _Answer(searched, chosen, score(offers, firm, chosen), bound_solver, firm)
-
-
-def _dearest(offers: Offers, terms: Terms) -> float:
-    """What no choice that meets the request can cost more than: a bound above it proves that there is none."""
-    top = np.zeros(offers.site_count)
-    np.maximum.at(top, offers.site, offers.cost)
-    most = np.zeros((offers.site_count, offers.kw.shape[1]))
-    np.maximum.at(most, offers.site, offers.kw)
-    return float(top.sum() + most.sum(axis=0) @ terms.over_price_per_kw)
-
-
-def _able(offers: Offers, terms: Terms, effort: Effort) -> Ints | None:
-    """Candidates that meet the request whatever they cost; None where none were found."""
-    asked = float(terms.request_kw.max())
-    able = most_of(offers, terms.headroom_kw, terms.request_kw, effort, enough=asked)
-    return able.chosen if score(offers, terms, able.chosen).met else None
-
-
 def _proof(
     quotes: DenseQuotes,
     kept: Ints,
     offers: Offers,
-    answer: _Answer,
+    answer: Answer,
     gross: Floats,
     target_gap: float,
     seconds: float,
@@ -294,7 +232,7 @@ def _proof(
     )
 
 
-def _allocation(quotes: DenseQuotes, kept: Ints, answer: _Answer, proof: Proof) -> Allocation:
+def _allocation(quotes: DenseQuotes, kept: Ints, answer: Answer, proof: Proof) -> Allocation:
     chosen = kept[answer.chosen]
     candidate = np.full(quotes.site_count, -1, dtype=np.int64)
     candidate[quotes.site[chosen]] = chosen

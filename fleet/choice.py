@@ -16,13 +16,13 @@ import sys
 import time
 import warnings
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass, replace
-from enum import StrEnum
+from dataclasses import replace
 from typing import Any, Final
 
 import numpy as np
 import pulp
 
+from fleet.choices import UNLIMITED, Choices, Chosen, Most, Relaxed, Status, Work
 from sites.units import Floats, Ints
 
 LEAST_SECONDS: Final = 0.1
@@ -42,87 +42,6 @@ HIGHS_OPTIONS: Final = frozenset(
     }
 )
 """Names that may be passed on: HiGHS takes a misspelt one without a word through PuLP."""
-
-
-class Status(StrEnum):
-    """How far an answer is proven; values may be read only where `is_ok`."""
-
-    PROVEN = "proven"
-    FEASIBLE_CUT_SHORT = "feasible_cut_short"
-    INFEASIBLE = "infeasible"
-    FAILED = "failed"
-
-    @property
-    def is_ok(self) -> bool:
-        """There is an answer that keeps the rows."""
-        return self in (Status.PROVEN, Status.FEASIBLE_CUT_SHORT)
-
-
-@dataclass(frozen=True)
-class Choices:
-    """A whole model in plain arrays: C columns of any sites, E intervals, L coupling rows."""
-
-    site: Ints
-    """(C,) any integers; equal ones exclude each other"""
-    cost: Floats
-    kw: Floats
-    """(C, E)"""
-    request_kw: Floats
-    allowance_kw: Floats
-    shortfall_price_per_kw: Floats
-    over_price_per_kw: Floats
-    rows: Floats
-    """(L, C) of A x <= room"""
-    room: Floats
-    """(L,)"""
-    row_price: float | None = None
-    """Money per unit by which a coupling row is broken; None = never. For searches only: an answer keeps the rows"""
-
-
-@dataclass(frozen=True)
-class Work:
-    """How much a solver may do: nodes, checks of its limits (its own count of work), seconds. Zero is no limit.
-
-    Nodes and checks do not depend on the machine's load: the same model stops at the same place.
-    """
-
-    nodes: int = 0
-    checks: int = 0
-    seconds: float = 0.0
-
-
-@dataclass(frozen=True)
-class Relaxed:
-    """Optimum of the linear relaxation; prices are of the sign that makes them 0 or more."""
-
-    status: Status
-    objective: float
-    x: Floats
-    price_shed: Floats
-    price_over: Floats
-    price_rows: Floats
-
-
-@dataclass(frozen=True)
-class Chosen:
-    """Answer of a model with whole candidates; `chosen` are column indices, sorted."""
-
-    status: Status
-    chosen: Ints
-    objective: float
-    """As the solver told it"""
-    bound_solver: float
-    """No answer of this model costs less, by the solver's word; -inf where it gives none"""
-
-
-@dataclass(frozen=True)
-class Most:
-    """The largest multiple of a profile that can be given, and the candidates that give it."""
-
-    status: Status
-    kw: float
-    """Rounded down to 0.001 from what `chosen` gives by numpy"""
-    chosen: Ints
 
 
 def relaxation(choices: Choices, solver: str = "highs", profile: Floats | None = None) -> Relaxed:
@@ -146,7 +65,7 @@ def relaxation(choices: Choices, solver: str = "highs", profile: Floats | None =
 
 
 def integer(
-    choices: Choices, gap: float, work: Work = Work(), start: Ints | None = None, solver: str = "highs"
+    choices: Choices, gap: float, work: Work = UNLIMITED, start: Ints | None = None, solver: str = "highs"
 ) -> Chosen:
     """Whole candidates; stops at `gap` (money) between answer and bound, or where `work` is done.
 
@@ -164,7 +83,7 @@ def integer(
 
 
 def most_kw(
-    choices: Choices, profile: Floats, work: Work = Work(), enough: float = np.inf, solver: str = "highs"
+    choices: Choices, profile: Floats, work: Work = UNLIMITED, enough: float = np.inf, solver: str = "highs"
 ) -> Most:
     """Largest factor f with sum kw x >= f profile in all intervals with profile > 0, coupling rows kept.
 
@@ -403,7 +322,10 @@ def _most_by_site(site: Ints, values: Floats) -> Floats:
 
 
 def _highs(
-    whole: bool, options: dict[str, float | int | bool], start: dict[Any, float] | None, work: Work = Work()
+    whole: bool,
+    options: dict[str, float | int | bool],
+    start: dict[Any, float] | None,
+    work: Work = UNLIMITED,
 ) -> Any:
     """HiGHS within this process, quiet, with checked options, a known answer to start from and counted work."""
     unknown = sorted(set(options) - HIGHS_OPTIONS)

@@ -8,7 +8,8 @@ from collections.abc import Callable
 from dataclasses import dataclass
 from typing import Final
 
-from fleet.choice import LEAST_SECONDS, Work
+from fleet.choice import LEAST_SECONDS
+from fleet.choices import Work
 
 
 @dataclass(frozen=True)

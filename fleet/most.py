@@ -9,7 +9,8 @@ from typing import Final
 import numpy as np
 
 from fleet.bound import Offers, Terms
-from fleet.choice import Most, Status, factor_of, most_kw
+from fleet.choice import factor_of, most_kw
+from fleet.choices import Most, Status
 from fleet.effort import STEADY, Effort, within
 from fleet.feeders import Feeders
 from fleet.improve import repaired

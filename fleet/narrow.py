@@ -61,7 +61,8 @@ class Incumbent:
 
     def _take(self, chosen: Ints) -> None:
         trial = score(self.offers, self.terms, chosen)
-        if trial.keeps_limits and trial.objective < self.score.objective - 1e-12:
+        better = trial.objective < self.score.objective - 1e-12
+        if trial.keeps_limits and (better or not self.score.keeps_limits):
             self.chosen, self.score = chosen, trial
 
 

@@ -13,7 +13,8 @@ from typing import Final
 import numpy as np
 
 from fleet.bound import Bound, Offers, Prices, Terms, bound_from_prices
-from fleet.choice import Choices, Relaxed, relaxation
+from fleet.choice import relaxation
+from fleet.choices import Choices, Relaxed
 from fleet.climb import WIDE, climb
 from fleet.effort import Effort
 from sites.units import Bools, Floats, Ints

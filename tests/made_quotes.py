@@ -6,7 +6,7 @@ from itertools import product
 import numpy as np
 
 from fleet.bound import Offers, Terms
-from fleet.choice import Choices
+from fleet.choices import Choices
 from sites.candidate import no_stages
 from sites.clock import Clock
 from sites.direction import Direction

@@ -10,7 +10,7 @@ from made_quotes import by_enumeration, kept, made_quotes
 import fleet.allocate
 from fleet.allocate import allocate
 from fleet.bound import Offers, Terms, bound_from_prices, steering
-from fleet.choice import Choices
+from fleet.choices import Choices
 from fleet.errors import FleetError
 from fleet.feeders import feeders
 from fleet.most import most

@@ -12,7 +12,8 @@ from made_quotes import as_offers, by_enumeration, made_choices, objective_of
 
 from fleet import choice
 from fleet.bound import Prices, bound_from_prices
-from fleet.choice import HIGHS_OPTIONS, Choices, Status, Work, integer, most_kw, relaxation
+from fleet.choice import HIGHS_OPTIONS, integer, most_kw, relaxation
+from fleet.choices import Choices, Status, Work
 
 scipy_optimize = pytest.importorskip("scipy.optimize")
 
