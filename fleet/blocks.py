@@ -12,9 +12,6 @@ import numpy as np
 from fleet.bound import Offers, Terms
 from sites.units import Floats, Ints
 
-UNSEEN_SHARE = 1e-8
-"""Candidates whose share of their site is smaller are left out of the curvature."""
-
 
 @dataclass(frozen=True)
 class Block:
@@ -128,21 +125,3 @@ def smoothed(blocks: Sequence[Block], rows: Rows, prices: Floats, tau: float) ->
         rows.spread(block, -block.weight * (share @ block.matrix), slope)
         shares.append(share)
     return Smoothed(value, exact, slope, shares)
-
-
-def curvature(
-    blocks: Sequence[Block], rows: Rows, shares: Sequence[Floats], free: Ints, tau: float
-) -> Floats:
-    """(F, F) negative second derivative in the `free` rows: spread of each site's candidates over tau, summed."""
-    total = np.zeros((free.size, free.size))
-    for block, share in zip(blocks, shares, strict=True):
-        here, column, sign = rows.columns(block, free)
-        seen = np.flatnonzero(share > UNSEEN_SHARE)
-        if here.size == 0 or seen.size == 0:
-            continue
-        part = block.matrix[np.ix_(seen, column)] * sign
-        weighted = part * share[seen, None]
-        group = block.group[seen]
-        mean = np.add.reduceat(weighted, np.flatnonzero(np.r_[True, np.diff(group) != 0]), axis=0)
-        total[np.ix_(here, here)] += (block.weight / tau) * (weighted.T @ part - mean.T @ mean)
-    return total

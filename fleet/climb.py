@@ -11,7 +11,8 @@ from typing import Final
 
 import numpy as np
 
-from fleet.blocks import Block, Rows, Smoothed, arranged, curvature, patterns, rows_of, smoothed
+from fleet.bend import Bend, bend, newton_move
+from fleet.blocks import Block, Rows, Smoothed, arranged, patterns, rows_of, smoothed
 from fleet.bound import Offers, Prices, Terms, bound_from_prices
 from sites.units import Bools, Floats, Ints
 
@@ -107,8 +108,8 @@ def _level(blocks: Sequence[Block], rows: Rows, at: Floats, tau: float) -> tuple
         free = np.flatnonzero(~(low | high))
         if free.size == 0:
             break
-        bend = curvature(blocks, rows, here.shares, free, tau)
-        step = _newton(blocks, rows, at, here, tau, free, bend, damping)
+        curved = bend(blocks, rows, here.shares, free, tau)
+        step = _newton(blocks, rows, at, here, tau, free, curved, damping)
         if step is None:
             break
         at, gained, here, damping = step
@@ -125,15 +126,16 @@ def _newton(
     here: Smoothed,
     tau: float,
     free: Ints,
-    bend: Floats,
+    curved: Bend,
     damping: float,
 ) -> tuple[Floats, float, Smoothed, float] | None:
     """One step of the free rows, damped (Levenberg 1944) until it climbs; None where none does."""
-    size = np.diag(bend)
-    floor = 1e-9 * float(size.max(initial=0.0)) + 1e-30
     slope = here.slope[free]
     for _ in range(MOST_TRIES):
-        move = np.linalg.solve(bend + np.diag(damping * size + floor * (1.0 + damping * 1e6)), slope)
+        move = newton_move(curved, slope, damping)
+        if move is None:
+            damping = max(10.0 * damping, 1e-3)
+            continue
         there = at.copy()
         there[free] = np.clip(at[free] + move, 0.0, rows.cap[free])
         trial = smoothed(blocks, rows, there, tau)
