@@ -177,9 +177,12 @@ def quote(
     at: At = None,
     direction: Way = "shed",
     tons: Annotated[bool, typer.Option("--tons", help="Cooling in tons and ton-hours.")] = False,
+    site: Annotated[
+        str | None, typer.Option("--site", help="One site's quote line by line, to check by hand.")
+    ] = None,
     json: Json = False,
 ) -> None:
-    """Tell what each site and the fleet can give, what limits it, what recovery costs.
+    """Tell what each site and the fleet can give, for how long, what limits it, what recovery costs.
 
     Example: shedwright quote rehearsal --from 2026-07-15T16:00 --to 2026-07-15T19:00 --at 2026-07-15T13:00
     """
@@ -189,7 +192,10 @@ def quote(
     survey = desk.survey(fleet, _ask(fleet, start, end, node, at, direction), terminal.progress)
     terminal.progress("working out what the fleet can give together")
     told = quoting.offer(survey)
-    terminal.put(show.quote_lines(survey, told, tons), show.quote_json(survey, told))
+    lines = (
+        show.quote_lines(survey, told, tons) if site is None else show.site_lines(survey, told, site, tons)
+    )
+    terminal.put(lines, show.quote_json(survey, told) | ({} if site is None else {"reckoning": lines}))
 
 
 @app.command()

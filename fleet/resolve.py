@@ -16,6 +16,7 @@ from fleet.schema import table
 from fleet.settings import Settings
 from sites.chiller import RATED_COP_MINIMUM
 from sites.roster import ICE_KINDS
+from sites.tank import water_at_return_kwh_th
 from sites.units import KW_TH_PER_TON, AnyArray
 
 COOLING_KW_TH_PER_M2: Final = 0.1
@@ -70,6 +71,7 @@ def resolve(frames: dict[str, pd.DataFrame], settings: Settings) -> Resolved:
     assumed: list[Assumption] = []
     tanks = _tanks(frames["tanks"], assumed)
     sites = _sites(frames, settings, assumed)
+    tanks = _at_return(tanks, sites, assumed)
     chillers = _chillers(frames["chillers"], tanks, assumed)
     return Resolved(sites, chillers, tanks, tuple(assumed))
 
@@ -147,6 +149,33 @@ def _tanks(given: pd.DataFrame, assumed: list[Assumption]) -> pd.DataFrame:
     for column in ("discharge_limit_kw_th", "charge_limit_kw_th"):
         fill(column, flow, f"capacity over {CHILLED_WATER_HOURS:g} h (chilled water)")
     return _plain_defaults("tanks", tanks, fill)
+
+
+def _at_return(tanks: pd.DataFrame, sites: pd.DataFrame, assumed: list[Assumption]) -> pd.DataFrame:
+    """Chilled-water tanks with the capacity, and the flow limit assumed from it, that the site's return leaves them."""
+    place = pd.Index(sites["site_id"]).get_indexer(pd.Index(tanks["site_id"]))
+    supply, comes = (sites[name].to_numpy(dtype=np.float64)[place] for name in ("supply_c", "return_c"))
+    design = tanks["design_return_c"].to_numpy(dtype=np.float64, na_value=np.nan)
+    colder = (tanks["kind"] == "chilled_water").to_numpy() & (comes < design) & (design > supply)
+    if not colder.any():
+        return tanks
+    tanks = tanks.copy()
+    share = np.ones(len(tanks))
+    share[colder] = water_at_return_kwh_th(1.0, supply[colder], comes[colder], design[colder])
+    flow = pd.Series(tanks["capacity_kwh_th"] / CHILLED_WATER_HOURS)
+    for column in ("discharge_limit_kw_th", "charge_limit_kw_th"):
+        by_default = np.isclose(tanks[column].to_numpy(dtype=np.float64, na_value=np.nan), flow)
+        tanks[column] = tanks[column] * np.where(by_default, share, 1.0)
+    for column in ("capacity_kwh_th", "capacity_ton_h"):
+        tanks[column] = tanks[column] * share
+    # What the capacity is stated at from here on: nothing shrinks twice.
+    tanks["design_return_c"] = tanks["design_return_c"].where(~colder, comes)
+    keys = (tanks["site_id"].astype(object) + "/" + tanks["tank_id"].astype(object))[colder]
+    why = "less than stated: the return is colder than the tank's design return"
+    assumed.extend(
+        assumptions("tanks", keys, "capacity_kwh_th", tanks.loc[colder, "capacity_kwh_th"].to_numpy(), why)
+    )
+    return tanks
 
 
 def _both_sizes(frame: pd.DataFrame, metric: str, us: str) -> None:

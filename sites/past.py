@@ -55,7 +55,8 @@ def compare(usual_kw: Floats, compressors_kw: Floats, metered_kw: Floats, step_h
 
     Intervals whose meter is NaN are not compared. The factor is compressor energy of the model over what the meter
     leaves for compressors when the model's auxiliaries are taken out: usual operation and event move together by it,
-    for it acts on the machines and not on a result. It is taken only where the intervals agree better with it, too, and within FOLLOWS_CV.
+    for it acts on the machines and not on a result. It is taken only where the intervals agree better with it, too,
+    and within FOLLOWS_CV.
     """
     held = np.isfinite(metered_kw)
     meter, model = np.where(held, metered_kw, 0.0), np.where(held, usual_kw, 0.0)

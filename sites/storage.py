@@ -9,7 +9,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from sites import tank
-from sites.roster import LAYOUTS
+from sites.roster import LAYOUTS, TANK_KINDS, kind_is
 from sites.rows import Plants
 from sites.units import Bools, Floats, Ints, total
 
@@ -29,6 +29,16 @@ def _inlet_c(rows: Plants, tank_share: Floats) -> Floats:
     series = buildings.layout == LAYOUTS.index("series")
     rise = buildings.return_c - buildings.supply_c
     return buildings.supply_c + rise * np.where(series, np.clip(tank_share, 0.0, 1.0), 1.0)
+
+
+def _reach(rows: Plants) -> Floats:
+    """Share of the load (row,) that the tanks can take on: all of it, but with a tank of eutectic salt, which cools no
+    colder than its melting point, what lies between the return and that; the rest is left to machines behind it."""
+    buildings, tanks = rows.roster.buildings, rows.roster.tanks
+    salt = (kind_is(tanks.kind, TANK_KINDS, ("eutectic_salt",)) & rows.tank_available).any(axis=1)
+    whole = np.maximum(buildings.return_c - buildings.supply_c, 1e-9)
+    share = np.clip((buildings.return_c - tank.EUTECTIC_MELTING_C) / whole, 0.0, 1.0)
+    return np.where(salt, share, 1.0)
 
 
 @dataclass(frozen=True)
@@ -65,12 +75,14 @@ class Behind:
 
     index: Ints
     rows: Plants
+    reach: Floats
+    """Share of the load that the tanks of every row (not only those in series) can take on"""
 
 
 def behind(rows: Plants) -> Behind:
     """Gather the rows in series once, for all intervals."""
     index = np.flatnonzero(rows.roster.buildings.layout == LAYOUTS.index("series"))
-    return Behind(index, rows.take(index))
+    return Behind(index, rows.take(index), _reach(rows))
 
 
 def discharge(
@@ -89,8 +101,10 @@ def discharge(
     In series the inlet follows the tanks' share of what is served (the building's flow is cut to what can be
     cooled to its supply), and the share follows the limit: from the share that is wanted, SERIES_PASSES more
     close in on the limit from above, each some eight times nearer. In parallel the inlet is the loop's return
-    and one pass is exact.
+    and one pass is exact. Tanks of eutectic salt take on no more of the load than they can cool.
     """
+    reachable = series.reach * load
+    wanted = np.minimum(wanted, reachable)
     knots, lmtd = _knots(rows, wanted / np.maximum(load, 1e-9))
     most = _most(rows, step_h, start, loss, knots)
     usable = _above_reserve(rows, step_h, staged, start, loss, most)
@@ -106,7 +120,7 @@ def discharge(
         drawn = np.minimum(drawn, usable)
     sum_most = total(most)
     given = np.divide(drawn, sum_most, out=np.zeros_like(drawn), where=sum_most > 0.0)
-    could = np.divide(usable, sum_most, out=np.zeros_like(drawn), where=sum_most > 0.0)
+    could = np.divide(np.minimum(usable, reachable), sum_most, out=np.zeros_like(drawn), where=sum_most > 0.0)
     return Discharged(most * given[:, None], drawn, most * could[:, None], lmtd, knots)
 
 

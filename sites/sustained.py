@@ -9,7 +9,7 @@ from typing import Final
 import numpy as np
 
 from sites.quotes import DenseQuotes
-from sites.units import Floats, Ints
+from sites.units import Bools, Floats, Ints
 
 LENGTHS_H: Final = (0.5, 1.0, 2.0, 3.0, 4.0, 6.0)
 
@@ -48,6 +48,21 @@ def sustained(quotes: DenseQuotes, hours: tuple[float, ...] = LENGTHS_H) -> Sust
         site, pick = site[some], pick[some]
         kw[site, column], chosen[site, column], cost[site, column] = floor[pick], pick, per_kwh[pick]
     return Sustained(tuple(hours), kw, chosen, cost)
+
+
+def together_kw(quotes: DenseQuotes, among: Bools, hours: tuple[float, ...] = LENGTHS_H) -> Floats:
+    """Most kW (length,) that the sites of `among` (N,) hold up at the same time over some stretch of each length, each
+    with one candidate; feeder limits are not in it. NaN where the event is shorter."""
+    steps = [int(np.ceil(length / quotes.clock.step_h - 1e-9)) for length in hours]
+    found = np.full(len(hours), np.nan)
+    for column, length in enumerate(steps):
+        if length > quotes.event_to - quotes.event_from:
+            continue
+        floors = np.lib.stride_tricks.sliding_window_view(quotes.expected_kw, length, axis=1).min(axis=2)
+        best = np.zeros((quotes.site_count, floors.shape[1]))
+        np.maximum.at(best, quotes.site, floors)
+        found[column] = best[among].sum(axis=0).max(initial=0.0)
+    return found
 
 
 def _floor(expected_kw: Floats, steps: int) -> Floats:

@@ -13,6 +13,8 @@ from reference.fine_case import STEP_H, Plants
 from sites.units import Bools, Floats
 
 HALVINGS = 24
+SALT_C = 8.3
+"""Phase change of the salt (Chen and Sheen 1993)."""
 STRAND = (0.0, 0.09, -0.15, 0.612, -0.324, -0.216)
 INTERNAL = (1.3879, -7.6333, 26.3423, -47.6084, 41.8498, -14.2948)
 EXTERNAL = (1.1756, -5.3689, 17.3602, -30.1077, 25.6387, -8.5102)
@@ -110,6 +112,11 @@ def drawn_kw_th(
     """Discharge of each tank (N, K). In series inlet and rate are solved together, by halving where they bind."""
     free = np.maximum((held.sum(1) - plants.held_back_kwh_th) / STEP_H - loss.sum(1), 0.0)
     wanted = np.where(staged, np.minimum(wanted, free), wanted)
+    # Salt melts at SALT_C: water that has been cooled to that is cooled no further.
+    cooled = np.maximum(plants.return_c - np.maximum(plants.supply_c, SALT_C), 0.0)
+    part = cooled / (plants.return_c - plants.supply_c)
+    salty = (tanks.salt & (plants.tank_kwh_th > 0.0)).any(1)
+    wanted = np.where(salty, np.minimum(wanted, part * load), wanted)
     most = most_kw_th(plants, tanks, held, loss, plants.return_c)
     pick = np.flatnonzero(plants.series & (wanted > 0.0))
     if len(pick):
