@@ -35,8 +35,10 @@ def cross_problems(frames: Frames, files: Mapping[str, str]) -> list[Problem]:
 def _unknown(
     frames: Frames, files: Mapping[str, str], name: str, column: str, target: str, key: str
 ) -> list[Problem]:
-    """Rows of table `name` whose `column` is not a `key` of `target`."""
+    """Rows of table `name` whose `column` is not a `key` of `target`; sites without any id say so themselves."""
     known = frames[target][key].dropna()
+    if target == "sites" and known.empty and len(frames[target]):
+        return []
     wanted = frames[name][column].dropna()
     stray = wanted[~wanted.isin(known)].drop_duplicates()
     advice = f"add it to {target}, or correct the spelling"
@@ -192,8 +194,9 @@ def _cycles(nodes: pd.DataFrame, file: str) -> list[Problem]:
 
 
 def _chargeable(frames: Frames, files: Mapping[str, str]) -> list[Problem]:
-    """Tanks that no chiller of their site can charge."""
+    """Tanks that no chiller of their site can charge; a tank of an unknown site is told of for that alone."""
     chillers, tanks = frames["chillers"], frames["tanks"].dropna(subset=["site_id", "kind"])
+    tanks = tanks[tanks["site_id"].isin(frames["sites"]["site_id"])]
     ice = tanks["kind"].isin(ICE_KINDS)
     cooled = tanks["site_id"].isin(chillers["site_id"])
     makers = chillers.loc[chillers["makes_ice"].fillna(True).astype(bool), "site_id"]
