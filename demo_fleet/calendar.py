@@ -41,12 +41,14 @@ class Scene:
     """highest dry bulb of the day, about"""
     sun_price_per_kwh: float | None
     """None: as on any other day"""
+    settlement_rule: str
 
 
-EVENING: Final = Scene(13, 16, 19, 36.0, None)
+EVENING: Final = Scene(13, 16, 19, 36.0, None, "ten_of_ten")
 """A peak at the end of a hot afternoon."""
-MIDDAY: Final = Scene(9, 12, 15, 32.0, -0.03)
-"""A summer day like others, and more sun than the grid can carry away: who takes energy then is paid for it."""
+MIDDAY: Final = Scene(9, 12, 15, 33.3, -0.03, "high_four_of_five")
+"""A day as warm as its season, and more sun than the grid can carry away: who takes energy then is paid for it. Its
+rule adds a morning's level to recent days and scales nothing: tanks take up a small part of what a building draws."""
 
 
 @dataclass(frozen=True)

@@ -144,7 +144,7 @@ def _tank_status(
     )
 
 
-def fleet_toml() -> str:
+def fleet_toml(scene: calendar.Scene = calendar.EVENING) -> str:
     """fleet.toml of the invented fleet."""
     return f'''# An invented fleet in an invented district; no line of it is about a real place.
 name = "Oramene cool storage fleet"
@@ -157,5 +157,5 @@ capacity_payment_per_kwh = 0.30
 energy_payment_per_kwh = 0.12
 penalty_per_kwh = 0.20
 shortfall_price_per_kwh = 3.0
-settlement_rule = "ten_of_ten"
+settlement_rule = "{scene.settlement_rule}"
 '''

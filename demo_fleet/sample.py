@@ -339,4 +339,4 @@ def _write_tables(
     write_csv(papers.holidays(), path / "holidays.csv")
     write_csv(papers.plant_days(ids[world.tank_out], ids[world.machine_out]), path / "plant_days.csv")
     write_csv(readings.meter_map(ids).drop(columns="part"), path / "meter_map.csv")
-    write_text(papers.fleet_toml(), path / "fleet.toml")
+    write_text(papers.fleet_toml(world.scene), path / "fleet.toml")

@@ -23,6 +23,16 @@ RESTART_MINUTES: Final = 15
 PEAK_MINUTES: Final = 15
 """The building over its highest kW for so long ends an absorb: a common demand interval."""
 
+RECOVERIES: Final = {
+    "usual": "in the usual hours",
+    "now": "as soon as the event is over",
+    "delayed": "in the usual hours, without the first two",
+    "night": "at night, 22:00 to 06:00",
+    "midday": "around midday, 10:00 to 15:00",
+    "capped": "at any hour, the building's meter within its peak so far",
+}
+"""When the tank is brought back to its usual level."""
+
 BANNERS: Final = {
     "real": "REAL EVENT",
     "test": "TEST - THIS IS A TEST EVENT - carry it out as you would a real one - TEST",
@@ -214,7 +224,8 @@ def _after(site: CalledSite) -> str:
         said += ", which goes on charging. "
     else:
         caps = ", ".join(f"{plain(step.unit_id)} {site.words.cooling(step.value or 0.0)}" for step in again)
-        said += f"; no charging before {site.words.time(first)}, then at most {caps}. "
+        when = RECOVERIES[str(site.window.recovery)]
+        said += f"; no charging before {site.words.time(first)}, then {when}, at most {caps}. "
     said += "The tank starts fuller, so less is charged than usual. Full early: stop charging and ring; "
     if site.has_ice:
         return said + "never past full, and never lower the low-brine trip to charge faster."
@@ -227,11 +238,13 @@ def recharge(site: CalledSite) -> str:
         return _after(site)
     if not site.tanks:
         return "No tank on this site."
+    when = RECOVERIES[str(site.window.recovery)]
     starts = [step for step in site.steps if step.action == "recharge_may_start"]
     by = sorted(step.at for step in site.steps if step.action == "full_by")
     if starts:
         caps = ", ".join(f"{plain(step.unit_id)} {site.words.cooling(step.value or 0.0)}" for step in starts)
-        said = f"From {site.words.time(min(step.at for step in starts))}, not before; at most {caps}."
+        said = f"{when[0].upper()}{when[1:]}: from {site.words.time(min(step.at for step in starts))}, not before; "
+        said += f"at most {caps}."
     else:
         said = "No recharge in the plan."
     if by:

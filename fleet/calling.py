@@ -231,6 +231,7 @@ def proof_of(survey: Survey, allocation: Allocation) -> dict[str, Any]:
         "over_delivery_fraction": survey.folder.settings.over_delivery_fraction,
         "requested_kwh": float(allocation.requested_kw.sum()) * clock.step_h,
         "quoted_unmet_kwh_th": float(survey.quoted.quotes.unmet_kwh_th.sum()),
+        "recoveries": list(survey.terms.recoveries),
         "candidates_tried": survey.quoted.tried,
         "candidates_quoted": len(survey.quoted.quotes.site),
         "versions": {name: version(name) for name in PACKAGES},

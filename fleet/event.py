@@ -14,6 +14,7 @@ from fleet.request import Request
 from sites.course import Course
 from sites.quote import Quoted, detail, windows_of
 from sites.quotes import COST_PARTS, LIMITED_BY
+from sites.recovery import RECOVERIES
 from sites.units import AnyArray, Floats, Ints, Strings, Times
 
 
@@ -152,6 +153,7 @@ def windows_frame(call: Chosen) -> pd.DataFrame:
             "window_start": _utc(edges[start]),
             "window_end": _utc(edges[end]),
             "chiller_ids": _machines_off(call, pick),
+            "recovery": np.array(RECOVERIES, dtype=object)[quoted.recovery[pick]],
             "committed_kwh": call.committed_kw.sum(axis=1) * step_h,
             "net_cost": quotes.net_cost[pick],
             **{f"cost_{part}": quotes.cost[pick, k] for k, part in enumerate(COST_PARTS)},
@@ -263,6 +265,7 @@ def quotes_frame(call: Chosen) -> pd.DataFrame:
             "window_end": _utc(edges[quotes.window_end]),
             "chiller_ids": _machines_off(call, pick),
             "load_limit_fraction": quoted.load_limit_fraction,
+            "recovery": np.array(RECOVERIES, dtype=object)[quoted.recovery],
             "expected_kw": list(quotes.expected_kw),
             "change_kw": list(quotes.change_kw),
             "net_cost": quotes.net_cost,

@@ -51,6 +51,7 @@ SETTINGS = {
 }
 NODE_OF = ("north", "north", "east", "grid", "north", "north")
 LIMIT_KW = {"grid": np.nan, "north": 1310.0, "east": 260.0}
+RECOVERIES_OF = {"shed": ("usual",), "absorb": ("usual", "night", "capped")}
 ASKED_KW = {"shed": (100.0,) * 5 + (60.0,) * 7, "absorb": (150.0,) * 5 + (100.0,) * 7}
 RULE_OF = ("ten_of_ten", "high_five_of_ten", "meter_before_after", "ten_of_ten", "ten_of_ten", "ten_of_ten")
 CALLS = (
@@ -68,7 +69,7 @@ def made_event(home: Path, settlements: int = 2, direction: str = "shed") -> Pat
         outlook, standing = sunny(outlook), made_standing(roster, 0.4)
     standing.chiller_available[2, 2] = False
     base = ground(roster, outlook, standing)
-    quoted = quote(base, _terms(outlook, roster.count), Direction(direction))
+    quoted = quote(base, _terms(outlook, roster.count, direction), Direction(direction))
     frozen = frozen_frames(roster, outlook)
     tree = feeders.feeders(
         frozen["nodes"],
@@ -109,7 +110,7 @@ def sunny(outlook: Outlook) -> Outlook:
     return replace(outlook, cooling_load_kw_th=load, price_per_kwh=price)
 
 
-def _terms(outlook: Outlook, count: int) -> blocks.Terms:
+def _terms(outlook: Outlook, count: int, direction: str) -> blocks.Terms:
     return blocks.Terms(
         event_from=outlook.clock.index(START),
         event_to=outlook.clock.index(END),
@@ -118,6 +119,7 @@ def _terms(outlook: Outlook, count: int) -> blocks.Terms:
         minimum_intervals=np.full(count, 4),
         most_intervals=np.full(count, 99),
         allowed=np.ones(count, dtype=np.bool_),
+        recoveries=RECOVERIES_OF[direction],
     )
 
 
@@ -149,6 +151,7 @@ def _proof(quoted: Quoted, found: Allocation) -> dict[str, Any]:
         "over_delivery_fraction": 0.05,
         "requested_kwh": float(found.requested_kw.sum()) * clock.step_h,
         "quoted_unmet_kwh_th": float(quoted.quotes.unmet_kwh_th.sum()),
+        "recoveries": list(RECOVERIES_OF[str(quoted.quotes.direction)]),
         "candidates_tried": quoted.tried,
         "candidates_quoted": len(quoted.quotes.site),
         "versions": {"shedwright": "0"},

@@ -49,6 +49,7 @@ def test_the_record_holds_and_no_rule_is_skipped(home: Path, tmp_path: Path) -> 
 def test_the_event_calls_on_what_the_rules_are_about(call: CallRecord) -> None:
     windows, machines = call.frames["windows"], call.frames["machines"]
     assert len(windows) >= 3
+    assert set(windows["recovery"]) == {"usual", "capped"}
     assert windows["chiller_ids"].map(len).max() == 0
     assert windows["net_cost"].max() < 0.0
     assert windows["recovery_energy_kwh"].max() < -100.0
@@ -123,6 +124,40 @@ def test_a_tank_charged_less_than_it_could_be_is_named(call: CallRecord) -> None
     assert [(fault.row, fault.found) for fault in told] == [(row, "0")]
 
 
+def test_another_recovery_than_the_quotes_is_named(call: CallRecord) -> None:
+    windows = call.frames["windows"].copy()
+    row = int(np.flatnonzero(windows["recovery"] == "capped")[0])
+    windows.loc[row, "recovery"] = "usual"
+    told = faults_of_call(replace(call, frames={**call.frames, "windows": windows}))
+    assert ("window of its quote", row, "recovery") in {(f.rule, f.row, f.column) for f in told}
+
+
+def test_a_recovery_that_was_not_offered_and_one_of_another_name_are_named(call: CallRecord) -> None:
+    quotes = call.frames["quotes"].copy()
+    first = int(np.flatnonzero(quotes["recovery"] == "night")[0])
+    quotes.loc[first, "recovery"] = "midday"
+    told = faults_of_call(replace(call, frames={**call.frames, "quotes": quotes}))
+    assert {(f.rule, f.row, f.column) for f in told if f.rule == "recovery"} == {
+        ("recovery", first, "recovery"),
+        ("recovery", first, "quote_id"),
+    }
+    fewer = {**call.proof, "recoveries": ["usual"]}
+    told = faults_of_call(replace(call, proof=fewer))
+    assert {"recovery", "candidates tried"} <= {fault.rule for fault in told}
+
+
+def test_charging_outside_the_recoverys_hours_is_named(call: CallRecord) -> None:
+    """18:45 of the second day is no charging hour of the ice plants (22:00 to 07:00)."""
+    assert call.frames["windows"]["recovery"].iloc[0] == "usual"
+    intervals = call.frames["intervals"].copy()
+    own = intervals["site_id"] == call.frames["windows"]["site_id"].iloc[0]
+    row = int(np.flatnonzero(own)[-21])
+    assert f"{intervals['interval_start'].iloc[row]:%H:%M}" == "18:45"
+    intervals.loc[row, "charge_kw_th"] = 50.0
+    told = faults_of_call(replace(call, frames={**call.frames, "intervals": intervals}))
+    assert [(f.row, f.column) for f in told if f.rule == "recovery hours"] == [(row, "charge_kw_th")]
+
+
 WATER_PAGE = """\
 REAL EVENT
 ORDER EV-1/003, revision 1, replaces nothing: take up load, Wed 15 Jul 2026
@@ -146,7 +181,7 @@ DO                                                                     done   by
           building. If not: ring.
 18:45     End this charging: T1 back to the usual plan                __:__ ____
           see: controller on its own schedule again. If not: ring.
-Thu 23:45 Recharge may start: T1 at most 5.0 kW_th                    __:__ ____
+Thu 23:45 Recharge may start: T1 at most 5.3 kW_th                    __:__ ____
           see: tank level rises. If not: ring.
 Fri 00:00 Down at its usual level: T1 at 933 kWh_th                   __:__ ____
           see: tank's own level signal. If not: ring.
@@ -162,9 +197,10 @@ STOP EARLY (you never need permission to stop): end the charging, undo limits,
 
 START     One machine at a time, none before its least off time is over or with
           no start left. Load limit 50 % for 15 min, then ramp.
-AFTER     Usual plan again from 18:45; no charging before Thu 23:45, then at
-          most T1 5.0 kW_th. The tank starts fuller, so less is charged than
-          usual. Full early: stop charging and ring; never past full.
+AFTER     Usual plan again from 18:45; no charging before Thu 23:45, then at any
+          hour, the building's meter within its peak so far, at most T1 5.3
+          kW_th. The tank starts fuller, so less is charged than usual. Full
+          early: stop charging and ring; never past full.
 CAUTIONS  Life-safety, process and critical cooling stay on. Machine protections
           are never bypassed. Keep the minimum evaporator flow of what stays on;
           run no pump against closed valves; shared pumps and towers stay on.
@@ -175,7 +211,7 @@ CAUTIONS  Life-safety, process and critical cooling stay on. Machine protections
 READINGS   start: tank ____ %  supply ____  brine ____  amps ____ ____ ____
              end: tank ____ %  supply ____  brine ____  amps ____ ____ ____
 Not as ordered, and why: _______________________________  Name: ________________
-event EV-1 site S04 quote S04.0022 call revision 1
+event EV-1 site S04 quote S04.0066-capped call revision 1
 """
 ICE_SAYS = (
     "[ ] T1, T2: at most 641 kWh_th (26 % full), of 2,500 kWh_th",
@@ -186,7 +222,7 @@ ICE_SAYS = (
     "(you never need permission to stop): end the charging, undo limits, ring; on",
     "- the building's meter over 336 kW for 15 min",
     "- water to the building under 1.0 degC",
-    "no charging before 22:00, then at most T1 225 kW_th, T2 225 kW_th.",
+    "no charging before 22:00, then in the usual hours, at most T1 225 kW_th, T2 225 kW_th.",
     "never past full, and never lower the low-brine trip to charge faster.",
     "External-melt ice is never charged past full.",
 )

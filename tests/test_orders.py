@@ -50,9 +50,9 @@ STOP EARLY (you never need permission to stop): undo limits, RESTART, ring; on
 RESTART   One machine at a time, none before its least off time (CH-2 10 min).
           Load limit 50 % for 15 min, then ramp; lower the leaving-water
           set-point in steps from the loop's temperature.
-RECHARGE  From 22:00, not before; at most T-1 240 kW_th. Back at its usual level
-          by Fri 06:00. If late: ring; never lower the low-brine trip to charge
-          faster. Full is the plant's own signal.
+RECHARGE  In the usual hours: from 22:00, not before; at most T-1 240 kW_th.
+          Back at its usual level by Fri 06:00. If late: ring; never lower the
+          low-brine trip to charge faster. Full is the plant's own signal.
 CAUTIONS  Life-safety, process and critical cooling stay on. Machine protections
           are never bypassed. Keep the minimum evaporator flow of what stays on;
           run no pump against closed valves; shared pumps and towers stay on.

@@ -1,6 +1,6 @@
-"""Rules on charging: none in the window of a shed, all there is in that of an absorb.
+"""Rules on charging: none in the window of a shed, all there is in that of an absorb; after it, by the recovery.
 
-Owns what a window's direction says of charge; that charge keeps the limits of tanks and machines is tanks.py's and
+Owns what direction and recovery say of charge; that charge keeps the limits of tanks and machines is tanks.py's and
 courses.py's. Shapes: R called sites, U units, T intervals.
 """
 
@@ -9,11 +9,16 @@ from typing import Final
 import numpy as np
 
 from fleet.audit.case import Case
+from fleet.audit.evidence import local
 from fleet.audit.findings import Findings, allowed, differs
 from fleet.audit.tanks import charge_knots
 from sites import tank
-from sites.units import Bools, Floats
+from sites.units import AnyArray, Bools, Floats
 
+DELAY_H: Final = 2.0
+NIGHT: Final = (22.0, 6.0)
+MIDDAY: Final = (10.0, 15.0)
+"""Hours of the recoveries delayed, night and midday."""
 FULL_FRACTION: Final = 0.985
 """A tank this full is not charged further: the last of the ice freezes too slowly."""
 
@@ -34,7 +39,9 @@ def charging_in_the_window(case: Case, found: Findings) -> None:
         return
     sheet, charge = book.sheets["intervals"], book.grid("intervals", "charge_kw_th")
     expected, unsure = _hardest(case)
-    apart = inside & ~unsure & differs(charge, expected, _scale(case))
+    capped = (book.record.frames["windows"]["recovery"] == "capped").to_numpy(dtype=np.bool_)[:, None]
+    less = capped & (charge < expected)
+    apart = inside & ~unsure & ~less & differs(charge, expected, _scale(case))
     found.wrong(
         "charging in the window", sheet, "charge_kw_th", apart.ravel(), charge.ravel(), expected.ravel()
     )
@@ -74,6 +81,56 @@ def _hardest(case: Case) -> tuple[Floats, Bools]:
     return expected, unsure
 
 
+def recovery_after_the_window(case: Case, found: Findings) -> None:
+    """After the window charge keeps to the recovery's hours.
+
+    usual: in the site's charging hours, but for load levelling. Others: in their hours at most what brings the tanks
+    to the usual case's level by the interval's end, outside them at most what the usual case charges. capped: while
+    the tanks charge, the building is within max(billed peak, its usual peak).
+    """
+    book, sheet = case.evidence, case.evidence.sheets["intervals"]
+    code = book.record.frames["windows"]["recovery"].to_numpy(dtype=object)[:, None]
+    _, end = book.window()
+    after = np.arange(book.clock.count)[None, :] >= end[:, None]
+    charge, usual = book.grid("intervals", "charge_kw_th"), book.grid("intervals", "usual_inventory_kwh_th")
+    start = book.per_called(book.tanks, book.grid("tanks", "inventory_start_kwh_th"))
+    lacking = np.maximum((usual - start) / book.clock.step_h + book.grid("intervals", "loss_kw_th"), 0.0)
+    served = book.grid("intervals", "cooling_load_kw_th") - book.grid("intervals", "usual_unmet_kw_th")
+    as_usual = np.maximum(book.grid("intervals", "usual_chiller_kw_th") - served, 0.0)
+    hours = _recovery_hours(case, code)
+    levelling = (book.text("strategy", book.called) == "load_levelling")[:, None]
+    by_plan = np.where(hours | levelling, np.inf, 0.0)
+    most = np.where(code == "usual", by_plan, np.where(hours, lacking, as_usual))
+    most = np.where(after, most + 1e-6, np.inf)
+    found.most("recovery hours", sheet, "charge_kw_th", most.ravel(), (start / book.clock.step_h).ravel())
+    building = book.grid("intervals", "event_kw") + book.grid("intervals", "rest_kw")
+    every = book.grid("usual", "usual_kw") + book.grid("usual", "rest_kw")
+    peak = np.maximum(case.billed_peak_kw, every.max(axis=1))[book.called][:, None]
+    over = (code == "capped") & after & (charge > 1e-6) & (building > peak + 1e-6)
+    found.wrong(
+        "recovery within the peak", sheet, "event_kw", over.ravel(), building.ravel(), "within the peak"
+    )
+
+
+def _recovery_hours(case: Case, code: AnyArray) -> Bools:
+    """(R, T) hours in which each site's recovery (R, 1) makes up what is lacking."""
+    book = case.evidence
+    own = case.charge_hours[book.called]
+    delay = round(DELAY_H / book.clock.step_h)
+    late = np.zeros_like(own)
+    late[:, delay:] = own[:, delay:] & own[:, : own.shape[1] - delay]
+    stamps = local(book.clock.starts, str(book.settings["timezone"]))
+    hour = (stamps.hour + stamps.minute / 60.0).to_numpy(dtype=np.float64)[None, :]
+    night = (hour >= NIGHT[0]) | (hour < NIGHT[1])
+    midday = (hour >= MIDDAY[0]) & (hour < MIDDAY[1])
+    always = np.ones_like(own)
+    return np.select(
+        [code == name for name in ("usual", "delayed", "night", "midday")],
+        [own, late, night & always, midday & always],
+        default=always,
+    )
+
+
 def _scale(case: Case) -> Floats:
     """(R, 1) the size of what moves a tank's most charge: its inventory over a step."""
     book = case.evidence
@@ -81,4 +138,4 @@ def _scale(case: Case) -> Floats:
     return book.per_called(book.tanks, capacity)
 
 
-RULES = (charging_in_the_window,)
+RULES = (charging_in_the_window, recovery_after_the_window)

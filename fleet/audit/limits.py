@@ -53,7 +53,7 @@ def candidates_tried(case: Case, found: Findings) -> None:
 
     Blocks [a, b) of the event from the site's notice on, at least as long as site and machines need, at most as the
     hours left allow. Shed: the last k machines in service off, for each k; three limits where others stay on. Absorb:
-    sites with a tank in service and machines that can charge it; three limits.
+    sites with a tank in service and machines that can charge it; three limits. Each with every recovery.
     """
     book = case.evidence
     step = book.clock.step_minutes
@@ -75,6 +75,7 @@ def candidates_tried(case: Case, found: Findings) -> None:
         long_enough = (last - first >= shortest[:, None]) & (last - first <= longest[site][:, None])
         blocks = (long_enough & (first >= soonest[site][:, None])).sum(axis=1)
         total += float((blocks * offered * (free[site] & startable)).sum())
+    total *= len(book.record.proof.get("recoveries", ["usual"]))
     told = book.record.proof["candidates_tried"]
     found.value("candidates tried", f"{book.folder}/proof.json", "candidates_tried", told, total)
 

@@ -22,13 +22,15 @@ LEAST_KW: Final = 1.0
 
 
 def ids(case: Case, found: Findings) -> None:
-    """One row per candidate: ids once, and no two alike in site, window, machines and limit."""
+    """One row per candidate: ids once, and no two alike in site, window, machines, limit and recovery."""
     sheet = case.evidence.sheets["quotes"]
     frame = sheet.frame
     twice = frame["quote_id"].duplicated(keep=False).to_numpy()
     found.wrong("quote ids", sheet, "quote_id", twice, frame["quote_id"].to_numpy(), "an id given once")
     machines = frame["chiller_ids"].map(lambda tags: " ".join(sorted(tags)))
-    alike = frame[["site_id", "window_start", "window_end", "load_limit_fraction"]].assign(machines=machines)
+    alike = frame[["site_id", "window_start", "window_end", "load_limit_fraction", "recovery"]].assign(
+        machines=machines
+    )
     found.wrong("quote ids", sheet, "window_start", alike.duplicated(keep=False).to_numpy(), "twice", "once")
     lost = ~frame["site_id"].isin(case.evidence.site_id).to_numpy()
     found.wrong("quote ids", sheet, "site_id", lost, frame["site_id"].to_numpy(), "a frozen site")
@@ -62,6 +64,20 @@ def machines(case: Case, found: Findings) -> None:
         ~right,
         sheet.frame["chiller_ids"].to_numpy(),
         "none" if case.absorb else "the last of those up",
+    )
+
+
+def recoveries(case: Case, found: Findings) -> None:
+    """A candidate's recovery is one of those the proof says were offered, and its id ends with it unless usual."""
+    sheet = case.evidence.sheets["quotes"]
+    code = sheet.frame["recovery"]
+    offered = case.evidence.record.proof.get("recoveries", ["usual"])
+    unknown = ~code.isin(offered).to_numpy()
+    found.wrong("recovery", sheet, "recovery", unknown, code.to_numpy(), "one of " + ", ".join(offered))
+    pairs = zip(sheet.frame["quote_id"], code, strict=True)
+    named = np.array([_recovery_of(str(name)) == one for name, one in pairs], dtype=np.bool_)
+    found.wrong(
+        "recovery", sheet, "quote_id", ~named, sheet.frame["quote_id"].to_numpy(), "an id with its recovery"
     )
 
 
@@ -215,8 +231,13 @@ def lack_price_per_kwh_th(case: Case) -> Floats:
     return np.maximum(price, 0.0)
 
 
+def _recovery_of(quote_id: str) -> str:
+    """The recovery that an id names behind its number: site.0012-night; usual where none is."""
+    return quote_id.rpartition(".")[2].partition("-")[2] or "usual"
+
+
 def _last(tags: object, count: int) -> list[str]:
     return tags[-count:] if isinstance(tags, list) else []
 
 
-RULES = (ids, machines, windows, expected_kw, cost_parts, unmet_and_reason, low_level)
+RULES = (ids, machines, recoveries, windows, expected_kw, cost_parts, unmet_and_reason, low_level)

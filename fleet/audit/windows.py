@@ -32,6 +32,7 @@ QUOTED: Final = (
     "end_lack_price_per_kwh_th",
     "unmet_kwh_th",
     "limited_by",
+    "recovery",
     "inventory_low_start_kwh_th",
 )
 """Columns a window has from its quote."""
