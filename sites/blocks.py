@@ -11,6 +11,9 @@ from sites.recovery import RECOVERIES
 from sites.roster import ICE_KINDS, TANK_KINDS, Roster, Rows, Standing, kind_is
 from sites.units import Bools, Floats, Ints
 
+SWITCHES = (0.25, 0.5, 0.75)
+"""Shares of a window of two stages after which one machine comes back: three for each number of machines off, and
+only for a site's longest window, so that they add a handful of candidates a site."""
 LOAD_LIMITS = (1.0, 0.75, 0.5)
 """Demand limits offered to the machines that stay on, as a share of what each could give."""
 
@@ -31,6 +34,9 @@ class Terms:
     """False: over a call limit, or already in a call"""
     recoveries: tuple[str, ...] = ("usual",)
     """Which of RECOVERIES each window is offered with"""
+    two_stages: bool = False
+    """Sheds are offered in two stages besides: one machine comes back as the tank's rate falls. A call's record tells
+    of one stage only, so calls do not ask for them."""
 
 
 @dataclass(frozen=True)
@@ -74,7 +80,59 @@ def candidates(
             site, first, last = _blocks(terms, has, shortest)
             machine_limit = np.where(off[site], 0.0, limit)
             parts.append((site, first, last, np.full(len(site), limit), machine_limit))
-    return _sorted(parts, roster.chillers.exists.shape[1], terms.recoveries)
+    found = _sorted(parts, roster.chillers.exists.shape[1], terms.recoveries)
+    return _with_two_stages(found, roster, ready, terms) if terms.two_stages else found
+
+
+def _with_two_stages(found: Candidates, roster: Roster, ready: Bools, terms: Terms) -> Candidates:
+    """The candidates, and each site's longest window with k machines off and k - 1 from one of SWITCHES on."""
+    chillers = roster.chillers
+    from_end = np.cumsum(ready[:, ::-1], axis=1)[:, ::-1]
+    count = ready.sum(axis=1)
+    first = np.maximum(terms.earliest, terms.event_from)
+    last = np.minimum(first + terms.most_intervals, terms.event_to)
+    parts = [_of_one_stage(found)]
+    for off_count in range(2, int(count.max(initial=0)) + 1):
+        more, fewer = ready & (from_end <= off_count), ready & (from_end < off_count)
+        back = more & ~fewer
+        rests = _least_intervals(more, chillers.min_off_minutes, terms)
+        runs = _least_intervals(back, chillers.min_on_minutes, terms)
+        startable = np.where(more, chillers.starts_left >= 1, True).all(axis=1)
+        for share in SWITCHES:
+            switch = first + np.round(share * (last - first)).astype(np.int64)
+            has = terms.allowed & startable & (count >= off_count) & (last - first >= terms.minimum_intervals)
+            has &= (switch - first >= np.maximum(rests, 1)) & (last - switch >= np.maximum(runs, 1))
+            site = np.repeat(np.flatnonzero(has), len(terms.recoveries))
+            codes = np.array([RECOVERIES.index(name) for name in terms.recoveries], dtype=np.int64)
+            starts, ends = (np.stack(pair, axis=1)[site] for pair in ((first, switch), (switch, last)))
+            machine = np.stack([np.where(mask[site], 0.0, 1.0) for mask in (more, fewer)], axis=1)
+            stages = Stages(starts, ends, machine)
+            recovery = np.tile(codes, int(has.sum()))
+            parts.append(Candidates(site, first[site], last[site], np.ones(len(site)), recovery, stages))
+    return _merged(parts)
+
+
+def _of_one_stage(found: Candidates) -> Candidates:
+    """Candidates of one stage, with a second that is empty."""
+    stages = found.stages
+    nothing = Stages(stages.end, stages.end, np.ones_like(stages.load_limit_fraction))
+    return replace(found, stages=stages.join(nothing))
+
+
+def _merged(parts: list[Candidates]) -> Candidates:
+    """All parts in order of site, start and end; those of an earlier part first."""
+    columns = [
+        np.concatenate([getattr(part, name) for part in parts])
+        for name in ("site", "start", "end", "load_limit_fraction", "recovery")
+    ]
+    stages = Stages(
+        *(
+            np.concatenate([getattr(part.stages, name) for part in parts])
+            for name in ("start", "end", "load_limit_fraction", "charge")
+        )
+    )
+    found = Candidates(columns[0], columns[1], columns[2], columns[3], columns[4], stages)
+    return found.take(np.lexsort((found.end, found.start, found.site)))
 
 
 def _charging(roster: Roster, standing: Standing, terms: Terms) -> Candidates:
