@@ -463,7 +463,9 @@ def test_another_choice_of_days_is_named(call, settlements):
 
 
 def modules() -> list[Path]:
-    return sorted(Path(next(iter(fleet.__path__))).glob("audit*.py"))
+    found = sorted((Path(next(iter(fleet.__path__))) / "audit").glob("*.py"))
+    assert "proof" in {path.stem for path in found}, found
+    return found
 
 
 @pytest.mark.parametrize("path", modules(), ids=lambda path: path.stem)
