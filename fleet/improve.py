@@ -17,6 +17,10 @@ from sites.units import Bools, Floats, Ints
 LEAST_GAIN: Final = 1e-9
 PAIRS_TRIED: Final = 300
 MOST_MOVES: Final = 900
+"""Moves of which pairs are tried."""
+MOST_SINGLES: Final = 20_000
+SINGLES_TRIED: Final = 3000
+"""Moves looked at by themselves, and of these how many are held against the feeders, best first."""
 MOST_STEPS: Final = 300
 MOST_PAIRS: Final = 40
 
@@ -105,7 +109,7 @@ def improve(
     chosen must keep the feeder rows; coupled (J, T) are the rows that can bind at all. At most MOST_STEPS steps, of
     two sites MOST_PAIRS of them; stop() ends it earlier.
     """
-    columns = np.concatenate([chosen, columns[~np.isin(columns, chosen)][:MOST_MOVES]])
+    columns = np.concatenate([chosen, columns[~np.isin(columns, chosen)][:MOST_SINGLES]])
     moves = _moves(offers, terms, columns, coupled)
     current = np.full(offers.site_count, -1, dtype=np.int64)
     current[offers.site[chosen]] = chosen
@@ -150,7 +154,7 @@ def _best_step(offers: Offers, terms: Terms, moves: _Moves, current: Ints) -> In
     room = moves.headroom_kw - moves.below.astype(np.float64) @ present_change
     now = float(_penalty(terms, given[None, :])[0])
     single = cost + _penalty(terms, given + kw) - now
-    step = _first_kept(np.argsort(single)[:PAIRS_TRIED, None], single[:, None], change, moves, room)
+    step = _first_kept(np.argsort(single)[:SINGLES_TRIED, None], single[:, None], change, moves, room)
     if step.size:
         return step
     real = np.flatnonzero(moves.candidate != current[moves.site])[:MOST_MOVES]
