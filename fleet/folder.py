@@ -17,6 +17,7 @@ import pandas as pd
 
 from fleet import plausible
 from fleet.errors import FleetError, Problem, Refused
+from fleet.meter_forms import meters_table, other_form
 from fleet.one_price import one_price
 from fleet.public_days import public_days
 from fleet.references import cross_problems, unmapped_meters
@@ -248,7 +249,10 @@ def _read(
         raw = read_raw(source, span)
     except Refused as refused:
         return Typed(pd.DataFrame(), refused.problems, [])
-    return typed(raw, table("fleet", name), _reading(source.name, name, settings))
+    reading = _reading(source.name, name, settings)
+    if name == "meters" and other_form(raw):
+        return meters_table(raw, reading)
+    return typed(raw, table("fleet", name), reading)
 
 
 def _reading(file: str, name: str, settings: Settings) -> Reading:

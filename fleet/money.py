@@ -12,6 +12,7 @@ from typing import Final
 
 import numpy as np
 
+from fleet.errors import FleetError
 from fleet.rules import SettlementRule
 from sites.units import AnyArray, Bools, Floats, Ints
 
@@ -28,6 +29,8 @@ _OTHER: Final = {
     4: "CLF UYW",
 }
 """Minor units of ISO 4217, from memory."""
+_NONE: Final = "XAG XAU XBA XBB XBC XBD XDR XPD XPT XSU XTS XUA XXX"
+"""Codes of the same list that have no minor unit: metals, units of account, none at all."""
 
 
 @dataclass(frozen=True)
@@ -54,7 +57,15 @@ class Lines:
 
 @lru_cache(maxsize=256)
 def minor_digits(currency: str) -> tuple[int, str | None]:
-    """Decimals of the currency's minor unit (ISO 4217), and a note where the code is unknown and 2 is taken."""
+    """Decimals of the currency's minor unit (ISO 4217), and a note where the code is unknown and 2 is taken.
+
+    FleetError for a code that has none.
+    """
+    if currency in _NONE.split():
+        raise FleetError(
+            f"fleet.toml, currency: came {currency}, which has no minor unit (ISO 4217), so that no amount can "
+            "be rounded to it; expected the currency that is paid in, such as EUR; correct it before the next call"
+        )
     if currency in _TWO.split():
         return 2, None
     for digits, codes in _OTHER.items():

@@ -10,10 +10,11 @@ from typing import Final, TypeAlias
 import numpy as np
 import pandas as pd
 
-from fleet.baseline import Baseline
+from fleet.baseline import NONE, Baseline
 from fleet.callfacts import CallFacts, Plan
 from fleet.estimation import spikes
 from fleet.history import hours
+from fleet.like_days import BEFORE_AFTER
 from fleet.settlement import Trace
 from fleet.validation import STUCK_H, negative, shifted_h, stuck
 from sites.units import Bools
@@ -34,12 +35,21 @@ def remarks(call: CallFacts, plan: Plan, found: Baseline, trace: Trace) -> tuple
         for rule in plan.rules
     ]
     adjusted = np.array([kind != "none" for kind in found.kind])
+    of_days = np.array([rule.kind != "before_after" for rule in plan.rules])
     spiky = spikes(trace.kw[:, trace.event_day])
     return (
         (
             "load in the adjustment window more than 10 % above like days "
             "after notice; look for early charging of the tank",
             above & adjusted & late,
+        ),
+        (
+            "too few like days; the readings before and after the event take their place",
+            (found.method == BEFORE_AFTER) & of_days,
+        ),
+        (
+            "too few like days, or none at all, and nothing takes their place; nothing is paid or charged on them",
+            (found.method == NONE) & of_days,
         ),
         ("readings of the adjustment window, or before and after, not measured", found.doubtful),
         ("a spike on the event day (highest above third highest by over 180 %)", spiky),

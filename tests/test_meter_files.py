@@ -1,5 +1,6 @@
 """Files of readings named by hand: other forms brought to the meters table, what cannot be is refused."""
 
+from dataclasses import replace
 from pathlib import Path
 
 import numpy as np
@@ -9,7 +10,7 @@ from commands import called_fleet, run
 from feeds import START, block, feed, meter_reading, reading_type, usage_point
 
 from fleet.errors import FleetError
-from fleet.folder import FleetFolder
+from fleet.folder import FleetFolder, read_meters
 from fleet.meter_files import read_meter_file
 from fleet.schema import tables
 from fleet.settings import Settings
@@ -147,3 +148,47 @@ def test_megawatts_in_a_column_of_kw_are_refused_on_both_ways(tmp_path: Path) ->
         "meters.csv, row 578, column kw: came 0.868",
     ]
     assert not (fleet / "events" / "A" / "settlement-002").exists()
+
+
+AUTUMN_SINCE, AUTUMN_UNTIL = np.datetime64("2025-11-02T00:00", "us"), np.datetime64("2025-11-04T00:00", "us")
+REPEATED = "meter_id,interval_start,kw\nm1,2025-11-02T01:00,1\nm1,2025-11-02T01:00,2\nm1,2025-11-02T02:00,3\n"
+
+
+def autumn(path: Path, times: str) -> FleetFolder:
+    (path / "given.csv").write_text(REPEATED)
+    found = folder_of(path, 60)
+    return replace(found, settings=found.settings.model_copy(update={"tables": {"meters_time": times}}))
+
+
+def test_local_times_over_the_autumn_change_need_a_declared_reading(tmp_path: Path) -> None:
+    with pytest.raises(FleetError) as caught:
+        read_meter_file(autumn(tmp_path, "offset"), AUTUMN_SINCE, AUTUMN_UNTIL, tmp_path / "given.csv")
+    wanted = "expected a time with an offset (declare [tables] ..._time if all are America/New_York or UTC); correct it"
+    assert str(caught.value).split("\n") == [
+        f"given.csv, row {row}, column interval_start: came '2025-11-02T0{hour}:00'; {wanted}"
+        for row, hour in ((2, 1), (3, 1), (4, 2))
+    ]
+    found = read_meter_file(autumn(tmp_path, "local"), AUTUMN_SINCE, AUTUMN_UNTIL, tmp_path / "given.csv")
+    # 01:00 EDT, 01:00 EST, 02:00 EST.
+    assert [f"{at:%H:%M}" for at in found.frame["interval_start"]] == ["05:00", "06:00", "07:00"]
+    assert found.notes == ["given.csv: 2 rows of the repeated autumn hour told apart by their order"]
+
+
+def test_the_folders_own_table_may_give_energy_and_interval_ends(tmp_path: Path) -> None:
+    (tmp_path / "meters.csv").write_text(
+        "meter_id,interval_end,kwh\nm1,2025-07-10T12:15Z,25\nm1,2025-07-10T12:30Z,26\nm1,2025-07-10T12:45Z,\n"
+    )
+    found = read_meters(folder_of(tmp_path), SINCE, UNTIL)
+    assert [f"{at:%H:%M}" for at in found.frame["interval_start"]] == ["12:00", "12:15", "12:30"]
+    assert found.frame["kw"].tolist() == pytest.approx([100.0, 104.0, float("nan")], nan_ok=True)
+    assert found.frame["quality"].tolist() == ["measured", "measured", "missing"]
+    assert found.notes == ["meters.csv: interval ends read as such", "meters.csv: kWh as kW"]
+
+
+def test_megawatts_in_the_folders_own_table_are_refused(tmp_path: Path) -> None:
+    (tmp_path / "meters.csv").write_text("meter_id,interval_start,mw\nm1,2025-07-10T12:15Z,0.1\n")
+    with pytest.raises(FleetError) as caught:
+        read_meters(folder_of(tmp_path), SINCE, UNTIL)
+    assert str(caught.value) == (
+        "meters.csv, row 1, column mw: came readings in MW; expected kw or kwh; multiply by 1000 and name the column kw"
+    )

@@ -5,6 +5,7 @@ from decimal import Decimal
 import numpy as np
 import pytest
 
+from fleet.errors import FleetError
 from fleet.money import (
     Prices,
     earned,
@@ -113,6 +114,15 @@ def test_an_unknown_currency_gets_two_decimals_and_a_note() -> None:
     assert minor_digits("QQQ") == (
         2,
         "currency QQQ is not in the table of minor units; amounts have 2 decimals",
+    )
+
+
+def test_a_code_without_a_minor_unit_is_refused() -> None:
+    with pytest.raises(FleetError) as caught:
+        minor_digits("XAU")
+    assert str(caught.value) == (
+        "fleet.toml, currency: came XAU, which has no minor unit (ISO 4217), so that no amount can be rounded to it; "
+        "expected the currency that is paid in, such as EUR; correct it before the next call"
     )
 
 

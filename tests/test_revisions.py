@@ -146,6 +146,41 @@ def test_a_rehearsal_below_its_fleet_finds_the_readings_of_its_fleet(home: Path,
     assert settle_again(below, EVENT, 1, fleet / "meters-event.parquet") == []
 
 
+BOMB = '<!DOCTYPE x [<!ENTITY a "ha"><!ENTITY b "&a;&a;&a;">]><feed xmlns="http://www.w3.org/2005/Atom">&b;</feed>'
+BAD_FILES = {
+    "stranger.csv": (
+        "meter_id,interval_start,kw\nnobody,2026-07-15T13:00Z,7\n",
+        "stranger.csv, row 2, column meter_id: came 'nobody'; expected a meter_id of meter_map; "
+        "add it to meter_map, or correct the spelling",
+    ),
+    "mega.csv": (
+        "meter_id,interval_start,mw\nB-hotel-03,2026-07-15T13:00Z,0.7\n",
+        "mega.csv, row 1, column mw: came readings in MW; expected kw or kwh; "
+        "multiply by 1000 and name the column kw",
+    ),
+    "bomb.xml": (
+        BOMB,
+        "bomb.xml: declares a document type, which can hold entities that swell without end; "
+        "an interval-data feed needs none: export it again without <!DOCTYPE>",
+    ),
+    "two.csv": (
+        "meter_id,interval_start,kw\nB-hotel-03,2026-07-15T13:00Z,7\nB-hotel-03,2026-07-15T13:00Z,8\n",
+        "meters, row 3, column kw: came 8 for meter B-hotel-03 at 2026-07-15T13:00:00.000000Z, where row 2 has 7; "
+        "expected one value per meter and interval; find out which one holds and take the other out",
+    ),
+}
+
+
+def test_readings_that_cannot_be_used_are_refused_and_nothing_is_written(home: Path, tmp_path: Path) -> None:
+    there = sorted(path.name for path in (home / "events" / EVENT).iterdir())
+    for name, (text, said) in BAD_FILES.items():
+        (tmp_path / name).write_text(text)
+        with pytest.raises(FleetError) as caught:
+            settle_event(home, EVENT, tmp_path / name)
+        assert str(caught.value) == said
+    assert sorted(path.name for path in (home / "events" / EVENT).iterdir()) == there
+
+
 def test_an_excuse_needs_a_called_site_and_a_reason(home: Path) -> None:
     meters = home / "meters-event.parquet"
     with pytest.raises(FleetError, match=r"^--excuse x: no reason is given; say why with --why$"):

@@ -371,3 +371,29 @@ def test_the_day_after_of_another_class_has_no_baseline() -> None:
     assert rows.loc[saturday, "adjusted_baseline_kw"].isna().all()
     assert rows.loc[~saturday, "adjusted_baseline_kw"].tolist() == [100.0] * 9
     assert the_site(result)["state"] == "final"
+
+
+@pytest.mark.parametrize(
+    ("too_few", "state", "told"),
+    [
+        (
+            "before_after",
+            "final",
+            "too few like days; the readings before and after the event take their place: a",
+        ),
+        (
+            "refuse",
+            "no_baseline",
+            "too few like days, or none at all, and nothing takes their place; nothing is paid or charged on them: a",
+        ),
+    ],
+)
+def test_three_days_of_history_are_told(too_few: str, state: str, told: str) -> None:
+    rule = TEN.model_copy(update={"when_too_few": too_few})
+    frame = worked_readings(421.3)
+    result = settle(worked_call(rule), frame[frame["interval_start"] >= utc("2025-07-07")])
+    site = the_site(result)
+    assert site["state"] == state and told in result.notes
+    assert (result.days["reason"] == "too_few_days").sum() == 2
+    if state == "no_baseline":
+        assert site["total"] == 0 and pd.isna(site["performance_factor"])
