@@ -2,10 +2,13 @@
 
 import re
 import shutil
+from decimal import Decimal
 from pathlib import Path
 
 import pytest
 from conftest import Practice, shedwright
+
+from fleet.reckoning import reckon
 
 README = (Path(__file__).resolve().parents[1] / "README.md").read_text(encoding="utf-8")
 PREFIX = "    .venv/bin/shedwright "
@@ -48,3 +51,49 @@ def test_readmes_commands_run_one_by_one(practice: Practice, tmp_path: Path) -> 
 def test_the_output_shown_has_the_programs_own_lines(word: str) -> None:
     shown = README.split("```text\n")[1].split("```")[0]
     assert re.search(rf"^  {word} +-?[\d,.]+ ", shown, flags=re.MULTILINE)
+
+
+def by_hand() -> list[tuple[str, str]]:
+    """Both sides of every line of the site settled by hand."""
+    shown = README.split("## One site by hand")[1].split("```text\n")[1].split("```")[0]
+    lines = [line[16:].split(" = ") for line in shown.strip().split("\n")]
+    return [(left, right) for left, right in lines]
+
+
+def test_the_site_settled_by_hand_comes_out_line_by_line() -> None:
+    for left, right in by_hand():
+        assert re.fullmatch(r"[\d.+\-x/() ]+", left)
+        digits = len(right.split(".")[1])
+        # What a reader's own calculator says of the figures as shown; those in kW are rounded to three digits.
+        slack = 0.0 if digits == 2 else 1.01 * 10.0**-digits if digits == 3 else 6e-6
+        value = eval(left.replace("x", "*"))  # figures only, see above
+        assert abs(value - float(right)) <= max(slack, 0.5001 * 10.0**-digits), (left, value)
+
+
+def test_the_site_settled_by_hand_is_the_practised_one(practice: Practice) -> None:
+    found = reckon(practice.fleet, "practice", "retail-02")
+    slot = next(one for one in found["slots"] if (one["part"], one["local_time"]) == ("event", "16:00"))
+    inside = [one for one in found["intervals"] if one["in_window"]]
+    energy, adjustment, site = found["energy"], found["adjustment"], found["site"]
+    days = " + ".join(f"{kw:.3f}" for kw in slot["kw_by_day"].values())
+    usual, factor = f"{slot['mean_kw']:.3f}", f"{adjustment['applied']:.6f}"
+    each = " + ".join(f"{one['delivered_kw']:.3f}" for one in inside)
+    delivered, committed = f"{energy['delivered_kwh']:.3f}", f"{energy['committed_kwh']:.3f}"
+    performance = f"{energy['performance_factor']:.6f}"
+    cents = {
+        name: f"{Decimal(site[name]):.2f}"
+        for name in ("capacity_payment", "energy_payment", "penalty", "total")
+    }
+    paid, used, lack = cents["capacity_payment"], cents["energy_payment"], cents["penalty"]
+    windows = f"{adjustment['event_day_window_kw']:.3f} / {adjustment['used_days_window_kw']:.3f}"
+    assert by_hand() == [
+        (f"({days}) / 10", usual),
+        (windows, factor),
+        (f"{usual} x {factor} - {inside[0]['metered_kw']:.3f}", f"{inside[0]['delivered_kw']:.3f}"),
+        (f"({each}) x 0.25", delivered),
+        (f"{delivered} / {committed}", performance),
+        (f"0.3 x {committed} x {performance}", paid),
+        (f"0.12 x {delivered}", used),
+        (f"0.2 x ({delivered} - {committed})", lack),
+        (f"{paid} + {used} - {lack.removeprefix('-')}", cents["total"]),
+    ]
