@@ -13,7 +13,7 @@ from typing import Any, Final
 import numpy as np
 import pandas as pd
 
-from fleet.errors import Refused
+from fleet.errors import Problem, Refused
 from fleet.meters import QUALITIES
 from fleet.references import unmapped_meters
 from fleet.schema import table
@@ -29,8 +29,15 @@ class GroupedReadings:
     """Readings of Parquet files, given out by meters; see readings.Readings."""
 
     def __init__(
-        self, files: Sequence[Path], reading: Reading, meter_map: pd.DataFrame, sites: pd.Series
+        self,
+        files: Sequence[Path],
+        reading: Reading,
+        meter_map: pd.DataFrame,
+        sites: pd.Series,
+        check: Callable[[pd.DataFrame], list[Problem]] = lambda highest: [],
     ) -> None:
+        """check: what speaks against each meter's highest reading (one row a meter, its first row's number)."""
+        self._check_highest = check
         self._files = [RowGroups(path) for path in files]
         self._reading, self._meter_map, self._sites = reading, meter_map, sites
         known = meter_map["meter_id"] if len(meter_map) else sites
@@ -79,7 +86,11 @@ class GroupedReadings:
                 self._unknown(group)
             frames = [self._of(self._take(group), wanted) for group in groups]
             frames = [frame for frame in frames if len(frame)] or frames[:1]
-            return frames[0] if len(frames) == 1 else pd.concat(frames or [_nothing()])
+            found = frames[0] if len(frames) == 1 else pd.concat(frames or [_nothing()])
+            faults = self._check_highest(_highest(found)) if len(found) else []
+            if faults:
+                raise Refused(faults)
+            return found
 
         return get
 
@@ -137,6 +148,15 @@ class GroupedReadings:
             quality = frame["quality"].astype("category")
             good = good and set(quality.cat.categories) <= set(QUALITIES)
         return bool(good)
+
+
+def _highest(frame: pd.DataFrame) -> pd.DataFrame:
+    """One row a meter: its highest power by size; index: the meter's first row."""
+    codes = frame["meter_id"].cat.codes.to_numpy()
+    own, first = np.unique(codes, return_index=True)
+    most = frame["kw"].abs().groupby(codes).max()
+    names = frame["meter_id"].cat.categories.to_numpy(dtype=object)[own]
+    return pd.DataFrame({"meter_id": names, "kw": most.reindex(own).to_numpy()}, index=frame.index[first])
 
 
 def _plain(types: dict[str, Any]) -> bool:

@@ -23,6 +23,7 @@ from fleet.folder import FleetFolder, meter_files, open_folder, read_meters, rea
 from fleet.meter_files import read_meter_file
 from fleet.meter_groups import GroupedReadings
 from fleet.money import Prices
+from fleet.plausible import meters_in_mega
 from fleet.readings import FrameReadings, Overlaid, Readings
 from fleet.records import CallRecord, SettlementRecord
 from fleet.request import outermost
@@ -354,8 +355,13 @@ def _own_readings(folder: FleetFolder, since: np.datetime64, until: np.datetime6
     files, digests = meter_files(folder)
     if files:
         reading = reading_of(folder, "meters")
+        frames = folder.frames
         grouped = GroupedReadings(
-            files, reading, folder.frames["meter_map"], folder.frames["sites"]["site_id"]
+            files,
+            reading,
+            frames["meter_map"],
+            frames["sites"]["site_id"],
+            lambda highest: meters_in_mega({**frames, "meters": highest}, reading.file),
         )
         if grouped.plain:
             return _Given(grouped, (), digests)

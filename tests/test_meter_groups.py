@@ -8,7 +8,7 @@ import pytest
 from made_settlement import NEW_YORK, call, times, utc
 
 from fleet import settle as settling
-from fleet.errors import Refused
+from fleet.errors import Problem, Refused
 from fleet.meter_groups import GroupedReadings
 from fleet.readings import FrameReadings, Overlaid
 from fleet.rules import PRESETS
@@ -121,3 +121,24 @@ def test_another_form_is_left_to_the_checks_of_a_whole_table(tmp_path: Path) -> 
     naive = frame.assign(interval_start=frame["interval_start"].dt.tz_localize(None))
     assert not source(naive, tmp_path / "naive.parquet").plain
     assert not source(frame.rename(columns={"kw": "kwh"}), tmp_path / "energy.parquet").plain
+
+
+def test_each_meters_highest_reading_is_looked_at(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(settling, "SITES_AT_ONCE", 3)
+    frame = readings()
+    seen: dict[str, float] = {}
+
+    def check(highest: pd.DataFrame) -> list[Problem]:
+        seen.update(zip(highest["meter_id"], highest["kw"]))
+        low = highest[highest["meter_id"] == "s4"]
+        return [Problem("m", int(row), "kw", "little", "more", "look") for row in low.index]
+
+    frame.to_parquet(tmp_path / "m.parquet", row_group_size=900, index=False)
+    reading = Reading("m.parquet", "offset", NEW_YORK, 60)
+    given = GroupedReadings([tmp_path / "m.parquet"], reading, pd.DataFrame(), pd.Series(SITES), check)
+    with pytest.raises(Refused) as refused:
+        settle(facts(), given)
+    first = 1 + int(np.flatnonzero(frame["meter_id"] == "s4")[0])
+    assert str(refused.value) == f"m, row {first}, column kw: came little; expected more; look"
+    most = frame["kw"].abs().groupby(frame["meter_id"]).max()
+    assert seen == {site: most[site] for site in SITES[:6]}
