@@ -10,7 +10,6 @@ from typing import Final
 import pandas as pd
 
 from fleet.called import CalledSite
-from fleet.words import plain
 
 SUPPLY_MARGIN_K: Final = 2.0
 """Supply water this far over its set-point for SUPPLY_MINUTES ends the event (common practice, no source)."""
@@ -134,7 +133,7 @@ def before(site: CalledSite) -> tuple[str, ...]:
         return _before_charging(site)
     low, asked = float(site.window.inventory_low_start_kwh_th), []
     if site.tanks:
-        tags = ", ".join(plain(tank.tank_id) for tank in site.tanks)
+        tags = ", ".join(site.words.tag(tank.tank_id) for tank in site.tanks)
         whole = site.words.energy(site.capacity_kwh_th)
         asked.append(f"{tags}: at least {site.level(low)}, of {whole}")
     asked.append("no alarm standing on any machine, pump or tank")
@@ -186,7 +185,7 @@ def restart(site: CalledSite) -> str:
     if not stopped:
         return "No machine is stopped by this order."
     kept = ", ".join(
-        f"{plain(machine.chiller_id)} {machine.min_off_minutes:g} min"
+        f"{site.words.tag(machine.chiller_id)} {machine.min_off_minutes:g} min"
         for machine in site.chillers
         if machine.chiller_id in stopped
     )
@@ -242,7 +241,9 @@ def recharge(site: CalledSite) -> str:
     starts = [step for step in site.steps if step.action == "recharge_may_start"]
     by = sorted(step.at for step in site.steps if step.action == "full_by")
     if starts:
-        caps = ", ".join(f"{plain(step.unit_id)} {site.words.cooling(step.value or 0.0)}" for step in starts)
+        caps = ", ".join(
+            f"{site.words.tag(step.unit_id)} {site.words.cooling(step.value or 0.0)}" for step in starts
+        )
         said = f"{when[0].upper()}{when[1:]}: from {site.words.time(min(step.at for step in starts))}, not before; "
         said += f"at most {caps}."
     else:

@@ -83,12 +83,22 @@ def called_sites(record: CallRecord) -> list[CalledSite]:
             chillers=chillers.get(window.site_id, ()),
             tanks=tanks.get(window.site_id, ()),
             steps=tuple(_step(row) for row in steps.get(window.site_id, ())),
-            words=words(_text(facts[window.site_id].site_words), zone, window.window_start.to_pydatetime()),
+            words=words(
+                _text(facts[window.site_id].site_words),
+                zone,
+                window.window_start.to_pydatetime(),
+                _units(chillers.get(window.site_id, ()), tanks.get(window.site_id, ())),
+            ),
             direction=direction,
             highest_kw=highest.get(window.site_id, 0.0),
         )
         for window in _rows(windows)
     ]
+
+
+def _units(chillers: tuple[Any, ...], tanks: tuple[Any, ...]) -> list[str]:
+    """Ids of a site's machines and tanks."""
+    return [*(str(one.chiller_id) for one in chillers), *(str(one.tank_id) for one in tanks)]
 
 
 def _highest_kw(record: CallRecord) -> dict[str, float]:

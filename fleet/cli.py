@@ -372,6 +372,27 @@ def audit(fleet: FleetDir, event: EventId, json: Json = False) -> None:
         raise typer.Exit(FAULT)
 
 
+@app.command()
+def pages(
+    fleet: FleetDir,
+    event: Annotated[
+        str | None, typer.Argument(metavar="[EVENT]", help="One event; none: every event.")
+    ] = None,
+    json: Json = False,
+) -> None:
+    """Write the pages people read, in FLEET/pages: an index, each event, its orders, statements, the season.
+
+    Example: shedwright pages rehearsal practice
+    """
+    from fleet import show
+    from fleet.pages import book
+
+    terminal = Terminal(json)
+    terminal.progress("writing pages")
+    written = book.write(fleet, event)
+    terminal.put(show.pages_lines(written), show.pages_json(written))
+
+
 def _ask(fleet: Path, start: str, end: str, node: str | None, at: str | None, direction: str):  # type: ignore[no-untyped-def]
     """The ask of a command line: times in the fleet's zone, on its grid."""
     from fleet.asking import ask

@@ -43,7 +43,7 @@ __all__ = [
     "survey_folder",
 ]
 
-SIDE_FOLDERS: Final = ("events", "rehearsals")
+SIDE_FOLDERS: Final = ("events", "pages", "rehearsals")
 _SUFFIXES: Final = (".csv", ".parquet")
 _SIZES: Final = {"sites", "chillers", "tanks"}
 """Tables whose sizes are held against each other; not where one of them was left out."""

@@ -106,11 +106,11 @@ def steps_in(order: Order) -> list[Step]:
 def order_files(record: CallRecord) -> dict[str, str]:
     """Files of an event's orders by name: a page per called site, and orders.json with all of them."""
     made = orders(record)
-    pages = {f"{_file_stem(order)}.txt": text(order) for order in made}
+    pages = {f"{file_stem(order)}.txt": text(order) for order in made}
     return {**pages, "orders.json": json_text([as_json(order) for order in made])}
 
 
-def _file_stem(order: Order) -> str:
+def file_stem(order: Order) -> str:
     """Number and site in characters every file system takes; the number keeps two sites apart."""
     return f"{order.number.rsplit('/', 1)[1]}-{NOT_IN_FILE_NAMES.sub('_', order.site_id)[:60]}"
 
@@ -180,7 +180,7 @@ def _line(site: CalledSite, steps: list[Step]) -> Line:
 
 def _tag(site: CalledSite, step: Step, timed: bool) -> str:
     """A machine's or tank's tag with the step's value, and its time where the line holds several."""
-    tag, value = plain(step.unit_id), step.value
+    tag, value = site.words.tag(step.unit_id), step.value
     if value is not None and step.action in ("demand_limit", "demand_limit_removed"):
         tag += f" to {100.0 * value:g} %"
     elif value is not None and step.action == "charge_start":
@@ -211,9 +211,10 @@ def wrapped(said: str, first: str = "", rest: str = "", width: int = WIDTH) -> s
 
 def row(line: Line) -> str:
     """A line to act on as rows of the page: time, what to do, room for time done and initials, what is seen."""
-    do = textwrap.wrap(line.do, WIDTH - TIME_WIDTH - len(DONE) - 2, break_on_hyphens=False) or [""]
-    lead = " " * TIME_WIDTH
-    head = f"{line.time:<{TIME_WIDTH}}{do[0]}"
+    width = max(TIME_WIDTH, len(line.time) + 1)
+    do = textwrap.wrap(line.do, WIDTH - width - len(DONE) - 2, break_on_hyphens=False) or [""]
+    lead = " " * width
+    head = f"{line.time:<{width}}{do[0]}"
     rows = [f"{head:<{WIDTH - len(DONE)}}{DONE}", *(lead + more for more in do[1:])]
     rows.append(wrapped(f"see: {line.see}. If not: {line.if_not}.", lead, lead))
     return "\n".join(rows)

@@ -38,6 +38,7 @@ __all__ = [
     "SettlementRecord",
     "check_free",
     "event_folder",
+    "event_ids",
     "events",
     "lock",
     "next_revision",
@@ -175,15 +176,21 @@ def write_settlement(
 
 
 def read_call(
-    fleet_path: Path, event_id: str, revision: int | None = None, only: Iterable[str] | None = None
+    fleet_path: Path,
+    event_id: str,
+    revision: int | None = None,
+    only: Iterable[str] | None = None,
+    frozen_only: Iterable[str] | None = None,
 ) -> CallRecord:
-    """Read a call, the newest revision unless one is named; `only` these of its tables where given.
+    """Read a call, the newest revision unless one is named; `only` these of its tables, and `frozen_only` these
+    of its frozen ones, where given.
 
     Raises FleetError where event, revision or a file is missing or unreadable.
     """
     number, path = _one(fleet_path, event_id, "call", revision)
     frozen = path / "frozen"
-    tables_there = sorted(found.stem for found in frozen.glob("*.parquet"))
+    there = sorted(found.stem for found in frozen.glob("*.parquet"))
+    tables_there = there if frozen_only is None else [name for name in there if name in set(frozen_only)]
     return CallRecord(
         path=path,
         event_id=event_id,
@@ -221,7 +228,7 @@ def events(fleet_path: Path) -> pd.DataFrame:
     against call limits, from rehearsals, which do not. What lies under `rehearsals/` is never in it.
     FleetError where a record cannot be read: a call that is left out would be a call limit not kept.
     """
-    rows = [_past(fleet_path, event_id) for event_id in _event_ids(fleet_path)]
+    rows = [_past(fleet_path, event_id) for event_id in event_ids(fleet_path)]
     found = [frame for frame in rows if len(frame)]
     if not found:
         return _no_past()
@@ -236,13 +243,21 @@ def event_folder(fleet_path: Path, event_id: str) -> Path:
         return path
     if not fleet_path.is_dir():
         raise FleetError(f"{fleet_path}: there is no such fleet folder; check the path")
-    known = _event_ids(fleet_path)
+    known = event_ids(fleet_path)
     if not known:
         raise FleetError(
             f"{fleet_path}: no event {event_id!r}; there are no events yet: `shedwright call` makes one"
         )
     near = difflib.get_close_matches(event_id, known, n=3, cutoff=0.4) or known[-3:]
     raise FleetError(f"{fleet_path}: no event {event_id!r}; nearest of {len(known)}: {', '.join(near)}")
+
+
+def event_ids(fleet_path: Path) -> list[str]:
+    """Ids of all events, sorted."""
+    folder = fleet_path / EVENTS
+    if not folder.is_dir():
+        return []
+    return sorted(path.name for path in folder.iterdir() if path.is_dir() and EVENT_ID.fullmatch(path.name))
 
 
 def check_free(fleet_path: Path, event_id: str) -> None:
@@ -318,13 +333,6 @@ def _one(fleet_path: Path, event_id: str, kind: str, revision: int | None) -> tu
         there = ", ".join(str(number) for number in sorted(found))
         raise FleetError(f"event {event_id}: has no {kind} revision {number}; there are {there}")
     return number, found[number]
-
-
-def _event_ids(fleet_path: Path) -> list[str]:
-    folder = fleet_path / EVENTS
-    if not folder.is_dir():
-        return []
-    return sorted(path.name for path in folder.iterdir() if path.is_dir() and EVENT_ID.fullmatch(path.name))
 
 
 def _check_event_id(event_id: str) -> None:

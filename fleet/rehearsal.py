@@ -20,6 +20,7 @@ from fleet.audit import Audit, audit
 from fleet.desk import Ask, Progress
 from fleet.errors import FleetError
 from fleet.folder import open_folder
+from fleet.pages import book
 from fleet.wall_time import local_day, local_day_start
 from sites.clock import as_us
 from sites.direction import Direction
@@ -44,6 +45,7 @@ class Rehearsed:
     played: Played
     settled: settling.Settled
     audit: Audit
+    pages: book.Written
     seconds: float
 
 
@@ -137,6 +139,7 @@ def _play(
     settled = settling.settle_event(home, EVENT_ID, played.readings, progress, meters_of=fleet)
     progress("auditing")
     found = audit(home, EVENT_ID)
-    return Rehearsed(
-        home, fleet, survey, offer, made, written, played, settled, found, time.perf_counter() - started
-    )
+    progress("writing pages")
+    pages = book.write(home)
+    seconds = time.perf_counter() - started
+    return Rehearsed(home, fleet, survey, offer, made, written, played, settled, found, pages, seconds)

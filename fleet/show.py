@@ -11,6 +11,7 @@ from fleet.calling import Call
 from fleet.desk import Survey
 from fleet.explained_text import explained_json, explained_lines
 from fleet.ordering import Written
+from fleet.pages.book import Written as Pages
 from fleet.quote_page import site_lines
 from fleet.quote_text import event_line, iso, money, quote_json, quote_lines
 from fleet.rehearsal import Rehearsed
@@ -67,6 +68,17 @@ def orders_lines(written: Written) -> list[str]:
 def orders_json(written: Written) -> dict[str, Any]:
     """The same as a document."""
     return {"path": str(written.path), "files": list(written.files), "notes": list(written.notes)}
+
+
+def pages_lines(written: Pages) -> list[str]:
+    """Pages that were written, and where to start."""
+    count = sum(name.endswith(".html") for name in written.files)
+    return [f"{count} pages in {written.path}; start at {written.index}"]
+
+
+def pages_json(written: Pages) -> dict[str, Any]:
+    """The same as a document."""
+    return {"path": str(written.path), "index": str(written.index), "files": list(written.files)}
 
 
 def settle_lines(settled: Settled) -> list[str]:
@@ -142,6 +154,7 @@ def rehearsal_lines(played: Rehearsed) -> list[str]:
         f"  orders     {played.orders.path}",
         f"  meters     {played.played.readings}",
         f"  settlement {settled.path}",
+        f"  pages      {played.pages.index}",
         "",
         f"look further: shedwright quote {played.fleet}{way} --from {iso(survey.ask.event_from)} "
         f"--to {iso(survey.ask.event_to)} --at {iso(survey.ask.at)}",
@@ -160,6 +173,7 @@ def rehearsal_json(played: Rehearsed) -> dict[str, Any]:
         "true_kwh": played.played.true_kwh,
         "settlement": settle_json(played.settled),
         "audit": audit_json(played.audit),
+        "pages": pages_json(played.pages),
         "sustained_kw": played.offer.available.sustained_kw,
     }
 

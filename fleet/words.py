@@ -1,10 +1,11 @@
 """How one plant speaks: its units, its clock, whom it rings, and text made harmless to print.
 
-Owns reading `site_words` ("units=us; contact=...; anything else") and putting numbers and times into the
-site's words. What an order says is orders.py's.
+Owns reading `site_words` ("units=us; clock=12; contact=...; CH-1=north machine; anything else") and putting
+numbers and times into the site's words. What an order says is orders.py's.
 """
 
-from dataclasses import dataclass
+from collections.abc import Collection, Mapping
+from dataclasses import dataclass, field
 from datetime import datetime
 from typing import Final
 from zoneinfo import ZoneInfo
@@ -34,6 +35,14 @@ class Words:
     zone: ZoneInfo
     reference: datetime
     """Times on this local day are told without the day's name, in this moment's UTC offset without a zone."""
+    clock: str = "24"
+    """24 or 12 hours"""
+    tags: Mapping[str, str] = field(default_factory=dict)
+    """The plant's own names of its machines and tanks, by unit id"""
+
+    def tag(self, unit_id: str) -> str:
+        """What the plant calls a machine or tank, its id where it gave no name."""
+        return self.tags.get(unit_id, plain(unit_id))
 
     def energy(self, kwh_th: float) -> str:
         """Cooling energy with unit: kWh_th or ton-h."""
@@ -56,7 +65,9 @@ class Words:
         local, here = at.astimezone(self.zone), self.reference.astimezone(self.zone)
         day = "" if local.date() == here.date() else f"{DAYS[local.weekday()]} "
         zone = "" if local.utcoffset() == here.utcoffset() else f" {self.zone_name(at)}"
-        return f"{day}{local:%H:%M}{zone}"
+        half = f"{local.hour % 12 or 12}:{local:%M} {'ap'[local.hour // 12]}m"
+        hour = f"{local:%H:%M}" if self.clock == "24" else half
+        return f"{day}{hour}{zone}"
 
     def day(self, at: datetime) -> str:
         """Local day in words: Thu 16 Jul 2026."""
@@ -74,21 +85,28 @@ class Words:
         return f"{number:,.0f} {unit}" if abs(number) >= 99.5 else f"{number:.1f} {unit}"
 
 
-def words(site_words: str | None, zone: ZoneInfo, reference: datetime) -> Words:
-    """Read the words of a site; a part that is no known word is kept as a note and printed."""
-    units, contact, notes = "si", "", []
+def words(
+    site_words: str | None, zone: ZoneInfo, reference: datetime, unit_ids: Collection[str] = ()
+) -> Words:
+    """Read the words of a site; a part that is no known word and no unit's id is kept as a note and printed."""
+    units, clock, contact, notes = "si", "24", "", []
+    tags: dict[str, str] = {}
     for part in (site_words or "").split(";"):
         key, _, value = (piece.strip() for piece in part.partition("="))
         if key.lower() == "units" and value.lower() in ("us", "si"):
             units = value.lower()
         elif key.lower() == "contact" and value:
             contact = plain(value)
+        elif key.lower() == "clock" and value in ("12", "24"):
+            clock = value
+        elif key in unit_ids and value:
+            tags[key] = plain(value)
         elif part.strip():
             notes.append(plain(part.strip()))
     said = "; ".join(notes)
     if len(said) > NOTES_LENGTH:
         said = said[:NOTES_LENGTH] + " ... (cut: the rest stands in the table of sites)"
-    return Words(units, contact or DESK, said, zone, reference)
+    return Words(units, contact or DESK, said, zone, reference, clock, tags)
 
 
 def plain(text: str) -> str:
