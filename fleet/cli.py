@@ -378,18 +378,37 @@ def pages(
     event: Annotated[
         str | None, typer.Argument(metavar="[EVENT]", help="One event; none: every event.")
     ] = None,
+    start: Annotated[
+        str | None, typer.Option("--from", help="Before a call: the offer for an event that starts then.")
+    ] = None,
+    end: Annotated[str | None, typer.Option("--to", help="End of that event.")] = None,
+    node: Node = None,
+    at: At = None,
+    direction: Way = "shed",
+    kw: Annotated[float | None, typer.Option("--kw", help="The request, shown beside the offer.")] = None,
     json: Json = False,
 ) -> None:
-    """Write the pages people read, in FLEET/pages: an index, each event, its orders, statements, the season.
+    """Write the pages people read, in FLEET/pages: each event with its orders and statements, the season, an
+    index; with --from and --to, what the fleet can give before a call.
 
     Example: shedwright pages rehearsal practice
     """
-    from fleet import show
+    from fleet import desk, quoting, show
     from fleet.pages import book
+    from fleet.pages.offer import offer_page
 
     terminal = Terminal(json)
-    terminal.progress("writing pages")
-    written = book.write(fleet, event)
+    if (start is None) != (end is None):
+        raise FleetError("--from and --to go together: name both for an offer, or neither")
+    if start is None or end is None:
+        terminal.progress("writing pages")
+        written = book.write(fleet, event)
+    elif event is not None:
+        raise FleetError("EVENT and --from: an offer is made before a call; name one of them")
+    else:
+        survey = desk.survey(fleet, _ask(fleet, start, end, node, at, direction), terminal.progress)
+        offered = offer_page(survey, quoting.offer(survey), kw, book.FROM_OFFER)
+        written = book.write_offer(fleet, offered)
     terminal.put(show.pages_lines(written), show.pages_json(written))
 
 

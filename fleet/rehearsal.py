@@ -21,6 +21,7 @@ from fleet.desk import Ask, Progress
 from fleet.errors import FleetError
 from fleet.folder import open_folder
 from fleet.pages import book
+from fleet.pages.offer import offer_page
 from fleet.wall_time import local_day, local_day_start
 from sites.clock import as_us
 from sites.direction import Direction
@@ -140,6 +141,6 @@ def _play(
     progress("auditing")
     found = audit(home, EVENT_ID)
     progress("writing pages")
-    pages = book.write(home)
+    pages = book.write(home, offer=offer_page(survey, offer, float(asked), book.FROM_OFFER))
     seconds = time.perf_counter() - started
     return Rehearsed(home, fleet, survey, offer, made, written, played, settled, found, pages, seconds)

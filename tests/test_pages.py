@@ -1,15 +1,21 @@
 """Pages from a made-up and from a practised event: figures by hand, tables beside charts, folders whole."""
 
+import csv
+import io
 import re
+from dataclasses import replace
+from decimal import Decimal
+from pathlib import Path
 
 import numpy as np
 import pandas as pd
 import pytest
+from commands import run
 from conftest import Practice, shedwright
 
 from fleet import records
 from fleet.errors import FleetError
-from fleet.pages import book, event, figures, scale
+from fleet.pages import balance, book, event, figures, scale, season
 from fleet.pages.case import Case
 from fleet.pages.sheet import clock, environment, number, percent
 from sites.units import Floats
@@ -101,7 +107,7 @@ def test_numbers_are_written_with_thousands_and_no_minus_before_zero():
 
 
 def test_the_event_page_tells_what_the_record_holds(practice: Practice, case: Case):
-    page = event.event_page(case, book.links("event.html"))
+    page = event.event_page(case, book.links("event.html", ["event.html"]))
     windows = pd.read_parquet(case.record.path / "windows.parquet")
     assert f"{windows['committed_kwh'].sum():,.0f}" in page
     assert f"{case.request['requested_kw'].max():,.0f} kW" in page
@@ -194,3 +200,188 @@ def test_a_template_that_asks_for_an_unknown_name_is_an_error():
 
     with pytest.raises(jinja2.UndefinedError):
         environment().from_string("{{ nobody_said_this }}").render()
+
+
+def test_cooling_closes_to_zero_at_every_site_and_by_hand(case: Case):
+    cold = balance.cooling(case)
+    assert np.abs(cold.left_over).max() < 1e-6 * cold.not_made.max()
+    assert cold.not_made.min() > 0.0
+    assert np.abs(cold.never_came_in).max() > 1.0
+    assert np.abs(cold.left_in_tank).max() > 1.0
+    frame = case.record.frames["intervals"]
+    own = frame[frame["site_id"] == case.site_ids[7]]
+    made = own["direct_kw_th"] + own["charge_kw_th"]
+    less = (own["usual_chiller_kw_th"] - made) * 0.25
+    assert cold.not_made[7] == pytest.approx(less[less > 0].sum())
+    assert cold.made_later[7] == pytest.approx(-less[less < 0].sum())
+
+
+def test_a_record_whose_cooling_does_not_close_has_no_page(practice: Practice):
+    record = records.read_call(practice.fleet, "practice")
+    broken = record.frames["intervals"].copy()
+    broken.loc[3, "charge_kw_th"] += 40.0
+    torn = replace(record, frames={**record.frames, "intervals": broken})
+    with pytest.raises(FleetError, match=r"the cooling of site .* does not close by -10.000 kWh_th"):
+        balance.cooling(Case(torn))
+
+
+def test_electricity_and_its_prices_by_hand(case: Case):
+    told = balance.electricity(case)
+    change = (case.course("event_kw") - case.course("usual_kw"))[7] * 0.25
+    assert told.not_drawn[7] == pytest.approx(-change[change < 0].sum())
+    assert told.drawn_more[7] == pytest.approx(change[change > 0].sum())
+    paid = (change * case.prices[7])[change > 0].sum()
+    assert told.price_drawn_more[7] * told.drawn_more[7] == pytest.approx(paid)
+    _, less, more = balance.by_hour(case)
+    assert less.sum() == pytest.approx(told.not_drawn.sum())
+    assert more.sum() == pytest.approx(told.drawn_more.sum())
+
+
+def test_a_peak_without_staggering_is_never_below_the_planned_one(case: Case):
+    for rows in (None, [0], [1, 2, 3], case.by_feeder[sorted(case.by_feeder)[0]]):
+        back = balance.comeback(case, rows)
+        assert back.together_kw >= back.planned_kw - 1e-9 > 0.0
+    one = balance.comeback(case, [4])
+    assert one.planned_kw == pytest.approx(one.together_kw)
+
+
+def test_the_statements_say_each_amount_to_the_cent(practice: Practice, case: Case):
+    folder = practice.fleet / "pages" / "practice"
+    sites = pd.read_parquet(practice.fleet / "events" / "practice" / "settlement-001" / "sites.parquet")
+    page = (folder / "statement.html").read_text(encoding="utf-8")
+    assert f"{sum(sites['total']):,.2f} EUR" in page
+    own = sorted((folder / "statements").glob("*.html"))
+    assert len(own) == len(sites)
+    for row in sites.sort_values("site_id").itertuples():
+        text = next(path for path in own if path.stem[4:] == row.site_id).read_text(encoding="utf-8")
+        assert f"{row.total:,.2f} EUR" in text
+        assert f'<td class="n">{row.capacity_payment:,.2f}</td>' in text
+    assert "estimated" in page or "missing" in page
+    assert page.count("not all measured") > 0
+
+
+def test_a_second_settlement_shows_what_it_changed(practice: Practice, tmp_path: Path):
+    import shutil
+
+    shutil.copytree(practice.fleet, tmp_path / "rehearsal")
+    ran = shedwright(
+        "settle", "rehearsal", "practice", "--meter", "rehearsal/meters-event.parquet", "--excuse", "hotel-03",
+        "--why", "a pump <b>failed</b>", cwd=tmp_path,
+    )  # fmt: skip
+    assert ran.returncode == 0, ran.stderr
+    files = book.event_files(tmp_path / "rehearsal", "practice")
+    page = files["statement.html"]
+    assert "settlement revision 2" in page
+    assert "What the newest changed" in page
+    assert page.count('<tr><th scope="row" class="w">') >= 2
+    own = next(
+        text for name, text in files.items() if name.endswith("hotel-03.html") and "statements" in name
+    )
+    assert "Excused: a pump &lt;b&gt;failed&lt;/b&gt;" in own
+    assert "excused" in own
+
+
+def test_the_offer_tells_what_quote_tells(practice: Practice):
+    page = (practice.fleet / "pages" / "offer.html").read_text(encoding="utf-8")
+    assert f"{practice.told['sustained_kw']:,.0f} kW" in page
+    assert "so the request can be met" in page
+    assert "kW against duration" in page
+    assert "Merit order" in page
+    merit = re.findall(
+        r"<td class=\"n\">(−?[\d.]+)</td></tr>",
+        page.split("Numbers of “Merit order”</summary>")[1].split("</details>")[0],
+    )
+    costs = [float(cost.replace("−", "-")) for cost in merit]
+    assert len(costs) > 10
+    assert costs == sorted(costs)
+
+
+def season_of(*events: tuple[str, str, str, float, float]) -> season.Season:
+    """A season of one site: (event, purpose, day, committed, delivered), each 16:00 to 18:00 in Athens."""
+    starts = [
+        pd.Timestamp(f"{day}T16:00", tz="Europe/Athens").tz_convert("UTC") for _, _, day, _, _ in events
+    ]
+    base = {"direction": "shed", "node_id": "North", "hours": 2.0, "net_cost": -5.0, "gap": 0.001, "sites": 1}
+    told = pd.DataFrame(
+        [
+            base
+            | {
+                "event_id": event,
+                "purpose": purpose,
+                "start": start,
+                "asked_kwh": 100.0,
+                "expected_kwh": 110.0,
+            }
+            | {
+                "committed_kwh": committed,
+                "delivered_kwh": delivered,
+                "paid": Decimal("12.5"),
+                "call": "call-001",
+            }
+            | {"settlement": "settlement-001", "seal": "0" * 12}
+            for (event, purpose, _, committed, delivered), start in zip(events, starts)
+        ]
+    )
+    calls = pd.DataFrame(
+        [
+            {
+                "event_id": event,
+                "purpose": purpose,
+                "site_id": '=cmd("x")',
+                "window_start": start,
+                "hours": 2.0,
+            }
+            | {
+                "rise_k": 0.5 + place,
+                "notice_times": 1.0 + place,
+                "committed_kwh": committed,
+                "delivered_kwh": delivered,
+            }
+            for place, ((event, purpose, _, committed, delivered), start) in enumerate(zip(events, starts))
+        ]
+    )
+    return season.Season("Europe/Athens", "EUR", told, calls)
+
+
+def test_a_seasons_fatigue_by_hand():
+    made = season_of(
+        ("a", "real", "2026-07-14", 100.0, 80.0),
+        ("b", "test", "2026-07-15", 100.0, 90.0),
+        ("c", "real", "2026-07-17", 100.0, float("nan")),
+        ("d", "rehearsal", "2026-07-16", 100.0, 10.0),
+    )
+    row = season.fatigue(made.counted).iloc[0]
+    assert (row["calls"], row["hours"], row["rise_k"], row["short"], row["run_days"]) == (3, 6.0, 2.5, 1, 2)
+    assert row["delivered_kwh"] / row["settled_kwh"] == pytest.approx(0.85)
+    page = season.season_page(made)
+    assert "85 %" in page
+    assert "=cmd(&#34;x&#34;)" in page
+    assert "rehearsals, which count" not in page
+
+
+def test_the_regulators_table_is_csv_that_no_spreadsheet_works_out():
+    made = season_of(("a", "real", "2026-07-14", 100.0, 80.0))
+    made.events["node_id"] = '=HYPERLINK("x"),\n"'
+    text = season.season_csv(made)
+    head, row = list(csv.reader(io.StringIO(text, newline="")))
+    assert dict(zip(head, row))["node"] == '\'=HYPERLINK("x"),\\x0a"'
+    assert dict(zip(head, row))["paid_EUR"] == "12.50"
+    assert dict(zip(head, row))["call"] == "events/a/call-001"
+
+
+@pytest.mark.parametrize(("days", "longest"), [([], 0), ([1], 1), ([1, 2, 3, 7], 3), ([1, 1, 3, 4], 2)])
+def test_days_on_end(days: list[int], longest: int):
+    assert (
+        season.longest_run(pd.Series([pd.Timestamp(2026, 7, day) for day in days], dtype="datetime64[ns]"))
+        == longest
+    )
+
+
+def test_offer_options_go_together():
+    told = [
+        run("pages", "nowhere", "--from", "2026-07-14T16:00"),
+        run("pages", "nowhere", "EV", "--from", "2026-07-14T16:00", "--to", "2026-07-14T17:00"),
+    ]
+    assert [ran.code for ran in told] == [2, 2]
+    assert "--from and --to go together" in told[0].err
+    assert "an offer is made before a call" in told[1].err

@@ -7,7 +7,7 @@ record and can be made again at any time; an event's folder appears whole, in pl
 import os
 import secrets
 import shutil
-from collections.abc import Mapping
+from collections.abc import Collection, Mapping
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Final
@@ -15,16 +15,23 @@ from typing import Final
 from fleet import records
 from fleet.called import called_sites
 from fleet.errors import FleetError
-from fleet.orders import file_stem, orders
-from fleet.pages import diary, event, front, order_sheet
+from fleet.orders import NOT_IN_FILE_NAMES, file_stem, orders
+from fleet.pages import diary, energy, event, front, order_sheet, settled, statement
 from fleet.pages.case import Case
 from fleet.pages.sheet import Link
 
 PAGES: Final = "pages"
 MAKING: Final = ".making-"
+STATEMENT: Final = "statement.html"
 OFFER: Final = "offer.html"
 TO_INDEX: Final = Link("Index", "../index.html")
-PAGES_OF_EVENT: Final = (("Event", "event.html"), ("Orders", "orders.html"))
+FROM_OFFER: Final = (Link("Index", "index.html"),)
+PAGES_OF_EVENT: Final = (
+    ("Event", "event.html"),
+    ("Orders", "orders.html"),
+    ("Energy", "energy.html"),
+    ("Statement", "statement.html"),
+)
 
 
 @dataclass(frozen=True)
@@ -46,7 +53,15 @@ def write(home: Path, event_id: str | None = None, offer: str | None = None) -> 
     offer: the page before a call, where one was made. Raises FleetError where a record cannot be read, or the
     disk refuses.
     """
-    wanted = [event_id] if event_id is not None else front.event_ids(home)
+    return _write(home, records.event_ids(home) if event_id is None else [event_id], offer)
+
+
+def write_offer(home: Path, offer: str) -> Written:
+    """Write the page before a call and the index that leads to it; pages of events stay as they are."""
+    return _write(home, [], offer)
+
+
+def _write(home: Path, wanted: Collection[str], offer: str | None) -> Written:
     written: list[str] = []
     with records.lock(home):
         folder = home / PAGES
@@ -60,29 +75,49 @@ def write(home: Path, event_id: str | None = None, offer: str | None = None) -> 
             top = {} if offer is None else {OFFER: offer}
             for name, text in top.items():
                 _replace_file(folder / name, text)
-            top |= front.front_files(home, folder)
-            for name, text in top.items():
+            made = front.front_files(home, folder)
+            for name, text in made.items():
                 _replace_file(folder / name, text)
         except OSError as error:
             raise FleetError(
                 f"{folder}: cannot be written ({error.strerror or error}); free some space or mend the permissions"
             ) from error
-    return Written(folder, (*sorted(top), *written))
+    return Written(folder, (*sorted(top | made), *written))
 
 
 def event_files(home: Path, event_id: str) -> dict[str, str]:
-    """Every page and file of an event's newest call, by name below its folder."""
+    """Every page and file of an event's newest call and settlement, by name below its folder."""
     case = Case(records.read_call(home, event_id))
-    return {"event.html": event.event_page(case, links("event.html"))} | _order_files(home, case)
+    done = settled.read(home, event_id, case)
+    there = [name for _, name in PAGES_OF_EVENT if done is not None or name != STATEMENT]
+    pages = {
+        "event.html": event.event_page(case, links("event.html", there)),
+        "energy.html": energy.energy_page(case, links("energy.html", there)),
+    }
+    statements = {} if done is None else _statement_files(done, there)
+    return pages | _order_files(home, case, there) | statements
 
 
-def _order_files(home: Path, case: Case) -> dict[str, str]:
+def _statement_files(done: settled.Settled, there: Collection[str]) -> dict[str, str]:
+    """The fleet's statement and each site's."""
+    stems = {
+        str(site): f"{place:03d}-{NOT_IN_FILE_NAMES.sub('_', str(site))[:60]}"
+        for place, site in enumerate(done.sites["site_id"], start=1)
+    }
+    up = [Link("Statement", "../statement.html"), Link("Event", "../event.html")]
+    files = {STATEMENT: statement.statement_page(done, links(STATEMENT, there), stems)}
+    return files | {
+        f"statements/{stem}.html": statement.site_page(done, site, up) for site, stem in stems.items()
+    }
+
+
+def _order_files(home: Path, case: Case, there: Collection[str]) -> dict[str, str]:
     """The list of orders, each sheet, each calendar file."""
     sites = {site.window.site_id: site for site in called_sites(case.record)}
     made = [(order, file_stem(order)) for order in orders(case.record)]
     gone = diary.withdrawn_sites(home, case.record.event_id, case.record.revision)
     called_at = case.request["called_at"].iloc[0].to_pydatetime()
-    files = {"orders.html": order_sheet.orders_page(case, made, gone, links("orders.html"))}
+    files = {"orders.html": order_sheet.orders_page(case, made, gone, links("orders.html", there))}
     up = [Link("Orders", "../orders.html"), Link("Event", "../event.html")]
     for (order, stem), site in zip(made, sites.values(), strict=True):
         files[f"orders/{stem}.html"] = order_sheet.sheet_page(
@@ -96,9 +131,9 @@ def _order_files(home: Path, case: Case) -> dict[str, str]:
     return files
 
 
-def links(here: str) -> list[Link]:
-    """The way from one page of an event to the others."""
-    return [TO_INDEX, *[Link(name, href, href == here) for name, href in PAGES_OF_EVENT]]
+def links(here: str, there: Collection[str]) -> list[Link]:
+    """The way from one page of an event to the others that are `there`."""
+    return [TO_INDEX, *[Link(name, href, href == here) for name, href in PAGES_OF_EVENT if href in there]]
 
 
 def _sweep(folder: Path) -> None:

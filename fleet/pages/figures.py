@@ -17,7 +17,7 @@ from sites.units import Floats, Times
 
 WIDTH: Final = 640.0
 HEIGHT: Final = 260.0
-LEFT, RIGHT, TOP, BOTTOM = 66.0, 28.0, 24.0, 38.0
+LEFT, RIGHT, TOP, BOTTOM = 84.0, 30.0, 24.0, 38.0
 
 
 @dataclass(frozen=True)

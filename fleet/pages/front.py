@@ -12,6 +12,7 @@ from markupsafe import Markup, escape
 from fleet import records
 from fleet.folder import open_folder
 from fleet.pages import vocabulary
+from fleet.pages.season import season_files
 from fleet.pages.sheet import Fact, Link, Table, name, number, page, stamp
 from fleet.pages.vocabulary import word
 
@@ -23,15 +24,9 @@ PAGES_OF_EVENT = (
 )
 
 
-def event_ids(home: Path) -> list[str]:
-    """Events of a folder, oldest event first."""
-    past = _calls(home)
-    return [str(row["event_id"]) for row in past]
-
-
 def front_files(home: Path, folder: Path) -> dict[str, str]:
-    """The index, by name; `folder`: where the pages of the events lie already."""
-    return {"index.html": index_page(home, folder)}
+    """The index and the season, by name; `folder`: where the pages of the events lie already."""
+    return season_files(home) | {"index.html": index_page(home, folder)}
 
 
 def index_page(home: Path, folder: Path) -> str:

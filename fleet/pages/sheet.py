@@ -6,6 +6,7 @@ said by the file of that page.
 
 from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field
+from decimal import Decimal
 from functools import cache
 from importlib.resources import files
 from typing import Any, Final
@@ -15,6 +16,7 @@ import numpy as np
 import pandas as pd
 from markupsafe import Markup, escape
 
+from fleet.money import told
 from fleet.pages import figures, vocabulary
 from fleet.words import DAYS, MONTHS, plain
 
@@ -120,6 +122,11 @@ def number(value: Any, digits: int = 0) -> str:
         return NOTHING
     said = f"{float(value):,.{digits}f}"
     return said.lstrip("-") if not said.strip("-0.,") else said.replace("-", "−")
+
+
+def money(amount: Decimal, currency: str) -> str:
+    """An exact amount with the currency's decimals and thousands apart."""
+    return f"{Decimal(told(amount, currency)):,}".replace("-", "−")
 
 
 def percent(value: Any, digits: int = 0) -> str:
