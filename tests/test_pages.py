@@ -254,7 +254,7 @@ def test_the_statements_say_each_amount_to_the_cent(practice: Practice, case: Ca
     assert len(own) == len(sites)
     for row in sites.sort_values("site_id").itertuples():
         text = next(path for path in own if path.stem[4:] == row.site_id).read_text(encoding="utf-8")
-        assert f"{row.total:,.2f} EUR" in text
+        assert f"{row.total:,.2f} EUR".replace("-", "−") in text
         assert f'<td class="n">{row.capacity_payment:,.2f}</td>' in text
     assert "estimated" in page or "missing" in page
     assert page.count("not all measured") > 0

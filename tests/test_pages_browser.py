@@ -14,12 +14,12 @@ from conftest import Practice
 from made_record import SITE_FACTS, made_call
 
 sys.path.insert(0, str(Path(__file__).parent / "browser"))
-from chrome import Chrome, axe_source, chrome  # noqa: E402
+from chrome import Chrome, axe_source, chrome
 
-from fleet.called import called_sites  # noqa: E402
-from fleet.orders import orders  # noqa: E402
-from fleet.pages.order_sheet import sheet_page  # noqa: E402
-from fleet.pages.sheet import Link  # noqa: E402
+from fleet.called import called_sites
+from fleet.orders import orders
+from fleet.pages.order_sheet import sheet_page
+from fleet.pages.sheet import Link
 
 PHONE, DESK = 360, 1200
 NASTY = '<script>window.hit=1</script>=cmd()\u202e\u200f"\U0001f9ca' + "n" * 200

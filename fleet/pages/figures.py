@@ -5,7 +5,7 @@ it (see `numbers`); colours, dashes and type are style.css's.
 """
 
 from collections.abc import Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from typing import Final
 
 import numpy as np
@@ -17,7 +17,7 @@ from sites.units import Floats, Times
 
 WIDTH: Final = 640.0
 HEIGHT: Final = 260.0
-LEFT, RIGHT, TOP, BOTTOM = 84.0, 30.0, 24.0, 38.0
+LEFT, RIGHT, TOP, BOTTOM = 84.0, 30.0, 30.0, 38.0
 
 
 @dataclass(frozen=True)
@@ -62,9 +62,8 @@ class Curve:
     points: Sequence[tuple[str, str, Floats, Floats]]
     """(name, look, x, y)"""
     stepped: bool = False
-    marked: tuple[str, float, float] | None = None
-    """One point with its name"""
-    zero: bool = field(default=True)
+    marked: Sequence[tuple[str, str, float, float]] = ()
+    """Single points: (name, look, x, y)"""
 
 
 def chart_svg(chart: Chart) -> Markup:
@@ -89,9 +88,12 @@ def curve_svg(curve: Curve) -> Markup:
     """The curve as SVG."""
     xs = np.concatenate([np.zeros(1), *[x for _, _, x, _ in curve.points]])
     ys = np.concatenate([np.zeros(1), *[y for _, _, _, y in curve.points]])
-    mark = [] if curve.marked is None else [curve.marked]
-    x, x_ticks = value_scale(min(0.0, xs.min()), max([xs.max(), *[m[1] for m in mark]]), LEFT, WIDTH - RIGHT)
-    y, y_ticks = value_scale(min(0.0, ys.min()), max([ys.max(), *[m[2] for m in mark]]), HEIGHT - BOTTOM, TOP)
+    x, x_ticks = value_scale(
+        min(0.0, xs.min()), max([xs.max(), *[x for _, _, x, _ in curve.marked]]), LEFT, WIDTH - RIGHT
+    )
+    y, y_ticks = value_scale(
+        min(0.0, ys.min()), max([ys.max(), *[y for _, _, _, y in curve.marked]]), HEIGHT - BOTTOM, TOP
+    )
     parts = _y_axis(y, y_ticks, curve.y_name)
     parts += _x_axis(x, x_ticks, curve.x_name)
     for _, look, at, value in curve.points:
@@ -105,8 +107,8 @@ def curve_svg(curve: Curve) -> Markup:
                 f'<circle class="dot" cx="{a:.1f}" cy="{b:.1f}" r="3"/>' for a, b in zip(x(at), y(value))
             ]
         parts.append(f'<path class="s {look}" d="{path}"/>')
-    for _, at_x, at_y in mark:
-        parts.append(f'<circle class="dot asked" cx="{x(at_x):.1f}" cy="{y(at_y):.1f}" r="6"/>')
+    for place, (_, look, at_x, at_y) in enumerate(curve.marked):
+        parts.append(_mark(float(x(at_x)), float(y(at_y)), look, place))
     return _svg(curve.title, curve.said, parts)
 
 
@@ -171,6 +173,20 @@ def swatch(look: str, filled: bool = False) -> Markup:
     return Markup('<svg viewBox="0 0 32 12" aria-hidden="true" focusable="false">{}</svg>').format(
         Markup(inner)
     )
+
+
+def mark_swatch(look: str, place: int) -> Markup:
+    """The mark of a single point, for the key."""
+    return Markup('<svg viewBox="0 0 32 12" aria-hidden="true" focusable="false">{}</svg>').format(
+        Markup(_mark(16.0, 6.0, look, place))
+    )
+
+
+def _mark(x: float, y: float, look: str, place: int) -> str:
+    """A disc for the first single point of a curve, a diamond for the others: shape tells them apart too."""
+    if place == 0:
+        return f'<circle class="f {look}" cx="{x:.1f}" cy="{y:.1f}" r="6"/>'
+    return f'<path class="f {look}" d="M{x:.1f} {y - 7:.1f}l7 7l-7 7l-7 -7Z"/>'
 
 
 def step_path(edges: Floats, heights: Floats) -> str:

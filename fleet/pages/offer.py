@@ -110,16 +110,25 @@ def _said(offer: Offer, asked_kw: float | None) -> str:
 def _duration_figure(survey: Survey, offer: Offer, asked_kw: float | None) -> Figure:
     hours, kw = duration_kw(survey, offer)
     event_h = float((survey.ask.event_to - survey.ask.event_from) / np.timedelta64(1, "h"))
+    together = float(offer.available.sustained_kw)
+    marks = [("relieving each other", "later", event_h, together), *_asked(asked_kw, event_h, asked_kw)]
     curve = figures.Curve(
         "kW against duration",
-        "What the sites can each hold for so long, summed at the node; feeder limits may take some of it.",
+        "The line sums what each site can hold by itself for so long, feeder limits left aside; relieving each other, "
+        "the sites hold the marked kW through the whole event, feeder limits kept.",
         "hours",
         "kW",
-        [("held for so long", "event", np.array(hours), kw)],
-        marked=None if asked_kw is None else ("asked", event_h, asked_kw),
+        [("each site by itself", "event", np.array(hours), kw)],
+        marked=marks,
     )
     rows = [[f"{length:g} h", number(value)] for length, value in zip(hours, kw)]
+    rows.append([f"{event_h:g} h, relieving each other", number(together)])
     return curve_figure(curve, Table("Numbers of “kW against duration”", [("for", "w"), ("kW", "n")], rows))
+
+
+def _asked(asked_kw: float | None, x: float | None, y: float | None) -> list[tuple[str, str, float, float]]:
+    """The request as a mark of a curve; none where none is known."""
+    return [] if asked_kw is None or x is None or y is None else [("asked", "asked", x, y)]
 
 
 def _merit_figure(survey: Survey, offer: Offer, asked_kw: float | None) -> Figure:
@@ -138,7 +147,7 @@ def _merit_figure(survey: Survey, offer: Offer, asked_kw: float | None) -> Figur
         f"{currency} per kWh",
         [("net cost per kWh", "event", kw[rows_in].cumsum(), per_kwh)],
         stepped=True,
-        marked=None if asked_kw is None else ("asked", asked_kw, 0.0),
+        marked=_asked(asked_kw, asked_kw, 0.0),
     )
     site_id, total = survey.fleet.roster.buildings.site_id, kw[rows_in].cumsum()
     rows = [
@@ -206,18 +215,24 @@ def _out_table(survey: Survey, offer: Offer) -> Table:
 
 def _assumed_table(survey: Survey) -> Table:
     """Assumed values, by table and column."""
-    counts: dict[tuple[str, str, str], int] = {}
+    found: dict[tuple[str, str], list[str]] = {}
     for one in survey.fleet.assumed:
-        key = (str(one.table), str(one.column), str(one.value))
-        counts[key] = counts.get(key, 0) + 1
-    ranked = sorted(counts.items(), key=lambda item: (-item[1], item[0]))
+        found.setdefault((str(one.table), str(one.column)), []).append(str(one.value))
+    ranked = sorted(found.items(), key=lambda item: (-len(item[1]), item[0]))
     rows: list[list[Any]] = [
-        [f"{table}.{column}", plain(value), number(count)]
-        for (table, column, value), count in ranked[:ASSUMED_SHOWN]
+        [f"{table}.{column}", _values(values), number(len(values))]
+        for (table, column), values in ranked[:ASSUMED_SHOWN]
     ]
     if len(ranked) > ASSUMED_SHOWN:
         rows.append([f"and {len(ranked) - ASSUMED_SHOWN} more: shedwright check lists all"])
     return Table("Values the fleet does not give", [("value of", "t"), ("taken", "t"), ("times", "n")], rows)
+
+
+def _values(values: Sequence[str]) -> str:
+    """One assumed value as it is, several by example."""
+    different = list(dict.fromkeys(values))
+    few = ", ".join(plain(value) for value in different[:3])
+    return few if len(different) <= 3 else f"{few} and {len(different) - 3} other values"
 
 
 def _utc(at: np.datetime64) -> pd.Timestamp:

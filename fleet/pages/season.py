@@ -279,10 +279,14 @@ def _fatigue_table(tired: pd.DataFrame) -> Table:
         ("calls", "n"),
         ("hours", "n"),
         ("warmest rise, K", "n"),
-        (f"calls under {SHORT_NOTICE_TIMES:g} times its notice", "n"),
+        ("short notices", "n"),
         ("most days on end", "n"),
     ]
-    return Table("Fatigue by site, most hours first", heads, rows)
+    return Table(
+        f"Fatigue by site, most hours first; short: under {SHORT_NOTICE_TIMES:g} times the site's own notice",
+        heads,
+        rows,
+    )
 
 
 def _slipping_table(tired: pd.DataFrame) -> Table:

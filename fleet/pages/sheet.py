@@ -78,8 +78,7 @@ def figure(chart: figures.Chart, names: str = "") -> Figure:
 def curve_figure(curve: figures.Curve, table: Table) -> Figure:
     """A curve with its key and a table of its own."""
     key = [(name, figures.swatch(look)) for name, look, _, _ in curve.points]
-    if curve.marked is not None:
-        key.append((curve.marked[0], figures.swatch("asked", filled=True)))
+    key += [(name, figures.mark_swatch(look, place)) for place, (name, look, _, _) in enumerate(curve.marked)]
     return Figure(curve.title, curve.said, figures.curve_svg(curve), key, table)
 
 
