@@ -3,6 +3,7 @@
 import csv
 import io
 import re
+import shutil
 from dataclasses import replace
 from decimal import Decimal
 from pathlib import Path
@@ -15,9 +16,11 @@ from conftest import Practice, shedwright
 
 from fleet import records
 from fleet.errors import FleetError
-from fleet.pages import balance, book, event, figures, scale, season
+from fleet.pages import balance, book, diary, event, figures, scale, season
 from fleet.pages.case import Case
 from fleet.pages.sheet import clock, environment, number, percent
+from fleet.schema import tables
+from fleet.tables import read_parquet, write_parquet
 from sites.units import Floats
 
 HOUR = np.timedelta64(3600_000_000, "us")
@@ -184,8 +187,6 @@ def test_an_event_that_is_not_there_is_named(practice: Practice):
 
 
 def test_what_a_killed_run_left_is_swept_and_the_folder_stays_whole(practice: Practice, tmp_path):
-    import shutil
-
     home = tmp_path / "fleet"
     shutil.copytree(practice.fleet / "events", home / "events")
     (home / "pages" / ".making-practice-0000").mkdir(parents=True)
@@ -261,8 +262,6 @@ def test_the_statements_say_each_amount_to_the_cent(practice: Practice, case: Ca
 
 
 def test_a_second_settlement_shows_what_it_changed(practice: Practice, tmp_path: Path):
-    import shutil
-
     shutil.copytree(practice.fleet, tmp_path / "rehearsal")
     ran = shedwright(
         "settle", "rehearsal", "practice", "--meter", "rehearsal/meters-event.parquet", "--excuse", "hotel-03",
@@ -385,3 +384,37 @@ def test_offer_options_go_together():
     assert [ran.code for ran in told] == [2, 2]
     assert "--from and --to go together" in told[0].err
     assert "an offer is made before a call" in told[1].err
+
+
+def test_a_plan_without_a_site_withdraws_its_order_and_raises_the_others(practice: Practice, tmp_path: Path):
+    """Call revision 2 as revision 1 less one site: its calendar entry is cancelled, the others are changed."""
+    first = book.event_files(practice.fleet, "practice")
+    shutil.copytree(practice.fleet / "events", tmp_path / "events")
+    folder = tmp_path / "events" / "practice"
+    shutil.copytree(folder / "call-001", folder / "call-002")
+    gone = "hotel-03"
+    for frame_of, of in tables("call").items():
+        path = folder / "call-002" / f"{frame_of}.parquet"
+        frame = read_parquet(path, of)
+        if "site_id" in frame and frame_of not in ("usual", "quotes"):
+            frame = frame[frame["site_id"] != gone]
+        if frame_of == "request":
+            frame["supersedes"] = pd.array([1] * len(frame), dtype="Int64")
+        path.unlink()
+        write_parquet(frame, path, of)
+    second = book.event_files(tmp_path, "practice")
+    cancelled = [name for name in second if "withdrawn" in name]
+    assert len(cancelled) == 1
+    assert "STATUS:CANCELLED" in second[cancelled[0]]
+    assert "SEQUENCE:1" in second[cancelled[0]]
+    uid = diary.uid("practice", gone)
+    before = next(text for name, text in first.items() if name.endswith(f"{gone}.ics"))
+    assert f"UID:{uid}" in before
+    assert f"UID:{uid}" in second[cancelled[0]]
+    kept = next(text for name, text in second.items() if name.endswith("office-01.ics"))
+    assert "SEQUENCE:1" in kept
+    assert "STATUS:CONFIRMED" in kept
+    assert "withdrawn" in second["orders.html"]
+    assert "replaces revision 1" in next(
+        text for name, text in second.items() if name.endswith("office-01.html")
+    )

@@ -18,7 +18,7 @@ from fleet.pages.sheet import Fact, Link, Table, clock, name, page, sentence, sh
 from fleet.pages.vocabulary import word
 from fleet.words import plain
 
-ROOMY, TIGHT = 1500, 2100
+ROOMY, TIGHT = 1250, 2100
 """Characters of an order up to which its printed sheet is set roomy, tight; above, dense."""
 DENSITIES: Final = ("roomy", "tight", "dense")
 LINE_WORTH: Final = 90

@@ -13,10 +13,11 @@ from typing import Any, Final
 
 import numpy as np
 import pandas as pd
+from markupsafe import Markup
 
 from fleet import records
 from fleet.pages import vocabulary
-from fleet.pages.sheet import Fact, Link, Table, money, name, number, page, percent, stamp
+from fleet.pages.sheet import NOTHING, Fact, Link, Table, money, name, number, page, percent, stamp
 from fleet.pages.vocabulary import word
 from fleet.seals import digest
 from fleet.terminal import csv_text
@@ -337,22 +338,33 @@ def _regulator(season: Season) -> tuple[list[str], list[list[Any]]]:
 
 
 def _regulator_table(season: Season) -> Table:
+    """The rows of `_regulator`, what belongs together in one cell so that they fit on paper."""
     heads, rows = _regulator(season)
-    kinds = ["", "w", "w", "t", "w", *["n"] * 8, "t", "t", "w"]
-    shown = [[name(row[0]), *[_cell(cell) for cell in row[1:]]] for row in rows[-MOST_EVENTS_NAMED:]]
-    return Table(
-        "One table for the regulator; season.csv holds the same",
-        [(head.replace("_", " "), kind) for head, kind in zip(heads, kinds, strict=True)],
-        shown,
-    )
+    shown = []
+    for row in rows[-MOST_EVENTS_NAMED:]:
+        told = dict(zip(heads, row, strict=True))
+        what = Markup("{}<br><small>{}, {}, {}</small>").format(
+            name(told["event"]), told["direction"], told["kind"], name(told["node"])
+        )
+        places = Markup("<br>").join(
+            name(told[column]) for column in ("call", "settlement", "seal") if told[column]
+        )
+        amounts = [_cell(told[head]) for head in heads[heads.index("asked_kwh") : heads.index("call")]]
+        shown.append([what, told["from"], *amounts, places])
+    numbers = [
+        (head.replace("_", " "), "n") for head in heads[heads.index("asked_kwh") : heads.index("call")]
+    ]
+    columns = [("event", "t"), ("from", "t"), *numbers, ("record and seal", "t")]
+    return Table("One table for the regulator; season.csv holds the same, a column each", columns, shown)
 
 
-def _cell(cell: Any) -> Any:
-    if cell is None or cell == "":
-        return "–"
+def _cell(cell: Any) -> str:
+    """A number of the regulator's table at the digits it is stated with."""
+    if cell is None:
+        return NOTHING
     if isinstance(cell, Decimal):
         return f"{cell:,}".replace("-", "−")
-    return number(cell, 6 if abs(cell) < 1.0 else 1) if isinstance(cell, float) else name(cell)
+    return number(cell, 6 if 0.0 < abs(cell) < 1.0 else 0 if isinstance(cell, int) else 1)
 
 
 def _csv(cell: Any) -> str:

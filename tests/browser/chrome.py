@@ -70,6 +70,18 @@ class Chrome:
         )
         self.driver.get(page.resolve().as_uri())
 
+    def on_paper(self, page: Path, paper: str, margin_mm: float = 13.0) -> list[str]:
+        """Open a page as it is printed on a paper and name the tables and charts that do not fit its width."""
+        width = round(96.0 * (PAPER[paper][0] - 2.0 * margin_mm / 25.4))
+        self.see(page, width)
+        self.driver.execute_cdp_cmd("Emulation.setEmulatedMedia", {"media": "print", "features": []})
+        found: list[str] = self.run(
+            "const wide = document.documentElement.clientWidth + 1;"
+            "return [...document.querySelectorAll('table, svg, p')].filter(one => "
+            "one.getBoundingClientRect().right > wide).map(one => one.textContent.slice(0, 60));"
+        )
+        return found
+
     def run(self, script: str, *arguments: Any) -> Any:
         """A script in the page; its return value."""
         return self.driver.execute_script(script, *arguments)
