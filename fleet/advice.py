@@ -146,7 +146,7 @@ def before(site: CalledSite) -> tuple[str, ...]:
 
 def _before_charging(site: CalledSite) -> tuple[str, ...]:
     """Conditions before the tanks are made to charge: room in them by the high estimate, and what guards them."""
-    tags = ", ".join(plain(tank.tank_id) for tank in site.tanks)
+    tags = ", ".join(site.words.tag(tank.tank_id) for tank in site.tanks)
     most = site.level(float(site.window.inventory_low_start_kwh_th))
     return (
         f"{tags}: at most {most}, of {site.words.energy(site.capacity_kwh_th)}",
@@ -222,7 +222,9 @@ def _after(site: CalledSite) -> str:
     elif first <= end:
         said += ", which goes on charging. "
     else:
-        caps = ", ".join(f"{plain(step.unit_id)} {site.words.cooling(step.value or 0.0)}" for step in again)
+        caps = ", ".join(
+            f"{site.words.tag(step.unit_id)} {site.words.cooling(step.value or 0.0)}" for step in again
+        )
         when = RECOVERIES[str(site.window.recovery)]
         said += f"; no charging before {site.words.time(first)}, then {when}, at most {caps}. "
     said += "The tank starts fuller, so less is charged than usual. Full early: stop charging and ring; "

@@ -39,7 +39,6 @@ def sheet_page(order: Order, links: Sequence[Link], site: CalledSite) -> str:
         replaces=replaces,
         readings=[*(site.words.tag(str(tank.tank_id)) for tank in site.tanks), *machines][:6],
         ice=site.has_ice,
-        units="%",
     )
 
 
