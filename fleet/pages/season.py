@@ -16,11 +16,11 @@ import pandas as pd
 from markupsafe import Markup
 
 from fleet import records
+from fleet.harmless import csv_text
 from fleet.pages import vocabulary
 from fleet.pages.sheet import NOTHING, Fact, Link, Table, money, name, number, page, percent, stamp
 from fleet.pages.vocabulary import word
 from fleet.seals import digest
-from fleet.terminal import csv_text
 
 COUNTED: Final = ("real", "test")
 SLIPS_BELOW_FRACTION: Final = 0.9
