@@ -1,6 +1,7 @@
 """One rehearsal for all tests that look at what the installed command leaves behind; do not write to it."""
 
 import json
+import os
 import subprocess
 import sys
 from dataclasses import dataclass
@@ -8,6 +9,10 @@ from pathlib import Path
 from typing import Any
 
 import pytest
+
+os.environ.setdefault(
+    "OPENBLAS_NUM_THREADS", "1"
+)  # a test process a core: more threads only wait for each other
 
 
 @dataclass(frozen=True)

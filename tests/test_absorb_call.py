@@ -174,7 +174,7 @@ def test_the_quote_heads_its_column_by_the_direction(hall: Path) -> None:
 
 def test_a_full_tank_is_exit_3_and_says_so(tmp_path: Path) -> None:
     fleet = written(tmp_path / "full", level=1980.0)
-    assert "tank full, nothing to absorb" in done("quote", fleet, *ASK).out
+    assert "the tank is full" in done("quote", fleet, *ASK).out
     ran = run("call", fleet, *ASK, "--kw", 50, "--event", "sun")
     assert ran.code == 3
     assert ran.out == ""

@@ -8,7 +8,6 @@ import subprocess
 import sys
 import traceback
 from pathlib import Path
-from tempfile import mkdtemp
 from unittest import mock
 
 import pandas as pd
@@ -16,6 +15,7 @@ import pytest
 from breaking import EVENT, Breaker, breaking
 from commands import ASK, Ran, called_fleet, run
 from fleet_folders import write_small_fleet
+from permission_bits import heed_permission_bits
 
 from fleet import calling, desk
 from fleet.audit import audit
@@ -29,7 +29,6 @@ from sites.direction import Direction
 HERE = Path(__file__).parent
 OLD = HERE / "reference" / "records"
 MOMENTS = 50
-NOBODY = 65534
 HOLD = """
 import sys
 from pathlib import Path
@@ -186,22 +185,13 @@ def test_a_disk_that_refuses_in_the_middle_leaves_nothing(tmp_path, just_called,
     assert run(command, fleet, *rest).code == 0
 
 
-@pytest.fixture
-def open_place():
-    """A folder that a user without rights may walk into, which those of pytest are not."""
-    place = Path(mkdtemp())
-    place.chmod(0o755)
-    yield place
-    shutil.rmtree(place)
-
-
 @pytest.mark.parametrize("where", ["beside it", "in it"])
 @pytest.mark.parametrize("writer", WRITERS)
-def test_permission_lost_in_the_middle_leaves_no_record(open_place, just_called, writer, where):
+def test_permission_lost_in_the_middle_leaves_no_record(tmp_path, just_called, writer, where):
     """Real permission bits, taken away in the middle by a child without a superuser's rights."""
     command, rest, made = WRITERS[writer]
     at = 9 if writer == "call" else 4
-    fleet = open_place / "fleet"
+    fleet = tmp_path / "fleet"
     shutil.copytree(just_called, fleet)
     parent = (fleet / "events" / made).parent
 
@@ -210,19 +200,14 @@ def test_permission_lost_in_the_middle_leaves_no_record(open_place, just_called,
             path.chmod(0o500)
 
     def unprivileged() -> list:
-        if os.getuid() == 0:
-            for path in (fleet, *fleet.rglob("*")):
-                os.chown(path, NOBODY, NOBODY)
-            os.setgroups([])
-            os.setgid(NOBODY)
-            os.setuid(NOBODY)
+        heed_permission_bits()
         with breaking(Breaker(at, taken_away)):
             ran = run(command, fleet, *rest)
         for path in (parent, *parent.glob(".making-*/**/")):
             path.chmod(0o700)
         return [ran.code, ran.out, ran.err, [path.name for path in parent.glob(".making-*")]]
 
-    code, out, err, left = child(unprivileged, open_place / "told")
+    code, out, err, left = child(unprivileged, tmp_path / "told")
     assert (code, out, len(left)) == (2, "", 1), err
     assert err.startswith(f"{fleet}/events/{made}: could not be written (Permission denied at ")
     assert err.endswith(

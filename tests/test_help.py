@@ -125,7 +125,7 @@ USAGE = {
     ("orders", "x", "A", "B"): (
         "shedwright orders", "[OPTIONS] {FLEET} {EVENT}", "Got unexpected extra argument(s) (B)",
     ),
-    ("call", "x", "--kw", "10"): ("shedwright call", "[OPTIONS] {FLEET}", "Missing option '--from'."),
+    ("quote", "x"): ("shedwright quote", "[OPTIONS] {FLEET}", "Missing option '--from'."),
     ("call", "x", "--kw"): ("shedwright", "", "Option '--kw' requires an argument."),
 }  # fmt: skip
 
@@ -139,6 +139,12 @@ def test_wrong_usage_is_told_with_the_way_to_help_and_exit_code_2(arguments):
     assert ran.err == f"{usage}Try '{command} --help' for help.\n\nError: {message}\n"
     if arguments[-1] != "--kw":
         assert json.loads(run(*arguments, "--json").out)["refused"] == [{"message": message}]
+
+
+def test_a_call_that_asks_for_kw_without_a_time_is_told_both_ways_to_ask():
+    ran = run("call", "x", "--kw", "10")
+    told = "--from, --to missing: give --kw with --from and --to, or --request FILE instead of all three"
+    assert (ran.code, ran.out, ran.err) == (2, "", f"{told}\n")
 
 
 def options():

@@ -1,7 +1,5 @@
 """What the command refuses, each with its whole message and its exit code; folders stay as they were."""
 
-import ctypes
-import os
 import subprocess
 import sys
 from pathlib import Path
@@ -11,6 +9,7 @@ import pandas as pd
 import pytest
 from commands import ASK, called_fleet, run
 from fleet_folders import SETTINGS, set_cell, small_tables, write_small_fleet
+from permission_bits import heed_permission_bits
 
 from sites.chiller import RATED_COP_MINIMUM
 
@@ -359,18 +358,6 @@ def test_no_permission_to_read_a_table_or_the_settings(tmp_path):
             f"{tmp_path}/fleet.toml: cannot be read ([Errno 13] Permission denied: '{tmp_path}/fleet.toml'); "
             "save it as UTF-8 text"
         )
-
-
-PR_CAPBSET_DROP, CAP_DAC_OVERRIDE, CAP_DAC_READ_SEARCH = 24, 1, 2
-"""linux/prctl.h and linux/capability.h: what lets a superuser pass over permission bits."""
-
-
-def heed_permission_bits() -> None:
-    """In a child before it starts: a superuser's, too, may then read only what the bits allow."""
-    libc = ctypes.CDLL(None, use_errno=True)
-    for capability in (CAP_DAC_OVERRIDE, CAP_DAC_READ_SEARCH):
-        if os.getuid() == 0 and libc.prctl(PR_CAPBSET_DROP, capability, 0, 0, 0) != 0:
-            raise OSError(ctypes.get_errno(), "a capability could not be given up")
 
 
 @pytest.mark.skipif(sys.platform != "linux", reason="permission bits hold for a superuser on Linux only")

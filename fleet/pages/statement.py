@@ -56,7 +56,7 @@ def statement_page(settled: Settled, links: Sequence[Link], stems: dict[str, str
             Fact(
                 "delivered",
                 f"{number(delivered)} kWh",
-                f"{percent(delivered / asked if asked else None)} of what was asked",
+                f"at the node over the whole event, {percent(delivered / asked if asked else None)} of what was asked",
             ),
             Fact("committed", f"{number(sites['committed_kwh'].sum())} kWh", "at the sites' meters"),
             Fact("paid", f"{_total(settled, 'total')} {case.currency}", "from the sites' side"),
