@@ -146,6 +146,7 @@ def _tanks(tanks: pd.DataFrame, sites: pd.Index) -> Tanks:
     pad = _padder(tanks, sites)
 
     def limit(name: str) -> Floats:
+        """A column by (site, tank); no value is no limit."""
         values = tanks[name].to_numpy(dtype=np.float64)
         return pad(np.where(np.isnan(values), np.inf, values), 0.0)
 

@@ -97,8 +97,8 @@ def begun_lines(begun: Begun) -> list[str]:
     lines = [f"{begun.path}: {len(begun.files)} files written"]
     lines += [f"  {name}: {count} rows" for name, count in begun.rows.items()]
     lines += [f"  {note}" for note in begun.notes]
-    todo = f"{begun.to_mend} places to fill in; " if begun.to_mend else ""
-    return [*lines, f"{todo}next: shedwright check {_quoted(begun.path)}"]
+    left = f"{begun.to_mend} places to fill in; " if begun.to_mend else ""
+    return [*lines, f"{left}next: shedwright check {_quoted(begun.path)}"]
 
 
 def begun_json(begun: Begun) -> dict[str, Any]:

@@ -32,24 +32,29 @@ class _Site:
     site_id: str
 
     def rows(self, name: str) -> pd.DataFrame:
+        """The site's rows of a table of the settlement, in their order."""
         frame = self.record.frames[name]
         return frame[frame["site_id"] == self.site_id].reset_index(drop=True)
 
     @property
     def row(self) -> dict[str, Any]:
+        """The site's one row of `sites`."""
         return {str(name): _plain(value) for name, value in self.rows("sites").iloc[0].items()}
 
     @property
     def rule(self) -> SettlementRule:
+        """The rule frozen with the call, whatever the fleet's settings say today."""
         frozen = self.call.frozen_json["rules"]
         return SettlementRule.model_validate(frozen["rules"][frozen["site"][self.site_id]])
 
     @property
     def settings(self) -> dict[str, Any]:
+        """The fleet's settings frozen with the call."""
         return dict(self.call.frozen_json["settings"])
 
     @property
     def step_minutes(self) -> int:
+        """Length of an interval, in minutes."""
         return int(self.settings["interval_minutes"])
 
 
