@@ -161,13 +161,13 @@ def _contracts(
 ) -> pd.DataFrame:
     """The rest of the sites table: where a site hangs, what it is paid, its limits; some cells stay empty."""
     number = np.arange(len(sites))
-    midday = (plan["charging"] == "midday").to_numpy()
+    midday, stored = (plan["charging"] == "midday").to_numpy(), (plan["tanks"] > 0).to_numpy()
     peak = sites["peak_cooling_kw_th"].to_numpy(dtype=np.float64)
     full = sites.assign(
         node_id=np.array(network.FEEDERS)[feeder],
         tariff_id=np.where(midday, "solar", np.where(number % 4 == 3, "large", "general")),
         station_id=np.array(weather_file.STATIONS)[station],
-        held_back_kwh_th=np.where(number % 9 == 5, np.round(0.1 * peak, -1), 0.0),
+        held_back_kwh_th=np.where((number % 9 == 5) & stored, np.round(0.1 * peak, -1), 0.0),
         notice_minutes=np.where(number % 10 == 6, 60, 120),
         calls_per_season=pd.array(np.where(number % 6 == 2, 10.0, np.nan)).astype("Int64"),
         hours_per_season=np.where(number % 7 == 4, 40.0, np.nan),

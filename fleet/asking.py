@@ -5,13 +5,16 @@ Owns which options go together. Times are read in the fleet's zone and held to i
 
 from dataclasses import dataclass
 from pathlib import Path
+from typing import cast
 
 import numpy as np
 
-from fleet.desk import Ask
-from fleet.errors import FleetError
+from fleet.desk import Ask, check_order
+from fleet.errors import FleetError, Gathered
 from fleet.folder import open_folder, parse_time
-from fleet.request_file import read_request
+from fleet.records import check_free
+from fleet.request import check_words
+from fleet.request_file import AskedByFile, read_request
 from fleet.settings import Settings
 from sites.direction import Direction
 from sites.units import Floats
@@ -31,17 +34,22 @@ class Asked:
         return float(np.max(self.kw))
 
 
+@dataclass(frozen=True)
+class Words:
+    """What a call says beside time, place and kW; held against what it may be before the fleet is read."""
+
+    event_id: str | None
+    purpose: str
+    within: float | None
+
+
 def ask(fleet: Path, start: str, end: str, node: str | None, at: str, direction: str) -> Ask:
-    """When and where; FleetError for an unknown direction and for times off the grid."""
-    settings = _settings(fleet)
-    zone, step = settings.timezone, settings.interval_minutes
-    return Ask(
-        node_id=node,
-        direction=_way(direction),
-        at=parse_time(at, zone),
-        event_from=parse_time(start, zone, step),
-        event_to=parse_time(end, zone, step),
-    )
+    """When and where; FleetError for an unknown direction, for times off the grid or in the wrong order: all of
+    these at once."""
+    gathered = Gathered()
+    found = _ask(gathered, fleet, start, end, node, at, direction)
+    gathered.tell()
+    return cast(Ask, found)
 
 
 def call_ask(
@@ -53,28 +61,66 @@ def call_ask(
     node: str | None,
     at: str,
     direction: str,
+    words: Words,
 ) -> tuple[Ask, Asked]:
-    """When, where and how much: --kw with --from and --to, or --request alone; FleetError for a mixture."""
+    """When, where and how much: --kw with --from and --to, or --request alone.
+
+    Raises FleetError for a mixture, and for all that is wrong with the words, the times and the kW at once.
+    """
+    gathered = Gathered()
+    gathered.of(lambda: _check_words(fleet, words, kw))
     given = {"--kw": kw, "--from": start, "--to": end}
     if file is None:
         absent = [name for name, value in given.items() if value is None]
         if kw is None or start is None or end is None:
+            gathered.tell()
             raise FleetError(
                 f"{', '.join(absent)} missing: give --kw with --from and --to, or --request FILE instead of all three"
             )
-        return ask(fleet, start, end, node, at, direction), Asked(kw, (node,), ())
+        when = _ask(gathered, fleet, start, end, node, at, direction)
+        gathered.tell()
+        return cast(Ask, when), Asked(kw, (node,), ())
     doubled = [name for name, value in given.items() if value is not None]
     if doubled:
+        gathered.tell()
         raise FleetError(
             f"--request together with {', '.join(doubled)}: the file has times and kW; leave those out"
         )
+    way = gathered.of(lambda: _way(direction))
     settings = _settings(fleet)
-    read = read_request(file, settings, node)
+    at_time = gathered.of(lambda: parse_time(at, settings.timezone))
+    read = gathered.of(lambda: read_request(file, settings, node))
+    gathered.tell()
+    return _of_file(cast(AskedByFile, read), cast(Direction, way), cast(np.datetime64, at_time))
+
+
+def _check_words(fleet: Path, words: Words, kw: float | None) -> None:
+    check_words(words.event_id, words.purpose, 1.0 if kw is None else kw, words.within)
+    if words.event_id is not None:
+        check_free(fleet, words.event_id)
+
+
+def _of_file(read: AskedByFile, way: Direction, at: np.datetime64) -> tuple[Ask, Asked]:
     one = read.node_ids[0] if len(read.node_ids) == 1 else None
-    at_time = parse_time(at, settings.timezone)
-    when = Ask(one, _way(direction), at_time, read.event_from, read.event_to)
     kw_by_node = read.kw[0] if len(read.node_ids) == 1 else read.kw
+    when = Ask(one, way, at, read.event_from, read.event_to)
     return when, Asked(kw_by_node, read.node_ids, read.notes)
+
+
+def _ask(
+    gathered: Gathered, fleet: Path, start: str, end: str, node: str | None, at: str, direction: str
+) -> Ask | None:
+    """When and where, or None where something of it is refused and kept."""
+    way = gathered.of(lambda: _way(direction))
+    settings = _settings(fleet)
+    zone, step = settings.timezone, settings.interval_minutes
+    at_time = gathered.of(lambda: parse_time(at, zone))
+    event_from = gathered.of(lambda: parse_time(start, zone, step))
+    event_to = gathered.of(lambda: parse_time(end, zone, step))
+    if at_time is None or event_from is None or event_to is None:
+        return None
+    gathered.of(lambda: check_order(at_time, event_from, event_to))
+    return None if way is None else Ask(node, way, at_time, event_from, event_to)
 
 
 def _settings(fleet: Path) -> Settings:

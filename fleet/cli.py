@@ -243,16 +243,13 @@ def call(
     Example: shedwright call rehearsal --kw 1500 --from 2026-07-15T16:00 --to 2026-07-15T19:00
     --node North --at 2026-07-15T13:00 --event practice-2 --purpose rehearsal
     """
-    from fleet import calling, desk, records, show
-    from fleet.asking import call_ask
-    from fleet.request import check_words
+    from fleet import calling, desk, show
+    from fleet.asking import Words, call_ask
     from fleet.wishes import Wishes
 
     terminal = Terminal(json)
-    check_words(event, purpose, 1.0 if kw is None else kw, within)
-    if event is not None:
-        records.check_free(fleet, event)
-    ask, asked = call_ask(fleet, kw, start, end, file, node, at or _now(), direction)
+    words = Words(event, purpose, within)
+    ask, asked = call_ask(fleet, kw, start, end, file, node, at or _now(), direction, words)
     survey = desk.survey(fleet, ask, terminal.progress, asked.largest_kw)
     made = calling.call(
         survey,

@@ -73,7 +73,7 @@ def survey(
     settings = folder.settings
     for time in (ask.event_from, ask.event_to):
         on_grid(time, settings.interval_minutes, settings.timezone)
-    _check_order(ask)
+    check_order(ask.at, ask.event_from, ask.event_to)
     start = up_to_grid(ask.at, settings.interval_minutes)
     last_day = local_day(ask.event_to - np.timedelta64(1, "us"), settings.timezone)
     end = local_day_start(last_day + np.timedelta64(2, "D"), settings.timezone)
@@ -122,12 +122,13 @@ def _building_kw(base: Ground) -> Floats:
     return building
 
 
-def _check_order(ask: Ask) -> None:
-    if ask.event_to <= ask.event_from:
+def check_order(at: np.datetime64, event_from: np.datetime64, event_to: np.datetime64) -> None:
+    """FleetError for an event that ends before it starts, or starts before it is called."""
+    if event_to <= event_from:
         raise FleetError(
             "--to is not after --from: an event ends after it starts; exchange them or move the end"
         )
-    if ask.event_from < ask.at:
+    if event_from < at:
         raise FleetError(
             "--from lies before --at: an event cannot start before it is called; move --from, "
             "or give --at the time of the call"

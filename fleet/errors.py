@@ -1,6 +1,10 @@
 """The root error of this package, and one child for each exit code a caller can meet."""
 
+from collections.abc import Callable
 from dataclasses import dataclass
+from typing import TypeVar
+
+T = TypeVar("T")
 
 
 class FleetError(ValueError):
@@ -44,3 +48,29 @@ class Refused(FleetError):  # noqa: N818
         if len(problems) > shown:
             lines.append(f"... and {len(problems) - shown} more; `shedwright check` lists all of them")
         super().__init__("\n".join(lines))
+
+
+class Gathered:
+    """Several checks made one after another whose refusals are told at once, not one a try."""
+
+    def __init__(self) -> None:
+        self._found: list[FleetError] = []
+
+    def of(self, check: Callable[[], T]) -> T | None:
+        """What `check` returns, or None where it refuses; the refusal is kept."""
+        try:
+            return check()
+        except FleetError as error:
+            self._found.append(error)
+            return None
+
+    def tell(self) -> None:
+        """Raise what was refused: the one error itself, or all of them in one, in the order of the checks."""
+        if not self._found:
+            return
+        if len(self._found) == 1:
+            raise self._found[0]
+        refused = [error for error in self._found if isinstance(error, Refused)]
+        if len(refused) == len(self._found):
+            raise Refused([problem for error in refused for problem in error.problems])
+        raise FleetError("\n".join(str(error) for error in self._found))

@@ -197,6 +197,11 @@ def _chargeable(frames: Frames, files: Mapping[str, str]) -> list[Problem]:
     """Tanks that no chiller of their site can charge; a tank of an unknown site is told of for that alone."""
     chillers, tanks = frames["chillers"], frames["tanks"].dropna(subset=["site_id", "kind"])
     tanks = tanks[tanks["site_id"].isin(frames["sites"]["site_id"])]
+    if chillers.empty and len(tanks):
+        advice = "add the table with a row for each machine"
+        return [
+            Problem(files["chillers"], None, None, "no rows", "the chillers that charge the tanks", advice)
+        ]
     ice = tanks["kind"].isin(ICE_KINDS)
     cooled = tanks["site_id"].isin(chillers["site_id"])
     makers = chillers.loc[chillers["makes_ice"].fillna(True).astype(bool), "site_id"]

@@ -13,7 +13,7 @@ from demo_folders import short_fleet
 
 from demo_fleet import buildings, calendar, course, hidden
 from demo_fleet.files import DemoError, read_table
-from demo_fleet.sample import sample
+from demo_fleet.sample import _contracts, sample
 from fleet.folder import problems
 
 TABLES = (
@@ -240,6 +240,16 @@ def test_other_sizes_are_whole_fleets(sites: int, tmp_path: Path) -> None:
     assert len(meters) == facts.meter_rows
     assert meters["kw"].notna().all()
     assert facts.plant_peak_kw > 50.0 * sites
+
+
+def test_no_site_without_a_tank_holds_cooling_back() -> None:
+    rng, plan = np.random.default_rng(3), buildings.mix(1000)
+    sites, nowhere = buildings.buildings(plan, rng), np.zeros(len(plan), dtype=np.int64)
+    held = _contracts(sites, plan, nowhere, nowhere, rng)["held_back_kwh_th"].to_numpy()
+    bare = plan["tanks"].to_numpy() == 0
+    assert 0 < bare.sum() < len(plan)
+    assert (held[bare] == 0.0).all()
+    assert (held[~bare] > 0.0).any()
 
 
 def digests(path: Path) -> dict[str, str]:

@@ -104,6 +104,32 @@ def test_a_value_of_a_closed_list_that_nobody_knows_must_be_said(tmp_path):
     )
 
 
+def test_a_required_heading_that_is_not_there_is_named_and_must_be_written(tmp_path):
+    book = {"Chillers": [["Tag", "Colour"], ["CH-1", "blue"]]}
+    lines = suggested(tmp_path, book)
+    assert brief(lines) == [
+        ("Tag", "chillers.chiller_id", "", "synonym"),
+        ("Colour", "", "", "not used"),
+        ("", "chillers.site_id", "", "needed: write its heading"),
+        ("", "chillers.kind", "", "needed: write its heading"),
+        (
+            "",
+            "chillers.capacity_kw_th",
+            "",
+            "needed: write its heading (capacity_kw_th, in kW_th or capacity_ton, in ton)",
+        ),
+    ]
+    sheets = read_workbook(tmp_path / "book.xlsx")
+    told = "column heading: came nothing; expected the heading of sheet Chillers that gives"
+    way = "write it, or =text for one text everywhere; if the sheet has none, add the column to it"
+    assert refused(tmp_path, sheets, lines) == [
+        f"edited.csv, row {row}, {told} chillers.{column}; {way}"
+        for row, column in ((4, "site_id"), (5, "kind"), (6, "capacity_kw_th"))
+    ]
+    named = [replace(line, heading="=harbour") if line.column == "site_id" else line for line in lines]
+    assert len(refused(tmp_path, sheets, named)) == 2
+
+
 def test_two_headings_for_one_column_and_two_sheets_for_one_table(tmp_path):
     rows = {"Sites": [["Building", "Site name", "Area m2"], ["a", "b", 900]]}
     found = brief(suggested(tmp_path, rows))

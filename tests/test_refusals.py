@@ -68,7 +68,8 @@ TIMES = {
     ),
     "beyond all calendars": (
         ("--from", "9999-12-31T16:00", "--to", "9999-12-31T17:00", "--at", "2026-07-14T13:00"),
-        "time '9999-12-31T16:00': expected a time from 1970 to 2199",
+        "time '9999-12-31T16:00': expected a time from 1970 to 2199\n"
+        "time '9999-12-31T17:00': expected a time from 1970 to 2199",
     ),
     "that does not exist": (
         ("--from", "2026-03-29T03:30", "--to", "2026-03-29T05:00", "--at", "2026-03-28T13:00"),
@@ -122,6 +123,22 @@ def test_all_that_is_wrong_with_the_words_of_a_call_at_once(fleet):
         f"call, column event: came 'a/b'; {ID}",
         "call, column purpose: came 'fun'; expected one of real, test, rehearsal; choose one of them",
         f"call, column kw: came -1.0; expected a finite number above 0; {KW}",
+    ]
+
+
+def test_wrong_words_and_wrong_times_at_once(fleet):
+    backwards = ("--from", "2026-07-14T17:00", "--to", "2026-07-14T16:00", "--at", "2026-07-14T13:00")
+    said = refused("call", fleet, "--kw", "-5", *backwards, "--direction", "up")
+    assert said.splitlines() == [
+        f"call, column kw: came -5.0; expected a finite number above 0; {KW}",
+        "--direction: came 'up'; expected one of shed, absorb; choose one",
+        "--to is not after --from: an event ends after it starts; exchange them or move the end",
+    ]
+    said = refused("quote", fleet, "--from", "soon", "--to", "2026-07-14T16:07", "--at", "now")
+    assert [line.split(":")[0] for line in said.splitlines()] == [
+        "time 'now'",
+        "time 'soon'",
+        "time 2026-07-14 16",
     ]
 
 

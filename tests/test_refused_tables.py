@@ -64,6 +64,13 @@ CASES = {
             "row 1, column site_id: came no such column; expected the column in the heading; add it",
         ],
     ),
+    "no chillers for the tanks": (
+        {"chillers": None, "status": None},
+        [
+            "chillers.csv",
+            "came no rows; expected the chillers that charge the tanks; add the table with a row for each machine",
+        ],
+    ),
     "no column of times": (
         {"weather": without("weather", "interval_start")},
         [

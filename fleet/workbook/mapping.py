@@ -21,12 +21,13 @@ from fleet.workbook.sheets import Sheet
 from fleet.workbook.trade_words import COLUMN_WORDS, TABLE_WORDS, VALUE_WORDS
 from fleet.workbook.units_named import MUST_BE_SAID, accepted, parted, plain_words, unit_of
 
-SAME, SYNONYM, ALIKE, LACKS_UNIT, CONSTANT, UNKNOWN, UNUSED = (
+SAME, SYNONYM, ALIKE, LACKS_UNIT, CONSTANT, LACKING, UNKNOWN, UNUSED = (
     "same name",
     "synonym",
     "alike: look at it",
     "unit missing: write it",
     "made up: no such heading",
+    "needed: write its heading",
     "value unknown: write it",
     "not used",
 )
@@ -103,14 +104,27 @@ def suggest(sheets: Iterable[Sheet]) -> list[Line]:
         found = _columns_for(sheet, table)
         lines += found
         named = {line.column for line in found}
-        lines += [
-            Line(sheet.title, _MADE_UP[column.name], table.name, column.name, "", CONSTANT)
-            for column in table.columns
-            if column.required == "yes" and column.name in _MADE_UP and column.name not in named
-        ]
+        lines += _unnamed(sheet, table, named)
         for line in found:
             if line.column:
                 lines += _values_for(sheet, line, table.column(line.column))
+    return lines
+
+
+def _unnamed(sheet: Sheet, table: Table, named: set[str]) -> list[Line]:
+    """Lines for required columns that no heading stands for: an id made up, or one left to the user to name. Of the
+    columns that give one size, the first is named when all are lacking."""
+    lines = []
+    for column in table.columns:
+        if column.required == "yes" and column.name not in named:
+            made_up = _MADE_UP.get(column.name, "")
+            lines.append(
+                Line(sheet.title, made_up, table.name, column.name, "", CONSTANT if made_up else LACKING)
+            )
+    sizes = [column.name for column in table.columns if _is_size(column)]
+    if sizes and not named.intersection(sizes):
+        ways = " or ".join(f"{name}, in {unit_for(table.column(name))}" for name in sizes)
+        lines.append(Line(sheet.title, "", table.name, sizes[0], "", f"{LACKING} ({ways})"))
     return lines
 
 
@@ -291,6 +305,10 @@ def _fault(
         and line.heading not in sheet.headings
         and not (heading in sheet.headings and (is_value or not line.column))
     ):
+        if not line.heading and line.column:
+            advice = "write it, or =text for one text everywhere; if the sheet has none, add the column to it"
+            expected = f"the heading of sheet {line.sheet} that gives {line.table}.{line.column}"
+            return Problem(file, line.row, "heading", "nothing", expected, advice)
         return Problem(
             file, line.row, "heading", repr(line.heading), f"a heading of sheet {line.sheet}", "correct it"
         )
