@@ -87,7 +87,10 @@ def call_ask(
             f"--request together with {', '.join(doubled)}: the file has times and kW; leave those out"
         )
     way = gathered.of(lambda: _way(direction))
-    settings = _settings(fleet)
+    found = gathered.of(lambda: _settings(fleet))
+    if found is None:
+        gathered.tell()
+    settings = cast(Settings, found)
     at_time = gathered.of(lambda: parse_time(at, settings.timezone))
     read = gathered.of(lambda: read_request(file, settings, node))
     gathered.tell()
@@ -112,7 +115,9 @@ def _ask(
 ) -> Ask | None:
     """When and where, or None where something of it is refused and kept."""
     way = gathered.of(lambda: _way(direction))
-    settings = _settings(fleet)
+    settings = gathered.of(lambda: _settings(fleet))
+    if settings is None:
+        return None
     zone, step = settings.timezone, settings.interval_minutes
     at_time = gathered.of(lambda: parse_time(at, zone))
     event_from = gathered.of(lambda: parse_time(start, zone, step))

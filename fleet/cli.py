@@ -11,7 +11,8 @@ from typing import Annotated, Any, cast
 
 import typer
 
-from fleet.errors import CannotBeMet, FleetError, Refused
+from fleet import options
+from fleet.errors import CannotBeMet, FleetError, parts
 from fleet.harmless import harmless
 from fleet.terminal import Terminal
 from sites.errors import SitesError
@@ -29,19 +30,6 @@ app = typer.Typer(
     help="Call, order and settle demand-response events on buildings with cool thermal storage.",
 )
 
-FleetDir = Annotated[Path, typer.Argument(metavar="FLEET", help="The fleet folder.")]
-EventId = Annotated[str, typer.Argument(metavar="EVENT", help="The event's id.")]
-Json = Annotated[bool, typer.Option("--json", help="Print one JSON document on stdout and nothing else.")]
-From = Annotated[str, typer.Option("--from", help="Start of the event: ISO 8601 with offset, or local time.")]
-To = Annotated[str, typer.Option("--to", help="End of the event.")]
-MaybeFrom = Annotated[str | None, typer.Option("--from", help="Start of the event; with --kw and --to.")]
-MaybeTo = Annotated[str | None, typer.Option("--to", help="End of the event.")]
-Node = Annotated[
-    str | None, typer.Option("--node", help="Where the request is held; default the whole fleet.")
-]
-At = Annotated[str | None, typer.Option("--at", help="When the call is made; default now.")]
-Way = Annotated[str, typer.Option("--direction", help="shed or absorb.")]
-
 
 @app.command()
 def rehearse(
@@ -52,7 +40,7 @@ def rehearse(
     midday: Annotated[
         bool, typer.Option("--midday", help="An absorb at midday of a day with too much sun, not a shed.")
     ] = False,
-    json: Json = False,
+    json: options.Json = False,
 ) -> None:
     """Play a whole practice event: quote, call, orders, simulated meters, settlement, audit.
 
@@ -76,7 +64,7 @@ def sample(
     directory: Annotated[Path, typer.Argument(metavar="DIR", help="Folder to be made; it must not exist.")],
     sites: Annotated[int, typer.Option("--sites", min=1, max=100_000, help="Number of sites.")] = 40,
     seed: Annotated[int, typer.Option("--seed", help="Seed; the same seed gives the same fleet.")] = 1,
-    json: Json = False,
+    json: options.Json = False,
 ) -> None:
     """Write an invented fleet folder.
 
@@ -92,18 +80,13 @@ def sample(
 @app.command()
 def begin(
     directory: Annotated[Path, typer.Argument(metavar="DIR", help="Folder to be made; it must not exist.")],
-    book: Annotated[
-        Path | None, typer.Option("--from", help="A workbook (.xlsx) with one sheet per table.")
-    ] = None,
-    mapping: Annotated[
-        Path | None,
-        typer.Option("--mapping", help="The mapping file of its headings, read and confirmed by you."),
-    ] = None,
+    book: options.Book = None,
+    mapping: options.Mapping = None,
     name: Annotated[str | None, typer.Option("--name", help="The fleet's name.")] = None,
     timezone: Annotated[str | None, typer.Option("--timezone", help="IANA name: Europe/Athens.")] = None,
     currency: Annotated[str | None, typer.Option("--currency", help="ISO 4217: EUR.")] = None,
     price: Annotated[float | None, typer.Option("--price", help="One energy price, per kWh.")] = None,
-    json: Json = False,
+    json: options.Json = False,
 ) -> None:
     """Start a fleet folder of your own: with example rows, or from a workbook.
 
@@ -133,7 +116,7 @@ def columns(
     table: Annotated[
         str | None, typer.Argument(metavar="TABLE", help="One table; none: all of them.")
     ] = None,
-    json: Json = False,
+    json: options.Json = False,
 ) -> None:
     """Print the table of columns: type, unit, range, meaning, required, default, where to find the value.
 
@@ -147,12 +130,12 @@ def columns(
 
 @app.command()
 def check(
-    fleet: FleetDir,
+    fleet: options.FleetDir,
     effects: Annotated[
         bool,
         typer.Option("--effects", help="Say what the assumed values are worth in kW; takes some seconds."),
     ] = False,
-    json: Json = False,
+    json: options.Json = False,
 ) -> None:
     """Check a fleet folder: all problems at once, what can be done with it, every assumed value.
 
@@ -170,17 +153,17 @@ def check(
 
 @app.command()
 def quote(
-    fleet: FleetDir,
-    start: From,
-    end: To,
-    node: Node = None,
-    at: At = None,
-    direction: Way = "shed",
+    fleet: options.FleetDir,
+    start: options.From,
+    end: options.To,
+    node: options.Node = None,
+    at: options.At = None,
+    direction: options.Way = "shed",
     tons: Annotated[bool, typer.Option("--tons", help="Cooling in tons and ton-hours.")] = False,
     site: Annotated[
         str | None, typer.Option("--site", help="One site's quote line by line, to check by hand.")
     ] = None,
-    json: Json = False,
+    json: options.Json = False,
 ) -> None:
     """Tell what each site and the fleet can give, for how long, what limits it, what recovery costs.
 
@@ -200,43 +183,23 @@ def quote(
 
 @app.command()
 def call(
-    fleet: FleetDir,
-    kw: Annotated[float | None, typer.Option("--kw", help="kW asked in every interval of the event.")] = None,
-    start: MaybeFrom = None,
-    end: MaybeTo = None,
-    node: Node = None,
-    file: Annotated[
-        Path | None,
-        typer.Option("--request", help="CSV or Parquet with interval_start, kw, node_id; no --kw then."),
-    ] = None,
-    event: Annotated[
-        str | None, typer.Option("--event", help="Id of the event; default from time and node.")
-    ] = None,
-    at: At = None,
-    direction: Way = "shed",
-    purpose: Annotated[str, typer.Option("--purpose", help="real, test or rehearsal.")] = "real",
-    accept_less: Annotated[
-        bool, typer.Option("--accept-less", help="Where it cannot be met, take the best answer.")
-    ] = False,
-    within: Annotated[
-        float | None,
-        typer.Option(
-            "--within", help="Seconds for the choice: the best found by then counts, even if short."
-        ),
-    ] = None,
-    include: Annotated[
-        list[str] | None, typer.Option("--include", help="A site that must be called; repeat it.")
-    ] = None,
-    exclude: Annotated[
-        list[str] | None, typer.Option("--exclude", help="A site that must not be called; repeat it.")
-    ] = None,
-    fewest: Annotated[
-        bool, typer.Option("--fewest", help="As few sites as can be, whatever they cost.")
-    ] = False,
-    most_over: Annotated[
-        float | None, typer.Option("--most-over", help="kW above the request at most, in any interval.")
-    ] = None,
-    json: Json = False,
+    fleet: options.FleetDir,
+    kw: options.AskedKw = None,
+    start: options.MaybeFrom = None,
+    end: options.MaybeTo = None,
+    node: options.Node = None,
+    file: options.RequestFile = None,
+    event: options.NewEvent = None,
+    at: options.At = None,
+    direction: options.Way = "shed",
+    purpose: options.Purpose = "real",
+    accept_less: options.AcceptLess = False,
+    within: options.Within = None,
+    include: options.Include = None,
+    exclude: options.Exclude = None,
+    fewest: options.Fewest = False,
+    most_over: options.MostOver = None,
+    json: options.Json = False,
 ) -> None:
     """Allocate a request over the sites and write the event record.
 
@@ -268,7 +231,7 @@ def call(
 
 
 @app.command()
-def orders(fleet: FleetDir, event: EventId, json: Json = False) -> None:
+def orders(fleet: options.FleetDir, event: options.EventId, json: options.Json = False) -> None:
     """Write what each called site's operator gets, as text and JSON.
 
     Example: shedwright orders rehearsal practice-2
@@ -282,33 +245,15 @@ def orders(fleet: FleetDir, event: EventId, json: Json = False) -> None:
 
 @app.command()
 def settle(
-    fleet: FleetDir,
-    event: EventId,
-    meter: Annotated[
-        Path | None,
-        typer.Option(
-            "--meter",
-            help="Readings that replace the folder's for the same intervals: CSV, Parquet or an interval-data "
-            "feed (.xml).",
-        ),
-    ] = None,
-    excuse: Annotated[
-        list[str] | None, typer.Option("--excuse", help="A site that earns and owes nothing; repeatable.")
-    ] = None,
-    readmit: Annotated[
-        list[str] | None, typer.Option("--readmit", help="An excused site that counts again; repeatable.")
-    ] = None,
-    why: Annotated[
-        str, typer.Option("--why", help="Why the sites are excused or readmitted; kept in the record.")
-    ] = "",
-    who: Annotated[str, typer.Option("--who", help="Who decided that; kept in the record.")] = "",
-    again: Annotated[
-        int | None,
-        typer.Option(
-            "--again", help="Work this old revision out again and compare its bytes; writes nothing."
-        ),
-    ] = None,
-    json: Json = False,
+    fleet: options.FleetDir,
+    event: options.EventId,
+    meter: options.Readings = None,
+    excuse: options.Excuse = None,
+    readmit: options.Readmit = None,
+    why: options.Why = "",
+    who: options.Who = "",
+    again: options.Again = None,
+    json: options.Json = False,
 ) -> None:
     """Settle an event on its meters: a new settlement revision.
 
@@ -333,13 +278,13 @@ def settle(
 
 @app.command()
 def reckon(
-    fleet: FleetDir,
-    event: EventId,
+    fleet: options.FleetDir,
+    event: options.EventId,
     site: Annotated[str, typer.Argument(metavar="SITE", help="The site's id.")],
     revision: Annotated[
         int | None, typer.Option("--revision", help="A settlement revision; default the newest.")
     ] = None,
-    json: Json = False,
+    json: options.Json = False,
 ) -> None:
     """Show how one site was settled, line by line, from the record alone.
 
@@ -353,7 +298,7 @@ def reckon(
 
 
 @app.command()
-def audit(fleet: FleetDir, event: EventId, json: Json = False) -> None:
+def audit(fleet: options.FleetDir, event: options.EventId, json: options.Json = False) -> None:
     """Check an event's record again, from the record alone, against every limit and sum.
 
     Example: shedwright audit rehearsal practice
@@ -371,7 +316,7 @@ def audit(fleet: FleetDir, event: EventId, json: Json = False) -> None:
 
 @app.command()
 def pages(
-    fleet: FleetDir,
+    fleet: options.FleetDir,
     event: Annotated[
         str | None, typer.Argument(metavar="[EVENT]", help="One event; none: every event.")
     ] = None,
@@ -379,11 +324,11 @@ def pages(
         str | None, typer.Option("--from", help="Before a call: the offer for an event that starts then.")
     ] = None,
     end: Annotated[str | None, typer.Option("--to", help="End of that event.")] = None,
-    node: Node = None,
-    at: At = None,
-    direction: Way = "shed",
+    node: options.Node = None,
+    at: options.At = None,
+    direction: options.Way = "shed",
     kw: Annotated[float | None, typer.Option("--kw", help="The request, shown beside the offer.")] = None,
-    json: Json = False,
+    json: options.Json = False,
 ) -> None:
     """Write the pages people read, in FLEET/pages: each event with its orders and statements, the season, an
     index; with --from and --to, what the fleet can give before a call.
@@ -429,10 +374,8 @@ def main() -> None:
         _fail("\n".join(lines), {"refused": [{"message": message}]}, REFUSED)
     except CannotBeMet as error:
         _fail(str(error), {"cannot_be_met": error.detail}, NOT_MET)
-    except Refused as error:
-        _fail(str(error), {"refused": [vars(problem) for problem in error.problems]}, REFUSED)
     except (FleetError, SitesError) as error:
-        _fail(str(error), {"refused": [{"message": str(error)}]}, REFUSED)
+        _fail(str(error), {"refused": parts(error)}, REFUSED)
 
 
 def _usage(error: Any) -> tuple[list[str], str]:

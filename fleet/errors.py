@@ -50,6 +50,14 @@ class Refused(FleetError):  # noqa: N818
         super().__init__("\n".join(lines))
 
 
+class Several(FleetError):  # noqa: N818
+    """Refusals of several checks, told together in their order."""
+
+    def __init__(self, errors: list[FleetError]) -> None:
+        self.errors = errors
+        super().__init__("\n".join(str(error) for error in errors))
+
+
 class Gathered:
     """Several checks made one after another whose refusals are told at once, not one a try."""
 
@@ -70,7 +78,13 @@ class Gathered:
             return
         if len(self._found) == 1:
             raise self._found[0]
-        refused = [error for error in self._found if isinstance(error, Refused)]
-        if len(refused) == len(self._found):
-            raise Refused([problem for error in refused for problem in error.problems])
-        raise FleetError("\n".join(str(error) for error in self._found))
+        raise Several(self._found)
+
+
+def parts(error: Exception) -> list[dict[str, object]]:
+    """What was refused as plain values: each problem with its fields, or a message."""
+    if isinstance(error, Several):
+        return [part for one in error.errors for part in parts(one)]
+    if isinstance(error, Refused):
+        return [dict(vars(problem)) for problem in error.problems]
+    return [{"message": str(error)}]

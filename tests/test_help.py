@@ -188,7 +188,8 @@ def test_arguments_that_would_steer_a_terminal_are_told_harmlessly(arguments):
 
 def test_a_refusal_in_json_holds_its_parts():
     ran = run("call", "none", "--kw", "0", *ASK, "--json")
-    (problem,) = json.loads(ran.out)["refused"]
+    problem, message = json.loads(ran.out)["refused"]
+    assert message == {"message": "none: there is no such fleet folder; `shedwright begin none` starts one"}
     assert problem == {
         "file": "call",
         "row": None,
