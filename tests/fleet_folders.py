@@ -5,6 +5,8 @@ from pathlib import Path
 import numpy as np
 import pandas as pd
 
+from fleet.folder import problems
+
 SETTINGS = """name = "Amber Coast Power"
 timezone = "Europe/Athens"
 currency = "EUR"
@@ -154,3 +156,8 @@ def set_cell(name: str, row: int, column: str, value: object) -> pd.DataFrame:
     frame[column] = frame[column].astype(object) if column in frame else None
     frame.loc[row - 2, column] = value
     return frame
+
+
+def wrong(path: Path) -> list[str]:
+    """Every problem of a folder, each as its whole message."""
+    return [str(problem) for problem in problems(path)]

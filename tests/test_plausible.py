@@ -3,13 +3,9 @@
 import numpy as np
 import pandas as pd
 import pytest
-from fleet_folders import set_cell, small_tables, write_small_fleet
+from fleet_folders import set_cell, small_tables, write_small_fleet, wrong
 
-from fleet.folder import open_folder, problems
-
-
-def wrong(path):
-    return [str(problem) for problem in problems(path)]
+from fleet.folder import open_folder
 
 
 def in_mega(name, column):
