@@ -2,6 +2,7 @@
 
 import json
 import os
+import shutil
 import subprocess
 import sys
 from dataclasses import dataclass
@@ -9,6 +10,7 @@ from pathlib import Path
 from typing import Any
 
 import pytest
+from filelock import FileLock
 
 os.environ.setdefault(
     "OPENBLAS_NUM_THREADS", "1"
@@ -32,8 +34,15 @@ def shedwright(*arguments: str, cwd: Path) -> subprocess.CompletedProcess[str]:
 
 @pytest.fixture(scope="session")
 def practice(tmp_path_factory: pytest.TempPathFactory) -> Practice:
-    """`shedwright rehearse --json` in an empty folder."""
-    folder = tmp_path_factory.mktemp("practice")
-    ran = shedwright("rehearse", "--json", cwd=folder)
-    assert ran.returncode == 0, ran.stderr
-    return Practice(folder, folder / "rehearsal", json.loads(ran.stdout))
+    """`shedwright rehearse --json` in an empty folder, run once for all test processes; each has a copy of its own."""
+    own = tmp_path_factory.getbasetemp()
+    shared = own.parent if "PYTEST_XDIST_WORKER" in os.environ else own
+    folder, told = shared / "rehearsed", shared / "rehearsed.json"
+    with FileLock(shared / "rehearsed.lock"):
+        if not told.exists():
+            folder.mkdir()
+            ran = shedwright("rehearse", "--json", cwd=folder)
+            assert ran.returncode == 0, ran.stderr
+            told.write_text(ran.stdout, encoding="utf-8")
+    copied = shutil.copytree(folder, own / "practice")
+    return Practice(copied, copied / "rehearsal", json.loads(told.read_text(encoding="utf-8")))
