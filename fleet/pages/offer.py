@@ -52,6 +52,7 @@ def offer_page(survey: Survey, offer: Offer, asked_kw: float | None, links: Sequ
         source="From the fleet folder as it stood; shedwright quote shows every site.",
         said=_said(offer, asked_kw),
         duration=_duration_figure(survey, offer, asked_kw),
+        minus=word(vocabulary.MINUS, ask.direction),
         merit=_merit_figure(survey, offer, asked_kw),
         feeders=_feeder_table(survey, offer),
         limits=_limit_table(survey, offer),
@@ -180,9 +181,7 @@ def _feeder_table(survey: Survey, offer: Offer) -> Table:
         ("least headroom, kW", "n"),
         ("limit, kW", "n"),
     ]
-    return Table(
-        "By feeder: mean kW over the event, and what recoveries may add before its limit", heads, rows
-    )
+    return Table("By feeder: mean kW over the event, and what may be added before its limit", heads, rows)
 
 
 def _limit_table(survey: Survey, offer: Offer) -> Table:

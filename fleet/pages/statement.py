@@ -135,7 +135,11 @@ def _fleet_figure(settled: Settled, fleet: pd.DataFrame) -> Figure:
     step = np.timedelta64(settled.case.step_minutes * 60_000_000, "us")
     starts = _naive(fleet["interval_start"])
     missing = int(fleet["sites_missing"].max())
-    lost = f" Sites called but without a value: up to {missing}." if missing else ""
+    lost = (
+        f" Called sites whose meter shows nothing in an interval count as zero there: at most {missing} at once."
+        if missing
+        else ""
+    )
     chart = figures.Chart(
         "Asked, expected and delivered at the node",
         f"Delivered as settled from the meters, recoveries inside the event netted.{lost}",

@@ -23,9 +23,13 @@ TERMS: Final = {
 DIRECTION: Final = {"shed": "Shed", "absorb": "Absorb"}
 LESS_OR_MORE: Final = {"shed": "not drawn", "absorb": "drawn early"}
 LATER: Final = {"shed": "drawn later", "absorb": "not drawn later"}
+MINUS: Final = {
+    "shed": "energy not used by day is dearer than what its recovery takes at night",
+    "absorb": "energy taken now is cheaper than what need not be drawn later",
+}
 PURPOSE: Final = {"real": "real event", "test": "test event", "rehearsal": "rehearsal"}
 LIMITED_BY: Final = {
-    "none": "nothing: all machines can be off",
+    "none": "nothing: no limit is reached",
     "already_off": "its machines are off anyway",
     "already_on": "its machines run at full already",
     "inventory": "what the tank holds",
