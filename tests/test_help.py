@@ -29,6 +29,7 @@ HEAVY = (
     "pydantic",
     "holidays",
     "openpyxl",
+    "numba",
 )
 IMPORTED = """
 import sys
@@ -60,6 +61,15 @@ def test_help_imports_nothing_heavy(arguments, of_typer):
     ran = python(IMPORTED, *arguments)
     assert ran.stdout.startswith("Usage: ")
     assert set(HEAVY) & set(ran.stderr.split()) <= of_typer
+
+
+def test_a_shell_completes_commands_and_options():
+    """As a shell asks for it: the words so far and which of them the cursor is on."""
+    completed = {}
+    for words, at in (("shedwright qu", "1"), ("shedwright call --acc", "2")):
+        environment = {"_SHEDWRIGHT_COMPLETE": "complete_bash", "COMP_WORDS": words, "COMP_CWORD": at}
+        completed[words] = python("from fleet.cli import main; main()", **environment).stdout.split()
+    assert completed == {"shedwright qu": ["quote"], "shedwright call --acc": ["--accept-less"]}
 
 
 @pytest.mark.parametrize("name", NAMES)
