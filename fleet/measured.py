@@ -57,7 +57,8 @@ class Part:
 
     measured: Measured
     days: pd.DataFrame
-    day_intervals: pd.DataFrame
+    day_intervals: pd.DataFrame | None
+    """None once given away"""
     remarks: tuple[Remark, ...]
     counts: dict[str, int]
 

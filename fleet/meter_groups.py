@@ -20,7 +20,7 @@ from fleet.schema import table
 from fleet.tables import TEXTS, RowGroups
 from fleet.values import Reading, typed
 from fleet.wall_time import off_grid
-from sites.units import Bools
+from sites.units import Bools, Ints, Times
 
 NAMES: Final = ("meter_id", "interval_start", "kw", "quality")
 
@@ -53,6 +53,13 @@ class GroupedReadings:
     def plain(self) -> bool:
         """The files have the meters table's own form, which a row group alone can be judged by."""
         return bool(self._groups) and all(_plain(file.types) for file in self._files)
+
+    def pieces(self, meter_ids: Sequence[str]) -> Ints:
+        """See Readings: row groups, by their first meter's id; right where the file is sorted by meter."""
+        bounds = [file.bounds(number, "meter_id") for file, number in self._groups]
+        first = np.sort(np.array([ends[0] for ends in bounds if ends is not None], dtype=str))
+        found: Ints = np.searchsorted(first, np.array(meter_ids, dtype=str), side="right")
+        return found
 
     def parts(self, meter_ids: Sequence[Sequence[str]]) -> list[Callable[[], pd.DataFrame]]:
         """See readings.Readings; groups with none of these meters are looked through for unknown ones."""
@@ -139,6 +146,7 @@ class GroupedReadings:
         low, high = column.low or -np.inf, column.high or np.inf
         kw = frame["kw"].to_numpy(dtype=np.float64)
         times = frame["interval_start"].dt.tz_convert("UTC").dt.tz_localize(None).to_numpy("datetime64[us]")
+        times = _once(times)
         least, most = np.fmin.reduce(kw, initial=0.0), np.fmax.reduce(kw, initial=0.0)
         good = least >= low and most <= high and frame["meter_id"].notna().all()
         good = (
@@ -153,10 +161,23 @@ class GroupedReadings:
 def _highest(frame: pd.DataFrame) -> pd.DataFrame:
     """One row a meter: its highest power by size; index: the meter's first row."""
     codes = frame["meter_id"].cat.codes.to_numpy()
-    own, first = np.unique(codes, return_index=True)
-    most = frame["kw"].abs().groupby(codes).max()
-    names = frame["meter_id"].cat.categories.to_numpy(dtype=object)[own]
-    return pd.DataFrame({"meter_id": names, "kw": most.reindex(own).to_numpy()}, index=frame.index[first])
+    runs = np.append(0, np.flatnonzero(codes[1:] != codes[:-1]) + 1)
+    most = np.fmax.reduceat(np.abs(frame["kw"].to_numpy(dtype=np.float64)), runs)
+    own, first, of_run = np.unique(codes[runs], return_index=True, return_inverse=True)
+    highest = np.full(len(own), np.nan)
+    np.fmax.at(highest, of_run, most)
+    names = frame["meter_id"].cat.categories.take(own).to_numpy(dtype=object)
+    return pd.DataFrame({"meter_id": names, "kw": highest}, index=frame.index[runs[first]])
+
+
+def _once(times: Times) -> Times:
+    """The times of one meter where all have the same ones in blocks of one length; else all of them."""
+    back = np.flatnonzero(times[1:] <= times[:-1])
+    length = int(back[0]) + 1 if len(back) else len(times)
+    if length == 0 or len(times) % length:
+        return times
+    blocks = times.reshape(-1, length)
+    return blocks[0] if (blocks == blocks[0]).all() else times
 
 
 def _plain(types: dict[str, Any]) -> bool:

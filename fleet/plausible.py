@@ -231,7 +231,7 @@ def _loads(loads: pd.DataFrame, peak: pd.Series, file: str) -> list[Problem]:
     return problems
 
 
-def _rated_kw(chillers: pd.DataFrame) -> pd.Series:
+def rated_plant_kw(chillers: pd.DataFrame) -> pd.Series:
     """Rated electric power of a site's machines by site_id, kW."""
     return _total(chillers, _machine_kw_th(chillers) / chillers["rated_cop"].fillna(RATED_COP))
 
@@ -239,7 +239,7 @@ def _rated_kw(chillers: pd.DataFrame) -> pd.Series:
 def _limits(frames: Frames, file: str) -> list[Problem]:
     """Import limits far below what the chillers under the node draw."""
     nodes, sites = frames["nodes"], frames["sites"]
-    rated = sites["site_id"].map(_rated_kw(frames["chillers"])).fillna(0.0)
+    rated = sites["site_id"].map(rated_plant_kw(frames["chillers"])).fillna(0.0)
     above = nodes.dropna(subset=["node_id"]).drop_duplicates("node_id").set_index("node_id")["parent_id"]
     below = pd.Series(0.0, index=above.index)
     at = sites["node_id"]
@@ -263,8 +263,13 @@ def _limits(frames: Frames, file: str) -> list[Problem]:
     ]
 
 
-def meters_in_mega(frames: Frames, file: str, column: str = "kw") -> list[Problem]:
-    """Building meters that never show a building's power; frames: meters, meter_map, chillers."""
+def meters_in_mega(
+    frames: Frames, file: str, column: str = "kw", rated_kw: pd.Series | None = None
+) -> list[Problem]:
+    """Building meters that never show a building's power; frames: meters, meter_map, chillers.
+
+    rated_kw: rated_plant_kw of the chillers, where it is known already.
+    """
     meters, mapped = frames["meters"], frames["meter_map"]
     if meters.empty:
         return []
@@ -275,7 +280,8 @@ def meters_in_mega(frames: Frames, file: str, column: str = "kw") -> list[Proble
             (mapped["role"].fillna("building") == "building") & ~mapped.duplicated("site_id", keep=False)
         ]
         site = site.map(alone.drop_duplicates("meter_id").set_index("meter_id")["site_id"])
-    least = site.map(_rated_kw(frames["chillers"])) * LEAST_METER_SHARE
+    rated = rated_plant_kw(frames["chillers"]) if rated_kw is None else rated_kw
+    least = site.map(rated) * LEAST_METER_SHARE
     problems = []
     for meter in most.index[(most > 0.0) & (most < least)]:
         row = int(meters.index[meters["meter_id"] == meter][0])

@@ -19,6 +19,9 @@ KEY: Final = ["meter_id", "interval_start"]
 class Readings(Protocol):
     """Readings of a fleet that can be given out by meters."""
 
+    def pieces(self, meter_ids: Sequence[str]) -> Ints:
+        """(meter,) number of the piece of the source that holds it; meters of one are best asked for together."""
+
     def parts(self, meter_ids: Sequence[Sequence[str]]) -> list[Callable[[], pd.DataFrame]]:
         """For each group of meters how to get its readings (meter_id, interval_start, kw, quality).
 
@@ -31,6 +34,10 @@ class FrameReadings:
 
     def __init__(self, frame: pd.DataFrame) -> None:
         self._frame = frame
+
+    def pieces(self, meter_ids: Sequence[str]) -> Ints:
+        """See Readings; one piece."""
+        return np.zeros(len(meter_ids), dtype=np.int64)
 
     def parts(self, meter_ids: Sequence[Sequence[str]]) -> list[Callable[[], pd.DataFrame]]:
         """See Readings."""
@@ -68,6 +75,10 @@ class Overlaid:
     def replaced(self) -> int:
         """Rows of the source below that the frame took the place of, of the parts given out so far."""
         return sum(self._counts)
+
+    def pieces(self, meter_ids: Sequence[str]) -> Ints:
+        """See Readings; those of the source below."""
+        return self._under.pieces(meter_ids)
 
     def parts(self, meter_ids: Sequence[Sequence[str]]) -> list[Callable[[], pd.DataFrame]]:
         """See Readings."""

@@ -9,7 +9,8 @@ the numbers are right is audit's. A rehearsal on a fleet folder has a folder, an
 import difflib
 import json
 import re
-from collections.abc import Callable, Iterable, Mapping
+import shutil
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, Final
@@ -147,25 +148,34 @@ def write_orders(fleet_path: Path, event_id: str, files: Mapping[str, str | byte
 
 
 def write_settlement(
-    fleet_path: Path, event_id: str, frames: Mapping[str, pd.DataFrame], statements: Mapping[str, str]
+    fleet_path: Path,
+    event_id: str,
+    frames: Mapping[str, pd.DataFrame],
+    statements: Mapping[str, str],
+    written: Mapping[str, Path] | None = None,
 ) -> Path:
     """Write a settlement and its statement files as the next `settlement-00n`; returns the folder.
 
-    The frames carry the revision they were made for (see next_revision); FleetError where another settlement
-    took that number meanwhile, where a table is missing or does not fit, or the disk refuses.
+    written: tables that lie in a file already, which is moved. The frames carry the revision they were made for
+    (see next_revision); FleetError where another settlement took that number meanwhile, where a table is missing
+    or does not fit, or the disk refuses.
     """
-    _check_tables("settlement", frames)
+    moved = dict(written or {})
+    _check_tables("settlement", [*frames, *moved])
     texts = {_file_name(name): text for name, text in statements.items()}
 
     def writer(folder: Path) -> None:
         _write_frames(folder, "settlement", frames)
+        for name, path in moved.items():
+            shutil.move(path, folder / f"{name}.parquet")
         for name, text in texts.items():
             (folder / name).write_bytes(text.encode())
 
     with lock(fleet_path):
         number = next_revision(fleet_path, event_id, "settlement")
         for name in ("intervals", "days", "day_intervals", "sites", "fleet"):
-            made_for = set(frames[name]["revision"].unique()) if "revision" in frames[name] else set()
+            held = name in frames and "revision" in frames[name]
+            made_for = set(frames[name]["revision"].unique()) if held else set()
             if made_for - {number}:
                 raise FleetError(
                     f"settlement of event {event_id}: table {name} was made for revision "
@@ -181,9 +191,10 @@ def read_call(
     revision: int | None = None,
     only: Iterable[str] | None = None,
     frozen_only: Iterable[str] | None = None,
+    columns: Mapping[str, Sequence[str]] | None = None,
 ) -> CallRecord:
     """Read a call, the newest revision unless one is named; `only` these of its tables, and `frozen_only` these
-    of its frozen ones, where given.
+    of its frozen ones, where given; of a table in `columns` these alone.
 
     Raises FleetError where event, revision or a file is missing or unreadable.
     """
@@ -195,7 +206,7 @@ def read_call(
         path=path,
         event_id=event_id,
         revision=number,
-        frames=_read_frames(path, "call", only),
+        frames=_read_frames(path, "call", only, columns),
         proof=_read_json(path / "proof.json"),
         frozen={
             name: read_parquet(frozen / f"{name}.parquet", table("fleet", name)) for name in tables_there
@@ -348,7 +359,7 @@ def _file_name(name: str) -> str:
     return name
 
 
-def _check_tables(folder: str, frames: Mapping[str, pd.DataFrame]) -> None:
+def _check_tables(folder: str, frames: Iterable[str]) -> None:
     wanted = set(tables(folder))
     missing, unknown = sorted(wanted - set(frames)), sorted(set(frames) - wanted)
     if missing or unknown:
@@ -363,9 +374,14 @@ def _write_frames(path: Path, folder: str, frames: Mapping[str, pd.DataFrame]) -
         write_parquet(frame, path / f"{name}.parquet", table(folder, name))
 
 
-def _read_frames(path: Path, folder: str, only: Iterable[str] | None) -> dict[str, pd.DataFrame]:
+def _read_frames(
+    path: Path, folder: str, only: Iterable[str] | None, columns: Mapping[str, Sequence[str]] | None = None
+) -> dict[str, pd.DataFrame]:
     names = tables(folder) if only is None else only
-    return {name: read_parquet(path / f"{name}.parquet", table(folder, name)) for name in names}
+    few = columns or {}
+    return {
+        name: read_parquet(path / f"{name}.parquet", table(folder, name), few.get(name)) for name in names
+    }
 
 
 def _write_json(path: Path, content: Mapping[str, Any]) -> None:

@@ -4,9 +4,10 @@ Pure: facts of the call and readings in, one Settlement out. Owns the order of w
 sites; leaves what was delivered to measured.py, money's arithmetic to money.py, tables to settlement.py.
 """
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Callable, Iterable, Mapping, Sequence
 from concurrent.futures import ThreadPoolExecutor
-from typing import Final
+from dataclasses import replace
+from typing import Final, TypeAlias
 
 import numpy as np
 import pandas as pd
@@ -23,6 +24,8 @@ from sites.units import Ints
 
 __all__ = ["CallFacts", "Settlement", "settle"]
 
+Sink: TypeAlias = Callable[[pd.DataFrame], None]
+"""Takes the rows of day_intervals, some sites at a time, in order."""
 SITES_AT_ONCE: Final = 250
 """Sites whose days are laid out together; keeps memory flat as the fleet grows."""
 WORKERS: Final = 2
@@ -34,16 +37,18 @@ def settle(
     readings: pd.DataFrame | Readings,
     revision: int = 1,
     previous_sites: pd.DataFrame | None = None,
+    sink: Sink | None = None,
 ) -> Settlement:
     """Settle every called site of `call` on `readings` (meter_id, interval_start, kw, quality).
 
-    previous_sites: the sites table of the revision before, from whose totals the postings start. Raises Refused
-    for readings that cannot be placed (see meters.streams) and FleetError for a call that is not complete.
+    previous_sites: the sites table of the revision before, from whose totals the postings start. sink: takes
+    day_intervals, by far the largest table, while the next sites are worked out; the settlement holds none then.
+    Raises Refused for readings that cannot be placed (see meters.streams) and FleetError for a call that is not
+    complete.
     """
     plan = arrange(call)
-    parts = _parts(
-        call, plan, FrameReadings(readings) if isinstance(readings, pd.DataFrame) else readings, revision
-    )
+    source = FrameReadings(readings) if isinstance(readings, pd.DataFrame) else readings
+    parts = _parts(call, plan, source, revision, sink)
     measured = joined([part.measured for part in parts])
     result = _result(plan, call, measured)
     head = (call.event_id, revision, plan)
@@ -55,7 +60,7 @@ def settle(
     return Settlement(
         intervals=interval_table(*head, measured.base, result),
         days=_one([part.days for part in parts]),
-        day_intervals=_one([part.day_intervals for part in parts]),
+        day_intervals=_all_of(part.day_intervals for part in parts),
         sites=sites,
         fleet=fleet,
         postings=posting_table(call.event_id, revision, sites, previous_sites),
@@ -64,13 +69,12 @@ def settle(
     )
 
 
-def _parts(call: CallFacts, plan: Plan, readings: Readings, revision: int) -> list[Part]:
+def _parts(call: CallFacts, plan: Plan, readings: Readings, revision: int, sink: Sink | None) -> list[Part]:
     """The sites worked out, some at a time; what is wrong in any of them is refused together."""
     since, until = period(call, plan)
-    rows = np.arange(len(plan.site_ids))
-    groups = [rows[first : first + SITES_AT_ONCE] for first in range(0, len(rows), SITES_AT_ONCE)]
-    meters = _meters(call, plan, groups)
-    given = readings.parts(meters)
+    of_site = _meters(call, plan)
+    groups = _groups(readings.pieces([own[0] if own else "" for own in of_site]))
+    given = readings.parts([[meter for row in rows for meter in of_site[row]] for rows in groups])
 
     def work(at: int) -> Part | list[Problem]:
         try:
@@ -79,25 +83,56 @@ def _parts(call: CallFacts, plan: Plan, readings: Readings, revision: int) -> li
             return list(refused.problems)
 
     if len(groups) == 1:
-        found = [work(0)]
-    else:
-        with ThreadPoolExecutor(WORKERS) as pool:
-            found = list(pool.map(work, range(len(groups))))
-    problems = [problem for one in found if isinstance(one, list) for problem in one]
+        return _good([work(0)], sink)
+    with ThreadPoolExecutor(WORKERS) as pool:
+        return _good(pool.map(work, range(len(groups))), sink)
+
+
+def _good(found: Iterable[Part | list[Problem]], sink: Sink | None) -> list[Part]:
+    """The parts as they come, their day intervals given to the sink; Refused for what is wrong in any of them."""
+    parts: list[Part] = []
+    problems: list[Problem] = []
+    for one in found:
+        if isinstance(one, list):
+            problems += one
+        elif sink is None or one.day_intervals is None:
+            parts.append(one)
+        elif not problems:
+            sink(one.day_intervals)
+            parts.append(replace(one, day_intervals=None))
     if problems:
         raise Refused(list(dict.fromkeys(problems)))
-    return [one for one in found if isinstance(one, Part)]
+    return parts
 
 
-def _meters(call: CallFacts, plan: Plan, groups: Sequence[Ints]) -> list[list[str]]:
-    """Ids of the meters of each group of sites."""
+def _groups(pieces: Ints) -> list[Ints]:
+    """Rows of sites SITES_AT_ONCE at a time at most; cut where the source's pieces change, where that is near."""
+    edges = np.append(np.flatnonzero(np.diff(pieces)) + 1, len(pieces))
+    groups, first = [], 0
+    while first < len(pieces):
+        end = min(first + SITES_AT_ONCE, len(pieces))
+        edge = edges[np.searchsorted(edges, end, side="right") - 1] if edges[0] <= end else 0
+        end = int(edge) if edge > first + SITES_AT_ONCE // 2 else end
+        groups.append(np.arange(first, end))
+        first = end
+    return groups
+
+
+def _meters(call: CallFacts, plan: Plan) -> list[list[str]]:
+    """Ids of each site's meters."""
     of_site: dict[str, list[str]] = {site: [] for site in plan.site_ids}
     if call.meter_map.empty:
         of_site = {site: [site] for site in plan.site_ids}
     else:
         for site, meter in zip(call.meter_map["site_id"].astype(str), call.meter_map["meter_id"].astype(str)):
             of_site.get(site, []).append(meter)
-    return [[meter for row in rows for meter in of_site[plan.site_ids[row]]] for rows in groups]
+    return [of_site[site] for site in plan.site_ids]
+
+
+def _all_of(frames: Iterable[pd.DataFrame | None]) -> pd.DataFrame | None:
+    """The frames one after the other; None where they were given away."""
+    held = [frame for frame in frames if frame is not None]
+    return _one(held) if held else None
 
 
 def _one(frames: Sequence[pd.DataFrame]) -> pd.DataFrame:

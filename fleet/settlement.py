@@ -75,11 +75,12 @@ class Trace:
 
 @dataclass(frozen=True)
 class Settlement:
-    """One revision: six tables in the columns of the settlement folder, a summary and notes in words."""
+    """One revision: tables in the columns of the settlement folder, a summary and notes in words."""
 
     intervals: pd.DataFrame
     days: pd.DataFrame
-    day_intervals: pd.DataFrame
+    day_intervals: pd.DataFrame | None
+    """None where they were given away part by part; see settle.settle."""
     sites: pd.DataFrame
     fleet: pd.DataFrame
     postings: pd.DataFrame
@@ -90,7 +91,8 @@ class Settlement:
     def frames(self) -> dict[str, pd.DataFrame]:
         """The tables by name, as a record writes them."""
         names = ("intervals", "days", "day_intervals", "sites", "fleet", "postings")
-        return {name: getattr(self, name) for name in names}
+        held = {name: getattr(self, name) for name in names}
+        return {name: frame for name, frame in held.items() if frame is not None}
 
 
 def interval_table(
@@ -98,10 +100,14 @@ def interval_table(
 ) -> pd.DataFrame:
     """Event and recovery of every called site, sorted by site and time."""
     shape = result.metered_kw.shape
+    names = ("building", "plant")
+    stream = [names.index(rule.stream) for rule in plan.rules]
     return pd.DataFrame(
         {
-            **_head(event_id, revision, np.repeat(_objects(plan.site_ids), shape[1])),
-            "stream": np.repeat(_streams(plan), shape[1]),
+            "event_id": _coded(np.zeros(shape[0] * shape[1], dtype=np.int8), (event_id,)),
+            "revision": revision,
+            "site_id": _coded(np.repeat(np.arange(shape[0]), shape[1]), plan.site_ids),
+            "stream": _coded(np.repeat(stream, shape[1]), names),
             "interval_start": _utc(np.tile(plan.clock.starts, shape[0])),
             "in_event": np.tile(result.in_event, shape[0]),
             "in_window": result.in_window.ravel(),
@@ -110,7 +116,7 @@ def interval_table(
             "metered_kw": result.metered_kw.ravel(),
             "delivered_kw": result.delivered_kw.ravel(),
             "committed_kw": plan.committed_kw.ravel(),
-            "quality": _objects(QUALITIES)[result.quality.ravel()],
+            "quality": _coded(result.quality.ravel(), QUALITIES),
             "dry_bulb_c": result.dry_bulb_c.ravel(),
         }
     )

@@ -5,7 +5,7 @@ call was made, whatever the fleet folder says today. The arithmetic is settle.py
 """
 
 import json
-from collections.abc import Mapping
+from collections.abc import Callable, Mapping
 from dataclasses import dataclass, replace
 from importlib.metadata import version
 from pathlib import Path
@@ -19,12 +19,9 @@ from fleet import records
 from fleet.callfacts import CallFacts
 from fleet.desk import Progress
 from fleet.errors import FleetError
-from fleet.folder import FleetFolder, meter_files, open_folder, read_meters, reading_of
-from fleet.meter_files import read_meter_file
-from fleet.meter_groups import GroupedReadings
+from fleet.folder import FleetFolder, open_folder
+from fleet.given_readings import given_readings
 from fleet.money import Prices
-from fleet.plausible import meters_in_mega
-from fleet.readings import FrameReadings, Overlaid, Readings
 from fleet.records import CallRecord, SettlementRecord
 from fleet.request import outermost
 from fleet.rules import SettlementRule
@@ -33,12 +30,15 @@ from fleet.settings import FILE, Settings
 from fleet.settle import settle
 from fleet.settlement import Settlement
 from fleet.statement import statements
-from fleet.tables import write_parquet
-from fleet.wall_time import local_day_start
+from fleet.tables import ParquetParts, write_parquet
 from sites.clock import as_us
 from sites.direction import Direction
 
 CALL_TABLES: Final = ("request", "windows", "intervals")
+CALL_COLUMNS: Final = {"intervals": ("site_id", "interval_start", "committed_kw")}
+"""What is read of the call's largest table."""
+LARGEST: Final = "day_intervals"
+"""The table that is written while it is made."""
 INPUTS: Final = "inputs.json"
 """Which call revision, readings, excuses and version a settlement was made of."""
 
@@ -60,6 +60,8 @@ class _Made:
     settlement: Settlement
     texts: dict[str, str]
     notes: tuple[str, ...]
+    written: dict[str, Path]
+    """Tables that lie in a file already."""
 
 
 def settle_event(
@@ -80,16 +82,19 @@ def settle_event(
     every later revision until it is readmitted, again with a reason; who decided that. Raises Refused and
     FleetError for readings, a record or an excuse that cannot be used; nothing is written then.
     """
-    record = records.read_call(home, event_id, only=CALL_TABLES)
+    record = records.read_call(home, event_id, only=CALL_TABLES, columns=CALL_COLUMNS)
     revision = records.next_revision(home, event_id, "settlement")
     last = records.read_settlement(home, event_id) if revision > 1 else None
     before = None if last is None else last.frames
     decided = _decided(
         event_id, _excused(before), _reasons("--excuse", excuse), _reasons("--readmit", readmit), who
     )
-    made = _make(home, record, revision, before, decided, meter_file, meters_of, progress)
-    with records.lock(home) as swept:
-        path = records.write_settlement(home, event_id, made.settlement.frames, made.texts)
+    with TemporaryDirectory(prefix="shedwright-") as folder:
+        given = meter_file, meters_of
+        made = _make(home, record, revision, before, decided, given, Path(folder), progress)
+        frames, texts = made.settlement.frames, made.texts
+        with records.lock(home) as swept:
+            path = records.write_settlement(home, event_id, frames, texts, made.written)
     return Settled(path, revision, made.settlement, (*swept, *made.notes, *_left_aside(last, made)))
 
 
@@ -101,24 +106,24 @@ def settle_again(home: Path, event_id: str, revision: int, meter_file: Path | No
     """
     there = records.read_settlement(home, event_id, revision)
     inputs = json.loads(there.statements[INPUTS])
-    record = records.read_call(home, event_id, inputs["call_revision"], only=CALL_TABLES)
+    record = records.read_call(
+        home, event_id, inputs["call_revision"], only=CALL_TABLES, columns=CALL_COLUMNS
+    )
     before = records.read_settlement(home, event_id, revision - 1).frames if revision > 1 else None
     decided = {name: inputs.get(name, {}) for name in ("excused", "readmitted")} | {
         "who": inputs.get("who", "")
     }
-    made = _make(home, record, revision, before, decided, meter_file, None, lambda text: None)
-    now = json.loads(made.texts[INPUTS])
-    if now["sha256"] != inputs["sha256"]:
-        raise FleetError(
-            f"event {event_id}, settlement revision {revision}: was made of other readings "
-            f"({', '.join(inputs['sha256']) or 'none'}); give back those files, unchanged, to work it out again"
-        )
-    with TemporaryDirectory() as folder:
-        different = [
-            f"{name}.parquet"
-            for name, frame in made.settlement.frames.items()
-            if not _same_table(frame, name, there.path, Path(folder))
-        ]
+    with TemporaryDirectory(prefix="shedwright-") as text:
+        folder = Path(text)
+        given = meter_file, None
+        made = _make(home, record, revision, before, decided, given, folder, lambda text: None)
+        now = json.loads(made.texts[INPUTS])
+        if now["sha256"] != inputs["sha256"]:
+            raise FleetError(
+                f"event {event_id}, settlement revision {revision}: was made of other readings "
+                f"({', '.join(inputs['sha256']) or 'none'}); give back those files, unchanged, to work it out again"
+            )
+        different = _different(made, there.path, folder)
     different += [name for name, text in made.texts.items() if text != there.statements.get(name)]
     if different and inputs["shedwright"] != now["shedwright"]:
         raise FleetError(
@@ -128,10 +133,13 @@ def settle_again(home: Path, event_id: str, revision: int, meter_file: Path | No
     return different
 
 
-def _same_table(frame: pd.DataFrame, name: str, there: Path, folder: Path) -> bool:
-    path = folder / f"{name}.parquet"
-    write_parquet(frame, path, table("settlement", name))
-    return path.read_bytes() == (there / path.name).read_bytes()
+def _different(made: _Made, there: Path, folder: Path) -> list[str]:
+    """Names of the tables' files whose bytes are not those that lie `there`."""
+    files = dict(made.written)
+    for name, frame in made.settlement.frames.items():
+        files[name] = folder / f"{name}.parquet"
+        write_parquet(frame, files[name], table("settlement", name))
+    return [path.name for path in files.values() if path.read_bytes() != (there / path.name).read_bytes()]
 
 
 def _make(
@@ -140,17 +148,23 @@ def _make(
     revision: int,
     before: Mapping[str, pd.DataFrame] | None,
     decided: Mapping[str, Any],
-    meter_file: Path | None,
-    meters_of: Path | None,
+    given_by: tuple[Path | None, Path | None],
+    folder: Path,
     progress: Progress,
 ) -> _Made:
+    """The next revision on readings of a file and a fleet folder (None: the usual ones); `folder` takes the largest
+    table while it is made."""
+    meter_file, meters_of = given_by
     source = meters_of or _fleet_of(home)
     frozen = frozen_folder(source, record)
     progress("reading meters")
     facts = call_facts(record, source, decided["excused"])
-    given = _readings(frozen, facts, meter_file)
+    given = given_readings(frozen, facts, meter_file)
     progress(f"settling {len(facts.windows)} sites")
-    settlement = settle(facts, given.readings, revision, None if before is None else before["sites"])
+    last = None if before is None else before["sites"]
+    path = folder / f"{LARGEST}.parquet"
+    with ParquetParts(path, table("settlement", LARGEST)) as parts:
+        settlement = settle(facts, given.readings, revision, last, _sink(parts, folder))
     notes = (*given.told(), *_decisions(decided), *settlement.notes)
     texts = statements(replace(settlement, notes=notes), facts, before)
     inputs = {
@@ -162,7 +176,20 @@ def _make(
         "shedwright": version("shedwright"),
     }
     texts[INPUTS] = json.dumps(inputs, indent=1, sort_keys=True) + "\n"
-    return _Made(settlement, texts, notes)
+    return _Made(settlement, texts, notes, {LARGEST: path})
+
+
+def _sink(parts: ParquetParts, folder: Path) -> Callable[[pd.DataFrame], None]:
+    def add(frame: pd.DataFrame) -> None:
+        try:
+            parts.add(frame)
+        except OSError as error:
+            raise FleetError(
+                f"{folder}: readings of the days cannot be put by ({error.strerror or error}); nothing was "
+                "settled; make room, or name another folder for such files in TMPDIR"
+            ) from error
+
+    return add
 
 
 def _left_aside(last: SettlementRecord | None, made: _Made) -> list[str]:
@@ -311,59 +338,3 @@ def past_event_days(record: CallRecord, zone: str) -> pd.DataFrame:
 
 def _utc(time: pd.Timestamp) -> np.datetime64:
     return as_us(time.tz_convert("UTC").tz_localize(None).to_datetime64())
-
-
-@dataclass(frozen=True)
-class _Given:
-    """Readings to settle on, what is to be said of them, and the digests of their files."""
-
-    readings: Readings
-    notes: tuple[str, ...]
-    digests: dict[str, str]
-    over: tuple[Overlaid, str] | None = None
-    """The readings that took the place of others, and the name of their file."""
-
-    def told(self) -> tuple[str, ...]:
-        """Notes, once the readings have been used."""
-        if self.over is None:
-            return self.notes
-        replaced = f"{self.over[0].replaced} readings of the folder were replaced by {self.over[1]}"
-        return (*self.notes, replaced)
-
-
-def _readings(folder: FleetFolder, facts: CallFacts, meter_file: Path | None) -> _Given:
-    """Readings from the longest look-back to the horizon's end and a day more, the named file's first."""
-    back = max(rule.look_back_days for rule in facts.rules.values())
-    start = facts.request["interval_start"].min()
-    local = start.tz_convert(facts.timezone).tz_localize(None).normalize() - pd.Timedelta(days=back + 1)
-    since = local_day_start(np.datetime64(local, "D"), facts.timezone)
-    until = _utc(facts.intervals["interval_start"].max() + pd.Timedelta(days=1))
-    if meter_file is None:
-        return _own_readings(folder, since, until)
-    given = read_meter_file(folder, since, until, meter_file)
-    try:
-        own = _own_readings(folder, since, until)
-    except FleetError as error:
-        alone = f"readings of {meter_file.name} alone: {error}"
-        return _Given(FrameReadings(given.frame), (*given.notes, alone), given.digests)
-    both = Overlaid(own.readings, given.frame)
-    return _Given(both, (*own.notes, *given.notes), own.digests | given.digests, (both, meter_file.name))
-
-
-def _own_readings(folder: FleetFolder, since: np.datetime64, until: np.datetime64) -> _Given:
-    """The folder's own: row group by row group where they are Parquet in the table's own form."""
-    files, digests = meter_files(folder)
-    if files:
-        reading = reading_of(folder, "meters")
-        frames = folder.frames
-        grouped = GroupedReadings(
-            files,
-            reading,
-            frames["meter_map"],
-            frames["sites"]["site_id"],
-            lambda highest: meters_in_mega({**frames, "meters": highest}, reading.file),
-        )
-        if grouped.plain:
-            return _Given(grouped, (), digests)
-    found = read_meters(folder, since, until)
-    return _Given(FrameReadings(found.frame), tuple(found.notes), found.digests)

@@ -4,7 +4,7 @@ Owns the layout only; every figure is a row of the settlement's tables.
 """
 
 import json
-from collections.abc import Hashable, Iterator, Mapping, Sequence
+from collections.abc import Iterator, Mapping, Sequence
 from decimal import Decimal
 from textwrap import wrap
 from typing import Any, Final
@@ -28,8 +28,15 @@ def statements(
     document = statement_json(settlement, facts, changed)
     return {
         "statement.txt": statement_text(settlement, facts, changed),
-        "statement.json": json.dumps(document, indent=1, sort_keys=True) + "\n",
+        "statement.json": _json(document) + "\n",
     }
+
+
+def _json(document: Mapping[str, Any]) -> str:
+    """The document with a line a site: thousands of sites, each in a short line, are written at once."""
+    sites = ",\n  ".join(json.dumps(row, sort_keys=True) for row in document["sites"])
+    text = json.dumps({**document, "sites": []}, indent=1, sort_keys=True)
+    return text.replace('\n "sites": []', f'\n "sites": [\n  {sites}\n ]', 1)
 
 
 def statement_text(settlement: Settlement, facts: CallFacts, changed: Sequence[dict[str, Any]] = ()) -> str:
@@ -119,13 +126,18 @@ def _energy_table(sites: pd.DataFrame) -> list[str]:
         f"{'site':<15}{'rule':<22}{'state':<14}{'committed':>10}{'delivered':>10}{'factor':>8}{'adjust':>8}"
     )
     units = f"{'':<51}{'kWh':>10}{'kWh':>10}"
+    names = ("site_id", "rule", "state", "committed_kwh", "delivered_kwh", "performance_factor", "adjustment")
     rows = [
-        f"{_cut(row['site_id'], 15)}{_cut(row['rule'], 22)}{row['state']!s:<14}"
-        f"{_number(row, 'committed_kwh', 10, 1)}{_number(row, 'delivered_kwh', 10, 1)}"
-        f"{_number(row, 'performance_factor', 8, 3)}{_number(row, 'adjustment', 8, 3)}"
-        for row in sites.to_dict("records")
+        f"{_cut(site, 15)}{_cut(rule, 22)}{state!s:<14}{_number(committed, 10, 1)}{_number(delivered, 10, 1)}"
+        f"{_number(factor, 8, 3)}{_number(adjustment, 8, 3)}"
+        for site, rule, state, committed, delivered, factor, adjustment in _rows(sites, names)
     ]
     return [head, units, *rows]
+
+
+def _rows(sites: pd.DataFrame, names: Sequence[str]) -> Iterator[tuple[Any, ...]]:
+    """Row by row the values of these columns."""
+    return zip(*(sites[name].tolist() for name in names), strict=True)
 
 
 def _money_table(sites: pd.DataFrame, currency: str) -> list[str]:
@@ -133,8 +145,8 @@ def _money_table(sites: pd.DataFrame, currency: str) -> list[str]:
     names = ("capacity_payment", "energy_payment", "penalty", "total")
     head = f"{'site':<15}{'capacity':>14}{'energy':>14}{'penalty':>14}{'total':>14}"
     rows = [
-        _cut(row["site_id"], 15) + "".join(f"{told(row[name], currency):>14}" for name in names)
-        for row in sites.to_dict("records")
+        _cut(site, 15) + "".join(f"{told(amount, currency):>14}" for amount in amounts)
+        for site, *amounts in _rows(sites, ("site_id", *names))
     ]
     sums = [told(sum(sites[name], Decimal(0)), currency) for name in names]
     return [head, *rows, f"{'all':<15}" + "".join(f"{amount:>14}" for amount in sums)]
@@ -146,8 +158,7 @@ def _cut(text: object, width: int) -> str:
     return f"{shown if len(shown) < width else shown[: width - 2] + '~':<{width}}"
 
 
-def _number(row: Mapping[Hashable, Any], name: str, width: int, digits: int) -> str:
-    value = row[name]
+def _number(value: float, width: int, digits: int) -> str:
     return f"{'-':>{width}}" if pd.isna(value) else f"{value:>{width},.{digits}f}"
 
 
@@ -156,9 +167,10 @@ def statement_json(
 ) -> dict[str, object]:
     """Statement as one JSON document; money as text, so that no cent is lost."""
     sites = settlement.sites.astype(object).where(settlement.sites.notna(), None)
+    names = [str(name) for name in sites.columns]
     rows = [
-        {name: str(value) if isinstance(value, Decimal) else value for name, value in row.items()}
-        for row in sites.to_dict("records")
+        {name: str(value) if isinstance(value, Decimal) else value for name, value in zip(names, row)}
+        for row in _rows(sites, names)
     ]
     return {
         "event_id": facts.event_id,

@@ -12,7 +12,7 @@ from collections.abc import Callable, Sequence
 from decimal import Decimal
 from functools import cache
 from pathlib import Path
-from typing import Any, Final
+from typing import Any, Final, Self
 
 import numpy as np
 import pandas as pd
@@ -29,6 +29,7 @@ from sites.units import AnyArray
 _ROW_GROUP: Final = 1 << 20
 _QUICK_FROM: Final = 100_000
 """Characters from which a CSV goes to the fast reader first."""
+_DAY_S: Final = 86_400
 MONEY_DIGITS: Final = 18
 MONEY_PLACES: Final = 4
 _TYPES: Final[dict[str, Callable[[], Any]]] = {
@@ -74,7 +75,8 @@ def write_parquet(frame: pd.DataFrame, path: Path, table: Table) -> None:
         )
     schema = arrow_schema(table)
     if any(isinstance(frame[name].dtype, pd.CategoricalDtype) for name in table.names):
-        _write_coded(frame, path, table, schema)
+        with ParquetParts(path, table) as parts:
+            parts.add(frame)
         return
     arrays = [_array(frame[column.name], column, path) for column in table.columns]
     # Through a file of Python's: its errors say in plain words what the system refused, and where.
@@ -82,29 +84,62 @@ def write_parquet(frame: pd.DataFrame, path: Path, table: Table) -> None:
         pq.write_table(pa.Table.from_arrays(arrays, schema=schema), out, compression="zstd")
 
 
-def _write_coded(frame: pd.DataFrame, path: Path, table: Table, schema: Any) -> None:
-    """As write_parquet, some row groups after another, texts that come as numbers of a short list left so.
+class ParquetParts:
+    """A table written some rows at a time; texts may come as numbers of a short list, and are texts in the file.
 
-    In the file they are texts like any other.
+    The same columns come so in every part. The caller closes it: a file without its end cannot be read.
     """
-    coded = [name for name in table.names if isinstance(frame[name].dtype, pd.CategoricalDtype)]
-    for name in coded:
-        kind = pa.dictionary(pa.int32(), pa.string())
-        schema = schema.set(schema.get_field_index(name), schema.field(name).with_type(kind))
-    plain = [column.name for column in table.columns if column.type not in ("number", "decimal")]
-    with pq.ParquetWriter(
-        path, schema, compression="zstd", use_dictionary=plain, write_statistics=coded, store_schema=False
-    ) as writer:
-        writer.add_key_value_metadata(schema.metadata)
+
+    def __init__(self, path: Path, table: Table) -> None:
+        self._path, self._table = path, table
+        self._coded: list[str] = []
+        self._writer: Any = None
+        self._schema = arrow_schema(table)
+
+    def __enter__(self) -> Self:
+        return self
+
+    def __exit__(self, *raised: object) -> None:
+        self.close()
+
+    def close(self) -> None:
+        """End the file."""
+        if self._writer is not None:
+            self._writer.close()
+
+    def add(self, frame: pd.DataFrame) -> None:
+        """Write more rows, in row groups of their own; FleetError for a value that does not fit its column."""
+        if self._writer is None:
+            self._open(frame)
         for first in range(0, max(len(frame), 1), _ROW_GROUP):
             rows = frame.iloc[first : first + _ROW_GROUP]
             arrays = [
-                _coded(rows[column.name], column, path)
-                if column.name in coded
-                else _array(rows[column.name], column, path)
-                for column in table.columns
+                _coded(rows[column.name], column, self._path)
+                if column.name in self._coded
+                else _array(rows[column.name], column, self._path)
+                for column in self._table.columns
             ]
-            writer.write_table(pa.Table.from_arrays(arrays, schema=schema), row_group_size=_ROW_GROUP)
+            whole = pa.Table.from_arrays(arrays, schema=self._schema)
+            self._writer.write_table(whole, row_group_size=_ROW_GROUP)
+
+    def _open(self, frame: pd.DataFrame) -> None:
+        names = self._table.names
+        self._coded = [name for name in names if isinstance(frame[name].dtype, pd.CategoricalDtype)]
+        schema = self._schema
+        for name in self._coded:
+            kind = pa.dictionary(pa.int32(), pa.string())
+            schema = schema.set(schema.get_field_index(name), schema.field(name).with_type(kind))
+        plain = [column.name for column in self._table.columns if column.type not in ("number", "decimal")]
+        self._schema = schema
+        self._writer = pq.ParquetWriter(
+            self._path,
+            schema,
+            compression="zstd",
+            use_dictionary=plain,
+            write_statistics=self._coded,
+            store_schema=False,
+        )
+        self._writer.add_key_value_metadata(schema.metadata)
 
 
 def _coded(series: pd.Series, column: Column, path: Path) -> Any:
@@ -119,15 +154,15 @@ def _coded(series: pd.Series, column: Column, path: Path) -> Any:
     )
 
 
-def read_parquet(path: Path, table: Table) -> pd.DataFrame:
-    """Read a file written by `write_parquet` into the stable types in memory.
+def read_parquet(path: Path, table: Table, names: Sequence[str] | None = None) -> pd.DataFrame:
+    """Read a file written by `write_parquet` into the stable types in memory; `names`: these columns alone.
 
     A column that the table of columns did not have when the file was written comes with its default, or as
     missing; the file names the columns it was written with, so that one taken out of it shows.
 
     Raises FleetError where the file is missing, no Parquet, of another table or of a newer schema version.
     """
-    found = _read(path)
+    found = _read(path, None if names is None else [name for name in names if name in table.names])
     metadata = {k.decode(): v.decode() for k, v in (found.schema.metadata or {}).items() if k != b"pandas"}
     name = metadata.get("table", "")
     if name != f"{table.folder}/{table.name}":
@@ -138,16 +173,17 @@ def read_parquet(path: Path, table: Table) -> pd.DataFrame:
             f"{path}: written with schema version {version}; this program reads up to {SCHEMA_VERSION}; "
             "update the program"
         )
-    lacking = [column for column in table.names if column not in found.column_names]
+    wanted = [column for column in table.columns if names is None or column.name in names]
+    lacking = [column.name for column in wanted if column.name not in found.column_names]
     missing = [column for column in lacking if column in metadata.get("columns", column).split(",")]
     if missing:
         raise FleetError(f"{path}: column {', '.join(missing)} is missing; the file was changed or cut")
     count = found.num_rows
     columns = {
         column.name: _later(column, count) if column.name in lacking else _series(found[column.name], column)
-        for column in table.columns
+        for column in wanted
     }
-    return pd.DataFrame(columns)[list(table.names)]
+    return pd.DataFrame(columns)[[column.name for column in wanted]]
 
 
 def _later(column: Column, count: int) -> pd.Series:
@@ -294,9 +330,11 @@ def _plain_value(value: Any, kind: str) -> Any:
 def _days(series: pd.Series, kind: Any) -> Any:
     """Local dates, the whole column at once; dates alone, with no zone and no time of day."""
     if series.dtype == np.dtype("datetime64[s]"):
-        seconds = series.to_numpy()
-        if not (seconds.astype("datetime64[D]") != seconds).any():
-            return pa.array(seconds.astype("datetime64[D]"), type=kind)
+        seconds = series.to_numpy().view(np.int64)
+        days = seconds // _DAY_S
+        # NaT is no whole number of days, so that it goes the long way.
+        if (days * _DAY_S == seconds).all():
+            return pa.array(days.astype(np.int32)).view(kind)
     given = series.astype(object) if series.dtype.kind not in "MO" else series
     days = pd.to_datetime(given) if given.dtype.kind == "O" else given
     midnight = days.dt.normalize()
@@ -334,9 +372,12 @@ def _empty(column: Column) -> pd.Series:
     return _series(pa.array([], type=_TYPES[column.type]()), column)
 
 
-def _read(path: Path) -> Any:
+def _read(path: Path, names: Sequence[str] | None = None) -> Any:
     try:
-        return pq.read_table(path)
+        if names is None:
+            return pq.read_table(path)
+        with pq.ParquetFile(path) as file:
+            return file.read(columns=[name for name in names if name in file.schema_arrow.names])
     except FileNotFoundError as error:
         raise FleetError(
             f"{path}: there is no such file; the record is incomplete or the path is wrong"

@@ -142,3 +142,29 @@ def test_each_meters_highest_reading_is_looked_at(tmp_path: Path, monkeypatch: p
     assert str(refused.value) == f"m, row {first}, column kw: came little; expected more; look"
     most = frame["kw"].abs().groupby(frame["meter_id"]).max()
     assert seen == {site: most[site] for site in SITES[:6]}
+
+
+def test_sites_are_cut_where_the_source_is_and_nowhere_twice(monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(settling, "SITES_AT_ONCE", 4)
+    cuts = {
+        (0, 0, 0, 1, 1, 1, 2, 2, 2): [3, 3, 3],  # three a piece: 4 would split the next one
+        (0, 1, 1, 1, 1, 1): [4, 2],  # a piece of one alone would make parts too small
+        (0, 0, 0, 0, 0, 0): [4, 2],
+        (0,): [1],
+    }
+    for pieces, sizes in cuts.items():
+        groups = settling._groups(np.array(pieces))
+        assert [len(rows) for rows in groups] == sizes
+        assert np.concatenate(groups).tolist() == list(range(len(pieces)))
+
+
+def test_the_largest_table_goes_to_a_sink_in_order(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    monkeypatch.setattr(settling, "SITES_AT_ONCE", 3)
+    frame, parts = readings(), []
+    given = settle(facts(), source(frame, tmp_path / "meters.parquet"), sink=parts.append)
+    kept = settle(facts(), frame)
+    assert len(parts) == 2
+    assert "day_intervals" not in given.frames
+    found = pd.concat([part.astype({"site_id": object}) for part in parts], ignore_index=True)
+    wanted = kept.day_intervals.astype({"site_id": object})
+    pd.testing.assert_frame_equal(found, wanted, check_categorical=False)
