@@ -120,12 +120,13 @@ def performance_factor(
     step_h: float,
     rule: SettlementRule,
     hour: Ints | None = None,
+    netted_kwh: Floats | None = None,
 ) -> Floats:
     """Delivered over committed energy (site,), by the rule's order of floor, cap and rounding; NaN if undefined.
 
     Shapes (site, interval); counted: the site's own window; hour (interval,): the hour each interval belongs to,
-    for a rule that looks at hours. An interval with no value adds nothing. Undefined where nothing was
-    committed, or no interval has a value.
+    for a rule that looks at hours; netted_kwh (site,): see netted. An interval with no value adds nothing.
+    Undefined where nothing was committed, no interval has a value, or what is netted is not known.
     """
     known = counted & ~np.isnan(delivered_kw)
     value = np.where(known, delivered_kw, 0.0)
@@ -141,9 +142,18 @@ def performance_factor(
         value = np.maximum(value, 0.0)
     if rule.cap_intervals:
         value = np.minimum(value, pledged)
-    defined = (committed > 0.0) & known.any(axis=1)
-    factor = value.sum(axis=1) * step_h / np.where(defined, committed, 1.0)
+    off = np.zeros(len(committed)) if netted_kwh is None else netted_kwh
+    defined = (committed > 0.0) & known.any(axis=1) & ~np.isnan(off)
+    factor = (value.sum(axis=1) * step_h - np.where(defined, off, 0.0)) / np.where(defined, committed, 1.0)
     return np.where(defined, _rounded(factor, rule), np.nan)
+
+
+def netted(until_midnight_kwh: Floats, until_full_kwh: Floats, rule: SettlementRule) -> Floats:
+    """kWh (site,) that the rule takes off what was delivered: what was taken back, at least 0; NaN where not known."""
+    if rule.recovery_netting == "none":
+        return np.zeros(len(until_midnight_kwh))
+    back = until_midnight_kwh if rule.recovery_netting == "until_midnight" else until_full_kwh
+    return np.maximum(back, 0.0)
 
 
 def _rounded(factor: Floats, rule: SettlementRule) -> Floats:

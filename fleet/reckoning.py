@@ -62,7 +62,7 @@ def reckon(home: Path, event_id: str, site_id: str, revision: int | None = None)
     """The reckoning of a site as one document, the newest settlement unless a revision is named.
 
     Keys: event_id, revision, site_id, rule, source, order_of_rounding, site, days, slots, adjustment, intervals,
-    energy, money. FleetError where event, revision or site is not in the record.
+    hours, energy, money. FleetError where event, revision or site is not in the record.
     """
     record = records.read_settlement(home, event_id, revision)
     call_revision = None
@@ -91,6 +91,7 @@ def reckon(home: Path, event_id: str, site_id: str, revision: int | None = None)
         "slots": _slots(site),
         "adjustment": _adjustment(site),
         "intervals": _intervals(site),
+        "hours": _hours(site),
         "energy": _energy(site),
         "money": _money(site),
     }
@@ -227,6 +228,26 @@ def _intervals(site: _Site) -> list[dict[str, Any]]:
     return _records(frame[names].assign(local_time=local.map(lambda at: at.isoformat())))
 
 
+def _hours(site: _Site) -> list[dict[str, Any]]:
+    """Each hour of the own window, counted from the event's start: kWh committed, delivered, and what counts.
+
+    An interval with no value adds nothing. counted_kwh is delivered_kwh within the rule's floor and cap where it
+    looks at hours, else the same.
+    """
+    frame, rule = site.rows("intervals"), site.rule
+    frame = frame[frame["in_window"]]
+    start = site.call.frames["request"]["interval_start"].min()
+    number = (frame["interval_start"] - start) // pd.Timedelta(hours=1)
+    energy = frame[["committed_kw", "delivered_kw"]].groupby(number).sum() * site.step_minutes / 60.0
+    counted = energy["delivered_kw"]
+    if rule.performance_by == "hour":
+        counted = counted.clip(lower=0.0) if rule.floor_intervals else counted
+        counted = counted.clip(upper=energy["committed_kw"]) if rule.cap_intervals else counted
+    named = {"committed_kw": "committed_kwh", "delivered_kw": "delivered_kwh"}
+    shown = energy.rename(columns=named).assign(counted_kwh=counted)
+    return _records(shown.assign(hour=[int(at) + 1 for at in shown.index]))
+
+
 def _energy(site: _Site) -> dict[str, Any]:
     row = site.row
     names = (
@@ -236,6 +257,7 @@ def _energy(site: _Site) -> dict[str, Any]:
         "paid_share",
         "recovery_until_midnight_kwh",
         "recovery_until_full_kwh",
+        "netted_kwh",
         "beyond_training_k",
     )
     return {name: row[name] for name in names}

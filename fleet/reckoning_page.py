@@ -110,6 +110,17 @@ def _interval_lines(found: dict[str, Any]) -> list[str]:
     return [*lines, ""]
 
 
+def _hour_lines(found: dict[str, Any]) -> list[str]:
+    """Hour by hour, with what counts where the rule looks at hours."""
+    by_hour = found["rule"]["performance_by"] == "hour"
+    return [
+        f"   hour {row['hour']}: committed {_kw(row['committed_kwh'], 0)} kWh, delivered "
+        f"{_kw(row['delivered_kwh'], 0)} kWh"
+        + (f", counts {_kw(row['counted_kwh'], 0)} kWh" if by_hour else "")
+        for row in found["hours"]
+    ]
+
+
 def _money_lines(found: dict[str, Any]) -> list[str]:
     energy, money, currency = found["energy"], found["money"], found["currency"]
     none = "undefined"
@@ -118,15 +129,18 @@ def _money_lines(found: dict[str, Any]) -> list[str]:
         for name in ("performance_factor", "paid_share")
     )
     committed, delivered = energy["committed_kwh"], energy["delivered_kwh"]
-    lack = None if delivered is None else max(committed - delivered, 0.0)
+    off = energy["netted_kwh"]
+    paid_on = None if delivered is None or off is None else delivered - off
+    lack = None if paid_on is None else max(committed - paid_on, 0.0)
     midnight, full = energy["recovery_until_midnight_kwh"], energy["recovery_until_full_kwh"]
     lines = [
         f"5. performance and money in {currency}, from the site's side",
         f"   {found['order_of_rounding']}",
+        *_hour_lines(found),
         f"   committed {committed:,.3f} kWh, delivered {_kw(delivered, 0)} kWh, factor {factor}, share {share}",
         f"   capacity {money['capacity_payment_per_kwh']:g} x {committed:,.3f} kWh x {share} = "
         f"{money['capacity_payment']}",
-        f"   energy   {money['energy_payment_per_kwh']:g} x {_kw(delivered, 0)} kWh (not below 0) = "
+        f"   energy   {money['energy_payment_per_kwh']:g} x {_kw(paid_on, 0)} kWh (not below 0) = "
         f"{money['energy_payment']}",
         f"   penalty  {money['penalty_per_kwh']:g} x {_kw(lack, 0)} kWh lacking = {money['penalty']}",
         f"   total    {money['total']}",
@@ -138,11 +152,17 @@ def _money_lines(found: dict[str, Any]) -> list[str]:
             f"   the penalty holds {found['rule']['firm_level_charge_per_kwh']:g} per kWh beyond the firm level "
             f"of {found['rule']['firm_level_kw']:g} kW"
         )
+    nets = found["rule"]["recovery_netting"] != "none"
+    if nets:
+        lines.insert(
+            3 + len(found["hours"]),
+            f"   taken off by rule: {_kw(off, 0)} kWh taken back after the window, so {_kw(paid_on, 0)} kWh count",
+        )
     before = money["from_revision"]
     after = "first revision" if before is None else f"difference to revision {before}"
     lines += [
         f"   posted   {money['posted']} ({after})",
-        f"   taken back afterwards, not netted: {_kw(midnight, 0)} kWh until midnight, {_kw(full, 0)} kWh until "
-        "the tank is full",
+        f"   taken back afterwards{'' if nets else ', not netted'}: {_kw(midnight, 0)} kWh until midnight, "
+        f"{_kw(full, 0)} kWh until the tank is full",
     ]
     return lines

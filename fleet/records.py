@@ -215,8 +215,13 @@ def read_call(
     )
 
 
-def read_settlement(fleet_path: Path, event_id: str, revision: int | None = None) -> SettlementRecord:
-    """Read a settlement, the newest revision unless one is named; FleetError where it cannot be."""
+def read_settlement(
+    fleet_path: Path, event_id: str, revision: int | None = None, only: Iterable[str] | None = None
+) -> SettlementRecord:
+    """Read a settlement, the newest revision unless one is named, `only` these of its tables where given.
+
+    FleetError where it cannot be.
+    """
     number, path = _one(fleet_path, event_id, "settlement", revision)
     texts = sorted(
         found
@@ -227,7 +232,7 @@ def read_settlement(fleet_path: Path, event_id: str, revision: int | None = None
         path=path,
         event_id=event_id,
         revision=number,
-        frames=_read_frames(path, "settlement", None),
+        frames=_read_frames(path, "settlement", only),
         statements={found.name: found.read_text(encoding="utf-8") for found in texts},
     )
 

@@ -96,6 +96,9 @@ class SettlementRule(BaseModel):
     """Limits of the paid share; None = the fleet's settings."""
     netting: Literal["site", "portfolio"] = "site"
     """portfolio: all sites under the rule earn by their joint factor; amounts are shared out to the cent."""
+    recovery_netting: Literal["none", "until_midnight", "until_full"] = "none"
+    """Energy taken back after the own window, until local midnight or until the tank is full again, is taken off
+    what was delivered before performance and pay; energy given beyond the window is never added."""
     firm_level_kw: float | None = Field(default=None, ge=0.0)
     firm_level_charge_per_kwh: float = Field(default=0.0, ge=0.0)
     """Charged on every kWh metered above firm_level_kw in the site's window (absorb: below it); None = no level."""
@@ -153,6 +156,9 @@ class SettlementRule(BaseModel):
             if self.cap_intervals:
                 steps.append(f"{each} capped at their commitment")
         steps.append("energy over the site's window")
+        if self.recovery_netting != "none":
+            until = {"until_midnight": "local midnight", "until_full": "the tank is full again"}
+            steps.append(f"less the energy taken back until {until[self.recovery_netting]}")
         decimals = self.performance_decimals
         rounded = "unrounded" if decimals is None else f"rounded half-up to {decimals} decimals"
         steps.append(f"performance factor {rounded}")

@@ -16,7 +16,7 @@ from fleet.callfacts import CallFacts, Plan, arrange
 from fleet.errors import Problem, Refused
 from fleet.history import period, rows_of
 from fleet.measured import Measured, Part, joined, measure
-from fleet.money import Lines, earned, firm_level_charge, minor_digits, performance_factor
+from fleet.money import Lines, earned, firm_level_charge, minor_digits, netted, performance_factor
 from fleet.readings import FrameReadings, Readings
 from fleet.remarks import named
 from fleet.settlement import Settlement, SiteResult, fleet_table, interval_table, posting_table, site_table
@@ -148,19 +148,22 @@ def _result(plan: Plan, call: CallFacts, found: Measured) -> SiteResult:
     energy = np.where(known, delivered, 0.0).sum(axis=1) * clock.step_h
     delivered_kwh = np.where(known.any(axis=1), energy, np.nan)
     excused = np.array([site in call.excused for site in plan.site_ids])
-    factor, share = np.full(len(energy), np.nan), np.full(len(energy), np.nan)
+    factor, share, off = (np.full(len(energy), np.nan) for _ in range(3))
     money = np.zeros((len(energy), 4), dtype=object)
     hour = (clock.starts - plan.event_start) // np.timedelta64(1, "h")
     sign = -call.direction.sign
     for rule in dict.fromkeys(plan.rules):
         rows = rows_of(plan.rules, rule)
         inside, out = in_window[rows], excused[rows]
-        one = performance_factor(delivered[rows], plan.committed_kw[rows], inside, clock.step_h, rule, hour)
+        off[rows] = netted(found.until_midnight_kwh[rows], found.until_full_kwh[rows], rule)
+        one = performance_factor(
+            delivered[rows], plan.committed_kw[rows], inside, clock.step_h, rule, hour, off[rows]
+        )
         charge = firm_level_charge(found.metered_kw[rows], inside, clock.step_h, rule, sign)
         factor[rows] = np.where(out, np.nan, one)
         share[rows], due = earned(
             committed_kwh[rows],
-            np.where(out, np.nan, delivered_kwh[rows]),
+            np.where(out, np.nan, delivered_kwh[rows] - off[rows]),
             factor[rows],
             np.where(out, 0.0, charge),
             rule,
@@ -184,6 +187,7 @@ def _result(plan: Plan, call: CallFacts, found: Measured) -> SiteResult:
         dry_bulb_c=found.dry_bulb_c,
         until_midnight_kwh=found.until_midnight_kwh,
         until_full_kwh=found.until_full_kwh,
+        netted_kwh=off,
         money=Lines(*money.T),
     )
 

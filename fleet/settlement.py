@@ -46,6 +46,8 @@ class SiteResult:
     until_midnight_kwh: Floats
     """(site,) energy taken back after the own window; NaN where not known"""
     until_full_kwh: Floats
+    netted_kwh: Floats
+    """(site,) what the rule takes off of it; NaN where not known"""
     money: Lines
 
 
@@ -224,6 +226,7 @@ def site_table(event_id: str, revision: int, plan: Plan, found: Baseline, result
             "paid_share": result.paid_share,
             "recovery_until_midnight_kwh": result.until_midnight_kwh,
             "recovery_until_full_kwh": result.until_full_kwh,
+            "netted_kwh": result.netted_kwh,
             "why": result.why,
             "capacity_payment": money.capacity_payment,
             "energy_payment": money.energy_payment,

@@ -37,6 +37,8 @@ from sites.direction import Direction
 CALL_TABLES: Final = ("request", "windows", "intervals")
 CALL_COLUMNS: Final = {"intervals": ("site_id", "interval_start", "committed_kw")}
 """What is read of the call's largest table."""
+LAST_TABLES: Final = ("sites", "intervals")
+"""What is read of the settlement before."""
 LARGEST: Final = "day_intervals"
 """The table that is written while it is made."""
 INPUTS: Final = "inputs.json"
@@ -84,7 +86,7 @@ def settle_event(
     """
     record = records.read_call(home, event_id, only=CALL_TABLES, columns=CALL_COLUMNS)
     revision = records.next_revision(home, event_id, "settlement")
-    last = records.read_settlement(home, event_id) if revision > 1 else None
+    last = records.read_settlement(home, event_id, only=LAST_TABLES) if revision > 1 else None
     before = None if last is None else last.frames
     decided = _decided(
         event_id, _excused(before), _reasons("--excuse", excuse), _reasons("--readmit", readmit), who
@@ -109,7 +111,9 @@ def settle_again(home: Path, event_id: str, revision: int, meter_file: Path | No
     record = records.read_call(
         home, event_id, inputs["call_revision"], only=CALL_TABLES, columns=CALL_COLUMNS
     )
-    before = records.read_settlement(home, event_id, revision - 1).frames if revision > 1 else None
+    before = (
+        records.read_settlement(home, event_id, revision - 1, LAST_TABLES).frames if revision > 1 else None
+    )
     decided = {name: inputs.get(name, {}) for name in ("excused", "readmitted")} | {
         "who": inputs.get("who", "")
     }

@@ -53,6 +53,7 @@ def statement_text(settlement: Settlement, facts: CallFacts, changed: Sequence[d
         "",
         *_wrapped(_fleet_line(settlement, facts)),
         *_wrapped(_recovery_line(sites)),
+        *_unknown_recovery(sites),
         *_guard_lines(sites),
         *[
             line
@@ -98,13 +99,29 @@ def _excused(sites: pd.DataFrame) -> Iterator[Any]:
 
 
 def _recovery_line(sites: pd.DataFrame) -> str:
-    """Energy taken back after the windows, beside what was delivered and not netted."""
-    midnight, full = sites["recovery_until_midnight_kwh"], sites["recovery_until_full_kwh"]
-    return (
-        f"energy taken back after the own windows, not netted: {midnight.sum():,.1f} kWh until midnight "
-        f"({int(midnight.notna().sum())} sites), {full.sum():,.1f} kWh until the tank is full "
-        f"({int(full.notna().sum())} sites)"
+    """Energy taken back after the windows, beside what was delivered, and how much of it the rules take off."""
+    midnight, full, off = (
+        sites[name] for name in ("recovery_until_midnight_kwh", "recovery_until_full_kwh", "netted_kwh")
     )
+    taken_off = int((off > 0.0).sum())
+    netted = f"; {off.sum():,.1f} kWh netted by rule ({taken_off} sites)" if taken_off else ""
+    return (
+        f"energy taken back after the own windows{'' if taken_off else ', not netted'}: {midnight.sum():,.1f} kWh "
+        f"until midnight ({int(midnight.notna().sum())} sites), {full.sum():,.1f} kWh until the tank is full "
+        f"({int(full.notna().sum())} sites){netted}"
+    )
+
+
+def _unknown_recovery(sites: pd.DataFrame) -> list[str]:
+    """Sites whose rule nets energy taken back that is not known: nothing is paid or charged on them."""
+    held = sites.loc[sites["netted_kwh"].isna(), "site_id"].astype(str)
+    return [
+        line
+        for site in held
+        for line in _wrapped(
+            f"energy taken back is not known, though the rule nets it, so nothing is paid or charged: {plain(site)}"
+        )
+    ]
 
 
 def _guard_lines(sites: pd.DataFrame) -> list[str]:

@@ -144,14 +144,13 @@ class ParquetParts:
 
 def _coded(series: pd.Series, column: Column, path: Path) -> Any:
     codes = series.cat.codes.to_numpy()
-    if column.required == "yes" and (codes < 0).any():
+    gaps = codes < 0
+    if column.required == "yes" and gaps.any():
         raise FleetError(
             f"{path.name}, column {column.name}: a row is null; the column must have a value in each row"
         )
-    indices = pa.array(codes.astype(np.int32), mask=codes < 0)
-    return pa.DictionaryArray.from_arrays(
-        indices, pa.array(series.cat.categories.to_numpy(dtype=object), pa.string())
-    )
+    indices = pa.array(codes.astype(np.int32), mask=gaps if gaps.any() else None)
+    return pa.DictionaryArray.from_arrays(indices, pa.array(series.cat.categories.array, pa.string()))
 
 
 def read_parquet(path: Path, table: Table, names: Sequence[str] | None = None) -> pd.DataFrame:
@@ -331,10 +330,10 @@ def _days(series: pd.Series, kind: Any) -> Any:
     """Local dates, the whole column at once; dates alone, with no zone and no time of day."""
     if series.dtype == np.dtype("datetime64[s]"):
         seconds = series.to_numpy().view(np.int64)
-        days = seconds // _DAY_S
+        whole = seconds // _DAY_S
         # NaT is no whole number of days, so that it goes the long way.
-        if (days * _DAY_S == seconds).all():
-            return pa.array(days.astype(np.int32)).view(kind)
+        if (whole * _DAY_S == seconds).all():
+            return pa.array(whole.astype(np.int32)).view(kind)
     given = series.astype(object) if series.dtype.kind not in "MO" else series
     days = pd.to_datetime(given) if given.dtype.kind == "O" else given
     midnight = days.dt.normalize()

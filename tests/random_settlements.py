@@ -32,6 +32,7 @@ def random_rule(rng: np.random.Generator, number: int) -> SettlementRule:
         "after_h": [0.0, 2.0],
         "after_buffer_h": [0.0, 1.0],
         "before_buffer_h": [0.0, 1.0],
+        "recovery_netting": ["none", "none", "until_midnight"],
     }
     fields = {name: options[int(rng.integers(len(options)))] for name, options in picked.items()}
     if fields["kind"] == "temperature_regression" and fields["rank"] == "nearest_weather":

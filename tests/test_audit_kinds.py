@@ -104,6 +104,8 @@ def test_every_preset_holds(name: str) -> None:
         {"performance_by": "event", "cap_intervals": True},
         {"netting": "portfolio", "performance_decimals": 2},
         {"firm_level_kw": 300.0, "firm_level_charge_per_kwh": 6.0},
+        {"recovery_netting": "until_midnight", "performance_decimals": 3},
+        {"recovery_netting": "until_full", "netting": "portfolio"},
     ],
 )
 def test_every_way_of_paying_holds(fields: dict[str, object]) -> None:
@@ -144,6 +146,7 @@ CHANGES = {
     ("ten_of_ten", "sites", "paid_share"): 0.01,
     ("ten_of_ten", "sites", "recovery_until_midnight_kwh"): 0.5,
     ("ten_of_ten", "sites", "recovery_until_full_kwh"): 0.5,
+    ("ten_of_ten", "sites", "netted_kwh"): 0.5,
 }
 
 

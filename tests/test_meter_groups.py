@@ -168,3 +168,22 @@ def test_the_largest_table_goes_to_a_sink_in_order(tmp_path: Path, monkeypatch: 
     found = pd.concat([part.astype({"site_id": object}) for part in parts], ignore_index=True)
     wanted = kept.day_intervals.astype({"site_id": object})
     pd.testing.assert_frame_equal(found, wanted, check_categorical=False)
+
+
+def test_files_that_overlap_and_disagree_are_refused_with_both_values(tmp_path: Path) -> None:
+    frame = readings().drop_duplicates(["meter_id", "interval_start"])
+    frame.to_parquet(tmp_path / "june.parquet", index=False)
+    again = frame[(frame["meter_id"] == "s2") & (frame["interval_start"] == START)].assign(kw=1.0)
+    again.to_parquet(tmp_path / "july.parquet", index=False)
+    files = [tmp_path / "june.parquet", tmp_path / "july.parquet"]
+    given = GroupedReadings(
+        files, Reading("meters", "offset", NEW_YORK, 60), pd.DataFrame(), pd.Series(SITES)
+    )
+    with pytest.raises(Refused) as refused:
+        settle(facts(), given)
+    at = frame.index.get_loc(again.index[0]) + 1
+    assert [str(problem) for problem in refused.value.problems] == [
+        f"meters, row {len(frame) + 1}, column kw: came 1 for meter s2 at 2025-07-10T19:00:00.000000Z, where row {at} "
+        f"has {frame.loc[again.index[0], 'kw']:g}; expected one value per meter and interval; find out which one holds "
+        "and take the other out"
+    ]

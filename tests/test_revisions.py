@@ -9,7 +9,7 @@ import pandas as pd
 import pytest
 from conftest import Practice, shedwright
 
-from fleet import records
+from fleet import records, settling
 from fleet.audit import audit
 from fleet.errors import FleetError
 from fleet.reckoning import reckon
@@ -243,3 +243,32 @@ def test_the_command_prints_one_document_and_names_the_called(home: Path) -> Non
     assert refused.stderr.startswith(
         "event practice, settlement revision 3: site 'nobody' is not called; called are "
     )
+
+
+def test_hours_add_up_to_the_energy_and_stand_on_the_page(home: Path) -> None:
+    found = reckon(home, EVENT, other_site(home), 1)
+    hours, energy = found["hours"], found["energy"]
+    for name in ("committed_kwh", "delivered_kwh"):
+        assert sum(row[name] for row in hours) == pytest.approx(energy[name])
+    assert [row["hour"] for row in hours] == sorted(row["hour"] for row in hours)
+    assert all(row["counted_kwh"] == row["delivered_kwh"] for row in hours)
+    assert f"   hour {hours[0]['hour']}: committed {hours[0]['committed_kwh']:,.3f} kWh" in "\n".join(
+        reckoning_lines(found)
+    )
+
+
+def test_no_room_for_the_days_is_told_and_nothing_is_written(
+    home: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    def full(self: object, frame: pd.DataFrame) -> None:
+        raise OSError(28, "No space left on device")
+
+    monkeypatch.setattr(settling.ParquetParts, "add", full)
+    before = records.revisions(home, EVENT, "settlement")
+    with pytest.raises(FleetError) as caught:
+        settle_event(home, EVENT)
+    assert str(caught.value).endswith(
+        ": readings of the days cannot be put by (No space left on device); nothing was settled; make room, or name "
+        "another folder for such files in TMPDIR"
+    )
+    assert records.revisions(home, EVENT, "settlement") == before

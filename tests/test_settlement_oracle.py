@@ -77,18 +77,17 @@ def plain(facts: CallFacts, readings: pd.DataFrame) -> dict:
 
 
 def dry_bulb(facts: CallFacts, grid: list) -> dict:
-    """degC of every site's station at each moment, an hour's value held through the hour."""
+    """degC at each moment of the sites whose rule asks for it, an hour's value held through the hour."""
     hourly: dict = defaultdict(dict)
     for row in facts.weather.itertuples():
         hourly[row.station_id][row.interval_start.to_pydatetime()] = row.dry_bulb_c
-    return {
-        site: {
-            at: hourly[station][at.replace(minute=0)]
-            for at in grid
-            if at.replace(minute=0) in hourly[station]
-        }
-        for site, station in facts.stations.items()
+    asking = {site for site, rule in facts.rules.items() if rule.needs_weather}
+    hours = [(at, at.replace(minute=0)) for at in grid]
+    held = {
+        station: {at: hourly[station][hour] for at, hour in hours if hour in hourly[station]}
+        for station in {facts.stations[site] for site in asking}
     }
+    return {site: held[facts.stations[site]] for site in asking}
 
 
 def same(got: float, wanted: float | None) -> bool:
@@ -106,6 +105,8 @@ def compare(result: Settlement, case: dict, site: str) -> str:
     assert same(row["adjustment_charged"], wanted["charged"])
     assert same(row["beyond_training_k"], wanted["beyond"])
     assert same(row["recovery_until_midnight_kwh"], wanted["until_midnight"])
+    assert same(row["netted_kwh"], wanted["netted"])
+    assert same(row["performance_factor"], wanted["factor"])
     assert (row["guard"] == "tank") == (wanted["charged"] is not None)
     assert same(row["committed_kwh"], wanted["committed_kwh"])
     days = result.days[(result.days["site_id"] == site) & (result.days["reason"] != "event_day")]

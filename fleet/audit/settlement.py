@@ -14,7 +14,7 @@ from fleet.audit import baselines
 from fleet.audit.evidence import utc_naive
 from fleet.audit.findings import Findings, Sheet
 from fleet.audit.settled import Settled, days_of, local_day
-from fleet.money import Prices, earned, firm_level_charge, performance_factor
+from fleet.money import Prices, earned, firm_level_charge, netted, performance_factor
 from fleet.request import outermost
 from sites.units import AnyArray, Floats, Ints
 
@@ -152,12 +152,15 @@ def performance(made: Settled, found: Findings) -> None:
     found.equal(
         "energy of the window", sheet, "delivered_kwh", np.where(known.any(axis=1), energy, np.nan), size
     )
-    factor = np.full(len(committed), np.nan)
+    factor, off = np.full(len(committed), np.nan), np.full(len(committed), np.nan)
+    midnight, full = (sheet.numbers(f"recovery_until_{name}_kwh") for name in ("midnight", "full"))
     for row, rule in enumerate(made.rules):
         one = slice(row, row + 1)
+        off[one] = netted(midnight[one], full[one], rule)
         factor[one] = performance_factor(
-            value[one], made.grid("committed_kw")[one], inside[one], step_h, rule, _hour(made)
+            value[one], made.grid("committed_kw")[one], inside[one], step_h, rule, _hour(made), off[one]
         )
+    found.equal("energy netted", sheet, "netted_kwh", off)
     excused = (sheet.frame["state"] == "excused").to_numpy()
     found.equal("performance factor", sheet, "performance_factor", np.where(excused, np.nan, factor))
     reasoned = sheet.frame["why"].notna().to_numpy()
@@ -202,7 +205,7 @@ def payments(made: Settled, found: Findings) -> None:
     prices = Prices(str(told["currency"]), *(float(told[name]) for name in names))
     factor, committed = sheet.numbers("performance_factor"), sheet.numbers("committed_kwh")
     excused = (sheet.frame["state"] == "excused").to_numpy()
-    delivered_kwh = np.where(excused, np.nan, sheet.numbers("delivered_kwh"))
+    delivered_kwh = np.where(excused, np.nan, sheet.numbers("delivered_kwh") - sheet.numbers("netted_kwh"))
     share = np.full(len(factor), np.nan)
     due = np.zeros((len(factor), 3), dtype=object)
     for rule in dict.fromkeys(made.rules):

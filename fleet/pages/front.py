@@ -13,6 +13,7 @@ from fleet import records
 from fleet.folder import open_folder
 from fleet.pages import vocabulary
 from fleet.pages.season import season_files
+from fleet.pages.season_statement import season_statement
 from fleet.pages.sheet import Fact, Link, Table, name, number, page, stamp
 from fleet.pages.vocabulary import word
 
@@ -26,7 +27,7 @@ PAGES_OF_EVENT = (
 
 def front_files(home: Path, folder: Path) -> dict[str, str]:
     """The index and the season, by name; `folder`: where the pages of the events lie already."""
-    return season_files(home) | {"index.html": index_page(home, folder)}
+    return season_files(home) | season_statement(home) | {"index.html": index_page(home, folder)}
 
 
 def index_page(home: Path, folder: Path) -> str:

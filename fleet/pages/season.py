@@ -167,7 +167,7 @@ def _read(home: Path, event_id: str) -> tuple[dict[str, Any], pd.DataFrame, dict
     settings = call.frozen_json["settings"]
     step_h = float(settings["interval_minutes"]) / 60.0
     numbers = records.revisions(home, event_id, "settlement")
-    done = records.read_settlement(home, event_id, numbers[-1]) if numbers else None
+    done = records.read_settlement(home, event_id, numbers[-1], ("sites",)) if numbers else None
     delivered, paid = pd.Series(dtype=np.float64), None
     if done is not None:
         delivered = done.frames["sites"].set_index("site_id")["delivered_kwh"]

@@ -73,10 +73,19 @@ def settle_site(case: dict, site: str) -> dict:
     if not any_reading:
         state = "meter_missing"
     assert series is not None
+    back = taken_back(case, site, rows)
+    netted = 0.0
+    if rule["recovery_netting"] == "until_midnight":
+        netted = None if back is None else max(back, 0.0)
+    factor = None
+    if count and committed > 0 and netted is not None:
+        factor = (energy - netted) / committed
     return {
+        "netted": netted,
+        "factor": factor,
         "charged": charged,
         "beyond": beyond(case, site, used) if method == "regression" else None,
-        "until_midnight": taken_back(case, site, rows),
+        "until_midnight": back,
         "rows": rows,
         "days": days,
         "method": method,
