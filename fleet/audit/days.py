@@ -97,7 +97,8 @@ def _reasons(
     short = pool.sum(axis=1) < rule.minimum_days
     ways = ("event_days", "regression", "base_load")
     filled = np.isin(method.astype(str), ways) & (rule.when_too_few == "highest_event_days")
-    added = filled[:, None] & (told == "used") & (reason == "event_past")
+    # An event day that entered the pool may still be left out when the days are ranked.
+    added = filled[:, None] & np.isin(told.astype(str), ("used", "not_ranked")) & (reason == "event_past")
     short &= ~added.any(axis=1)
     score = made.sign * rank
     if rule.rank == "nearest_weather":

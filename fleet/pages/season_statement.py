@@ -47,7 +47,7 @@ def season_statement(home: Path) -> dict[str, str]:
     events = [_read(home, event_id) for event_id in settled]
     if not events:
         return {}
-    document = {
+    document: dict[str, Any] = {
         "currency": events[0].currency,
         "first_start": min(event.start for event in events).isoformat(),
         "last_start": max(event.start for event in events).isoformat(),
