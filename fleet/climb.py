@@ -22,7 +22,7 @@ WORKING: Final = 60_000
 """Candidates looked at once the whole fleet is, at most about."""
 COOLING: Final = 0.35
 COARSE: Final = 1.0
-FINE: Final = 1e-3
+FINE: Final = 3e-3
 """Smoothing at the start and at the end, as shares of the usual size of a candidate's cost."""
 AGAIN: Final = 0.02
 """Smoothing, of the same size, with which the whole fleet is taken up once coarse prices come from some sites."""
@@ -30,8 +30,8 @@ REPEATS: Final = 4
 WIDE: Final = 15.0
 """Candidates worse than their site's best by so many times the smoothing have no part in it (e^-15)."""
 STEPS: Final = 25
-ENOUGH: Final = 0.05
-"""A level ends where a step gains less than this share of its smoothing."""
+ENOUGH: Final = 5.0
+"""A level ends where a step of the whole fleet gains less than this many times its smoothing (of one site)."""
 MOST_TRIES: Final = 8
 
 

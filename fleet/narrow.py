@@ -6,12 +6,13 @@ counts too: every allocation that holds candidate c costs at least bound + regre
 c cannot be part of a better one. A smaller model's bound is never used.
 """
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from typing import Final
 
 import numpy as np
 
+from fleet.annealing import annealed
 from fleet.bound import Bound, Offers, Terms
 from fleet.choice import integer
 from fleet.effort import Effort
@@ -27,9 +28,14 @@ EACH: Final = 6
 """Candidates of a free site."""
 SPLIT: Final = 1e-6
 """A site whose candidates have shares between this and one less this is undecided in the relaxation."""
-NARROW_WORK: Final = (300, 300)
+NARROW_WORK: Final = (100, 150)
 WHOLE_WORK: Final = (3000, 900)
 """Nodes and checks of a model's solver."""
+FEW: Final = 400
+"""Candidates up to which the whole model comes straight after the prices: it ends at once."""
+NEAR_GAP: Final = 0.005
+"""A gap below which fleets of more than FEW candidates get neither annealing nor the whole model after narrow ones:
+that would take longer than all before it, for the last tenths of a percent."""
 
 
 @dataclass(frozen=True)
@@ -54,12 +60,13 @@ class Incumbent:
     def offer(self, chosen: Ints) -> None:
         """Takes an answer, brought within the limits, and what local moves make of it."""
         kept = repaired(self.offers, self.terms, chosen)
-        self._take(kept)
+        self.take(kept)
         if not self.effort.over:
             stop = self.effort.sooner(0.2).stop
-            self._take(improve(self.offers, self.terms, kept, self.order, self.coupled, stop))
+            self.take(improve(self.offers, self.terms, kept, self.order, self.coupled, stop))
 
-    def _take(self, chosen: Ints) -> None:
+    def take(self, chosen: Ints) -> None:
+        """Takes an answer as it is, where it is within the limits and better."""
         trial = score(self.offers, self.terms, chosen)
         better = trial.objective < self.score.objective - 1e-12
         if trial.keeps_limits and (better or not self.score.keeps_limits):
@@ -94,21 +101,43 @@ def solve(
 ) -> Found:
     """The best answer of narrow models, then of the whole one where it is small enough, until the gap is small."""
     best = Incumbent(offers, terms, searched, effort)
-    for start in (*known, rounded(offers, searched.x)):
-        best.offer(start)
+    few, tight = offers.site.size <= FEW, bool((searched.prices.importing > 0.0).any())
+
+    def lack() -> float:
+        return gap(best.score, best.chosen, gross, terms, max(searched.bound.value, bound_solver))
 
     def done() -> bool:
-        bound = max(searched.bound.value, bound_solver)
-        return gap(best.score, best.chosen, gross, terms, bound) <= target_gap or effort.over
+        return lack() <= target_gap or effort.over
 
-    money = 0.25 * target_gap
-    for step, free_sites in enumerate(FREE_SITES[: effort.models]):
-        if done() or (step > 0 and _whole(offers, searched, best).size <= WHOLE_MODEL // 2):
-            break
-        _narrow(best, searched, free_sites, money * float(gross[best.chosen].sum()), by_prices=step == 0)
-    if best.effort.whole and not done():
+    def anneal() -> None:
+        stop = effort.sooner(0.5).stop
+        best.offer(annealed(offers, terms, searched, gross, best.chosen, best.coupled, stop))
+
+    for start in (*known, rounded(offers, searched.x)):
+        if few or not tight:
+            best.offer(start)
+        else:
+            best.take(repaired(offers, terms, start))
+    if tight and not few and not done():
+        anneal()
+    elif not done():
+        _narrow_models(best, searched, gross, target_gap, done)
+        if not few and not effort.over and lack() > NEAR_GAP:
+            anneal()
+    if best.effort.whole and not done() and (few or lack() > NEAR_GAP):
         bound_solver = max(bound_solver, _whole_model(best, searched, gross, target_gap))
     return Found(best.chosen, best.score, bound_solver)
+
+
+def _narrow_models(
+    best: Incumbent, searched: Searched, gross: Floats, target_gap: float, done: Callable[[], bool]
+) -> None:
+    """Narrow models one after another, the first around the prices, the others around the best answer."""
+    for step, free_sites in enumerate(FREE_SITES[: best.effort.models]):
+        if done() or (step > 0 and _whole(best.offers, searched, best).size <= WHOLE_MODEL // 2):
+            break
+        money = 0.25 * target_gap * float(gross[best.chosen].sum())
+        _narrow(best, searched, free_sites, money, by_prices=step == 0)
 
 
 def _narrow(best: Incumbent, searched: Searched, count: int, money: float, by_prices: bool) -> None:
