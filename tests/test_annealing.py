@@ -16,10 +16,10 @@ from fleet.prices import can_bind, priced
 
 
 @cache
-def posed(sites=40, candidates=12, seed=3):
+def posed(sites=40, candidates=12, seed=3, tight=0.2):
     """A fleet below tight feeders: offers, terms, search, gross cost, a choice to start from, rows that can bind."""
     quotes = made_quotes(sites=sites, candidates=candidates, intervals=6, horizon=30, seed=seed)
-    case = Case(quotes, share=0.4, tight=0.5)
+    case = Case(quotes, share=0.4, tight=tight)
     found = case.run(target_gap=1.0)
     offers, terms = case.terms(found)
     searched = priced(offers, terms, STEADY)
@@ -51,11 +51,11 @@ def test_the_loops_running_sums_are_those_of_its_choice():
     """What the loop adds up move by move is what the choice comes to, worked out from nothing."""
     from fleet.annealing_loop import cool
 
-    _, offers, terms, searched, _, start, coupled = posed()
+    _, offers, terms, searched, _, start, coupled = posed(tight=0.05)
     layout = fleet.annealing._layout(offers, terms, searched, start, coupled)
     state, sums = fleet.annealing._state(offers, terms, layout, start)
     best = state[0].copy()
-    heat, weight = (20.0, 20.0), (1.0, 1.0)
+    heat, weight = (500.0, 500.0), (0.1, 0.1)
     cool(
         layout.event,
         layout.short_guess,
