@@ -26,6 +26,10 @@ class Effort:
         """Time is up; never where no moment is given."""
         return self.until is not None and self.stopwatch() >= self.until
 
+    def has(self, seconds: float) -> bool:
+        """So much time is left; always where no moment is given."""
+        return self.until is None or self.until - self.stopwatch() >= seconds
+
     def stop(self) -> bool:
         """The same, to be asked again and again."""
         return self.over

@@ -33,9 +33,12 @@ WHOLE_WORK: Final = (3000, 900)
 """Nodes and checks of a model's solver."""
 FEW: Final = 400
 """Candidates up to which the whole model comes straight after the prices: it ends at once."""
-NEAR_GAP: Final = 0.005
-"""A gap below which fleets of more than FEW candidates get neither annealing nor the whole model after narrow ones:
-that would take longer than all before it, for the last tenths of a percent."""
+NEAR: Final = 5.0
+EASY_MODEL: Final = 4000
+"""Within so many times the target gap neither annealing nor a whole model follows narrow ones, unless that model has
+few coefficients: it would take longer than all before it, for the last tenths of a percent."""
+COLD_SECONDS: Final = 12.0
+"""Annealing is left out where less time is left: the first time on a machine its loop has to be compiled."""
 
 
 @dataclass(frozen=True)
@@ -110,6 +113,8 @@ def solve(
         return lack() <= target_gap or effort.over
 
     def anneal() -> None:
+        if not effort.has(COLD_SECONDS):
+            return
         stop = effort.sooner(0.5).stop
         best.offer(annealed(offers, terms, searched, gross, best.chosen, best.coupled, stop))
 
@@ -118,13 +123,15 @@ def solve(
             best.offer(start)
         else:
             best.take(repaired(offers, terms, start))
-    if tight and not few and not done():
+    if tight and not few and not done() and effort.has(COLD_SECONDS):
         anneal()
     elif not done():
         _narrow_models(best, searched, gross, target_gap, done)
-        if not few and not effort.over and lack() > NEAR_GAP:
+        if not few and not effort.over and lack() > NEAR * target_gap:
             anneal()
-    if best.effort.whole and not done() and (few or lack() > NEAR_GAP):
+    rows = terms.request_kw.size + len(searched.rows)
+    easy = few or _whole(offers, searched, best).size * rows <= EASY_MODEL
+    if best.effort.whole and not done() and (easy or lack() > NEAR * target_gap):
         bound_solver = max(bound_solver, _whole_model(best, searched, gross, target_gap))
     return Found(best.chosen, best.score, bound_solver)
 
