@@ -12,9 +12,13 @@ from typing import Any, Final
 import numpy as np
 import pandas as pd
 
+from fleet import records
+from fleet.assemble import assemble
 from fleet.effects import Effect, Effects, effects
 from fleet.errors import FleetError, Problem
 from fleet.folder import FleetFolder, survey_folder
+from fleet.limits import COUNTED
+from fleet.plant_history import with_history
 from fleet.resolve import Assumption, Resolved, assumptions, resolve
 from fleet.settings import DefaultUsed, defaults_used
 from fleet.wall_time import local_text
@@ -26,6 +30,8 @@ _NEEDED: Final = {
 }
 """Tables without which a command cannot work."""
 _KEYS_SHOWN: Final = 5
+LOOKED_AHEAD: Final = np.timedelta64(36, "h")
+"""How far ahead of the plant meters' last reading a forecast is held against what loads were fitted to."""
 
 
 @dataclass(frozen=True)
@@ -69,12 +75,15 @@ def report(
         nothing = tuple(Ability(command, False, (_many(problems),)) for command in _NEEDED)
         return CheckReport(path, problems, (), (), (), nothing)
     assumed: tuple[Assumption, ...] = ()
+    notes, worth = list(folder.notes), None
+    abilities = tuple(_ability(command, folder, problems) for command in _NEEDED)
     if not problems:
         resolved = resolve(folder.frames, folder.settings)
         assumed = (*resolved.assumed, *_never_said(folder, resolved))
+    if abilities[0].is_ok:
+        assumed, told = _by_plant_meters(folder, assumed)
+        notes += told
     defaults = tuple(defaults_used(folder.settings))
-    abilities = tuple(_ability(command, folder, problems) for command in _NEEDED)
-    notes, worth = folder.notes, None
     if with_effects and abilities[0].is_ok:
         try:
             worth = effects(folder, progress)
@@ -171,6 +180,37 @@ def _never_said(folder: FleetFolder, resolved: Resolved) -> list[Assumption]:
         *assumptions("loads", no_rest, "rest_kw", np.zeros(len(no_rest)), "no row"),
         *assumptions("status", unread, "inventory_kwh_th", np.full(len(unread), course), "no reading"),
     ]
+
+
+def _by_plant_meters(
+    folder: FleetFolder, assumed: tuple[Assumption, ...]
+) -> tuple[tuple[Assumption, ...], list[str]]:
+    """What is assumed, and what is told, as plant meters' past changes both: as for a quote at their last reading."""
+    meters, frames = folder.frames["meters"], folder.frames
+    roles = frames["meter_map"]
+    own = meters["meter_id"].isin(roles.loc[roles["role"] == "plant", "meter_id"])
+    if not own.any():
+        return assumed, []
+    step = np.timedelta64(folder.settings.interval_minutes, "m")
+    at = meters.loc[own, "interval_start"].max().tz_convert("UTC").tz_localize(None).to_datetime64() + step
+    covered = _common_span(
+        [frames[name] for name in ("weather", "tariffs", "loads") if not frames[name].empty]
+    )
+    until = covered[1].tz_localize(None).to_datetime64() if covered is not None else at
+    if until - at < np.timedelta64(1, "h"):
+        zone = folder.settings.timezone
+        return assumed, [
+            f"plant meters are not looked at: weather or tariffs end before {local_text(at, zone)}"
+        ]
+    past = records.events(folder.path)
+    try:
+        bare = assemble(folder, at, min(until, at + LOOKED_AHEAD))
+        fleet = with_history(folder, bare, past[past["purpose"].isin(COUNTED)])
+    except FleetError as error:
+        return assumed, [f"plant meters are not looked at: {error}".split("\n")[0]]
+    said = {(one.table, one.key, one.column): one for one in fleet.assumed if one not in bare.assumed}
+    changed = [said.pop((one.table, one.key, one.column), one) for one in assumed]
+    return (*changed, *said.values()), [note for note in fleet.notes if note not in bare.notes]
 
 
 def _section(title: str, entries: Iterable[str]) -> list[str]:

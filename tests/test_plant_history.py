@@ -12,6 +12,7 @@ from demo_fleet.calendar import EVENT_DAY
 from fleet import plant_history, records
 from fleet.assemble import Fleet, assemble
 from fleet.folder import FleetFolder, open_folder
+from fleet.past_days import read_past
 from sites.past import YARDSTICK_CV
 
 START = np.datetime64(f"{EVENT_DAY}T10:00", "us")
@@ -68,9 +69,9 @@ def test_only_sites_with_a_plant_meter_change_and_each_change_is_marked_fitted()
 
 
 def test_usual_operation_comes_nearer_to_the_meters() -> None:
-    past = plant_history._past(folder(), plain(), records.events(folder().path))
+    past = read_past(folder(), plain(), records.events(folder().path))
     assert past is not None
-    match, rows = plant_history._match(plain(), past)
+    match, rows = plant_history._match(plain(), past.whole_days)
     assert len(rows) >= 3
     fitted = match.efficiency != 1.0
     assert (match.corrected_cv_rmse[fitted] < match.cv_rmse[fitted]).all()
