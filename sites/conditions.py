@@ -106,10 +106,11 @@ def _occupied(roster: Roster, outlook: Outlook) -> Bools:
 
 def level_kw_th(roster: Roster, outlook: Outlook, first: int = 0) -> Floats:
     """Flat rate (site,) over the 24 h from interval `first` on, one whole cycle of the load (Energy Management Handbook
-    ch. 19: day's ton-hours / 24); zero for other strategies."""
+    ch. 19: day's ton-hours / 24), and the standing loss; zero for other strategies, and where there is no load at
+    all: no machine and no pump runs for a tank's loss alone."""
     day = min(outlook.clock.count, round(24.0 / outlook.clock.step_h))
     mean = outlook.cooling_load_kw_th[:, first : first + day].mean(axis=1)
     tanks = roster.tanks
     loss = (tanks.capacity_kwh_th * tanks.loss_fraction_per_h).sum(axis=1)
     levelling = roster.buildings.strategy == STRATEGIES.index("load_levelling")
-    return np.where(levelling, mean + loss, 0.0)
+    return np.where(levelling & (mean > 0.0), mean + loss, 0.0)

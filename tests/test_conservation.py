@@ -11,11 +11,13 @@ from itertools import product
 import numpy as np
 import pytest
 from made_sites import made_outlook, made_roster, made_standing
+from test_quote import made_terms
 
 from sites.candidate import Stages
 from sites.course import Course, course
 from sites.ground import Ground, ground
 from sites.plant import at_rest, simulate
+from sites.quote import Quoted, detail, quote
 from sites.roster import ICE_KINDS, LAYOUTS, STRATEGIES, TANK_KINDS, Roster
 from sites.rows import plants
 
@@ -143,3 +145,67 @@ def test_a_loss_free_water_tank_of_equal_limits_mirrors_charge_and_discharge() -
         full, empty = full - out * STEP_H, empty + into * STEP_H
         moved += float(out.sum()) * STEP_H
     assert moved == pytest.approx(1000.0)
+
+
+@cache
+def costed(flat_price: bool) -> Quoted:
+    """Quotes of every plant; flat: one price, weather and COP at any load, no loss, unmet load, auxiliary or fee."""
+    roster = every_roster()
+    buildings, chillers = roster.buildings, roster.chillers
+    outlook = made_outlook(roster)
+    if flat_price:
+        none, machines = np.zeros(len(CASES)), np.zeros_like(chillers.dedicated_aux_kw)
+        money = {name: none for name in ("call_fee", "demand_price_per_kw", "shared_aux_kw", "tank_pump_kw")}
+        roster = Roster(
+            replace(buildings, **money, no_unmet=np.ones(len(CASES), dtype=np.bool_)),
+            replace(chillers, dedicated_aux_kw=machines),
+            replace(roster.tanks, loss_fraction_per_h=np.zeros_like(roster.tanks.loss_fraction_per_h)),
+        )
+        outlook = replace(
+            outlook, price_per_kwh=np.full_like(outlook.price_per_kwh, 0.1),
+            dry_bulb_c=np.full_like(outlook.dry_bulb_c, 35.0),
+            cooling_load_kw_th=0.75 * outlook.cooling_load_kw_th,
+        )  # fmt: skip
+    return quote(ground(roster, outlook, made_standing(roster, 0.7)), made_terms(len(CASES)))
+
+
+def test_at_flat_prices_and_one_cop_no_plant_that_charges_with_its_usual_water_pays_for_a_shed() -> None:
+    """Screw machines draw in proportion to their load: what is not made now is made later at the same COP and price.
+
+    A tank that ends above its usual level (it was charged because of the event, where usually it was full enough) is
+    not paid for that: such a shed costs just what the more is worth. Ice is made at a worse COP, so there a shed costs
+    something; never less than nothing.
+    """
+    found = costed(flat_price=True)
+    quotes = found.quotes
+    gross = np.abs(quotes.change_kw).sum(axis=1) * STEP_H * 0.1
+    water = np.array([kind not in ICE_KINDS for _, kind, _ in CASES])[quotes.site]
+    assert {CASES[site][0] for site in quotes.site[water]} >= {"storage_priority", "load_levelling"}
+    assert gross.min() > 1.0
+    assert quotes.unmet_kwh_th.max() == 0.0
+    more = detail(found, np.arange(len(gross))).inventory_kwh_th[:, :, -1].sum(axis=1)
+    more = np.maximum(more - found.ground.usual.inventory_kwh_th[quotes.site, :, -1].sum(axis=1), 0.0)
+    assert more[water].max() < 0.035 * 2000.0
+    unpaid = quotes.net_cost - more * quotes.end_lack_price_per_kwh_th
+    np.testing.assert_allclose((unpaid / gross)[water], 0.0, atol=1e-9)
+    assert (quotes.net_cost / gross)[~water].min() > -1e-9
+    assert (quotes.net_cost / gross)[~water].max() > 0.05
+
+
+@pytest.mark.parametrize("interval", [14, 60])
+def test_the_price_gradient_of_every_plants_cost_is_its_change_in_energy(interval: int) -> None:
+    """d(net cost) / d(price of an interval) = change_kw dt, and the dispatch is the same at other prices."""
+    one = costed(flat_price=False)
+    base = one.ground
+    raised = base.outlook.price_per_kwh.copy()
+    raised[:, interval] += 0.01
+    dearer = replace(base, outlook=replace(base.outlook, price_per_kwh=raised))
+    two = quote(dearer, made_terms(len(CASES))).quotes
+    np.testing.assert_array_equal(two.change_kw, one.quotes.change_kw)
+    whole = one.quotes.end_lack_kwh_th == 0.0
+    assert whole.sum() > 100
+    np.testing.assert_allclose(
+        (two.net_cost - one.quotes.net_cost)[whole],
+        0.01 * one.quotes.change_kw[whole, interval] * STEP_H,
+        atol=1e-9,
+    )

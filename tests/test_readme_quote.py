@@ -135,8 +135,23 @@ def test_figures_in_the_words_below_stand_in_the_blocks() -> None:
     words = (
         README.split("## A quote, line by line")[1].split("```text\n")[1].split("```")[1].split("\n## ")[0]
     )
-    every = {value for site in SITES for value in numbers(shown(site))} | {3.18, 0.06, 0.10}
+    every = {abs(value) for site in SITES for value in numbers(shown(site))} | {3.18, 0.06, 0.10, 0.235}
     told = numbers(words)
     assert len(told) > 15
     assert set(told) <= every
     assert pytest.approx(3.18, abs=0.005) == 489.6 / 154.0
+    assert pytest.approx(59.68, abs=0.05) == 597.0 * 0.10
+
+
+def test_what_is_saved_and_what_the_refill_costs_follow_from_the_tariff(surveyed: Survey) -> None:
+    tariff = rows("hotel-03", "sites", surveyed)["tariff_id"].iloc[0]
+    prices = surveyed.folder.frames["tariffs"]
+    prices = prices[prices["tariff_id"] == tariff].set_index("interval_start")["price_per_kwh"]
+    assert (prices["2026-07-15T13:00Z":"2026-07-15T15:00Z"] == 0.235).all()  # type: ignore[misc]
+    *_, energy = line("hotel-03", "  shed ")
+    before, saved, refill, *_ = line("hotel-03", "  cost ")
+    (more,) = line("hotel-03", "  recovery ")
+    assert before == 0.0
+    assert -saved == pytest.approx(energy * 0.235, abs=0.05)
+    # Between all of it at the night price and all at the evening's.
+    assert more * 0.085 < refill < 0.5 * more * (0.085 + 0.235)

@@ -190,3 +190,13 @@ def test_a_last_remnant_never_goes_faster_than_it_is_there(kind):
                 )
                 most = tank.most_discharge_kw_th(now, loss, part.capacity_kwh_th, knots, step_h)
                 assert 0.0 <= most[0, 0] <= (now - loss * step_h)[0, 0] / step_h + 1e-12
+
+
+@every_way
+@every_kind
+def test_no_flow_gives_and_takes_nothing(kind, way):
+    # A stopped pump: the limit of pump and exchanger is 0, whatever the tank could do.
+    part = tanks(kind, capacity=CAPACITY, loss=0.0, discharge_limit_kw_th=0.0, charge_limit_kw_th=0.0)
+    inventory, rate, _, _ = run(part, way, 0.25, 0.5)
+    assert (rate == 0.0).all()
+    assert (inventory == 0.5 * CAPACITY).all()
