@@ -21,14 +21,11 @@ def read_levels(status: pd.DataFrame, site_id: Strings, tank_id: Strings) -> pd.
     units = pd.MultiIndex.from_arrays([np.repeat(site_id, tank_id.shape[1]), tank_id.ravel()])
     # Padding has an id of its own kind, ("site", ""), which no row names; of doubles the first stands.
     first = ~units.duplicated()
-    place = np.flatnonzero(first)[
-        units[first].get_indexer(pd.MultiIndex.from_arrays([rows["site_id"], rows["unit_id"]]))
-    ]
-    found = units[first].get_indexer(pd.MultiIndex.from_arrays([rows["site_id"], rows["unit_id"]])) >= 0
+    row_unit = units[first].get_indexer(pd.MultiIndex.from_arrays([rows["site_id"], rows["unit_id"]]))
     times = rows["time"].dt.tz_convert("UTC").dt.tz_localize(None).to_numpy().astype("datetime64[us]")
     frame = pd.DataFrame(
         {
-            "unit": place,
+            "unit": np.flatnonzero(first)[row_unit],
             "time": times.astype(np.int64),
             **{
                 name: rows[column].to_numpy(dtype=np.float64, na_value=np.nan)
@@ -39,7 +36,7 @@ def read_levels(status: pd.DataFrame, site_id: Strings, tank_id: Strings) -> pd.
                 )
             },
         }
-    )[found]
+    )[row_unit >= 0]
     return frame.sort_values(["unit", "time"], kind="stable").drop_duplicates(["unit", "time"], keep="last")
 
 

@@ -20,6 +20,7 @@ from fleet.wall_time import local_text
 from sites.balance import LONGEST_H, Reckoned, reckon, unused
 from sites.clock import Clock
 from sites.conditions import Conditions, conditions
+from sites.outlook import Outlook
 from sites.roster import STRATEGIES, Roster, Standing
 from sites.units import Bools, Floats, Ints
 
@@ -110,9 +111,9 @@ def _named(reasons: dict[str, str]) -> str:
     )
 
 
-def _here(roster: Roster, outlook: object, ready: Standing, load: Floats) -> Conditions:
+def _here(roster: Roster, outlook: Outlook, ready: Standing, load: Floats) -> Conditions:
     """Conditions of the past's hours; load levelling runs at the mean of all that is known."""
-    here = conditions(roster, outlook, ready)  # type: ignore[arg-type]
+    here = conditions(roster, outlook, ready)
     tanks = roster.tanks
     mean = np.where(np.isfinite(load), load, 0.0).sum(axis=1) / np.maximum(np.isfinite(load).sum(axis=1), 1)
     rate = mean + (tanks.capacity_kwh_th * tanks.loss_fraction_per_h * tanks.exists).sum(axis=1)
