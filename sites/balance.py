@@ -18,7 +18,7 @@ from sites.units import Bools, Floats, Ints, total
 HALVINGS: Final = 14
 """Halvings of what is looked for: to a sixteen-thousandth of a plant's capacity."""
 FULL_FRACTION: Final = 0.985
-FULL_SPREAD_FRACTION: Final = 0.02
+FULL_SPREAD_FRACTION: Final = 0.04
 """Level of a tank whose plant has stopped charging by itself, and half its width (common practice, no source)."""
 IDLE_SHARE: Final = 0.12
 """Within this share of the load's own power a plant is taken to serve the load alone, tanks at rest: loads are
@@ -34,7 +34,7 @@ MOST_CORRECTED: Final = 0.25
 """Hours at rest that a plant's efficiency is read from, and how far from 1 it may be read."""
 LEAST_CYCLES: Final = 3
 """Times from full to full from which a loss, and the balance's own scatter, are read."""
-LEAST_SPREAD: Final = 0.03
+LEAST_SPREAD: Final = 0.05
 USUAL_SPREAD: Final = 0.10
 """Half width of a balance as a share of what went in and out: at least, and where too few cycles tell it (common
 practice for plant meters and load forecasts, no source)."""
