@@ -18,6 +18,7 @@ from fleet.errors import FleetError
 from fleet.folder import FleetFolder, open_folder
 from fleet.plant_history import with_history
 from fleet.wall_time import local_day, local_day_start, on_grid, up_to_grid, utc_timestamp
+from sites import compiled
 from sites.blocks import Terms
 from sites.candidate import Stages
 from sites.direction import Direction
@@ -97,7 +98,8 @@ def survey(
     terms = limits.terms(
         resolved, eligible, clock, ask.at, (clock.index(ask.event_from), clock.index(ask.event_to))
     )
-    progress(f"quoting {fleet.roster.count} sites")
+    first = "" if compiled.is_kept() else ", compiling the plant model, once"
+    progress(f"quoting {fleet.roster.count} sites{first}")
     base = ground(fleet.roster, fleet.outlook, fleet.standing, _in_force(path, fleet, past, start))
     quoted = quote(base, terms, ask.direction)
     headroom = network.headroom_kw(tree, _building_kw(base))

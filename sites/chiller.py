@@ -9,6 +9,7 @@ from typing import Final
 
 import numpy as np
 
+from sites.compiled import Number, choose, larger, shared, smaller
 from sites.errors import SitesError
 from sites.roster import CHILLER_KINDS, Chillers, kind_is
 from sites.units import Bools, FloatLike, Floats, Ints
@@ -158,15 +159,31 @@ def part_load_power_kw(
     P(plr_min) plr / plr_min; 0 at zero load and where nothing is available. A load above what is available
     is the caller's fault: the curve is carried on, not clipped.
     """
-    sets = [(s.eir_part_load, sum(s.eir_part_load), s.plr_min) for s in CURVE_SETS]
-    c1, c2, c3, plr_min = np.array([(*(c / total for c in curve), low) for curve, total, low in sets]).T
-    shape = np.broadcast_shapes(np.shape(load_kw_th), np.shape(available_kw_th))
-    plr = np.divide(load_kw_th, available_kw_th, out=np.zeros(shape), where=np.asarray(available_kw_th) > 0.0)
-    low = plr_min[kind]
-    running = np.maximum(plr, low)
-    eir = c1[kind] + running * (c2[kind] + running * c3[kind])
-    power: Floats = full_load_kw * eir * np.minimum(plr / low, 1.0)
-    return power
+    c1, c2, c3, plr_min = np.moveaxis(part_load_curves()[kind], -1, 0)
+    return np.asarray(curve_power_kw(load_kw_th, available_kw_th, full_load_kw, c1, c2, c3, plr_min))
+
+
+@shared
+def curve_power_kw(
+    load_kw_th: Number,
+    available_kw_th: Number,
+    full_load_kw: Number,
+    c1: Number,
+    c2: Number,
+    c3: Number,
+    plr_min: Number,
+) -> Number:
+    """`part_load_power_kw` with the machine's own curve, EIRPLR(plr) = c1 + c2 plr + c3 plr^2 and 1 at full load."""
+    some = available_kw_th > 0.0
+    plr = choose(some, load_kw_th, 0.0) / choose(some, available_kw_th, 1.0)
+    running = larger(plr, plr_min)
+    return full_load_kw * (c1 + running * (c2 + running * c3)) * smaller(plr / plr_min, 1.0)
+
+
+def part_load_curves() -> Floats:
+    """c1, c2, c3 of EIRPLR, 1 at full load, and plr_min, (kind, 4)."""
+    rows = [[*(c / sum(s.eir_part_load) for c in s.eir_part_load), s.plr_min] for s in CURVE_SETS]
+    return np.array(rows)
 
 
 def _curves(kind: Ints, x: Floats, y: Floats) -> tuple[Floats, Floats]:

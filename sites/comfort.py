@@ -11,6 +11,7 @@ from typing import Final
 
 import numpy as np
 
+from sites.compiled import Number, shared
 from sites.errors import SitesError
 from sites.roster import Buildings, Rows
 from sites.units import Bools, Floats
@@ -84,18 +85,38 @@ def advance(zone: TwoNode, air_k: Floats, mass_k: Floats, net_kw_th: Floats) -> 
     net dt = C_a d(air) + C_m d(mass) + H mean dt.
     """
     step, gain, mean = zone.transition, zone.gain_k_per_kw, zone.mean_air
-    air_end = step[:, 0, 0] * air_k + step[:, 0, 1] * mass_k + gain[:, 0] * net_kw_th
-    mass_end = step[:, 1, 0] * air_k + step[:, 1, 1] * mass_k + gain[:, 1] * net_kw_th
-    air_mean = mean[:, 0] * air_k + mean[:, 1] * mass_k + zone.mean_air_gain_k_per_kw * net_kw_th
-    return air_end, mass_end, air_mean
+    return (
+        after_k(step[:, 0, 0], step[:, 0, 1], gain[:, 0], air_k, mass_k, net_kw_th),
+        after_k(step[:, 1, 0], step[:, 1, 1], gain[:, 1], air_k, mass_k, net_kw_th),
+        after_k(mean[:, 0], mean[:, 1], zone.mean_air_gain_k_per_kw, air_k, mass_k, net_kw_th),
+    )
+
+
+@shared
+def after_k(
+    of_air: Number, of_mass: Number, gain_k_per_kw: Number, air_k: Number, mass_k: Number, net_kw_th: Number
+) -> Number:
+    """One of `advance`'s three answers: of_air air + of_mass mass + gain net, K."""
+    return of_air * air_k + of_mass * mass_k + gain_k_per_kw * net_kw_th
 
 
 def net_for_air(zone: TwoNode, air_k: Floats, mass_k: Floats, target_air_k: Floats) -> Floats:
     """The steady net kW_th (row,) that brings the air node to `target_air_k` at the step's end."""
-    step = zone.transition
-    free_k = step[:, 0, 0] * air_k + step[:, 0, 1] * mass_k
-    net: Floats = (target_air_k - free_k) / zone.gain_k_per_kw[:, 0]
-    return net
+    step, gain = zone.transition, zone.gain_k_per_kw
+    return np.asarray(net_kw_th(step[:, 0, 0], step[:, 0, 1], gain[:, 0], air_k, mass_k, target_air_k))
+
+
+@shared
+def net_kw_th(
+    of_air: Number,
+    of_mass: Number,
+    gain_k_per_kw: Number,
+    air_k: Number,
+    mass_k: Number,
+    target_air_k: Number,
+) -> Number:
+    """`net_for_air`, (target - of_air air - of_mass mass) / gain."""
+    return (target_air_k - (of_air * air_k + of_mass * mass_k)) / gain_k_per_kw
 
 
 def drift_excess_k(rise_k: Floats, counted: Bools, step_h: float) -> Floats:

@@ -3,7 +3,8 @@
 import numpy as np
 
 from sites.chiller import part_load_power_kw
-from sites.units import Bools, Floats, Ints, total
+from sites.compiled import Number, choose, shared
+from sites.units import Floats, Ints
 
 
 def staged_load_kw_th(demand_kw_th: Floats, capacity_kw_th: Floats, stage_up_fraction: Floats) -> Floats:
@@ -13,13 +14,29 @@ def staged_load_kw_th(demand_kw_th: Floats, capacity_kw_th: Floats, stage_up_fra
     capacity of those before it. Those that run share the demand at equal part load (common practice, no
     source). Demand must not exceed the sum of capacities.
     """
-    before = np.cumsum(capacity_kw_th, axis=1) - capacity_kw_th
-    demand = demand_kw_th[:, None]
-    on: Bools = (capacity_kw_th > 0.0) & (demand > stage_up_fraction[:, None] * before) & (demand > 0.0)
-    running = np.where(on, capacity_kw_th, 0.0)
-    capacity = total(running)
-    share = np.divide(demand_kw_th, capacity, out=np.zeros_like(capacity), where=capacity > 0.0)
-    return running * share[:, None]
+    load = np.zeros(capacity_kw_th.shape[::-1])
+    if len(load):
+        share_load(demand_kw_th, capacity_kw_th.T, stage_up_fraction, load)
+    return load.T
+
+
+@shared
+def share_load(
+    demand_kw_th: Number, capacity_kw_th: Number, stage_up_fraction: Number, load_kw_th: Number
+) -> None:
+    """`staged_load_kw_th` written into `load_kw_th`, (machine, ...) as the capacity is; there must be a machine."""
+    before = 0.0 * capacity_kw_th[0]
+    running = 0.0 * capacity_kw_th[0]
+    for m in range(len(capacity_kw_th)):
+        capacity = capacity_kw_th[m]
+        on = (capacity > 0.0) & (demand_kw_th > stage_up_fraction * before) & (demand_kw_th > 0.0)
+        load_kw_th[m] = choose(on, capacity, 0.0)
+        before = before + capacity
+        running = running + load_kw_th[m]
+    some = running > 0.0
+    share = choose(some, demand_kw_th, 0.0) / choose(some, running, 1.0)
+    for m in range(len(capacity_kw_th)):
+        load_kw_th[m] = load_kw_th[m] * share
 
 
 def plant_power_kw(

@@ -6,12 +6,12 @@ import numpy as np
 
 from sites.candidate import Stages, no_stages
 from sites.conditions import Conditions, conditions, level_kw_th
-from sites.course import Course, course
+from sites.course import Course
 from sites.dispatch import plant_power_kw, staged_load_kw_th
 from sites.outlook import Outlook
 from sites.plant import at_rest, simulate
 from sites.roster import Roster, Standing
-from sites.rows import plants
+from sites.rows import Plants, plants
 from sites.units import Floats, total
 
 STAGE_BAND = 0.03
@@ -26,6 +26,8 @@ class Ground:
     outlook: Outlook
     standing: Standing
     here: Conditions
+    plants: Plants
+    """One row a site; `pick` takes candidates"""
     usual: Course
     usual_low: Course
     overstated_kw: Floats
@@ -43,13 +45,15 @@ def ground(roster: Roster, outlook: Outlook, standing: Standing, in_force: Stage
     here = conditions(roster, outlook, standing)
     machines = roster.chillers.exists.shape[1]
     stages = in_force if in_force is not None else no_stages(roster.count, machines)
+    rows = plants(roster, here, standing.tank_available, np.arange(roster.count))
     usual, low = (
-        _usual(roster, here, standing, stages, start) for start in (standing.best_kwh_th, standing.low_kwh_th)
+        simulate(rows, here, stages, at_rest(start), None)
+        for start in (standing.best_kwh_th, standing.low_kwh_th)
     )
     overstated = _by_tank_kw(here, usual) + _by_staging_kw(roster, here, usual)
     overheld = np.cumsum(_withheld_kw_th(here, usual), axis=1) * here.step_h
     overheld = np.pad(overheld, ((0, 0), (1, 0)))[:, :-1]
-    return Ground(roster, outlook, standing, here, usual, low, overstated, overheld, stages)
+    return Ground(roster, outlook, standing, here, rows, usual, low, overstated, overheld, stages)
 
 
 def usual_course(roster: Roster, outlook: Outlook, standing: Standing, level_from: int = 0) -> Course:
@@ -58,17 +62,13 @@ def usual_course(roster: Roster, outlook: Outlook, standing: Standing, level_fro
     none = no_stages(roster.count, roster.chillers.exists.shape[1])
     here = conditions(roster, outlook, standing)
     here = replace(here, level_kw_th=level_kw_th(roster, outlook, level_from))
-    return _usual(roster, here, standing, none, standing.best_kwh_th)
+    rows = plants(roster, here, standing.tank_available, np.arange(roster.count))
+    return simulate(rows, here, none, at_rest(standing.best_kwh_th), None)
 
 
 def usual_high(base: Ground) -> Course:
     """The usual case from the high inventory, which an absorb is held against."""
-    return _usual(base.roster, base.here, base.standing, base.in_force, base.standing.high_kwh_th)
-
-
-def _usual(roster: Roster, here: Conditions, standing: Standing, stages: Stages, start: Floats) -> Course:
-    rows = plants(roster, here, standing.tank_available, np.arange(roster.count))
-    return course(simulate(rows, here, stages, at_rest(start), None))
+    return simulate(base.plants, base.here, base.in_force, at_rest(base.standing.high_kwh_th), None)
 
 
 def _withheld_kw_th(here: Conditions, usual: Course) -> Floats:

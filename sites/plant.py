@@ -1,27 +1,33 @@
 """One plant through a horizon: usual operation, and the same plant with machines held off or limited.
 
 Usual operation is derived from the strategy, never declared; an event row is the same plant with stages laid
-over it. `simulate` loops over intervals only; every row (a site, or one candidate of a site) moves at once.
-What is kept of each interval is the caller's choice (course.py keeps all, quote.py keeps sums).
+over it. `advance` moves one row over one interval, inside a compiled loop over rows: here the one that keeps all
+(`simulate`), in trial.py the one that keeps sums. A row's records stay near the processor for its whole horizon.
 
 Order within an interval: standing loss; which machines may run and how far; tank to load and chillers to
 load; pull-down of a warm zone; charging; zone; machine loading and power. Rates of a tank are held to its
 limit at the END-of-interval inventory.
 """
 
-from collections.abc import Iterator
 from dataclasses import dataclass
+from math import exp, inf
+from typing import Any, Final
 
 import numpy as np
 
-from sites import comfort, storage, tank
+from sites import storage
 from sites.candidate import Stages
+from sites.comfort import after_k, net_kw_th
+from sites.compiled import Number, cores, each, inner, loop
 from sites.conditions import Conditions
-from sites.making import Task, make_within
-from sites.recovery import CAPPED, USUAL, cap_kw
+from sites.course import MADE, NOW, STORED, Course, Usual, course
+from sites.making import DIRECT, WORK_ROWS, make_within
+from sites.recovery import CAPPED, USUAL
 from sites.roster import STRATEGIES, Rows
-from sites.rows import Plants
-from sites.units import Bools, Floats, total
+from sites.rows import USUAL as USUAL_HOUR
+from sites.rows import Plants, usual_hours
+from sites.tank import KNOT_SOC
+from sites.units import AnyArray, Bools, Floats
 
 START_CHARGE_BELOW = 0.95
 """Usual charging starts below this share of capacity and goes on to STOP_CHARGE_AT,
@@ -32,59 +38,22 @@ PULL_DOWN_H = 1.0
 (Xu, Haves, Piette, Braun 2004 recommend a ramp; its length is common practice, no source)."""
 SETTLED_K = 0.02
 """Rise below which the zone is brought back at once."""
+APART_FRACTION = 1e-3
+"""Share of capacity by which tanks must differ from the usual case's to be held ahead of it or behind."""
 
 _FULL, _LEVEL, _CHILLER_FIRST, _STORAGE_FIRST = range(len(STRATEGIES))
 
-
-@dataclass(frozen=True)
-class Usual:
-    """What an event row is measured against, per site: unmet and inventory of the usual case."""
-
-    unmet_kw_th: Floats
-    """(site, interval)"""
-    inventory_kwh_th: Floats
-    """(site, tank, interval), end of interval"""
-    charge_kw_th: Floats
-    """(site, interval) all tanks together"""
-    power_kw: Floats
-    """(site, interval)"""
-
-
-@dataclass(frozen=True)
-class Moment:
-    """One interval of every row; (row,), (row, machine) or (row, tank)."""
-
-    interval: int
-    staged: Bools
-    limit_fraction: Floats
-    direct_kw_th: Floats
-    """(row, machine) straight to load"""
-    into_tank_kw_th: Floats
-    """(row, machine) into tanks"""
-    making_ice: Bools
-    machine_kw: Floats
-    power_kw: Floats
-    charge_kw_th: Floats
-    discharge_kw_th: Floats
-    loss_kw_th: Floats
-    inventory_start_kwh_th: Floats
-    inventory_kwh_th: Floats
-    discharge_limit_kw_th: Floats
-    lmtd_k: Floats
-    wanted_kw_th: Floats
-    """(row,) what the load asked of the tanks before their limits"""
-    spare_direct_kw_th: Floats
-    """(row,) capacity left on machines that may run, the largest machine's loss not counted"""
-    firm_kw_th: Floats
-    """(row,) what could be served with the largest running machine lost: other machines and tanks"""
-    load_kw_th: Floats
-    unmet_kw_th: Floats
-    pull_down_kw_th: Floats
-    air_rise_k: Floats
-    mass_rise_k: Floats
-    air_mean_rise_k: Floats
-    charging: Bools
-    """(row,) still in charging mode at the interval's end"""
+ROW: Final = np.dtype(
+    [
+        *((name, "i8") for name in ("site", "recovery", "recover_from", "start", "end")),
+        *((name, "f8") for name in ("air_k", "mass_k")),
+        ("charging", "?"),
+        ("from_above", "?"),
+    ],
+    align=True,
+)
+"""One row to be run: its site, recovery and window, and where it stands between two intervals: rise of air and mass,
+charging mode. from_above: its tanks come back to the usual case's level from above, after an absorb."""
 
 
 @dataclass(frozen=True)
@@ -104,228 +73,269 @@ def at_rest(inventory_kwh_th: Floats, charging: Bools | None = None) -> State:
     return State(inventory_kwh_th, mode, np.zeros(count), np.zeros(count))
 
 
-def state_after(moment: Moment) -> State:
-    """Where rows stand at the end of an interval, to be carried on from."""
-    return State(moment.inventory_kwh_th, moment.charging, moment.air_rise_k, moment.mass_rise_k)
+def records_of(rows: Plants, state: State) -> AnyArray:
+    """ROW (row,) of rows that stand as `state` says, with no window."""
+    records = np.zeros(len(rows.site), dtype=ROW)
+    for name, values in (
+        ("site", rows.site),
+        ("recovery", rows.recovery),
+        ("recover_from", rows.recover_from),
+        ("air_k", state.air_k),
+        ("mass_k", state.mass_k),
+        ("charging", state.charging),
+    ):
+        records[name] = values
+    return records
 
 
-def simulate(
-    rows: Plants,
-    here: Conditions,
-    stages: Stages,
-    state: State,
-    usual: Usual | None,
-    first: int = 0,
-    last: int | None = None,
-) -> Iterator[Moment]:
-    """Run every row from `state` over the intervals [first, last) of the horizon (last None: to its end); yields
-    one Moment an interval. `usual` None means that these rows are the usual case.
-    """
-    series = storage.behind(rows)
-    room_kw = _room_kw(rows, here, usual)
-    for interval in range(first, here.load_kw_th.shape[1] if last is None else last):
-        moment = _advance(rows, series, here, stages, usual, state, room_kw, interval)
-        state = state_after(moment)
-        yield moment
+def laid(stages: Stages) -> tuple[AnyArray, ...]:
+    """Start, end (row, stage), limits (row, stage, machine) and charge (row, stage) as a loop takes them."""
+    types = ((stages.start, np.int64), (stages.end, np.int64), (stages.load_limit_fraction, np.float64))
+    return (
+        *(np.ascontiguousarray(values, dtype=kind) for values, kind in types),
+        np.ascontiguousarray(stages.charge, dtype=np.bool_),
+    )
 
 
-def _advance(
-    rows: Plants,
-    series: storage.Behind,
-    here: Conditions,
-    stages: Stages,
-    usual: Usual | None,
-    state: State,
-    room_kw: Floats,
+def room(rows: Plants) -> tuple[Floats, Floats]:
+    """Room to work in for one thread: (tank, knot) and (WORK_ROWS, machine)."""
+    return np.zeros((rows.tanks.shape[1], len(KNOT_SOC))), np.zeros((WORK_ROWS, rows.machines.shape[1]))
+
+
+def simulate(rows: Plants, here: Conditions, stages: Stages, state: State, usual: Usual | None) -> Course:
+    """Run every row from `state` over the horizon. `usual` None means that these rows are the usual case."""
+    count, intervals = len(rows.site), rows.hours.shape[1]
+    now = np.zeros((count, intervals), dtype=NOW)
+    made = np.zeros((count, intervals, rows.machines.shape[1]), dtype=MADE)
+    made["limit_fraction"] = 1.0
+    stored = np.zeros((count, intervals, rows.tanks.shape[1]), dtype=STORED)
+    inventory = np.ascontiguousarray(state.inventory_kwh_th, dtype=np.float64).copy()
+    hours = np.zeros((1, 1), dtype=USUAL_HOUR)
+    if usual is not None:
+        parts = (usual.unmet_kw_th, usual.inventory_kwh_th, usual.charge_kw_th, usual.power_kw)
+        hours = usual_hours(rows, here, *parts)
+    fixed = (rows.sites, rows.machines, rows.tanks, rows.hours, rows.able, hours)
+    moving = (records_of(rows, state), *laid(stages), inventory, now, made, stored)
+    edges = np.linspace(0, count, cores() + 1).astype(np.int64)
+
+    def part(i: int) -> None:
+        _keep(edges[i], edges[i + 1], rows.step_h, usual is not None, *fixed, *moving, *room(rows))
+
+    each(part, len(edges) - 1)
+    return course(now, made, stored)
+
+
+@loop
+def _keep(
+    first_row: int,
+    last_row: int,
+    step_h: float,
+    event: bool,
+    sites: Any,
+    machines: Any,
+    tanks: Any,
+    hours: Any,
+    able: Any,
+    usual: Any,
+    rows: Any,
+    stage_start: Any,
+    stage_end: Any,
+    stage_limit: Any,
+    stage_charge: Any,
+    inventory: Any,
+    now: Any,
+    made: Any,
+    stored: Any,
+    knots: Any,
+    work: Any,
+) -> None:
+    """Rows [first_row, last_row) over the whole horizon, every interval kept in NOW, MADE and STORED."""
+    for r in range(first_row, last_row):
+        row = rows[r]
+        i = row.site
+        site, site_tanks = sites[i], tanks[i]
+        for t in range(hours.shape[1]):
+            last = t - 1 if event and t > 0 else 0
+            beside = (usual[i, t], usual[i, last]) if event else (usual[0, 0], usual[0, 0])
+            staged, made_to = stage(
+                site, made[r, t], stage_start[r], stage_end[r], stage_limit[r], stage_charge[r], t
+            )
+            advance(
+                site, machines[i], site_tanks, hours[i, t], able[i, t], beside[0], beside[1], event, t,
+                staged, made_to, True, row, inventory[r], now[r, t], made[r, t], stored[r, t], knots, work, step_h,
+            )  # fmt: skip
+            storage.limits(site, site_tanks, stored[r, t], knots)
+
+
+@inner
+def stage(site: Any, made: Any, start: Any, end: Any, limit: Any, charge: Any, t: int) -> tuple[bool, bool]:
+    """Whether a row is in a stage in interval t, and whether it is made to charge; each machine's limit is written to
+    `made`. Where stages overlap the lower limit holds."""
+    staged = False
+    made_to = False
+    for m in range(site.machine_count):
+        made[m].limit_fraction = 1.0
+    for s in range(len(start)):
+        if start[s] <= t and t < end[s]:
+            staged = True
+            made_to = made_to or charge[s]
+            for m in range(site.machine_count):
+                made[m].limit_fraction = min(made[m].limit_fraction, limit[s, m])
+    return staged, made_to
+
+
+@inner
+def advance(
+    site: Any,
+    machines: Any,
+    tanks: Any,
+    hour: Any,
+    able: Any,
+    usual: Any,
+    before: Any,
+    event: bool,
     t: int,
-) -> Moment:
-    tanks, start = rows.roster.tanks, state.inventory_kwh_th
-    loss = tank.standing_loss_kw_th(
-        tanks.kind, start, tanks.capacity_kwh_th, tanks.loss_fraction_per_h, here.step_h
+    staged: bool,
+    made_to: bool,
+    whole: bool,
+    row: Any,
+    inventory: Any,
+    now: Any,
+    made: Any,
+    stored: Any,
+    knots: Any,
+    work: Any,
+    step_h: Number,
+) -> None:
+    """One row over interval t. `usual` and `before` are the usual case in this interval and in the one before it, read
+    where `event`; not `whole`: what tanks could have given is left out where they are asked for nothing."""
+    every, held, lost = storage.stand(site, tanks, stored, inventory, step_h)
+    ready = 0.0
+    largest = 0.0
+    for m in range(site.machine_count):
+        work[DIRECT, m] = able[m].direct_kw_th * made[m].limit_fraction
+        ready += work[DIRECT, m]
+        largest = max(largest, work[DIRECT, m])
+    load = hour.load_kw_th
+    now.start_kwh_th, now.load_kw_th, now.ready_kw_th, now.drawn_kw_th = every, load, ready, 0.0
+    now.wanted_kw_th = _wanted(site, hour, staged, ready, held, step_h)
+    could = 0.0
+    if whole or now.wanted_kw_th > 0.0:
+        could = storage.discharge(site, tanks, stored, now, knots, staged, held, step_h)
+    now.firm_kw_th = ready - largest + could
+    served = min(load - now.drawn_kw_th, ready)
+    now.unmet_kw_th = max(load - now.drawn_kw_th - served, 0.0)
+    extra = now.unmet_kw_th - usual.unmet_kw_th if event else 0.0
+    now.pull_down_kw_th = _pull_down(site, row, staged, extra, ready - served, step_h)
+    _drift(site, row, now, extra - now.pull_down_kw_th)
+    charging, asked = _plan(
+        site, hour, usual, before, event, t, row, (held, lost, now.drawn_kw_th), staged, made_to, step_h
     )
-    staged, limit, made_to = stages.at(t)
-    direct_cap = here.direct_kw_th[rows.site, :, t] * limit
-    ready, load = total(direct_cap), here.load_kw_th[rows.site, t]
-    wanted = _wanted_from_tank(rows, here, staged, ready, load, start, t)
-    tanks_gave = storage.discharge(rows, series, here.step_h, staged, ready, load, wanted, start, loss)
-    drawn = tanks_gave.total_kw_th
-    served = np.minimum(load - drawn, ready)
-    unmet = np.maximum(load - drawn - served, 0.0)
-    extra = unmet - usual.unmet_kw_th[rows.site, t] if usual else np.zeros_like(unmet)
-    pull_down = _pull_down(rows, here, state, staged, extra, ready - served)
-    air, mass, air_mean = comfort.advance(rows.zone, state.air_k, state.mass_k, extra - pull_down)
-    charging, asked = _plan_to_charge(rows, here, usual, state, (staged, made_to), (load, loss, drawn), t)
-    task = Task(charging, direct_cap, limit, served + pull_down, asked, start, loss, tanks_gave.drawn_kw_th)
-    made = make_within(rows, here, task, room_kw[:, t], rows.recovery == CAPPED, t)
-    inventory = start + (made.charge_kw_th - tanks_gave.drawn_kw_th - loss) * here.step_h
-    return Moment(
-        interval=t,
-        staged=staged,
-        limit_fraction=limit,
-        direct_kw_th=made.direct_kw_th,
-        into_tank_kw_th=made.into_tank_kw_th,
-        making_ice=made.ice_mode,
-        machine_kw=made.machine_kw,
-        power_kw=made.power_kw,
-        charge_kw_th=made.charge_kw_th,
-        discharge_kw_th=tanks_gave.drawn_kw_th,
-        loss_kw_th=loss,
-        inventory_start_kwh_th=start,
-        inventory_kwh_th=inventory,
-        discharge_limit_kw_th=storage.limit_at_end(rows, inventory, tanks_gave.knots_kw_th),
-        lmtd_k=tanks_gave.lmtd_k,
-        wanted_kw_th=wanted,
-        spare_direct_kw_th=ready - served - pull_down,
-        firm_kw_th=ready - direct_cap.max(axis=1, initial=0.0) + total(tanks_gave.most_kw_th),
-        load_kw_th=load,
-        unmet_kw_th=unmet,
-        pull_down_kw_th=pull_down,
-        air_rise_k=air,
-        mass_rise_k=mass,
-        air_mean_rise_k=air_mean,
-        charging=charging & _not_full(rows, inventory),
+    room_kw = usual.room_kw if event and row.recovery == CAPPED else inf
+    flows = (served + now.pull_down_kw_th, asked, now.drawn_kw_th)
+    now.power_kw = make_within(
+        site, machines, able, tanks, made, stored, work, flows, charging, step_h, room_kw
     )
+    now.held_kwh_th, held = storage.settle(site, tanks, stored, inventory, step_h)
+    row.charging = charging and held < STOP_CHARGE_AT * site.capacity_kwh_th
+    now.charging = row.charging
 
 
-def _wanted_from_tank(
-    rows: Plants, here: Conditions, staged: Bools, direct_cap: Floats, load: Floats, start: Floats, t: int
-) -> Floats:
-    """kW_th the load asks of the tanks, (row,), before their limits.
+@inner
+def _wanted(site: Any, hour: Any, staged: bool, ready: Number, held: Number, step_h: Number) -> Number:
+    """kW_th the load asks of the tanks, before their limits.
 
     Always what the chillers cannot serve; beyond it by strategy, outside stages: full storage all load on
     peak; storage priority the inventory spread over what is left of the on-peak hours; load levelling what
     lies above the flat rate; chiller priority nothing.
     """
-    shortage = np.maximum(load - direct_cap, 0.0)
-    strategy = rows.roster.buildings.strategy
-    on_peak = here.on_peak[rows.site, t]
-    left_h = np.maximum(here.on_peak_left_h[rows.site, t], here.step_h)
-    spread = np.minimum(storage.held(rows, start) / left_h, load)
-    level = here.level_kw_th[rows.site]
-    usual = np.select(
-        [strategy == _FULL, strategy == _STORAGE_FIRST, strategy == _LEVEL],
-        [np.where(on_peak, load, 0.0), np.where(on_peak, spread, 0.0), np.maximum(load - level, 0.0)],
-        default=0.0,
-    )
-    return np.where(staged, shortage, np.maximum(shortage, usual))
+    load = hour.load_kw_th
+    wanted = max(load - ready, 0.0)
+    if staged:
+        return wanted
+    if site.strategy == _LEVEL:
+        return max(wanted, load - site.level_kw_th)
+    if hour.on_peak_left_h > 0.0:
+        if site.strategy == _FULL:
+            return max(wanted, load)
+        if site.strategy == _STORAGE_FIRST:
+            return max(wanted, min(held / max(hour.on_peak_left_h, step_h), load))
+    return wanted
 
 
-def _pull_down(
-    rows: Plants, here: Conditions, state: State, staged: Bools, extra: Floats, spare: Floats
-) -> Floats:
-    """Extra cooling (row,) that brings a warm zone back on a ramp, from spare capacity, outside stages."""
-    warm = ~staged & (state.air_k > 0.0)
-    if not warm.any():
-        return np.zeros_like(spare)
-    target = np.where(state.air_k < SETTLED_K, 0.0, state.air_k * np.exp(-here.step_h / PULL_DOWN_H))
-    needed = extra - comfort.net_for_air(rows.zone, state.air_k, state.mass_k, target)
-    return np.where(warm, np.clip(needed, 0.0, np.maximum(spare, 0.0)), 0.0)
+@inner
+def _pull_down(site: Any, row: Any, staged: bool, extra: Number, spare: Number, step_h: Number) -> Number:
+    """Extra cooling that brings a warm zone back on a ramp, from spare capacity, outside stages."""
+    if staged or row.air_k <= 0.0:
+        return 0.0
+    target = 0.0 if row.air_k < SETTLED_K else row.air_k * exp(-step_h / PULL_DOWN_H)
+    net = net_kw_th(site.air_of_air, site.air_of_mass, site.air_gain, row.air_k, row.mass_k, target)
+    return min(max(extra - net, 0.0), max(spare, 0.0))
 
 
-def _plan_to_charge(
-    rows: Plants,
-    here: Conditions,
-    usual: Usual | None,
-    state: State,
-    stage: tuple[Bools, Bools],
-    flows: tuple[Floats, Floats, Floats],
+@inner
+def _drift(site: Any, row: Any, now: Any, net: Number) -> None:
+    """The zone over one interval under `net` kW_th of cooling that goes unmet."""
+    air, mass = row.air_k, row.mass_k
+    row.air_k = after_k(site.air_of_air, site.air_of_mass, site.air_gain, air, mass, net)
+    row.mass_k = after_k(site.mass_of_air, site.mass_of_mass, site.mass_gain, air, mass, net)
+    now.air_mean_rise_k = after_k(site.mean_of_air, site.mean_of_mass, site.mean_gain, air, mass, net)
+    now.air_rise_k, now.mass_rise_k = row.air_k, row.mass_k
+
+
+@inner
+def _plan(
+    site: Any,
+    hour: Any,
+    usual: Any,
+    before: Any,
+    event: bool,
     t: int,
-) -> tuple[Bools, Floats]:
-    """Charging mode and charge asked for, each (row,): by strategy, by a recovery, or because a stage makes the
-    tanks charge. `stage`: rows in a stage, rows made to charge; `flows`: load (row,), loss (row, tank), discharge
-    (row,)."""
-    (staged, made_to), (load, loss, drawn), start = stage, flows, state.inventory_kwh_th
-    charging = _charging(rows, here, staged, usual, state, t)
-    asked = _charge_asked(rows, here, usual, load, start, t)
-    if usual is not None:
-        charging, asked = _made_up(rows, here, usual, staged, (start, loss, drawn), (charging, asked), t)
-    return charging | (made_to & _not_full(rows, start)), np.where(made_to, np.inf, asked)
+    row: Any,
+    tanks: tuple[Number, Number, Number],
+    staged: bool,
+    made_to: bool,
+    step_h: Number,
+) -> tuple[bool, float]:
+    """Charging mode and charge asked for: by strategy, by a recovery, or because a stage makes the tanks charge.
+    `tanks`: held and lost by those in service, drawn from all.
 
-
-def _charging(
-    rows: Plants, here: Conditions, staged: Bools, usual: Usual | None, state: State, t: int
-) -> Bools:
-    """Rows (row,) in charging mode: in charging hours, from low enough until full; an event row also while
-    its tank lies below the usual case's; load levelling whenever load is under the flat rate."""
-    hours = here.charge_hours[rows.site, t]
-    held = storage.held(rows, state.inventory_kwh_th)
-    capacity = storage.held(rows, rows.roster.tanks.capacity_kwh_th)
-    low = state.charging | (held < START_CHARGE_BELOW * capacity)
-    if usual is not None:
-        low = low | (held < storage.held(rows, usual.inventory_kwh_th[rows.site, :, t]) - 1e-3 * capacity)
-    below_level = here.load_kw_th[rows.site, t] < here.level_kw_th[rows.site]
-    levelling = rows.roster.buildings.strategy == _LEVEL
-    charging: Bools = (
-        ~staged
-        & _not_full(rows, state.inventory_kwh_th)
-        & ((hours & low & ~levelling) | (levelling & (below_level | (hours & _behind(rows, usual, held, t)))))
-    )
-    return charging
-
-
-def _not_full(rows: Plants, inventory: Floats) -> Bools:
-    capacity = storage.held(rows, rows.roster.tanks.capacity_kwh_th)
-    below: Bools = storage.held(rows, inventory) < STOP_CHARGE_AT * capacity
-    return below
-
-
-def _room_kw(rows: Plants, here: Conditions, usual: Usual | None) -> Floats:
-    """Plant power (row, interval) that a capped recovery keeps to; inf for all others."""
-    count = here.load_kw_th.shape[1]
-    if usual is None or not (rows.recovery == CAPPED).any():
-        return np.broadcast_to(np.float64(np.inf), (len(rows.site), count))
-    room = cap_kw(here.rest_kw, here.billed_peak_kw, usual.power_kw)
-    return np.where((rows.recovery == CAPPED)[:, None], room[rows.site], np.inf)
-
-
-def _made_up(
-    rows: Plants,
-    here: Conditions,
-    usual: Usual,
-    staged: Bools,
-    tanks: tuple[Floats, Floats, Floats],
-    plan: tuple[Bools, Floats],
-    t: int,
-) -> tuple[Bools, Floats]:
-    """Charging mode and charge asked for (row,) after a window under a recovery other than the usual one.
-
-    In the recovery's hours what brings the tanks to the usual case's level by the interval's end, in others what
-    the usual case charges; nothing while the tanks give. `tanks` are start inventory and loss (row, tank) and
-    discharge (row,); `plan` is what the usual recovery would do.
+    Charging mode: in charging hours, from low enough until full; an event row also while its tank lies below the usual
+    case's; load levelling whenever load is under the flat rate. Asked for: all there is, or with load levelling what
+    lies under the flat rate, unless the tank is behind the usual case in its charging hours; a levelled tank that is
+    ahead of the usual case waits for it.
     """
-    own = (rows.recovery != USUAL) & (rows.recover_from <= t)
-    if not own.any():
-        return plan
-    start, loss, drawn = tanks
-    level = storage.held(rows, usual.inventory_kwh_th[rows.site, :, t])
-    lacking = (level - storage.held(rows, start)) / here.step_h + storage.held(rows, loss)
-    hours = here.recovery_hours[rows.recovery, rows.site, t]
-    asked = np.where(hours, np.maximum(lacking, 0.0), usual.charge_kw_th[rows.site, t])
-    on = ~staged & (drawn <= 0.0) & (asked > 0.0)
-    return np.where(own, on, plan[0]), np.where(own, asked, plan[1])
+    held, capacity = tanks[0], site.capacity_kwh_th
+    compared = event and t > 0
+    not_full = held < STOP_CHARGE_AT * capacity
+    asked = inf
+    if site.strategy == _LEVEL:
+        behind = hour.charge and compared and held < before.held_kwh_th
+        below_level = site.level_kw_th - hour.load_kw_th
+        charging = below_level > 0.0 or behind
+        if not behind:
+            asked = max(below_level, 0.0)
+        if compared and held - before.held_kwh_th > APART_FRACTION * capacity:
+            asked = min(asked, max((usual.held_kwh_th - held) / step_h, 0.0))
+    else:
+        low = row.charging or held < START_CHARGE_BELOW * capacity
+        if event:
+            low = low or held < usual.held_kwh_th - APART_FRACTION * capacity
+        charging = hour.charge and low
+    charging = charging and not_full and not staged
+    if event and row.recovery != USUAL and row.recover_from <= t:
+        asked = _made_up(hour, usual, row, tanks, step_h)
+        charging = not staged and tanks[2] <= 0.0 and asked > 0.0
+    if made_to:
+        return charging or not_full, inf
+    return charging, asked
 
 
-def _charge_asked(
-    rows: Plants, here: Conditions, usual: Usual | None, load: Floats, start: Floats, t: int
-) -> Floats:
-    """Charge (row,) that the strategy asks for: all there is, or with load levelling what lies under the flat
-    rate, unless the tank is behind the usual case in its charging hours; a levelled tank that is ahead of the usual
-    case waits for it."""
-    levelling = rows.roster.buildings.strategy == _LEVEL
-    behind = here.charge_hours[rows.site, t] & _behind(rows, usual, storage.held(rows, start), t)
-    below_level = np.maximum(here.level_kw_th[rows.site] - load, 0.0)
-    asked = np.where(levelling & ~behind, below_level, np.inf)
-    if usual is None or t == 0:
-        return asked
-    held, capacity = storage.held(rows, start), storage.held(rows, rows.roster.tanks.capacity_kwh_th)
-    ahead = held - storage.held(rows, usual.inventory_kwh_th[rows.site, :, t - 1]) > 1e-3 * capacity
-    lacking = (storage.held(rows, usual.inventory_kwh_th[rows.site, :, t]) - held) / here.step_h
-    return np.where(levelling & ahead, np.minimum(asked, np.maximum(lacking, 0.0)), asked)
-
-
-def _behind(rows: Plants, usual: Usual | None, held: Floats, t: int) -> Bools:
-    """Rows whose tanks hold less than in the usual case at this interval's start."""
-    if usual is None or t == 0:
-        return np.zeros(len(rows.site), dtype=np.bool_)
-    behind: Bools = held < storage.held(rows, usual.inventory_kwh_th[rows.site, :, t - 1])
-    return behind
+@inner
+def _made_up(hour: Any, usual: Any, row: Any, tanks: tuple[Number, Number, Number], step_h: Number) -> Number:
+    """Charge asked for after a window under a recovery other than the usual one: in the recovery's hours what brings
+    the tanks to the usual case's level by the interval's end, in others what the usual case charges."""
+    held, lost, _ = tanks
+    if (hour.recoveries >> row.recovery) & 1:
+        return max((usual.held_kwh_th - held) / step_h + lost, 0.0)
+    return usual.charge_kw_th

@@ -5,24 +5,27 @@ one). Limits must hold in both; kW and cost are the best estimate's, and a candi
 other inventory is not quoted at all, so that no promise rests on the better level.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 
 import numpy as np
 
 from sites import blocks
+from sites.compiled import each
 from sites.cost import cost_parts, lack_price_per_kwh_th
-from sites.course import Course, course
+from sites.course import Course
 from sites.direction import Direction
 from sites.ground import Ground, ground
 from sites.plant import at_rest, simulate
 from sites.quotes import LIMITED_BY, DenseQuotes
 from sites.recovery import RECOVERIES, USUAL
 from sites.roster import Roster
-from sites.rows import plants
-from sites.trial import try_all
-from sites.units import Bools, Floats, Ints, Strings
+from sites.trial import Tried, sides_of, try_all
+from sites.units import AnyArray, Bools, Floats, Ints, Strings
 
 __all__ = ["Ground", "Quoted", "detail", "ground", "quote", "windows_of"]
+
+ROWS_AT_ONCE = 16384
+"""Candidates run together by one thread: what they need over the horizon stays within tens of MB."""
 
 
 @dataclass(frozen=True)
@@ -48,71 +51,126 @@ class Quoted:
 def quote(base: Ground, terms: blocks.Terms, direction: Direction = Direction.SHED) -> Quoted:
     """Quote every candidate of every site in a direction: machines off, or tanks made to charge."""
     offered = blocks.candidates(base.roster, base.standing, terms, direction)
-    event = (terms.event_from, terms.event_to)
-    tried = try_all(base, offered, event, direction)
-    best, kept = tried.best, tried.kept
+    sides = sides_of(base, direction)
+    lack_price = lack_price_per_kwh_th(base.here, base.outlook)
+    count = -(-len(offered.site) // ROWS_AT_ONCE)
+    edges = np.linspace(0, len(offered.site), max(count, 1) + 1).astype(np.int64)
+
+    def part(i: int) -> _Part:
+        index = np.arange(edges[i], edges[i + 1])
+        event = (terms.event_from, terms.event_to)
+        tried = try_all(base, offered.take(index), event, direction, sides)
+        return _part(base, offered, index, tried, lack_price)
+
+    found = _joined(each(part, len(edges) - 1))
+    kept = found.kept
     site = offered.site[kept]
-    change = best.power_kw - base.usual.power_kw[site]
-    lack_price = lack_price_per_kwh_th(base.here, base.outlook)[site]
-    cost = cost_parts(
-        base.outlook.take(site),
-        base.roster.buildings.take(site),
-        base.usual.power_kw[site],
-        change,
-        (offered.start[kept], offered.end[kept]),
-        best.unmet_kwh_th,
-        best.lack_kwh_th,
-        lack_price,
-    )
     quotes = DenseQuotes(
         clock=base.outlook.clock,
         direction=direction,
         event_from=terms.event_from,
         event_to=terms.event_to,
         site=site,
-        quote_id=_quote_ids(base.roster, offered)[kept],
+        quote_id=_quote_ids(base.roster, offered, kept),
         stages=offered.stages.take(kept),
         window_start=offered.start[kept],
         window_end=offered.end[kept],
-        expected_kw=tried.expected_kw[kept],
-        change_kw=change,
-        cost=cost,
-        unmet_kwh_th=best.unmet_kwh_th,
-        end_lack_kwh_th=best.lack_kwh_th,
-        end_lack_price_per_kwh_th=lack_price,
-        limited_by=tried.limited_by,
-        site_limited_by=_site_limits(base, terms, direction, offered.site, tried.verdict, tried.expected_kw),
+        expected_kw=direction.sign * found.change_kw[:, terms.event_from : terms.event_to],
+        change_kw=found.change_kw,
+        cost=found.cost,
+        unmet_kwh_th=found.sums["unmet_kwh_th"],
+        end_lack_kwh_th=found.sums["lack_kwh_th"],
+        end_lack_price_per_kwh_th=lack_price[site],
+        limited_by=found.limited_by,
+        site_limited_by=_site_limits(base, terms, direction, offered.site, found.verdict, found.energy),
     )
     return Quoted(
         ground=base,
         quotes=quotes,
         load_limit_fraction=offered.load_limit_fraction[kept],
         recovery=offered.recovery[kept],
-        inventory_low_start_kwh_th=tried.low_start_kwh_th,
-        peak_rise_k=best.rise_k.max(axis=1, initial=0.0),
-        full_again=best.full_again,
+        inventory_low_start_kwh_th=found.low_start_kwh_th,
+        peak_rise_k=found.sums["highest_k"],
+        full_again=found.sums["full_again"],
         tried=len(offered.site),
     )
+
+
+@dataclass(frozen=True)
+class _Part:
+    """What came of some of the candidates on offer: verdict and energy of each, the rest of those that are quoted."""
+
+    verdict: Ints
+    energy: Floats
+    """Expected kW summed over the event"""
+    kept: Ints
+    """Index over all on offer"""
+    change_kw: Floats
+    cost: Floats
+    sums: AnyArray
+    """tally.SUMS"""
+    low_start_kwh_th: Floats
+    limited_by: Ints
+
+
+def _part(base: Ground, offered: blocks.Candidates, index: Ints, tried: Tried, lack_price: Floats) -> _Part:
+    """The quoted ones of the candidates `index`, priced."""
+    kept, best = index[tried.kept], tried.best
+    site = offered.site[kept]
+    usual_kw = base.usual.power_kw[site]
+    cost = cost_parts(
+        base.outlook.take(site),
+        base.roster.buildings.take(site),
+        usual_kw,
+        best.change_kw,
+        (offered.start[kept], offered.end[kept]),
+        best.sums["unmet_kwh_th"],
+        best.sums["lack_kwh_th"],
+        lack_price[site],
+    )
+    return _Part(
+        verdict=tried.verdict,
+        energy=tried.expected_kw.sum(axis=1),
+        kept=kept,
+        change_kw=best.change_kw,
+        cost=cost,
+        sums=best.sums,
+        low_start_kwh_th=tried.low_start_kwh_th,
+        limited_by=tried.limited_by,
+    )
+
+
+def _joined(parts: list[_Part]) -> _Part:
+    """All parts in one, in their order; each is let go once it is copied, so that memory is not needed twice."""
+    ends = np.cumsum([len(part.kept) for part in parts])
+    change = np.empty((int(ends[-1]), parts[0].change_kw.shape[1]))
+    small = {
+        field.name: np.concatenate([getattr(part, field.name) for part in parts])
+        for field in fields(_Part)
+        if field.name != "change_kw"
+    }
+    for end in ends[::-1].tolist():
+        last = parts.pop().change_kw
+        change[end - len(last) : end] = last
+    return _Part(change_kw=change, **small)
 
 
 def detail(quoted: Quoted, candidate: Ints) -> Course:
     """Whole course of the chosen candidates (row,), from the best estimate of the inventory."""
     base, quotes = quoted.ground, quoted.quotes
     site = quotes.site[candidate]
-    recovery = (quoted.recovery[candidate], quotes.window_end[candidate])
-    rows = plants(base.roster, base.here, base.standing.tank_available, site, recovery)
+    rows = base.plants.pick(site, (quoted.recovery[candidate], quotes.window_end[candidate]))
     stages = base.in_force.take(site).join(quotes.stages.take(candidate))
     start = at_rest(base.standing.best_kwh_th[site])
-    return course(simulate(rows, base.here, stages, start, base.usual.as_usual))
+    return simulate(rows, base.here, stages, start, base.usual.as_usual)
 
 
 def _site_limits(
-    base: Ground, terms: blocks.Terms, direction: Direction, site: Ints, verdict: Ints, expected: Floats
+    base: Ground, terms: blocks.Terms, direction: Direction, site: Ints, verdict: Ints, energy: Floats
 ) -> Ints:
     """What keeps each site (N,) from giving more: the reason of its largest refused candidate that beats its
     best quoted one, or why it has no candidate at all."""
     count = base.roster.count
-    energy = expected.sum(axis=1)
     best = np.zeros(count)
     np.maximum.at(best, site[verdict == 0], energy[verdict == 0])
     refused = np.flatnonzero((verdict > 0) & ((energy > best[site]) | (best[site] <= 0.0)))
@@ -134,17 +192,17 @@ def _site_limits(
     return result
 
 
-def _quote_ids(roster: Roster, offered: blocks.Candidates) -> Strings:
-    """Id of each candidate: the site's id, the candidate's number within the site from 1, and its recovery where
+def _quote_ids(roster: Roster, offered: blocks.Candidates, kept: Ints) -> Strings:
+    """Id of the `kept` candidates: the site's id, the candidate's number within the site from 1, and its recovery where
     that is not the usual one."""
-    site = offered.site
-    if not len(site):
+    if not len(kept):
         return np.zeros(0, dtype=np.object_)
-    first = np.searchsorted(site, site, side="left")
-    number = np.strings.zfill((np.arange(len(site)) - first + 1).astype(np.str_), 4)
+    site = offered.site[kept]
+    first = np.searchsorted(offered.site, np.arange(roster.count), side="left")
+    number = np.strings.zfill((kept - first[site] + 1).astype(np.str_), 4)
     named = np.strings.add(np.strings.add(roster.buildings.site_id.astype(np.str_)[site], "."), number)
     suffix = np.array([f"-{name}" if code != USUAL else "" for code, name in enumerate(RECOVERIES)])
-    result: Strings = np.strings.add(named, suffix[offered.recovery]).astype(np.object_)
+    result: Strings = np.strings.add(named, suffix[offered.recovery[kept]]).astype(np.object_)
     return result
 
 

@@ -1,151 +1,176 @@
-"""The tanks of a plant together: what they can give to a load and take from machines, shared among them.
+"""The tanks of one row together: what they can give to a load and take from machines, shared among them.
 
 tank.py knows one tank; here a row's tanks act as one, in proportion to what each could do, with the loop's
-temperatures by layout and the held-back inventory. Unless said otherwise, arrays are (row, tank).
+temperatures by layout and the held-back inventory. Called by the loop over rows only: `site`, `tanks` (tank,) are
+records of rows.py, `stored` (tank,) and `now` records of course.py, `knots` (tank, knot) room to work in.
 """
 
-from dataclasses import dataclass
+from typing import Any
 
-import numpy as np
-
-from sites import tank
-from sites.roster import LAYOUTS, TANK_KINDS, kind_is
-from sites.rows import Plants
-from sites.units import Bools, Floats, Ints, total
+from sites.compiled import Number, inner
+from sites.tank import (
+    KNOT_SOC,
+    fill_knots,
+    loss_kw_th,
+    mean_difference_k,
+    on_lines_kw_th,
+    steady_charge_kw_th,
+    steady_discharge_kw_th,
+)
+from sites.units import Floats
 
 SERIES_PASSES = 2
 """Leaves the limit of a tank in series less than 0.2 % too high."""
 
 
-def held(rows: Plants, inventory: Floats) -> Floats:
-    """Sum (row,) over the tanks that are in service."""
-    return total(np.where(rows.tank_available, inventory, 0.0))
+@inner
+def stand(
+    site: Any, tanks: Any, stored: Any, inventory: Floats, step_h: Number
+) -> tuple[Number, Number, Number]:
+    """Inventory and standing loss of each tank at the interval's start; returns what all hold, what those in service
+    hold, and what those in service lose."""
+    every = 0.0
+    held = 0.0
+    lost = 0.0
+    for k in range(site.tank_count):
+        tank, own = tanks[k], stored[k]
+        loss = loss_kw_th(
+            tank.loss_of_capacity, inventory[k], tank.capacity_kwh_th, tank.loss_fraction_per_h, step_h
+        )
+        own.inventory_start_kwh_th = inventory[k]
+        own.loss_kw_th = loss
+        own.charge_kw_th = 0.0
+        own.discharge_kw_th = 0.0
+        every += inventory[k]
+        if tank.in_service:
+            held += inventory[k]
+            lost += loss
+    return every, held, lost
 
 
-def _inlet_c(rows: Plants, tank_share: Floats) -> Floats:
-    """Temperature at the tank's inlet, (row,): the loop's return in parallel; in series behind machines that
-    take the rest of the load at the same flow, supply + (return - supply) x the tank's share."""
-    buildings = rows.roster.buildings
-    series = buildings.layout == LAYOUTS.index("series")
-    rise = buildings.return_c - buildings.supply_c
-    return buildings.supply_c + rise * np.where(series, np.clip(tank_share, 0.0, 1.0), 1.0)
+@inner
+def inlet_c(site: Any, tank_share: Number) -> Number:
+    """Temperature at the tank's inlet: the loop's return in parallel; in series behind machines that take the rest of
+    the load at the same flow, supply + (return - supply) x the tank's share."""
+    rise = site.return_c - site.supply_c
+    return site.supply_c + rise * (min(max(tank_share, 0.0), 1.0) if site.series else 1.0)
 
 
-def _reach(rows: Plants) -> Floats:
-    """Share of the load (row,) that the tanks can take on: all of it, but with a tank of eutectic salt, which cools no
-    colder than its melting point, what lies between the return and that; the rest is left to machines behind it."""
-    buildings, tanks = rows.roster.buildings, rows.roster.tanks
-    salt = (kind_is(tanks.kind, TANK_KINDS, ("eutectic_salt",)) & rows.tank_available).any(axis=1)
-    whole = np.maximum(buildings.return_c - buildings.supply_c, 1e-9)
-    share = np.clip((buildings.return_c - tank.EUTECTIC_MELTING_C) / whole, 0.0, 1.0)
-    return np.where(salt, share, 1.0)
+@inner
+def _usable(
+    site: Any,
+    tanks: Any,
+    stored: Any,
+    knots: Floats,
+    share: Number,
+    staged: bool,
+    held: Number,
+    step_h: Number,
+) -> tuple[Number, Number]:
+    """What the tanks could give at the inlet that their `share` of the load makes: in all, and (in a stage) so that
+    the held-back inventory is left. The curve that limits each tank is left in `knots`."""
+    most = 0.0
+    lost = 0.0
+    lmtd = mean_difference_k(inlet_c(site, share), site.supply_c)
+    for k in range(site.tank_count):
+        tank, own = tanks[k], stored[k]
+        if site.series:
+            fill_knots(tank.base, tank.slope, tank.capacity_kwh_th, tank.ceiling_kw_th, lmtd, knots[k])
+        else:
+            for j in range(len(KNOT_SOC)):
+                knots[k, j] = tank.knots_kw_th[j]
+        own.lmtd_k = lmtd
+        own.most_kw_th = 0.0
+        lost += own.loss_kw_th
+        if tank.in_service:
+            own.most_kw_th = steady_discharge_kw_th(
+                own.inventory_start_kwh_th, own.loss_kw_th, tank.capacity_kwh_th, knots[k], step_h
+            )
+            most += own.most_kw_th
+    free = max((held - site.reserve_kwh_th) / step_h - lost, 0.0)
+    return most, min(most, free) if staged else most
 
 
-@dataclass(frozen=True)
-class Discharged:
-    """What the tanks gave in one interval, (row, tank), and the curve (row, tank, knot) that limited it."""
-
-    drawn_kw_th: Floats
-    total_kw_th: Floats
-    """(row,) sum of the drawn, free of the rounding of the shares"""
-    most_kw_th: Floats
-    """What could have been had"""
-    lmtd_k: Floats
-    knots_kw_th: Floats
-
-
-def _knots(rows: Plants, share: Floats) -> tuple[Floats, Floats]:
-    """Discharge curve (row, tank, knot) at the inlet that the tanks' `share` (row,) of the load makes, and the
-    LMTD (row, tank) it was taken at."""
-    tanks = rows.roster.tanks
-    lmtd = np.asarray(tank.lmtd_k(_inlet_c(rows, share), rows.roster.buildings.supply_c))[:, None]
-    lmtd_all: Floats = np.repeat(lmtd, tanks.capacity_kwh_th.shape[1], axis=1)
-    knots = tank.knots_kw_th(rows.discharge, tanks.capacity_kwh_th, tanks.discharge_limit_kw_th, lmtd_all)
-    return knots, lmtd_all
-
-
-def _most(rows: Plants, step_h: float, start: Floats, loss: Floats, knots: Floats) -> Floats:
-    most = tank.most_discharge_kw_th(start, loss, rows.roster.tanks.capacity_kwh_th, knots, step_h)
-    return np.where(rows.tank_available, most, 0.0)
-
-
-@dataclass(frozen=True)
-class Behind:
-    """The rows whose tank stands in series behind the machines: their indices, and themselves gathered."""
-
-    index: Ints
-    rows: Plants
-    reach: Floats
-    """Share of the load that the tanks of every row (not only those in series) can take on"""
-
-
-def behind(rows: Plants) -> Behind:
-    """Gather the rows in series once, for all intervals."""
-    index = np.flatnonzero(rows.roster.buildings.layout == LAYOUTS.index("series"))
-    return Behind(index, rows.take(index), _reach(rows))
-
-
+@inner
 def discharge(
-    rows: Plants,
-    series: Behind,
-    step_h: float,
-    staged: Bools,
-    direct_cap: Floats,
-    load: Floats,
-    wanted: Floats,
-    start: Floats,
-    loss: Floats,
-) -> Discharged:
-    """What the tanks give of what is `wanted` (row,) beside machines that can do `direct_cap` (row,).
+    site: Any, tanks: Any, stored: Any, now: Any, knots: Floats, staged: bool, held: Number, step_h: Number
+) -> Number:
+    """What the tanks give of what is wanted beside machines that can do `now.ready_kw_th`; returns what they could.
 
     In series the inlet follows the tanks' share of what is served (the building's flow is cut to what can be
     cooled to its supply), and the share follows the limit: from the share that is wanted, SERIES_PASSES more
     close in on the limit from above, each some eight times nearer. In parallel the inlet is the loop's return
     and one pass is exact. Tanks of eutectic salt take on no more of the load than they can cool.
     """
-    reachable = series.reach * load
-    wanted = np.minimum(wanted, reachable)
-    knots, lmtd = _knots(rows, wanted / np.maximum(load, 1e-9))
-    most = _most(rows, step_h, start, loss, knots)
-    usable = _above_reserve(rows, step_h, staged, start, loss, most)
-    drawn = np.minimum(wanted, usable)
-    pick = series.index
-    for _ in range(SERIES_PASSES if len(pick) else 0):
-        rest = np.minimum(load - drawn, direct_cap)[pick]
-        share = drawn[pick] / np.maximum(drawn[pick] + rest, 1e-9)
-        knots[pick], lmtd[pick] = _knots(series.rows, share)
-        most[pick] = _most(series.rows, step_h, start[pick], loss[pick], knots[pick])
-        part = (start[pick], loss[pick], most[pick])
-        usable[pick] = _above_reserve(series.rows, step_h, staged[pick], *part)
-        drawn = np.minimum(drawn, usable)
-    sum_most = total(most)
-    given = np.divide(drawn, sum_most, out=np.zeros_like(drawn), where=sum_most > 0.0)
-    could = np.divide(np.minimum(usable, reachable), sum_most, out=np.zeros_like(drawn), where=sum_most > 0.0)
-    return Discharged(most * given[:, None], drawn, most * could[:, None], lmtd, knots)
+    load, ready = now.load_kw_th, now.ready_kw_th
+    reachable = site.reach * load
+    wanted = min(now.wanted_kw_th, reachable)
+    share = wanted / max(load, 1e-9)
+    drawn = wanted
+    most = 0.0
+    usable = 0.0
+    for _ in range(1 + SERIES_PASSES if site.series else 1):
+        most, usable = _usable(site, tanks, stored, knots, share, staged, held, step_h)
+        drawn = min(drawn, usable)
+        share = drawn / max(drawn + min(load - drawn, ready), 1e-9)
+    given = drawn / most if most > 0.0 else 0.0
+    could = min(usable, reachable) / most if most > 0.0 else 0.0
+    sum_could = 0.0
+    for k in range(site.tank_count):
+        own = stored[k]
+        own.discharge_kw_th = own.most_kw_th * given
+        own.most_kw_th *= could
+        sum_could += own.most_kw_th
+    now.drawn_kw_th = drawn
+    return sum_could
 
 
-def _above_reserve(
-    rows: Plants, step_h: float, staged: Bools, start: Floats, loss: Floats, most: Floats
-) -> Floats:
-    """Discharge (row,) that the tanks' limits allow and, in a stage, that leaves the held-back inventory."""
-    free = np.maximum((held(rows, start) - rows.reserve_kwh_th) / step_h - total(loss), 0.0)
-    every = total(most)
-    return np.where(staged, np.minimum(every, free), every)
+@inner
+def charge(site: Any, tanks: Any, stored: Any, offered: Number, step_h: Number) -> Number:
+    """Charge of each tank from `offered` machine cooling; returns what all take, kW_th."""
+    most = 0.0
+    for k in range(site.tank_count):
+        tank, own = tanks[k], stored[k]
+        own.charge_kw_th = 0.0
+        if tank.in_service:
+            own.charge_kw_th = steady_charge_kw_th(
+                own.inventory_start_kwh_th,
+                own.loss_kw_th,
+                tank.capacity_kwh_th,
+                tank.charge_knots_kw_th,
+                step_h,
+            )
+            most += own.charge_kw_th
+    part = min(offered, most) / most if most > 0.0 else 0.0
+    taken = 0.0
+    for k in range(site.tank_count):
+        stored[k].charge_kw_th *= part
+        taken += stored[k].charge_kw_th
+    return taken
 
 
-def limit_at_end(rows: Plants, inventory: Floats, knots: Floats) -> Floats:
-    """Discharge limit of each tank (row, tank) at end-of-interval inventory; 0 for one out of service."""
-    limit = tank.limit_kw_th(inventory, rows.roster.tanks.capacity_kwh_th, knots)
-    return np.where(rows.tank_available, limit, 0.0)
+@inner
+def settle(site: Any, tanks: Any, stored: Any, inventory: Floats, step_h: Number) -> tuple[Number, Number]:
+    """Inventory at the interval's end, written to `inventory` (tank,) too; returns what all tanks and those in service
+    hold."""
+    every = 0.0
+    held = 0.0
+    for k in range(site.tank_count):
+        own = stored[k]
+        net = own.charge_kw_th - own.discharge_kw_th - own.loss_kw_th
+        end = own.inventory_start_kwh_th + net * step_h
+        own.inventory_kwh_th = end
+        inventory[k] = end
+        every += end
+        if tanks[k].in_service:
+            held += end
+    return every, held
 
 
-def charge(rows: Plants, step_h: float, can: Bools, offered: Floats, start: Floats, loss: Floats) -> Floats:
-    """Charge of each tank (row, tank) from `offered` machine cooling (row,), where the row `can` charge."""
-    capacity = rows.roster.tanks.capacity_kwh_th
-    most = tank.most_charge_kw_th(start, loss, capacity, rows.charge_knots_kw_th, step_h)
-    most = np.where(rows.tank_available & can[:, None], most, 0.0)
-    sum_most = total(most)
-    taken = np.minimum(offered, sum_most)
-    part = np.divide(taken, sum_most, out=np.zeros_like(taken), where=sum_most > 0.0)
-    result: Floats = most * part[:, None]
-    return result
+@inner
+def limits(site: Any, tanks: Any, stored: Any, knots: Floats) -> None:
+    """Discharge limit of each tank at end-of-interval inventory; 0 for one out of service."""
+    for k in range(site.tank_count):
+        tank, own = tanks[k], stored[k]
+        limit = on_lines_kw_th(own.inventory_kwh_th, tank.capacity_kwh_th, knots[k])
+        own.discharge_limit_kw_th = limit if tank.in_service else 0.0

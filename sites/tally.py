@@ -4,17 +4,16 @@ Sums and peaks only, so that many candidates fit in memory; course.py keeps ever
 """
 
 from dataclasses import dataclass
+from typing import Any, Final
 
 import numpy as np
 
 from sites import comfort
+from sites.compiled import Number, inner
 from sites.conditions import Conditions
-from sites.course import Course
-from sites.plant import Moment
 from sites.quotes import LIMITED_BY
-from sites.roster import Rows
-from sites.rows import Plants
-from sites.units import Bools, Floats, Ints, total
+from sites.roster import Buildings, Rows
+from sites.units import AnyArray, Bools, Floats, Ints
 
 UNMET_TOLERANCE_KW_TH = 1e-6
 NEAR_EMPTY_FRACTION = 0.02
@@ -23,150 +22,141 @@ REMNANT_FRACTION = 0.1
 """A tank that still gives this share of what is asked in the interval it runs empty in ran out in its middle."""
 FULL_AGAIN_FRACTION = 1e-3
 """A tank is back when it lies within this share of capacity of the usual case, or has come past it."""
+LEAST_DRIFT_K: Final = min(limit for _, limit in comfort.DRIFT_LIMITS)
+"""No limit on drifts is broken by a row whose rise never moves by more than this."""
+
+SUMS: Final = np.dtype(
+    [
+        *((name, "f8") for name in ("unmet_kwh_th", "unmet_after_kw_th", "critical_short_kw_th")),
+        *((name, "f8") for name in ("at_start_kwh_th", "at_end_kwh_th", "lack_kwh_th")),
+        *((name, "f8") for name in ("occupied_peak_k", "highest_k", "lowest_k")),
+        ("full_again", "i8"),
+        *((name, "?") for name in ("usual_short", "rate_bound", "stock_bound", "ran_out", "reserve_bound")),
+    ],
+    align=True,
+)
+"""Sums and peaks of one row, as Tally names them."""
 
 
 @dataclass(frozen=True)
-class Tally:
+class Tally(Rows):
     """Per row (row,), or (row, interval) where said."""
 
-    power_kw: Floats
-    """(row, interval)"""
+    change_kw: Floats
+    """(row, interval) event less usual"""
     rise_k: Floats
     """(row, interval) air node, interval end"""
-    unmet_kwh_th: Floats
-    """Unmet beyond the usual case, whole horizon"""
-    unmet_after_kw_th: Floats
-    """Worst unmet beyond the usual case after the window"""
-    critical_short_kw_th: Floats
-    """Worst lack against the critical load, with the largest running machine lost"""
-    usual_short: Bools
-    """In the window load goes unmet in the usual case already"""
-    rate_bound: Bools
-    """In the window the tanks were asked for more than their rate, with inventory left"""
-    stock_bound: Bools
-    """In the window the tanks were asked for more than their inventory"""
-    ran_out: Bools
-    """In the window the tanks ran empty in the middle of an interval"""
-    reserve_bound: Bools
-    """In the window the held-back inventory was reached"""
-    inventory_at_start_kwh_th: Floats
-    inventory_at_end_kwh_th: Floats
-    full_again: Ints
-    """Clock index of the first interval after the window at whose end the inventory is back; -1 = never"""
-    lack_kwh_th: Floats
-    """How far the row ends below the usual case"""
+    sums: AnyArray
+    """SUMS (row,)"""
+
+    @property
+    def unmet_kwh_th(self) -> Floats:
+        """Unmet beyond the usual case, whole horizon."""
+        return np.asarray(self.sums["unmet_kwh_th"])
+
+    @property
+    def unmet_after_kw_th(self) -> Floats:
+        """Worst unmet beyond the usual case after the window."""
+        return np.asarray(self.sums["unmet_after_kw_th"])
+
+    @property
+    def critical_short_kw_th(self) -> Floats:
+        """Worst lack against the critical load, with the largest running machine lost."""
+        return np.asarray(self.sums["critical_short_kw_th"])
+
+    @property
+    def usual_short(self) -> Bools:
+        """In the window load goes unmet in the usual case already."""
+        return np.asarray(self.sums["usual_short"])
+
+    @property
+    def ran_out(self) -> Bools:
+        """In the window the tanks ran empty in the middle of an interval."""
+        return np.asarray(self.sums["ran_out"])
+
+    @property
+    def inventory_at_start_kwh_th(self) -> Floats:
+        """In all tanks at the window's start."""
+        return np.asarray(self.sums["at_start_kwh_th"])
+
+    @property
+    def inventory_at_end_kwh_th(self) -> Floats:
+        """In all tanks at the window's end."""
+        return np.asarray(self.sums["at_end_kwh_th"])
+
+    @property
+    def full_again(self) -> Ints:
+        """Clock index of the first interval after the window at whose end the inventory is back; -1 = never."""
+        return np.asarray(self.sums["full_again"])
+
+    @property
+    def lack_kwh_th(self) -> Floats:
+        """How far the row ends below the usual case."""
+        return np.asarray(self.sums["lack_kwh_th"])
+
+    @property
+    def peak_rise_k(self) -> Floats:
+        """Highest rise of the air above the usual case."""
+        return np.asarray(self.sums["highest_k"])
 
 
-@dataclass(frozen=True)
-class Sums(Rows):
-    """Running sums of one simulation of candidate rows; filled interval by interval with `add`."""
-
-    power_kw: Floats
-    """(row, interval)"""
-    rise_k: Floats
-    unmet_kwh_th: Floats
-    unmet_after_kw_th: Floats
-    critical_short_kw_th: Floats
-    usual_short: Bools
-    rate_bound: Bools
-    stock_bound: Bools
-    ran_out: Bools
-    reserve_bound: Bools
-    at_start: Floats
-    at_end: Floats
-    full_again: Ints
-    lack_kwh_th: Floats
-    from_above: Bools
-    """The tanks come back to the usual case's level from above: after an absorb"""
-
-    def tally(self) -> "Tally":
-        """What has been summed up so far."""
-        return Tally(
-            power_kw=self.power_kw,
-            rise_k=self.rise_k,
-            unmet_kwh_th=self.unmet_kwh_th,
-            unmet_after_kw_th=self.unmet_after_kw_th,
-            critical_short_kw_th=self.critical_short_kw_th,
-            usual_short=self.usual_short,
-            rate_bound=self.rate_bound,
-            stock_bound=self.stock_bound,
-            ran_out=self.ran_out,
-            reserve_bound=self.reserve_bound,
-            inventory_at_start_kwh_th=self.at_start,
-            inventory_at_end_kwh_th=self.at_end,
-            full_again=self.full_again,
-            lack_kwh_th=self.lack_kwh_th,
-        )
+def tally(rows: int, intervals: int) -> Tally:
+    """Nothing summed up yet: rows that do what the usual case does until they are run."""
+    sums = np.zeros(rows, dtype=SUMS)
+    sums["full_again"] = -1
+    return Tally(np.zeros((rows, intervals)), np.zeros((rows, intervals)), sums)
 
 
-def sums(power_kw: Floats, from_above: Bools) -> Sums:
-    """Empty sums of rows whose power (row, interval) is `power_kw` until they are run; `from_above` (row,)."""
-    rows = len(power_kw)
-
-    def zeros() -> Floats:
-        return np.zeros(rows)
-
-    def no() -> Bools:
-        return np.zeros(rows, dtype=np.bool_)
-
-    return Sums(
-        power_kw=power_kw.copy(),
-        rise_k=np.zeros(power_kw.shape),
-        unmet_kwh_th=zeros(),
-        unmet_after_kw_th=zeros(),
-        critical_short_kw_th=zeros(),
-        usual_short=no(),
-        rate_bound=no(),
-        stock_bound=no(),
-        ran_out=no(),
-        reserve_bound=no(),
-        at_start=zeros(),
-        at_end=zeros(),
-        full_again=np.full(rows, -1, dtype=np.int64),
-        lack_kwh_th=zeros(),
-        from_above=from_above,
-    )
+@inner
+def add(sums: Any, row: Any, site: Any, hour: Any, now: Any, usual: Any, t: int, step_h: Number) -> None:
+    """Add interval t of a row, whose window is [row.start, row.end), against the usual case."""
+    extra = now.unmet_kw_th - usual.unmet_kw_th
+    if extra > UNMET_TOLERANCE_KW_TH:
+        sums.unmet_kwh_th += extra * step_h
+    sums.highest_k = max(sums.highest_k, now.air_rise_k)
+    sums.lowest_k = min(sums.lowest_k, now.air_rise_k)
+    if hour.occupied:
+        sums.occupied_peak_k = max(sums.occupied_peak_k, now.air_rise_k)
+    sums.lack_kwh_th = max(usual.all_kwh_th - now.held_kwh_th, 0.0)
+    if t == row.start:
+        sums.at_start_kwh_th = now.start_kwh_th
+    if t == row.end - 1:
+        sums.at_end_kwh_th = now.held_kwh_th
+    if row.start <= t and t < row.end:
+        _add_inside(sums, site, now, usual)
+    if t >= row.end:
+        sums.unmet_after_kw_th = max(sums.unmet_after_kw_th, extra)
+        above = now.held_kwh_th - usual.all_kwh_th
+        if row.from_above:
+            above = -above
+        if sums.full_again < 0 and above >= -FULL_AGAIN_FRACTION * site.size_kwh_th:
+            sums.full_again = t
 
 
-def add(
-    sums: Sums, moment: Moment, rows: Plants, here: Conditions, usual: Course, start: Ints, end: Ints
-) -> None:
-    """Add one interval of rows whose windows are [start, end) (row,), against the usual course."""
-    t = moment.interval
-    capacity = total(rows.roster.tanks.capacity_kwh_th)
-    held = total(moment.inventory_kwh_th)
-    usual_held = total(usual.inventory_kwh_th[rows.site, :, t])
-    extra = moment.unmet_kw_th - usual.unmet_kw_th[rows.site, t]
-    inside = (start <= t) & (t < end)
-    sums.usual_short[:] |= inside & (usual.unmet_kw_th[rows.site, t] > UNMET_TOLERANCE_KW_TH)
-    sums.power_kw[:, t] = moment.power_kw
-    sums.rise_k[:, t] = moment.air_rise_k
-    sums.unmet_kwh_th[:] += np.where(extra > UNMET_TOLERANCE_KW_TH, extra, 0.0) * here.step_h
-    np.maximum(sums.unmet_after_kw_th, np.where(t >= end, extra, 0.0), out=sums.unmet_after_kw_th)
-    critical = np.minimum(rows.roster.buildings.critical_kw_th, moment.load_kw_th)
-    lack = np.maximum(critical - moment.firm_kw_th, critical - (moment.load_kw_th - moment.unmet_kw_th))
-    np.maximum(sums.critical_short_kw_th, np.where(inside, lack, 0.0), out=sums.critical_short_kw_th)
-    drawn = total(moment.discharge_kw_th)
-    short = inside & (capacity > 0.0) & (moment.wanted_kw_th > drawn + UNMET_TOLERANCE_KW_TH)
-    reserve = rows.reserve_kwh_th
-    at_reserve = (reserve > 0.0) & (held <= reserve + NEAR_EMPTY_FRACTION * capacity)
-    empty = held <= NEAR_EMPTY_FRACTION * capacity
-    sums.reserve_bound[:] |= short & at_reserve
-    sums.ran_out[:] |= (
-        short & (held <= EMPTY_FRACTION * capacity) & (drawn > REMNANT_FRACTION * moment.wanted_kw_th)
-    )
-    sums.stock_bound[:] |= short & empty & ~at_reserve
-    sums.rate_bound[:] |= short & ~empty & ~at_reserve
-    np.copyto(sums.at_start, total(moment.inventory_start_kwh_th), where=start == t)
-    np.copyto(sums.at_end, held, where=end - 1 == t)
-    above = np.where(sums.from_above, usual_held - held, held - usual_held)
-    back = (t >= end) & (sums.full_again < 0) & (above >= -FULL_AGAIN_FRACTION * capacity)
-    sums.full_again[back] = t
-    sums.lack_kwh_th[:] = np.maximum(usual_held - held, 0.0)
+@inner
+def _add_inside(sums: Any, site: Any, now: Any, usual: Any) -> None:
+    """What counts inside the window: the usual case's own lack, the critical load, and what bound the tanks."""
+    sums.usual_short = sums.usual_short or usual.unmet_kw_th > UNMET_TOLERANCE_KW_TH
+    critical = min(site.critical_kw_th, now.load_kw_th)
+    lack = max(critical - now.firm_kw_th, critical - (now.load_kw_th - now.unmet_kw_th))
+    sums.critical_short_kw_th = max(sums.critical_short_kw_th, lack)
+    size, held = site.size_kwh_th, now.held_kwh_th
+    if size <= 0.0 or now.wanted_kw_th <= now.drawn_kw_th + UNMET_TOLERANCE_KW_TH:
+        return
+    at_reserve = site.reserve_kwh_th > 0.0 and held <= site.reserve_kwh_th + NEAR_EMPTY_FRACTION * size
+    empty = held <= NEAR_EMPTY_FRACTION * size
+    sums.reserve_bound = sums.reserve_bound or at_reserve
+    sums.stock_bound = sums.stock_bound or (empty and not at_reserve)
+    sums.rate_bound = sums.rate_bound or not (empty or at_reserve)
+    if held <= EMPTY_FRACTION * size and now.drawn_kw_th > REMNANT_FRACTION * now.wanted_kw_th:
+        sums.ran_out = True
 
 
-def broken(result: Tally, rows: Plants, here: Conditions, usual_counts: bool = True) -> Ints:
-    """First limit each row breaks, (row,), as an index into LIMITED_BY; 0 ("none") where it keeps all.
+def broken(
+    result: Tally, site: Ints, buildings: Buildings, here: Conditions, usual_counts: bool = True
+) -> Ints:
+    """First limit each row breaks, (row,), as an index into LIMITED_BY; 0 ("none") where it keeps all. `site` (row,)
+    indexes buildings and conditions.
 
     Comfort is the critical load, sites that allow no unmet load, the site's own ceiling and the drift limits
     in occupied hours, and (where `usual_counts`) a window in which the usual plan is short of cooling already:
@@ -174,12 +164,12 @@ def broken(result: Tally, rows: Plants, here: Conditions, usual_counts: bool = T
     in the middle of a window's interval: inventory. Recovery is load left unmet after the window because the tank
     is low.
     """
-    buildings = rows.roster.buildings
-    occupied = here.occupied[rows.site]
-    peak = np.where(occupied, result.rise_k, 0.0).max(axis=1)
-    drift = comfort.drift_excess_k(result.rise_k, occupied, here.step_h)
-    warm = (peak > buildings.rise_limit_k) | (drift > 0.0)
-    unserved = buildings.no_unmet & (result.unmet_kwh_th > UNMET_TOLERANCE_KW_TH)
+    sums = result.sums
+    warm = sums["occupied_peak_k"] > buildings.rise_limit_k[site]
+    moving = np.flatnonzero(sums["highest_k"] - sums["lowest_k"] > LEAST_DRIFT_K)
+    drift = comfort.drift_excess_k(result.rise_k[moving], here.occupied[site[moving]], here.step_h)
+    warm[moving] |= drift > 0.0
+    unserved = buildings.no_unmet[site] & (result.unmet_kwh_th > UNMET_TOLERANCE_KW_TH)
     critical = result.critical_short_kw_th > UNMET_TOLERANCE_KW_TH
     cause = tank_cause(result)
     tank_or_comfort = np.where(cause > 0, cause, LIMITED_BY.index("comfort"))
@@ -198,9 +188,10 @@ def broken(result: Tally, rows: Plants, here: Conditions, usual_counts: bool = T
 
 
 def tank_cause(result: Tally) -> Ints:
-    """Why the tanks gave less than asked in the window, (row,), as an index into LIMITED_BY; 0 = they did not."""
+    """Why the tanks gave less than asked in the window, (row,), as an index into LIMITED_BY; 0 = they did not: the
+    held-back inventory was reached, they ran low, or they were asked for more than their rate with inventory left."""
     return np.select(
-        [result.reserve_bound, result.stock_bound, result.rate_bound],
+        [result.sums[name] for name in ("reserve_bound", "stock_bound", "rate_bound")],
         [LIMITED_BY.index(name) for name in ("held_back", "inventory", "discharge_rate")],
         default=LIMITED_BY.index("none"),
     )

@@ -13,6 +13,7 @@ from typing import Final
 import numpy as np
 from numpy.polynomial import polynomial
 
+from sites.compiled import Number, choose, larger, shared, smaller
 from sites.errors import SitesError
 from sites.roster import FREEZING_KINDS, ICE_KINDS, TANK_KINDS, Rows, Tanks, kind_is
 from sites.units import SECONDS_PER_HOUR, FloatLike, Floats, Ints
@@ -52,6 +53,8 @@ WATER_DENSITY_KG_PER_M3: Final = 999.78
 WATER_CP_KJ_PER_KG_K: Final = 4.1968
 """Water at 9 degC and 1 atm (IAPWS)."""
 
+TINY: Final = float(np.finfo(np.float64).tiny)
+
 DENSEST_WATER_C: Final = 4.0
 """Water is densest here; a stratified tank cannot be supplied colder."""
 
@@ -81,12 +84,16 @@ def lmtd_k(inlet_c: FloatLike, outlet_c: FloatLike, freezing_c: float = FREEZING
     """
     inlet = np.asarray(inlet_c, dtype=np.float64) - freezing_c
     outlet = np.asarray(outlet_c, dtype=np.float64) - freezing_c
-    works = (inlet * outlet > 0.0) & (np.minimum(np.abs(inlet), np.abs(outlet)) > TOUCHING_K)
-    ratio_less_1 = np.divide(inlet - outlet, outlet, out=np.zeros(works.shape), where=works)
-    log = np.log1p(ratio_less_1)
-    mean = np.array(np.broadcast_to(inlet, works.shape))
-    np.divide(inlet - outlet, log, out=mean, where=works & (log != 0.0))
-    return np.where(works, np.abs(mean), 0.0)
+    return np.asarray(mean_difference_k(inlet, outlet))
+
+
+@shared
+def mean_difference_k(inlet: Number, outlet: Number) -> Number:
+    """`lmtd_k` of temperatures counted from freezing, K; any shape."""
+    works = (inlet * outlet > 0.0) & (smaller(np.abs(inlet), np.abs(outlet)) > TOUCHING_K)
+    log = np.log1p(choose(works, inlet - outlet, 0.0) / choose(works, outlet, 1.0))
+    mean = choose(log != 0.0, inlet - outlet, inlet) / choose(log != 0.0, log, 1.0)
+    return choose(works, np.abs(mean), 0.0)
 
 
 def strand_fraction_per_h(
@@ -162,35 +169,45 @@ def knots_kw_th(
     read as 0. At small LMTD (under 2.78 K for SET_A) a model turns back near one end; no knot is above the
     better of the two ends, which keeps the curve monotone and below the model.
     """
-    scaled = np.asarray(lmtd_k, dtype=np.float64)[..., None] / REFERENCE_LMTD_K
-    shape = np.broadcast_shapes(curves.base.shape[:-1], scaled.shape[:-1])
-    # One knot of all tanks lies together in memory: the loops over knots below run twice as fast.
-    rate: Floats = np.moveaxis(np.empty((len(KNOT_SOC), *shape)), 0, -1)
-    np.multiply(curves.slope, scaled, out=rate)
-    rate += curves.base
-    np.minimum(rate, np.maximum(rate[..., :1], rate[..., -1:]), out=rate)
-    rate *= capacity_kwh_th[..., None]
-    np.minimum(rate, ceiling_kw_th[..., None], out=rate)
-    return rate
+    lmtd = np.asarray(lmtd_k, dtype=np.float64)
+    shape = np.broadcast_shapes(
+        curves.base.shape[:-1], lmtd.shape, capacity_kwh_th.shape, ceiling_kw_th.shape
+    )
+    knots = np.empty((len(KNOT_SOC), *shape))
+    fill_knots(
+        _knots_first(curves.base), _knots_first(curves.slope), capacity_kwh_th, ceiling_kw_th, lmtd, knots
+    )
+    return np.moveaxis(knots, 0, -1)
+
+
+@shared
+def fill_knots(
+    base: Number, slope: Number, capacity_kwh_th: Number, ceiling_kw_th: Number, lmtd_k: Number, knots: Number
+) -> None:
+    """`knots_kw_th` written into `knots` (J, ...), knots first as in base and slope (J, ...)."""
+    scaled = lmtd_k / REFERENCE_LMTD_K
+    last = len(KNOT_SOC) - 1
+    most = larger(slope[0] * scaled + base[0], slope[last] * scaled + base[last])
+    for j in range(len(KNOT_SOC)):
+        rate = smaller(slope[j] * scaled + base[j], most)
+        knots[j] = smaller(rate * capacity_kwh_th, ceiling_kw_th)
 
 
 def limit_kw_th(inventory_kwh_th: Floats, capacity_kwh_th: Floats, knots_kw_th: Floats) -> Floats:
     """The limit at an inventory, on the straight lines between the knots, not below 0; 0 without capacity."""
-    empty = capacity_kwh_th <= 0.0
-    soc = np.divide(
-        inventory_kwh_th,
-        capacity_kwh_th,
-        out=np.zeros(np.broadcast(inventory_kwh_th, empty).shape),
-        where=~empty,
-    )
-    limit = np.array(np.broadcast_to(knots_kw_th[..., 0], np.broadcast(soc, knots_kw_th[..., 0]).shape))
+    return np.asarray(on_lines_kw_th(inventory_kwh_th, capacity_kwh_th, _knots_first(knots_kw_th)))
+
+
+@shared
+def on_lines_kw_th(inventory_kwh_th: Number, capacity_kwh_th: Number, knots_kw_th: Number) -> Number:
+    """`limit_kw_th` with knots first, (J, ...)."""
+    real = capacity_kwh_th > 0.0
+    soc = choose(real, inventory_kwh_th, 0.0) / choose(real, capacity_kwh_th, 1.0)
+    limit = knots_kw_th[0]
     for j in range(len(KNOT_SOC) - 1):
-        share = np.asarray(soc - KNOT_SOC[j])
-        share /= KNOT_SOC[j + 1] - KNOT_SOC[j]
-        np.maximum(share, 0.0, out=share)
-        np.minimum(share, 1.0, out=share)
-        limit += share * (knots_kw_th[..., j + 1] - knots_kw_th[..., j])
-    return np.where(empty, 0.0, np.maximum(limit, 0.0))
+        share = (soc - KNOT_SOC[j]) / (KNOT_SOC[j + 1] - KNOT_SOC[j])
+        limit = limit + smaller(larger(share, 0.0), 1.0) * (knots_kw_th[j + 1] - knots_kw_th[j])
+    return choose(real, larger(limit, 0.0), 0.0)
 
 
 def most_discharge_kw_th(
@@ -201,9 +218,17 @@ def most_discharge_kw_th(
     Solves E_end + limit(E_end) dt = E - loss dt, whose left side is piecewise linear and rising, exactly. Loss
     must not exceed E / dt. `knots_kw_th` from discharge curves, (..., J); all else broadcasts to (...).
     """
+    knots = _knots_first(knots_kw_th)
+    return np.asarray(steady_discharge_kw_th(inventory_kwh_th, loss_kw_th, capacity_kwh_th, knots, step_h))
+
+
+@shared
+def steady_discharge_kw_th(
+    inventory_kwh_th: Number, loss_kw_th: Number, capacity_kwh_th: Number, knots_kw_th: Number, step_h: float
+) -> Number:
+    """`most_discharge_kw_th` with knots first, (J, ...)."""
     start = inventory_kwh_th - loss_kw_th * step_h
-    end = _end_inventory(start, capacity_kwh_th, knots_kw_th * step_h)
-    return np.maximum(start - end, 0.0) / step_h
+    return larger(start - end_inventory_kwh_th(start, capacity_kwh_th, knots_kw_th, step_h), 0.0) / step_h
 
 
 def most_charge_kw_th(
@@ -213,9 +238,17 @@ def most_charge_kw_th(
 
     Solves E_end - limit(E_end) dt = E - loss dt, as most_discharge_kw_th; `knots_kw_th` from charge curves.
     """
+    knots = _knots_first(knots_kw_th)
+    return np.asarray(steady_charge_kw_th(inventory_kwh_th, loss_kw_th, capacity_kwh_th, knots, step_h))
+
+
+@shared
+def steady_charge_kw_th(
+    inventory_kwh_th: Number, loss_kw_th: Number, capacity_kwh_th: Number, knots_kw_th: Number, step_h: float
+) -> Number:
+    """`most_charge_kw_th` with knots first, (J, ...)."""
     start = inventory_kwh_th - loss_kw_th * step_h
-    end = _end_inventory(start, capacity_kwh_th, knots_kw_th * -step_h)
-    return np.maximum(end - start, 0.0) / step_h
+    return larger(end_inventory_kwh_th(start, capacity_kwh_th, knots_kw_th, -step_h) - start, 0.0) / step_h
 
 
 def standing_loss_kw_th(
@@ -227,8 +260,20 @@ def standing_loss_kw_th(
     per hour while any of it is left. Chilled water: a share of inventory. At most what is there, E / dt.
     """
     of_capacity = kind_is(kind, TANK_KINDS, FREEZING_KINDS)
-    held = np.where(of_capacity, capacity_kwh_th, inventory_kwh_th)
-    return np.minimum(held * loss_fraction_per_h, inventory_kwh_th / step_h)
+    return np.asarray(loss_kw_th(of_capacity, inventory_kwh_th, capacity_kwh_th, loss_fraction_per_h, step_h))
+
+
+@shared
+def loss_kw_th(
+    of_capacity: Number,
+    inventory_kwh_th: Number,
+    capacity_kwh_th: Number,
+    loss_fraction_per_h: Number,
+    step_h: float,
+) -> Number:
+    """`standing_loss_kw_th`, told of which tanks the loss is a share of capacity."""
+    held = choose(of_capacity, capacity_kwh_th, inventory_kwh_th)
+    return smaller(held * loss_fraction_per_h, inventory_kwh_th / step_h)
 
 
 def usable_water_kwh_th(
@@ -287,23 +332,25 @@ def eutectic_kwh_th(mass_kg: FloatLike) -> Floats:
     return np.asarray(mass_kg, dtype=np.float64) * EUTECTIC_LATENT_HEAT_KJ_PER_KG / SECONDS_PER_HOUR
 
 
-def _end_inventory(target: Floats, capacity: Floats, gain: Floats) -> Floats:
-    """The E_end in [0, capacity] for which E_end + gain(E_end) = target, gain given at the knots, (..., J).
+@shared
+def end_inventory_kwh_th(target: Number, capacity: Number, knots_kw_th: Number, gain_h: float) -> Number:
+    """The E_end in [0, capacity] for which E_end + gain_h limit(E_end) = target, the limit given at the knots (J, ...).
 
-    E + gain must rise with E. Inverted as a sum over segments, each filled from 0 to 1: no search, no gather.
+    The left side must rise with E. Inverted as a sum over segments, each filled from 0 to 1: no search.
     """
-    end = np.zeros(np.broadcast_shapes(np.shape(target), np.shape(capacity), gain.shape[:-1]))
-    below = KNOT_SOC[0] * capacity + gain[..., 0]
+    below = KNOT_SOC[0] * capacity + knots_kw_th[0] * gain_h
+    end = 0.0 * below
     for j in range(len(KNOT_SOC) - 1):
-        above = KNOT_SOC[j + 1] * capacity + gain[..., j + 1]
-        share = np.asarray(target - below)
-        share /= np.maximum(above - below, np.finfo(np.float64).tiny)
-        np.maximum(share, 0.0, out=share)
-        np.minimum(share, 1.0, out=share)
-        share *= KNOT_SOC[j + 1] - KNOT_SOC[j]
-        end += share
+        above = KNOT_SOC[j + 1] * capacity + knots_kw_th[j + 1] * gain_h
+        share = (target - below) / larger(above - below, TINY)
+        end = end + smaller(larger(share, 0.0), 1.0) * (KNOT_SOC[j + 1] - KNOT_SOC[j])
         below = above
     return end * capacity
+
+
+def _knots_first(per_knot: Floats) -> Floats:
+    """(..., J) as (J, ...)."""
+    return np.moveaxis(per_knot, -1, 0)
 
 
 def _curves(tanks: Tanks, way: str, limit_kw_th: Floats) -> RateCurves:

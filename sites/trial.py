@@ -1,26 +1,27 @@
 """Candidates tried: each simulated only as far as it keeps its limits.
 
-Nothing before the event differs from the usual case, so every trial starts there at the event's first interval; a
+Nothing before a window differs from the usual case, so every trial starts there at its window's first interval; a
 candidate that has broken a limit by the event's end is run no further. Owns which rows are run how far; what is
 simulated is plant.py's, what is summed up and which limit breaks tally.py's.
 """
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
+from typing import Any
 
 import numpy as np
 
 from sites.blocks import Candidates
 from sites.candidate import Stages
-from sites.conditions import Conditions
-from sites.course import Course
+from sites.compiled import loop
+from sites.course import MADE, NOW, STORED, Course
 from sites.direction import Direction
 from sites.ground import Ground, usual_high
-from sites.plant import State, at_rest, simulate, state_after
+from sites.plant import advance, at_rest, laid, records_of, room, stage
 from sites.quotes import LIMITED_BY
 from sites.roster import Rows
-from sites.rows import Plants, plants
-from sites.tally import Sums, Tally, add, broken, sums, tank_cause
-from sites.units import Bools, Floats, Ints, total
+from sites.rows import Plants, usual_hours
+from sites.tally import Tally, add, broken, tally, tank_cause
+from sites.units import AnyArray, Bools, Floats, Ints
 
 LEAST_KW = 1.0
 """A candidate gives at least this much in every interval of its window, else its machines are as good as off."""
@@ -39,33 +40,89 @@ LOW_TOLERANCE = 0.01
 class Trial(Rows):
     """Candidate rows on their way through the horizon."""
 
-    rows: Plants
+    rows: AnyArray
+    """plant.ROW (row,): windows, and where each stands"""
+    inventory_kwh_th: Floats
     stages: Stages
-    start: Ints
-    """(row,) first interval of each window"""
-    end: Ints
-    state: State
-    sums: Sums
+    tally: Tally
 
-    def run(self, here: Conditions, usual: Course, first: int, last: int) -> "Trial":
-        """The same rows after [first, last), held against the usual course; their sums grow in place."""
-        state = self.state
-        for moment in simulate(self.rows, here, self.stages, state, usual.as_usual, first, last):
-            add(self.sums, moment, self.rows, here, usual, self.start, self.end)
-            state = state_after(moment)
-        return replace(self, state=state)
+    def run(self, plants: Plants, usual: AnyArray, first: int, last: int) -> None:
+        """Take the rows through [first, last), held against the usual hours (rows.USUAL); all grows in place."""
+        once = (np.zeros((1, width), dtype=kind) for width, kind in self._widths(plants))
+        _run(
+            first,
+            last,
+            plants.step_h,
+            *(plants.sites, plants.machines, plants.tanks, plants.hours, plants.able, usual),
+            *(self.rows, *laid(self.stages), self.inventory_kwh_th),
+            *(self.tally.sums, self.tally.change_kw, self.tally.rise_k),
+            *once,
+            *room(plants),
+        )
+
+    @staticmethod
+    def _widths(plants: Plants) -> tuple[tuple[int, Any], ...]:
+        return (1, NOW), (plants.machines.shape[1], MADE), (plants.tanks.shape[1], STORED)
 
 
-def begin(base: Ground, offered: Candidates, usual: Course, first: int, inventory: Floats) -> Trial:
-    """Rows of the candidates at the start of interval `first`, where the usual course (from `inventory`) stands."""
-    site = offered.site
-    rows = plants(base.roster, base.here, base.standing.tank_available, site, (offered.recovery, offered.end))
+@loop
+def _run(
+    first: int,
+    last: int,
+    step_h: float,
+    sites: Any,
+    machines: Any,
+    tanks: Any,
+    hours: Any,
+    able: Any,
+    usual: Any,
+    rows: Any,
+    stage_start: Any,
+    stage_end: Any,
+    stage_limit: Any,
+    stage_charge: Any,
+    inventory: Any,
+    sums: Any,
+    change_kw: Any,
+    rise_k: Any,
+    now: Any,
+    made: Any,
+    stored: Any,
+    knots: Any,
+    work: Any,
+) -> None:
+    """Every row over the intervals from its window's start, or from `first` where that is later, to `last`."""
+    for r in range(len(rows)):
+        row = rows[r]
+        i = row.site
+        site = sites[i]
+        for t in range(max(first, row.start), last):
+            hour, beside = hours[i, t], usual[i, t]
+            staged, made_to = stage(
+                site, made[0], stage_start[r], stage_end[r], stage_limit[r], stage_charge[r], t
+            )
+            firm = site.critical_kw_th > 0.0 and t < row.end
+            advance(
+                site, machines[i], tanks[i], hour, able[i, t], beside, usual[i, max(t - 1, 0)], True, t,
+                staged, made_to, firm, row, inventory[r], now[0, 0], made[0], stored[0], knots, work, step_h,
+            )  # fmt: skip
+            change_kw[r, t] = now[0, 0].power_kw - beside.power_kw
+            rise_k[r, t] = row.air_k
+            add(sums[r], row, site, hour, now[0, 0], beside, t, step_h)
+
+
+def begin(base: Ground, offered: Candidates, usual: Course, inventory: Floats) -> Trial:
+    """Rows of the candidates at the start of their windows, where the usual course (from `inventory`) stands."""
+    site, before = offered.site, np.maximum(offered.start - 1, 0)
+    early = offered.start == 0
+    held = np.where(early[:, None], inventory[site], usual.inventory_kwh_th[site, :, before])
+    held = np.ascontiguousarray(held)
+    charging = ~early & usual.charging[site, before]
+    rows = records_of(base.plants.pick(site, (offered.recovery, offered.end)), at_rest(held, charging))
+    rows["start"], rows["end"] = offered.start, offered.end
+    rows["from_above"] = offered.stages.charge.any(axis=1)
     stages = base.in_force.take(site).join(offered.stages)
-    held = usual.inventory_kwh_th[site, :, first - 1] if first else inventory[site]
-    charging = usual.charging[site, first - 1] if first else None
-    state = at_rest(np.array(held), charging)
-    made_to = np.asarray(offered.stages.charge.any(axis=1), dtype=np.bool_)
-    return Trial(rows, stages, offered.start, offered.end, state, sums(usual.power_kw[site], made_to))
+    return Trial(rows, held, stages, tally(len(site), base.outlook.clock.count))
 
 
 @dataclass(frozen=True)
@@ -86,32 +143,53 @@ class Tried:
     """(R,) what a quoted candidate leans on"""
 
 
-def try_all(base: Ground, offered: Candidates, event: tuple[int, int], direction: Direction) -> Tried:
-    """Try every candidate from the best inventory, and those that keep their limits from the other one: the low
-    inventory for a shed, the high one for an absorb.
+@dataclass(frozen=True)
+class Side:
+    """One of the two inventories that candidates start from, with its usual course and that course's hours."""
+
+    course: Course
+    inventory_kwh_th: Floats
+    hours: AnyArray
+    """rows.USUAL"""
+
+
+def sides_of(base: Ground, direction: Direction) -> tuple[Side, Side]:
+    """The best inventory, and the one that candidates must stand too: for a shed the low, for an absorb the high."""
+    absorb = direction is Direction.ABSORB
+    other = usual_high(base) if absorb else base.usual_low
+    inventory = base.standing.high_kwh_th if absorb else base.standing.low_kwh_th
+    return _side(base, base.usual, base.standing.best_kwh_th), _side(base, other, inventory)
+
+
+def _side(base: Ground, usual: Course, inventory: Floats) -> Side:
+    case = usual.as_usual
+    parts = (case.unmet_kw_th, case.inventory_kwh_th, case.charge_kw_th, case.power_kw)
+    return Side(usual, inventory, usual_hours(base.plants, base.here, *parts))
+
+
+def try_all(
+    base: Ground, offered: Candidates, event: tuple[int, int], direction: Direction, sides: tuple[Side, Side]
+) -> Tried:
+    """Try every candidate from the best inventory, and those that keep their limits from the other one.
 
     Limits must hold in both; one that gives less from the other inventory than from the best is refused, so that
     no promise rests on the better level.
     """
-    absorb = direction is Direction.ABSORB
     runs = _Runs(base, offered, event, direction)
-    other = usual_high(base) if absorb else base.usual_low
-    other_kwh_th = base.standing.high_kwh_th if absorb else base.standing.low_kwh_th
     verdict = np.zeros(len(offered.site), dtype=np.int64)
-    everyone = np.arange(len(verdict))
-    best, alive, expected = runs.part(everyone, base.usual, base.standing.best_kwh_th, verdict)
-    best = runs.rest(best, alive, base.usual, verdict)
-    alive, best = alive[verdict[alive] == 0], best.take(np.flatnonzero(verdict[alive] == 0))
-    low, still, _ = runs.part(alive, other, other_kwh_th, verdict, expected[alive])
-    low = runs.rest(low, still, other, verdict)
+    trial, alive, expected = runs.part(np.arange(len(verdict)), sides[0], verdict)
+    runs.rest(trial, alive, sides[0], verdict)
+    kept = verdict[alive] == 0
+    alive, best = alive[kept], trial.tally.take(np.flatnonzero(kept))
+    other, still, _ = runs.part(alive, sides[1], verdict, expected[alive])
+    runs.rest(other, still, sides[1], verdict)
     last = verdict[still] == 0
-    kept = still[last]
-    chosen = best.take(np.searchsorted(alive, kept))
-    tally = chosen.sums.tally()
-    cause = tank_cause(tally)
-    leans = np.where(tally.unmet_kwh_th > 0.0, LIMITED_BY.index("comfort"), 0)
-    at_start = low.take(np.flatnonzero(last)).sums.tally().inventory_at_start_kwh_th
-    return Tried(verdict, expected, kept, tally, at_start, np.where(cause > 0, cause, leans))
+    kept_index = still[last]
+    chosen = best.take(np.searchsorted(alive, kept_index))
+    cause = tank_cause(chosen)
+    leans = np.where(chosen.unmet_kwh_th > 0.0, LIMITED_BY.index("comfort"), 0)
+    at_start = other.tally.inventory_at_start_kwh_th[last]
+    return Tried(verdict, expected, kept_index, chosen, at_start, np.where(cause > 0, cause, leans))
 
 
 @dataclass(frozen=True)
@@ -122,33 +200,32 @@ class _Runs:
     direction: Direction
 
     def part(
-        self, index: Ints, usual: Course, inventory: Floats, verdict: Ints, promised: Floats | None = None
+        self, index: Ints, side: Side, verdict: Ints, promised: Floats | None = None
     ) -> tuple[Trial, Ints, Floats]:
         """Run the candidates `index` through the event, write refusals into `verdict`, and return what is left
         of the trial, its indices, and all expected kW."""
         first, last = self.event
-        trial = begin(self.base, self.offered.take(index), usual, first, inventory)
-        trial = trial.run(self.base.here, usual, first, last)
-        change = trial.sums.power_kw[:, first:last] - usual.power_kw[trial.rows.site, first:last]
-        expected = self.direction.sign * change
+        trial = begin(self.base, self.offered.take(index), side.course, side.inventory_kwh_th)
+        trial.run(self.base.plants, side.hours, first, last)
+        site, done = trial.rows["site"], trial.tally
+        expected = self.direction.sign * done.change_kw[:, first:last]
         hour = np.arange(first, last)[None, :]
-        inside = (hour >= trial.start[:, None]) & (hour < trial.end[:, None])
+        inside = (hour >= trial.rows["start"][:, None]) & (hour < trial.rows["end"][:, None])
         least = np.where(inside, expected, np.inf).min(axis=1, initial=np.inf)
-        tally = trial.sums.tally()
-        found = broken(tally, trial.rows, self.base.here, promised is None)
+        found = self._broken(trial, promised is None)
         small, less = least < LEAST_KW, np.zeros(len(index), dtype=np.bool_)
         if promised is not None:
             slack = LOW_TOLERANCE * np.abs(promised) + LEAST_KW
             less = np.asarray((inside & (expected < promised - slack)).any(axis=1))
             small = np.zeros(len(index), dtype=np.bool_)
-        over = (self.base.overstated_kw[trial.rows.site, first:last] * inside).sum(axis=1)
+        over = (self.base.overstated_kw[site, first:last] * inside).sum(axis=1)
         unsure = over > UNSURE_FRACTION * np.maximum((expected * inside).sum(axis=1), 0.0)
         if self.direction is Direction.ABSORB:
-            size = trial.rows.roster.tanks.capacity_kwh_th
-            full = trial.sums.at_end >= NEARLY_FULL * total(size)
+            size = self.base.plants.sites["size_kwh_th"][site]
+            full = done.inventory_at_end_kwh_th >= NEARLY_FULL * size
             reasons = ((small & full, "full"), (small, "already_on"), (found > 0, ""), (less, "full"))
         else:
-            less = less | self._overheld(trial, tally)
+            less = less | self._overheld(trial)
             reasons = ((small, "already_off"), (found > 0, ""), (less, "inventory"), (unsure, "already_off"))
         verdict[index] = np.select(
             [mask for mask, _ in reasons],
@@ -158,14 +235,17 @@ class _Runs:
         alive = np.flatnonzero(verdict[index] == 0)
         return trial.take(alive), index[alive], expected
 
-    def _overheld(self, trial: Trial, tally: Tally) -> Bools:
-        """Rows (row,) whose tanks give less than asked, from a level at window start that may be too high."""
-        level = self.base.overheld_kwh_th[trial.rows.site, trial.start]
-        too_high = level > OVERHELD_FRACTION * tally.inventory_at_start_kwh_th
-        return np.asarray((tank_cause(tally) > 0) & too_high)
+    def _broken(self, trial: Trial, usual_counts: bool) -> Ints:
+        site, base = trial.rows["site"], self.base
+        return broken(trial.tally, site, base.roster.buildings, base.here, usual_counts)
 
-    def rest(self, trial: Trial, index: Ints, usual: Course, verdict: Ints) -> Trial:
+    def _overheld(self, trial: Trial) -> Bools:
+        """Rows (row,) whose tanks give less than asked, from a level at window start that may be too high."""
+        level = self.base.overheld_kwh_th[trial.rows["site"], trial.rows["start"]]
+        too_high = level > OVERHELD_FRACTION * trial.tally.inventory_at_start_kwh_th
+        return np.asarray((tank_cause(trial.tally) > 0) & too_high)
+
+    def rest(self, trial: Trial, index: Ints, side: Side, verdict: Ints) -> None:
         """Run what is left after the event to the horizon's end, and write refusals into `verdict`."""
-        done = trial.run(self.base.here, usual, self.event[1], self.base.here.load_kw_th.shape[1])
-        verdict[index] = broken(done.sums.tally(), done.rows, self.base.here, usual is self.base.usual)
-        return done
+        trial.run(self.base.plants, side.hours, self.event[1], self.base.outlook.clock.count)
+        verdict[index] = self._broken(trial, side.course is self.base.usual)

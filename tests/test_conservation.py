@@ -14,7 +14,7 @@ from made_sites import made_outlook, made_roster, made_standing
 from test_quote import made_terms
 
 from sites.candidate import Stages
-from sites.course import Course, course
+from sites.course import Course
 from sites.ground import Ground, ground
 from sites.plant import at_rest, simulate
 from sites.quote import Quoted, detail, quote
@@ -67,7 +67,7 @@ def ran(charge: bool = False) -> tuple[Course, Ground]:
         np.full((n, 1), charge),
     )
     rows = plants(roster, base.here, standing.tank_available, np.arange(n))
-    run = course(simulate(rows, base.here, stages, at_rest(standing.best_kwh_th), base.usual.as_usual))
+    run = simulate(rows, base.here, stages, at_rest(standing.best_kwh_th), base.usual.as_usual)
     return run, base
 
 

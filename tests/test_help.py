@@ -25,6 +25,7 @@ HEAVY = (
     "pulp",
     "highspy",
     "networkx",
+    "numba",
     "jinja2",
     "pydantic",
     "holidays",

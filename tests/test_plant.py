@@ -8,7 +8,7 @@ from made_sites import SITES, made_outlook, made_roster, made_standing
 
 from sites.candidate import Stages, no_stages
 from sites.conditions import conditions
-from sites.course import Course, course
+from sites.course import Course
 from sites.plant import at_rest, simulate
 from sites.quote import ground
 from sites.roster import STRATEGIES
@@ -37,7 +37,7 @@ def event_course(fraction: float = 0.9) -> tuple[Course, Course, object]:
         np.full((roster.count, 1), 12), np.full((roster.count, 1), 18), np.zeros((roster.count, 1, 3))
     )
     taken = plants(roster, base.here, standing.tank_available, rows)
-    run = course(simulate(taken, base.here, stages, at_rest(standing.best_kwh_th), base.usual.as_usual))
+    run = simulate(taken, base.here, stages, at_rest(standing.best_kwh_th), base.usual.as_usual)
     return run, base.usual, roster
 
 
@@ -145,9 +145,9 @@ def test_one_of_two_half_loaded_machines_off_is_hardly_a_shed() -> None:
     standing = made_standing(roster)
     here = conditions(roster, outlook, standing)
     rows = plants(roster, here, standing.tank_available, np.array([0]))
-    both = course(simulate(rows, here, no_stages(1, 3), at_rest(standing.best_kwh_th), None))
+    both = simulate(rows, here, no_stages(1, 3), at_rest(standing.best_kwh_th), None)
     one_off = Stages(np.array([[12]]), np.array([[24]]), np.array([[[1.0, 0.0, 1.0]]]))
-    one = course(simulate(rows, here, one_off, at_rest(standing.best_kwh_th), both.as_usual))
+    one = simulate(rows, here, one_off, at_rest(standing.best_kwh_th), both.as_usual)
     assert (both.direct_kw_th[0, :2, 12] > 0.0).all()
     assert one.direct_kw_th[0, 1, 12] == 0.0
     assert one.unmet_kw_th.max() == 0.0

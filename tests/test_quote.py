@@ -7,7 +7,9 @@ import numpy as np
 import pytest
 from made_sites import made_outlook, made_roster, made_standing
 
-from sites import blocks, plant, tank
+from sites import blocks, plant, trial
+from sites import quote as quoting
+from sites.compiled import cores
 from sites.outlook import Outlook
 from sites.quote import Ground, Quoted, detail, ground, quote
 from sites.quotes import LIMITED_BY, Answer
@@ -247,23 +249,33 @@ def test_answer_is_the_least_over_each_sites_candidates() -> None:
 
 
 @pytest.mark.parametrize("copies", [10, 1000])
-def test_model_calls_do_not_grow_with_the_sites(copies: int, monkeypatch: pytest.MonkeyPatch) -> None:
-    """A loop over sites would show here: the models are called once an interval whatever the fleet's size."""
-    calls = {"step": 0, "tank": 0}
+def test_loops_are_not_called_more_often_for_more_sites(copies: int, monkeypatch: pytest.MonkeyPatch) -> None:
+    """A Python loop over sites would show here: rows are looped over in compiled code only, all of them at once."""
+    calls = {"whole": 0, "tried": 0}
 
     def counted(name: str, function: object) -> object:
-        def wrapped(*given: object, **named: object) -> object:
+        def wrapped(*given: object) -> object:
             calls[name] += 1
-            return function(*given, **named)  # type: ignore[operator]
+            return function(*given)  # type: ignore[operator]
 
         return wrapped
 
-    monkeypatch.setattr(plant, "_advance", counted("step", plant._advance))
-    monkeypatch.setattr(tank, "most_discharge_kw_th", counted("tank", tank.most_discharge_kw_th))
+    monkeypatch.setattr(plant, "_keep", counted("whole", plant._keep))
+    monkeypatch.setattr(trial, "_run", counted("tried", trial._run))
     roster = made_roster(tuple([4] * copies))
     outlook = made_outlook(roster, hours=6.0)
     base = ground(roster, outlook, made_standing(roster))
     quoted = quote(base, made_terms(copies, minimum_intervals=np.full(copies, 10)))
     assert quoted.quotes.site_count == copies
-    # Twice the usual case from the first interval, twice the candidates from the event's first.
-    assert calls == {"step": 2 * 24 + 2 * 12, "tank": 2 * 24 + 2 * 12}
+    # The usual case from two inventories, a part of the sites a processor; candidates through event and rest, twice.
+    assert calls == {"whole": 2 * cores(), "tried": 4}
+
+
+def test_the_same_quotes_from_many_small_blocks_as_from_one(monkeypatch: pytest.MonkeyPatch) -> None:
+    base = made_ground()
+    whole = quote(base, made_terms(6)).quotes
+    monkeypatch.setattr(quoting, "ROWS_AT_ONCE", 50)
+    parts = quote(base, made_terms(6)).quotes
+    assert len(whole.site) > 100
+    for name in ("site", "quote_id", "expected_kw", "change_kw", "cost", "limited_by", "site_limited_by"):
+        np.testing.assert_array_equal(getattr(parts, name), getattr(whole, name))
