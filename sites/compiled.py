@@ -25,8 +25,10 @@ Result = TypeVar("Result")
 Number: TypeAlias = Any
 """What a shared model takes and gives: arrays where it is called as it is, single numbers inside a compiled loop."""
 
-OPTIONS: Final = {"error_model": "numpy"}
-"""Division by zero as in numpy. Operations keep the order they are written in: no fast arithmetic."""
+OPTIONS: Final = {"error_model": "numpy", "_nrt": False, "forceinline": True}
+"""Division by zero as in numpy. No array is made inside a loop, so none needs counting of references, which would
+take as long as the loop itself. One piece of code for a whole row, no calls in it. Operations keep the order they are
+written in: no fast arithmetic."""
 
 _members: list[Callable[..., Any]] = []
 _lock = threading.RLock()

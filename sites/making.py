@@ -43,26 +43,17 @@ def make(
     the tank waits.
     """
     cooling, asked, drawn = flows
-    count = site.machine_count
-    can = charging and _modes(site, machines, able, made, work, cooling)
-    if not can:
-        for m in range(count):
-            made[m].making_ice = False
-            work[WARM, m] = work[DIRECT, m]
-            work[ICE, m] = 0.0
+    if not (charging and _modes(site, machines, able, made, work, cooling)):
+        _cool(site, made, stored, work, cooling)
+        return _power(site, machines, able, made, drawn), 0.0
     warm = 0.0
     chilling = 0.0
-    for m in range(count):
+    for m in range(site.machine_count):
         warm += work[WARM, m]
         chilling += work[ICE, m]
-    filled = 0.0
-    if can:
-        spare = warm + chilling - cooling
-        offered = min(max(min(chilling, spare) if site.ice_site else spare, 0.0), asked)
-        filled = charge(site, tanks, stored, offered, step_h)
-    else:
-        for k in range(site.tank_count):
-            stored[k].charge_kw_th = 0.0
+    spare = warm + chilling - cooling
+    offered = min(max(min(chilling, spare) if site.ice_site else spare, 0.0), asked)
+    filled = charge(site, tanks, stored, offered, step_h)
     on_warm = min(cooling, warm)
     on_ice = cooling - on_warm
     into_warm = 0.0 if site.ice_site else filled
@@ -74,12 +65,28 @@ def make(
         _load(site, work, capacity, load, demand if capacity == WARM or chilling > 0.0 else 0.0)
     warm_share = into_warm / (on_warm + into_warm) if on_warm + into_warm > 0.0 else 0.0
     ice_share = into_ice / (on_ice + into_ice) if on_ice + into_ice > 0.0 else 0.0
-    for m in range(count):
+    for m in range(site.machine_count):
         own = made[m]
         own.into_tank_kw_th = work[WARM_LOAD, m] * warm_share + work[ICE_LOAD, m] * ice_share
         own.direct_kw_th = work[WARM_LOAD, m] + work[ICE_LOAD, m] - own.into_tank_kw_th
         own.making_ice = own.making_ice and work[ICE_LOAD, m] > 0.0
-    return _power(site, machines, able, made, work, filled + drawn), filled
+    return _power(site, machines, able, made, filled + drawn), filled
+
+
+@inner
+def _cool(site: Any, made: Any, stored: Any, work: Floats, cooling: Number) -> None:
+    """All machines in direct cooling, nothing into the tanks."""
+    ready = 0.0
+    for m in range(site.machine_count):
+        ready += work[DIRECT, m]
+    _load(site, work, DIRECT, WARM_LOAD, min(cooling, ready))
+    for m in range(site.machine_count):
+        own = made[m]
+        own.making_ice = False
+        own.direct_kw_th = work[WARM_LOAD, m]
+        own.into_tank_kw_th = 0.0
+    for k in range(site.tank_count):
+        stored[k].charge_kw_th = 0.0
 
 
 @inner
@@ -108,13 +115,13 @@ def _load(site: Any, work: Floats, capacity: int, load: int, demand: Number) -> 
 
 
 @inner
-def _power(site: Any, machines: Any, able: Any, made: Any, work: Floats, through_tank: Number) -> Number:
+def _power(site: Any, machines: Any, able: Any, made: Any, through_tank: Number) -> Number:
     """Power of each machine with its own auxiliaries, and of the whole plant."""
     power = 0.0
     machine_load = 0.0
     for m in range(site.machine_count):
         machine, own = machines[m], made[m]
-        load = work[WARM_LOAD, m] + work[ICE_LOAD, m]
+        load = own.direct_kw_th + own.into_tank_kw_th
         own.machine_kw = 0.0
         if load > 0.0:
             most = able[m].ice_kw_th if own.making_ice else able[m].direct_kw_th

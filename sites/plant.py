@@ -277,10 +277,11 @@ def _pull_down(site: Any, row: Any, staged: bool, extra: Number, spare: Number, 
 def _drift(site: Any, row: Any, now: Any, net: Number) -> None:
     """The zone over one interval under `net` kW_th of cooling that goes unmet."""
     air, mass = row.air_k, row.mass_k
-    row.air_k = after_k(site.air_of_air, site.air_of_mass, site.air_gain, air, mass, net)
-    row.mass_k = after_k(site.mass_of_air, site.mass_of_mass, site.mass_gain, air, mass, net)
+    air_end = after_k(site.air_of_air, site.air_of_mass, site.air_gain, air, mass, net)
+    mass_end = after_k(site.mass_of_air, site.mass_of_mass, site.mass_gain, air, mass, net)
     now.air_mean_rise_k = after_k(site.mean_of_air, site.mean_of_mass, site.mean_gain, air, mass, net)
-    now.air_rise_k, now.mass_rise_k = row.air_k, row.mass_k
+    now.air_rise_k, now.mass_rise_k = air_end, mass_end
+    row.air_k, row.mass_k = air_end, mass_end
 
 
 @inner

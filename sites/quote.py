@@ -115,26 +115,25 @@ class _Part:
 
 def _part(base: Ground, offered: blocks.Candidates, index: Ints, tried: Tried, lack_price: Floats) -> _Part:
     """The quoted ones of the candidates `index`, priced."""
-    kept, best = index[tried.kept], tried.best
-    site = offered.site[kept]
-    usual_kw = base.usual.power_kw[site]
+    kept = index[tried.kept]
     cost = cost_parts(
-        base.outlook.take(site),
-        base.roster.buildings.take(site),
-        usual_kw,
-        best.change_kw,
+        base.outlook,
+        base.roster.buildings,
+        base.usual.power_kw,
+        offered.site[kept],
+        tried.change_kw,
         (offered.start[kept], offered.end[kept]),
-        best.sums["unmet_kwh_th"],
-        best.sums["lack_kwh_th"],
-        lack_price[site],
+        tried.sums["unmet_kwh_th"],
+        tried.sums["lack_kwh_th"],
+        lack_price,
     )
     return _Part(
         verdict=tried.verdict,
         energy=tried.expected_kw.sum(axis=1),
         kept=kept,
-        change_kw=best.change_kw,
+        change_kw=tried.change_kw,
         cost=cost,
-        sums=best.sums,
+        sums=tried.sums,
         low_start_kwh_th=tried.low_start_kwh_th,
         limited_by=tried.limited_by,
     )

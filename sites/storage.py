@@ -112,6 +112,8 @@ def discharge(
     for _ in range(1 + SERIES_PASSES if site.series else 1):
         most, usable = _usable(site, tanks, stored, knots, share, staged, held, step_h)
         drawn = min(drawn, usable)
+        if drawn >= wanted and load - drawn <= ready:
+            break  # the share is the one it was worked out for
         share = drawn / max(drawn + min(load - drawn, ready), 1e-9)
     given = drawn / most if most > 0.0 else 0.0
     could = min(usable, reachable) / most if most > 0.0 else 0.0

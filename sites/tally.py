@@ -12,8 +12,8 @@ from sites import comfort
 from sites.compiled import Number, inner
 from sites.conditions import Conditions
 from sites.quotes import LIMITED_BY
-from sites.roster import Buildings, Rows
-from sites.units import AnyArray, Bools, Floats, Ints
+from sites.roster import Buildings
+from sites.units import AnyArray, Floats, Ints
 
 UNMET_TOLERANCE_KW_TH = 1e-6
 NEAR_EMPTY_FRACTION = 0.02
@@ -35,12 +35,17 @@ SUMS: Final = np.dtype(
     ],
     align=True,
 )
-"""Sums and peaks of one row, as Tally names them."""
+"""Sums and peaks of one row. unmet: beyond the usual case, over the whole horizon, and the worst of it after the
+window; critical_short: worst lack against the critical load, with the largest running machine lost; at_start, at_end:
+in all tanks at the window's ends; lack: how far the row ends below the usual case; full_again: clock index of the first
+interval after the window at whose end the inventory is back, -1 = never. In the window: load goes unmet in the usual
+case already; tanks were asked for more than their rate with inventory left, or than their inventory; they ran empty in
+the middle of an interval; the held-back inventory was reached."""
 
 
 @dataclass(frozen=True)
-class Tally(Rows):
-    """Per row (row,), or (row, interval) where said."""
+class Tally:
+    """What is kept of rows, (row, interval) and (row,)."""
 
     change_kw: Floats
     """(row, interval) event less usual"""
@@ -48,56 +53,6 @@ class Tally(Rows):
     """(row, interval) air node, interval end"""
     sums: AnyArray
     """SUMS (row,)"""
-
-    @property
-    def unmet_kwh_th(self) -> Floats:
-        """Unmet beyond the usual case, whole horizon."""
-        return np.asarray(self.sums["unmet_kwh_th"])
-
-    @property
-    def unmet_after_kw_th(self) -> Floats:
-        """Worst unmet beyond the usual case after the window."""
-        return np.asarray(self.sums["unmet_after_kw_th"])
-
-    @property
-    def critical_short_kw_th(self) -> Floats:
-        """Worst lack against the critical load, with the largest running machine lost."""
-        return np.asarray(self.sums["critical_short_kw_th"])
-
-    @property
-    def usual_short(self) -> Bools:
-        """In the window load goes unmet in the usual case already."""
-        return np.asarray(self.sums["usual_short"])
-
-    @property
-    def ran_out(self) -> Bools:
-        """In the window the tanks ran empty in the middle of an interval."""
-        return np.asarray(self.sums["ran_out"])
-
-    @property
-    def inventory_at_start_kwh_th(self) -> Floats:
-        """In all tanks at the window's start."""
-        return np.asarray(self.sums["at_start_kwh_th"])
-
-    @property
-    def inventory_at_end_kwh_th(self) -> Floats:
-        """In all tanks at the window's end."""
-        return np.asarray(self.sums["at_end_kwh_th"])
-
-    @property
-    def full_again(self) -> Ints:
-        """Clock index of the first interval after the window at whose end the inventory is back; -1 = never."""
-        return np.asarray(self.sums["full_again"])
-
-    @property
-    def lack_kwh_th(self) -> Floats:
-        """How far the row ends below the usual case."""
-        return np.asarray(self.sums["lack_kwh_th"])
-
-    @property
-    def peak_rise_k(self) -> Floats:
-        """Highest rise of the air above the usual case."""
-        return np.asarray(self.sums["highest_k"])
 
 
 def tally(rows: int, intervals: int) -> Tally:
@@ -153,10 +108,10 @@ def _add_inside(sums: Any, site: Any, now: Any, usual: Any) -> None:
 
 
 def broken(
-    result: Tally, site: Ints, buildings: Buildings, here: Conditions, usual_counts: bool = True
+    result: Tally, among: Ints, site: Ints, buildings: Buildings, here: Conditions, usual_counts: bool = True
 ) -> Ints:
-    """First limit each row breaks, (row,), as an index into LIMITED_BY; 0 ("none") where it keeps all. `site` (row,)
-    indexes buildings and conditions.
+    """First limit that each of the rows `among` (row,) breaks, as an index into LIMITED_BY; 0 ("none") where it keeps
+    all. `site` (row,) indexes buildings and conditions.
 
     Comfort is the critical load, sites that allow no unmet load, the site's own ceiling and the drift limits
     in occupied hours, and (where `usual_counts`) a window in which the usual plan is short of cooling already:
@@ -164,20 +119,20 @@ def broken(
     in the middle of a window's interval: inventory. Recovery is load left unmet after the window because the tank
     is low.
     """
-    sums = result.sums
+    sums = result.sums[among]
     warm = sums["occupied_peak_k"] > buildings.rise_limit_k[site]
     moving = np.flatnonzero(sums["highest_k"] - sums["lowest_k"] > LEAST_DRIFT_K)
-    drift = comfort.drift_excess_k(result.rise_k[moving], here.occupied[site[moving]], here.step_h)
+    drift = comfort.drift_excess_k(result.rise_k[among[moving]], here.occupied[site[moving]], here.step_h)
     warm[moving] |= drift > 0.0
-    unserved = buildings.no_unmet[site] & (result.unmet_kwh_th > UNMET_TOLERANCE_KW_TH)
-    critical = result.critical_short_kw_th > UNMET_TOLERANCE_KW_TH
-    cause = tank_cause(result)
+    unserved = buildings.no_unmet[site] & (sums["unmet_kwh_th"] > UNMET_TOLERANCE_KW_TH)
+    critical = sums["critical_short_kw_th"] > UNMET_TOLERANCE_KW_TH
+    cause = tank_cause(sums)
     tank_or_comfort = np.where(cause > 0, cause, LIMITED_BY.index("comfort"))
     return np.select(
         [
-            warm | unserved | critical | (result.usual_short & usual_counts),
-            result.ran_out,
-            result.unmet_after_kw_th > UNMET_TOLERANCE_KW_TH,
+            warm | unserved | critical | (sums["usual_short"] & usual_counts),
+            sums["ran_out"],
+            sums["unmet_after_kw_th"] > UNMET_TOLERANCE_KW_TH,
         ],
         [
             tank_or_comfort,
@@ -187,11 +142,11 @@ def broken(
     )
 
 
-def tank_cause(result: Tally) -> Ints:
+def tank_cause(sums: AnyArray) -> Ints:
     """Why the tanks gave less than asked in the window, (row,), as an index into LIMITED_BY; 0 = they did not: the
     held-back inventory was reached, they ran low, or they were asked for more than their rate with inventory left."""
     return np.select(
-        [result.sums[name] for name in ("reserve_bound", "stock_bound", "rate_bound")],
+        [sums[name] for name in ("reserve_bound", "stock_bound", "rate_bound")],
         [LIMITED_BY.index(name) for name in ("held_back", "inventory", "discharge_rate")],
         default=LIMITED_BY.index("none"),
     )

@@ -336,16 +336,21 @@ def eutectic_kwh_th(mass_kg: FloatLike) -> Floats:
 def end_inventory_kwh_th(target: Number, capacity: Number, knots_kw_th: Number, gain_h: float) -> Number:
     """The E_end in [0, capacity] for which E_end + gain_h limit(E_end) = target, the limit given at the knots (J, ...).
 
-    The left side must rise with E. Inverted as a sum over segments, each filled from 0 to 1: no search.
+    The left side must rise with E: the last segment that starts below the target holds the answer.
     """
-    below = KNOT_SOC[0] * capacity + knots_kw_th[0] * gain_h
-    end = 0.0 * below
-    for j in range(len(KNOT_SOC) - 1):
-        above = KNOT_SOC[j + 1] * capacity + knots_kw_th[j + 1] * gain_h
-        share = (target - below) / larger(above - below, TINY)
-        end = end + smaller(larger(share, 0.0), 1.0) * (KNOT_SOC[j + 1] - KNOT_SOC[j])
+    start = KNOT_SOC[0] * capacity + knots_kw_th[0] * gain_h
+    above = KNOT_SOC[1] * capacity + knots_kw_th[1] * gain_h
+    low, high, soc, width = start, above, 0.0 * start, KNOT_SOC[1] - KNOT_SOC[0] + 0.0 * start
+    for j in range(1, len(KNOT_SOC) - 1):
         below = above
-    return end * capacity
+        above = KNOT_SOC[j + 1] * capacity + knots_kw_th[j + 1] * gain_h
+        reached = target > below
+        low = choose(reached, below, low)
+        high = choose(reached, above, high)
+        soc = choose(reached, KNOT_SOC[j], soc)
+        width = choose(reached, KNOT_SOC[j + 1] - KNOT_SOC[j], width)
+    share = (target - low) / larger(high - low, TINY)
+    return (soc + smaller(larger(share, 0.0), 1.0) * width) * capacity
 
 
 def _knots_first(per_knot: Floats) -> Floats:

@@ -18,7 +18,6 @@ from sites.direction import Direction
 from sites.ground import Ground, usual_high
 from sites.plant import advance, at_rest, laid, records_of, room, stage
 from sites.quotes import LIMITED_BY
-from sites.roster import Rows
 from sites.rows import Plants, usual_hours
 from sites.tally import Tally, add, broken, tally, tank_cause
 from sites.units import AnyArray, Bools, Floats, Ints
@@ -37,7 +36,7 @@ LOW_TOLERANCE = 0.01
 
 
 @dataclass(frozen=True)
-class Trial(Rows):
+class Trial:
     """Candidate rows on their way through the horizon."""
 
     rows: AnyArray
@@ -46,12 +45,14 @@ class Trial(Rows):
     stages: Stages
     tally: Tally
 
-    def run(self, plants: Plants, usual: AnyArray, first: int, last: int) -> None:
-        """Take the rows through [first, last), held against the usual hours (rows.USUAL); all grows in place."""
+    def run(self, plants: Plants, usual: AnyArray, first: int, last: int, among: Ints) -> None:
+        """Take the rows `among` through [first, last), held against the usual hours (rows.USUAL); all grows in
+        place."""
         once = (np.zeros((1, width), dtype=kind) for width, kind in self._widths(plants))
         _run(
             first,
             last,
+            np.ascontiguousarray(among, dtype=np.int64),
             plants.step_h,
             *(plants.sites, plants.machines, plants.tanks, plants.hours, plants.able, usual),
             *(self.rows, *laid(self.stages), self.inventory_kwh_th),
@@ -69,6 +70,7 @@ class Trial(Rows):
 def _run(
     first: int,
     last: int,
+    among: Any,
     step_h: float,
     sites: Any,
     machines: Any,
@@ -91,8 +93,8 @@ def _run(
     knots: Any,
     work: Any,
 ) -> None:
-    """Every row over the intervals from its window's start, or from `first` where that is later, to `last`."""
-    for r in range(len(rows)):
+    """The rows `among` over the intervals from each window's start, or from `first` where that is later, to `last`."""
+    for r in among:
         row = rows[r]
         i = row.site
         site = sites[i]
@@ -127,7 +129,7 @@ def begin(base: Ground, offered: Candidates, usual: Course, inventory: Floats) -
 
 @dataclass(frozen=True)
 class Tried:
-    """All candidates tried, C of them, and the runs from the best inventory of those that are quoted."""
+    """All candidates tried, C of them, and what the run from the best inventory gave for those that are quoted."""
 
     verdict: Ints
     """(C,) why each is refused, as an index into LIMITED_BY; 0 = it is quoted"""
@@ -135,8 +137,10 @@ class Tried:
     """(C, event interval) in the event's direction"""
     kept: Ints
     """(R,) the quoted ones"""
-    best: Tally
-    """(R, ...)"""
+    change_kw: Floats
+    """(R, interval)"""
+    sums: AnyArray
+    """tally.SUMS (R,)"""
     low_start_kwh_th: Floats
     """(R,) inventory at window start in the run from the other inventory"""
     limited_by: Ints
@@ -176,20 +180,20 @@ def try_all(
     no promise rests on the better level.
     """
     runs = _Runs(base, offered, event, direction)
-    verdict = np.zeros(len(offered.site), dtype=np.int64)
-    trial, alive, expected = runs.part(np.arange(len(verdict)), sides[0], verdict)
-    runs.rest(trial, alive, sides[0], verdict)
-    kept = verdict[alive] == 0
-    alive, best = alive[kept], trial.tally.take(np.flatnonzero(kept))
-    other, still, _ = runs.part(alive, sides[1], verdict, expected[alive])
-    runs.rest(other, still, sides[1], verdict)
-    last = verdict[still] == 0
-    kept_index = still[last]
-    chosen = best.take(np.searchsorted(alive, kept_index))
-    cause = tank_cause(chosen)
-    leans = np.where(chosen.unmet_kwh_th > 0.0, LIMITED_BY.index("comfort"), 0)
-    at_start = other.tally.inventory_at_start_kwh_th[last]
-    return Tried(verdict, expected, kept_index, chosen, at_start, np.where(cause > 0, cause, leans))
+    everyone = np.arange(len(offered.site))
+    verdict = np.zeros(len(everyone), dtype=np.int64)
+    best, expected = runs.part(everyone, sides[0], verdict)
+    runs.rest(best, everyone, sides[0], verdict)
+    alive = np.flatnonzero(verdict == 0)
+    other, _ = runs.part(alive, sides[1], verdict, expected[alive])
+    runs.rest(other, alive, sides[1], verdict)
+    kept = np.flatnonzero(verdict == 0)
+    sums = best.tally.sums[kept]
+    cause = tank_cause(sums)
+    leans = np.where(sums["unmet_kwh_th"] > 0.0, LIMITED_BY.index("comfort"), 0)
+    at_start = other.tally.sums["at_start_kwh_th"][verdict[alive] == 0]
+    limited_by = np.where(cause > 0, cause, leans)
+    return Tried(verdict, expected, kept, best.tally.change_kw[kept], sums, at_start, limited_by)
 
 
 @dataclass(frozen=True)
@@ -201,18 +205,19 @@ class _Runs:
 
     def part(
         self, index: Ints, side: Side, verdict: Ints, promised: Floats | None = None
-    ) -> tuple[Trial, Ints, Floats]:
-        """Run the candidates `index` through the event, write refusals into `verdict`, and return what is left
-        of the trial, its indices, and all expected kW."""
+    ) -> tuple[Trial, Floats]:
+        """Run the candidates `index` through the event, write refusals into `verdict`, and return the trial and the
+        expected kW of each."""
         first, last = self.event
         trial = begin(self.base, self.offered.take(index), side.course, side.inventory_kwh_th)
-        trial.run(self.base.plants, side.hours, first, last)
-        site, done = trial.rows["site"], trial.tally
-        expected = self.direction.sign * done.change_kw[:, first:last]
+        everyone = np.arange(len(index))
+        trial.run(self.base.plants, side.hours, first, last, everyone)
+        site, sums = trial.rows["site"], trial.tally.sums
+        expected = self.direction.sign * trial.tally.change_kw[:, first:last]
         hour = np.arange(first, last)[None, :]
         inside = (hour >= trial.rows["start"][:, None]) & (hour < trial.rows["end"][:, None])
         least = np.where(inside, expected, np.inf).min(axis=1, initial=np.inf)
-        found = self._broken(trial, promised is None)
+        found = self._broken(trial, everyone, promised is None)
         small, less = least < LEAST_KW, np.zeros(len(index), dtype=np.bool_)
         if promised is not None:
             slack = LOW_TOLERANCE * np.abs(promised) + LEAST_KW
@@ -222,7 +227,7 @@ class _Runs:
         unsure = over > UNSURE_FRACTION * np.maximum((expected * inside).sum(axis=1), 0.0)
         if self.direction is Direction.ABSORB:
             size = self.base.plants.sites["size_kwh_th"][site]
-            full = done.inventory_at_end_kwh_th >= NEARLY_FULL * size
+            full = sums["at_end_kwh_th"] >= NEARLY_FULL * size
             reasons = ((small & full, "full"), (small, "already_on"), (found > 0, ""), (less, "full"))
         else:
             less = less | self._overheld(trial)
@@ -232,20 +237,21 @@ class _Runs:
             [np.full_like(found, LIMITED_BY.index(name)) if name else found for _, name in reasons],
             default=0,
         )
-        alive = np.flatnonzero(verdict[index] == 0)
-        return trial.take(alive), index[alive], expected
+        return trial, expected
 
-    def _broken(self, trial: Trial, usual_counts: bool) -> Ints:
-        site, base = trial.rows["site"], self.base
-        return broken(trial.tally, site, base.roster.buildings, base.here, usual_counts)
+    def _broken(self, trial: Trial, among: Ints, usual_counts: bool) -> Ints:
+        site, base = trial.rows["site"][among], self.base
+        return broken(trial.tally, among, site, base.roster.buildings, base.here, usual_counts)
 
     def _overheld(self, trial: Trial) -> Bools:
         """Rows (row,) whose tanks give less than asked, from a level at window start that may be too high."""
         level = self.base.overheld_kwh_th[trial.rows["site"], trial.rows["start"]]
-        too_high = level > OVERHELD_FRACTION * trial.tally.inventory_at_start_kwh_th
-        return np.asarray((tank_cause(trial.tally) > 0) & too_high)
+        too_high = level > OVERHELD_FRACTION * trial.tally.sums["at_start_kwh_th"]
+        return np.asarray((tank_cause(trial.tally.sums) > 0) & too_high)
 
     def rest(self, trial: Trial, index: Ints, side: Side, verdict: Ints) -> None:
-        """Run what is left after the event to the horizon's end, and write refusals into `verdict`."""
-        trial.run(self.base.plants, side.hours, self.event[1], self.base.outlook.clock.count)
-        verdict[index] = self._broken(trial, side.course is self.base.usual)
+        """Run those of the candidates `index` that are not refused yet from the event to the horizon's end, and write
+        refusals into `verdict`."""
+        among = np.flatnonzero(verdict[index] == 0)
+        trial.run(self.base.plants, side.hours, self.event[1], self.base.outlook.clock.count, among)
+        verdict[index[among]] = self._broken(trial, among, side.course is self.base.usual)
