@@ -24,7 +24,7 @@ from sites.units import AnyArray, Bools, Floats, Ints, Strings
 
 __all__ = ["Ground", "Quoted", "detail", "ground", "quote", "windows_of"]
 
-ROWS_AT_ONCE = 16384
+ROWS_AT_ONCE = 8192
 """Candidates run together by one thread: what they need over the horizon stays within tens of MB."""
 
 
