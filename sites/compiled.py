@@ -67,13 +67,11 @@ def loop(function: Callable[..., None]) -> Callable[..., None]:
 
     @functools.wraps(function)
     def call(*arguments: Any) -> None:
-        with _lock:
-            if not made:
-                made.append(_compiled(function))
-            if len(made) == 1:  # the first call compiles: one at a time
-                made.append(made[0])
-                made[0](*arguments)
-                return
+        if not made:
+            with _lock:
+                if not made:
+                    made.append(_ran(function, arguments))
+                    return
         made[0](*arguments)
 
     return call
@@ -97,8 +95,8 @@ def each(work: Callable[[int], Result], count: int) -> list[Result]:
         return list(pool.map(work, range(count)))
 
 
-def _compiled(function: Callable[..., Any]) -> Callable[..., Any]:
-    """The function as numba makes it, kept in the first folder that can be written."""
+def _ran(function: Callable[..., None], arguments: tuple[Any, ...]) -> Callable[..., Any]:
+    """Compile a loop by calling it for the first time, and return it as numba made it, kept where it can be."""
     import numba
     from numba.extending import overload, register_jitable
 
@@ -109,13 +107,19 @@ def _compiled(function: Callable[..., Any]) -> Callable[..., Any]:
     while _members:
         register_jitable(**OPTIONS)(_members.pop())
     folder = next((each for each in _folders() if _writable(each / _name())), None)
-    if folder is None:
-        return numba.njit(nogil=True, **OPTIONS)(function)  # type: ignore[no-any-return]
-    before, numba.config.CACHE_DIR = numba.config.CACHE_DIR, str(folder / _name())
-    try:
-        return numba.njit(nogil=True, cache=True, **OPTIONS)(function)  # type: ignore[no-any-return]
-    finally:
-        numba.config.CACHE_DIR = before
+    if folder is not None:
+        before, numba.config.CACHE_DIR = numba.config.CACHE_DIR, str(folder / _name())
+        try:
+            kept = numba.njit(nogil=True, cache=True, **OPTIONS)(function)
+            kept(*arguments)
+            return kept  # type: ignore[no-any-return]
+        except OSError:  # kept nowhere: a full disk; it is raised before the loop runs
+            pass
+        finally:
+            numba.config.CACHE_DIR = before
+    alone = numba.njit(nogil=True, **OPTIONS)(function)
+    alone(*arguments)
+    return alone  # type: ignore[no-any-return]
 
 
 def _folders() -> tuple[Path, ...]:

@@ -1,5 +1,6 @@
 """The compiled loop over rows: it says what the array-faced models say, and is kept where it can be."""
 
+import errno
 from pathlib import Path
 
 import numpy as np
@@ -92,6 +93,20 @@ def test_a_loop_runs_where_nothing_can_be_kept(tmp_path: Path, monkeypatch: pyte
     blocked = tmp_path / "file"
     blocked.write_text("no folder")
     monkeypatch.setattr(compiled, "_folders", lambda: (blocked, blocked))
+    values = np.array([0.5, 2.0])
+    compiled.loop(tiny)(values)
+    np.testing.assert_array_equal(values, [1.0, 2.0])
+    assert not compiled.is_kept()
+
+
+def test_a_full_disk_leaves_the_loop_running(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
+    from numba.core.caching import IndexDataCacheFile
+
+    def full(*_: object) -> None:
+        raise OSError(errno.ENOSPC, "no space left")
+
+    monkeypatch.setattr(compiled, "_folders", lambda: (tmp_path,))
+    monkeypatch.setattr(IndexDataCacheFile, "save", full)
     values = np.array([0.5, 2.0])
     compiled.loop(tiny)(values)
     np.testing.assert_array_equal(values, [1.0, 2.0])
