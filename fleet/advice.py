@@ -5,6 +5,7 @@ below are the trade's common practice, from memory; the machine's maker, local c
 come before them, and every page says so.
 """
 
+import math
 from typing import Final
 
 import pandas as pd
@@ -25,10 +26,10 @@ PEAK_MINUTES: Final = 15
 RECOVERIES: Final = {
     "usual": "in the usual hours",
     "now": "as soon as the event is over",
-    "delayed": "in the usual hours, without the first two",
+    "delayed": "in the usual charging hours, but not in the first two of them",
     "night": "at night, 22:00 to 06:00",
     "midday": "around midday, 10:00 to 15:00",
-    "capped": "at any hour, the building's meter within its peak so far",
+    "capped": "at any hour, but with the building's meter under {peak}",
 }
 """When the tank is brought back to its usual level."""
 
@@ -225,12 +226,17 @@ def _after(site: CalledSite) -> str:
         caps = ", ".join(
             f"{site.words.tag(step.unit_id)} {site.words.cooling(step.value or 0.0)}" for step in again
         )
-        when = RECOVERIES[str(site.window.recovery)]
+        when = _when(site)
         said += f"; no charging before {site.words.time(first)}, then {when}, at most {caps}. "
     said += "The tank starts fuller, so less is charged than usual. Full early: stop charging and ring; "
     if site.has_ice:
         return said + "never past full, and never lower the low-brine trip to charge faster."
     return said + "never past full."
+
+
+def _when(site: CalledSite) -> str:
+    """When the tank is brought back; a cap in whole kW, never rounded up."""
+    return RECOVERIES[str(site.window.recovery)].format(peak=f"{math.floor(site.peak_kw):,} kW")
 
 
 def recharge(site: CalledSite) -> str:
@@ -239,7 +245,7 @@ def recharge(site: CalledSite) -> str:
         return _after(site)
     if not site.tanks:
         return "No tank on this site."
-    when = RECOVERIES[str(site.window.recovery)]
+    when = _when(site)
     starts = [step for step in site.steps if step.action == "recharge_may_start"]
     by = sorted(step.at for step in site.steps if step.action == "full_by")
     if starts:
@@ -247,6 +253,11 @@ def recharge(site: CalledSite) -> str:
             f"{site.words.tag(step.unit_id)} {site.words.cooling(step.value or 0.0)}" for step in starts
         )
         said = f"{when[0].upper()}{when[1:]}: from {site.words.time(min(step.at for step in starts))}, not before; "
+        if site.window.recovery != "usual":
+            said = (
+                f"What the event took is put back {when}; charging of the usual plan stays as it is. First "
+            )
+            said += f"charging {site.words.time(min(step.at for step in starts))}, not before; "
         said += f"at most {caps}."
     else:
         said = "No recharge in the plan."

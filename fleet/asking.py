@@ -3,12 +3,14 @@
 Owns which options go together. Times are read in the fleet's zone and held to its grid.
 """
 
-from dataclasses import dataclass
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import cast
 
 import numpy as np
 
+from fleet import recharge
 from fleet.desk import Ask, check_order
 from fleet.errors import FleetError, Gathered
 from fleet.folder import open_folder, parse_time
@@ -41,15 +43,25 @@ class Words:
     event_id: str | None
     purpose: str
     within: float | None
+    recoveries: tuple[str, ...] = ()
 
 
-def ask(fleet: Path, start: str, end: str, node: str | None, at: str, direction: str) -> Ask:
+def ask(
+    fleet: Path,
+    start: str,
+    end: str,
+    node: str | None,
+    at: str,
+    direction: str,
+    recoveries: Sequence[str] = (),
+) -> Ask:
     """When and where; FleetError for an unknown direction, for times off the grid or in the wrong order: all of
     these at once."""
     gathered = Gathered()
+    offered = gathered.of(lambda: recharge.named(recoveries))
     found = _ask(gathered, fleet, start, end, node, at, direction)
     gathered.tell()
-    return cast(Ask, found)
+    return replace(cast(Ask, found), recoveries=offered or ())
 
 
 def call_ask(
@@ -69,6 +81,7 @@ def call_ask(
     """
     gathered = Gathered()
     gathered.of(lambda: _check_words(fleet, words, kw))
+    offered = gathered.of(lambda: recharge.named(words.recoveries)) or ()
     given = {"--kw": kw, "--from": start, "--to": end}
     if file is None:
         absent = [name for name, value in given.items() if value is None]
@@ -79,7 +92,7 @@ def call_ask(
             )
         when = _ask(gathered, fleet, start, end, node, at, direction)
         gathered.tell()
-        return cast(Ask, when), Asked(kw, (node,), ())
+        return replace(cast(Ask, when), recoveries=offered), Asked(kw, (node,), ())
     doubled = [name for name, value in given.items() if value is not None]
     if doubled:
         gathered.tell()
@@ -94,7 +107,8 @@ def call_ask(
     at_time = gathered.of(lambda: parse_time(at, settings.timezone))
     read = gathered.of(lambda: read_request(file, settings, node))
     gathered.tell()
-    return _of_file(cast(AskedByFile, read), cast(Direction, way), cast(np.datetime64, at_time))
+    when, asked = _of_file(cast(AskedByFile, read), cast(Direction, way), cast(np.datetime64, at_time))
+    return replace(when, recoveries=offered), asked
 
 
 def _check_words(fleet: Path, words: Words, kw: float | None) -> None:

@@ -40,6 +40,8 @@ class CalledSite:
     direction: str
     highest_kw: float
     """What the building draws at most in the plan's window, or has been billed for already if that is more"""
+    peak_kw: float
+    """What the building draws at most with no event, or has been billed for already if that is more"""
 
     @property
     def capacity_kwh_th(self) -> float:
@@ -71,6 +73,7 @@ def called_sites(record: CallRecord) -> list[CalledSite]:
     windows = record.frames["windows"].sort_values("site_id", kind="stable")
     direction = str(record.frames["request"]["direction"].iloc[0])
     highest = _highest_kw(record) if direction == "absorb" else {}
+    peak = _peak_kw(record) if (windows["recovery"] == "capped").any() else {}
     lost = sorted(set(windows["site_id"]) - set(facts))
     if lost:
         raise FleetError(
@@ -91,6 +94,7 @@ def called_sites(record: CallRecord) -> list[CalledSite]:
             ),
             direction=direction,
             highest_kw=highest.get(window.site_id, 0.0),
+            peak_kw=peak.get(window.site_id, 0.0),
         )
         for window in _rows(windows)
     ]
@@ -107,7 +111,18 @@ def _highest_kw(record: CallRecord) -> dict[str, float]:
     rows = record.frames["intervals"].merge(windows, on="site_id", validate="many_to_one")
     start = rows["interval_start"]
     inside = rows[(start >= rows["window_start"]) & (start < rows["window_end"])]
-    found = (inside["event_kw"] + inside["rest_kw"]).groupby(inside["site_id"]).max()
+    return _or_billed(record, (inside["event_kw"] + inside["rest_kw"]).groupby(inside["site_id"]).max())
+
+
+def _peak_kw(record: CallRecord) -> dict[str, float]:
+    """Highest kW of each building in the usual case, or its billed peak of the running cycle: what a capped recovery
+    keeps to."""
+    usual = record.frames["usual"]
+    return _or_billed(record, (usual["usual_kw"] + usual["rest_kw"]).groupby(usual["site_id"]).max())
+
+
+def _or_billed(record: CallRecord, found: pd.Series) -> dict[str, float]:
+    """Each site's kW, or its billed peak of the running cycle where that is more."""
     bills = record.frozen.get("bills")
     if bills is not None and not bills.empty:
         zone = str(_setting(record, "timezone"))

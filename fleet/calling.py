@@ -77,8 +77,7 @@ def call(
         path = records.write_call(
             home, ask.event_id, frames, proof, frozen_tables(survey), frozen_json(survey)
         )
-    network = (*survey.feeders.notes, *survey.headroom.notes)
-    told = (*swept, *survey.folder.notes, *network, *not_callable(survey))
+    told = (*swept, *survey.notes, *not_callable(survey))
     why = _explained(survey, ask, allocation, wishes, within)
     return Call(path, ask.event_id, allocation, choice, proof, (*notes, *told), why)
 
@@ -232,11 +231,18 @@ def proof_of(survey: Survey, allocation: Allocation) -> dict[str, Any]:
         "requested_kwh": float(allocation.requested_kw.sum()) * clock.step_h,
         "quoted_unmet_kwh_th": float(survey.quoted.quotes.unmet_kwh_th.sum()),
         "recoveries": list(survey.terms.recoveries),
+        "recoveries_sites": _varied_sites(survey),
         "candidates_tried": survey.quoted.tried,
         "candidates_quoted": len(survey.quoted.quotes.site),
         "versions": {name: version(name) for name in PACKAGES},
         "sha256": dict(survey.folder.digests),
     }
+
+
+def _varied_sites(survey: Survey) -> list[str] | None:
+    """Sites that were offered every one of the recoveries, the others the first only; None: all sites were."""
+    varied = survey.terms.varied
+    return None if varied is None else survey.fleet.roster.buildings.site_id[varied].tolist()
 
 
 def frozen_tables(survey: Survey) -> dict[str, pd.DataFrame]:

@@ -159,6 +159,7 @@ def quote(
     node: options.Node = None,
     at: options.At = None,
     direction: options.Way = "shed",
+    recovery: options.Recovery = None,
     tons: Annotated[bool, typer.Option("--tons", help="Cooling in tons and ton-hours.")] = False,
     site: Annotated[
         str | None, typer.Option("--site", help="One site's quote line by line, to check by hand.")
@@ -172,7 +173,7 @@ def quote(
     from fleet import desk, quoting, show
 
     terminal = Terminal(json)
-    survey = desk.survey(fleet, _ask(fleet, start, end, node, at, direction), terminal.progress)
+    survey = desk.survey(fleet, _ask(fleet, start, end, node, at, direction, recovery), terminal.progress)
     terminal.progress("working out what the fleet can give together")
     told = quoting.offer(survey)
     lines = (
@@ -199,6 +200,7 @@ def call(
     exclude: options.Exclude = None,
     fewest: options.Fewest = False,
     most_over: options.MostOver = None,
+    recovery: options.Recovery = None,
     json: options.Json = False,
 ) -> None:
     """Allocate a request over the sites and write the event record.
@@ -211,7 +213,7 @@ def call(
     from fleet.wishes import Wishes
 
     terminal = Terminal(json)
-    words = Words(event, purpose, within)
+    words = Words(event, purpose, within, tuple(recovery or ()))
     ask, asked = call_ask(fleet, kw, start, end, file, node, at or _now(), direction, words)
     survey = desk.survey(fleet, ask, terminal.progress, asked.largest_kw)
     made = calling.call(
@@ -354,11 +356,19 @@ def pages(
     terminal.put(show.pages_lines(written), show.pages_json(written))
 
 
-def _ask(fleet: Path, start: str, end: str, node: str | None, at: str | None, direction: str):  # type: ignore[no-untyped-def]
+def _ask(  # type: ignore[no-untyped-def]
+    fleet: Path,
+    start: str,
+    end: str,
+    node: str | None,
+    at: str | None,
+    direction: str,
+    recovery: list[str] | None = None,
+):
     """The ask of a command line: times in the fleet's zone, on its grid."""
     from fleet.asking import ask
 
-    return ask(fleet, start, end, node, at or _now(), direction)
+    return ask(fleet, start, end, node, at or _now(), direction, recovery or ())
 
 
 def _now() -> str:

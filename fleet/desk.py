@@ -12,17 +12,16 @@ import numpy as np
 import pandas as pd
 
 from fleet import feeders as network
-from fleet import limits, records
+from fleet import in_force, limits, recharge, records
 from fleet.assemble import Fleet, assemble
 from fleet.errors import FleetError
 from fleet.folder import FleetFolder, open_folder
 from fleet.plant_history import with_history
-from fleet.wall_time import local_day, local_day_start, on_grid, up_to_grid, utc_timestamp
+from fleet.wall_time import local_day, local_day_start, local_text, on_grid, up_to_grid, utc_timestamp
 from sites import compiled
 from sites.blocks import Terms
-from sites.candidate import Stages
 from sites.direction import Direction
-from sites.quote import Ground, Quoted, ground, quote
+from sites.quote import Ground, Quoted, ground
 from sites.units import Bools, Floats
 
 Progress = Callable[[str], None]
@@ -38,6 +37,8 @@ class Ask:
     at: np.datetime64
     event_from: np.datetime64
     event_to: np.datetime64
+    recoveries: tuple[str, ...] = ()
+    """Which of sites.recovery.RECOVERIES every site is offered; (): as needed (recharge.py)"""
 
 
 @dataclass(frozen=True)
@@ -59,6 +60,22 @@ class Survey:
     def under_node(self) -> Bools:
         """(site,) below the requested node."""
         return self.feeders.sites_below(self.node_id)
+
+    @property
+    def notes(self) -> tuple[str, ...]:
+        """What was taken as it is though it may surprise: of the folder, the network, its limits and the prices."""
+        zone, clock = self.folder.settings.timezone, self.fleet.outlook.clock
+        prices = self.fleet.outlook.price_per_kwh
+        found = []
+        for mask, said in ((prices < 0.0, "below zero"), (prices == 0.0, "of zero")):
+            some = np.flatnonzero(mask.any(axis=0))
+            if some.size:
+                sites = int(mask.any(axis=1).sum())
+                first = local_text(clock.starts[some[0]], zone)
+                found.append(
+                    f"energy prices {said} at {sites} of {len(prices)} sites, first at {first}: taken as they are"
+                )
+        return (*self.folder.notes, *self.feeders.notes, *self.headroom.notes, *found)
 
 
 def survey(
@@ -100,9 +117,9 @@ def survey(
     )
     first = "" if compiled.is_kept() else ", compiling the plant model, once"
     progress(f"quoting {fleet.roster.count} sites{first}")
-    base = ground(fleet.roster, fleet.outlook, fleet.standing, _in_force(path, fleet, past, start))
-    quoted = quote(base, terms, ask.direction)
+    base = ground(fleet.roster, fleet.outlook, fleet.standing, *in_force.in_force(path, fleet, past, start))
     headroom = network.headroom_kw(tree, _building_kw(base))
+    terms, quoted = recharge.quoted(base, terms, ask.direction, ask.recoveries, tree, headroom.kw)
     return Survey(folder, fleet, ask, node_id, tree, headroom, terms, eligible, past, quoted)
 
 
@@ -135,45 +152,3 @@ def check_order(at: np.datetime64, event_from: np.datetime64, event_to: np.datet
             "--from lies before --at: an event cannot start before it is called; move --from, "
             "or give --at the time of the call"
         )
-
-
-def _in_force(path: Path, fleet: Fleet, past: pd.DataFrame, start: np.datetime64) -> Stages | None:
-    """Stages (site, call) of other calls whose windows reach into the horizon: part of the usual case."""
-    real = past[past["purpose"].isin(limits.COUNTED)]
-    running = real[real["window_end"] > utc_timestamp(start)]
-    calls = list(dict.fromkeys(running["event_id"]))
-    if not calls:
-        return None
-    parts = [_stages_of(path, event_id, fleet) for event_id in calls]
-    return Stages(*(np.concatenate(column, axis=1) for column in zip(*parts, strict=True)))
-
-
-def _stages_of(
-    path: Path, event_id: str, fleet: Fleet
-) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
-    """One stage per site from a call's record: its window, each machine's load limit within it, and whether its
-    tanks are made to charge."""
-    record = records.read_call(path, event_id, only=("request", "windows", "machines"))
-    absorb = record.frames["request"]["direction"].iloc[0] == Direction.ABSORB
-    windows = record.frames["windows"].set_index("site_id")
-    machines = record.frames["machines"]
-    low = machines.groupby(["site_id", "chiller_id"])["load_limit_fraction"].min()
-    roster, clock = fleet.roster, fleet.outlook.clock
-    site_id = pd.Index(roster.buildings.site_id)
-    edges = [_clock_index(windows[name].reindex(site_id), clock.start, clock.step) for name in _EDGES]
-    keys = pd.MultiIndex.from_arrays(
-        [np.repeat(site_id, roster.chillers.exists.shape[1]), roster.chillers.chiller_id.ravel()]
-    )
-    limit = low.reindex(keys).fillna(1.0).to_numpy().reshape(roster.chillers.exists.shape)
-    charge = np.full((len(site_id), 1), absorb, dtype=np.bool_)
-    return edges[0][:, None], edges[1][:, None], limit[:, None, :], charge
-
-
-_EDGES = ("window_start", "window_end")
-
-
-def _clock_index(times: pd.Series, start: np.datetime64, step: np.timedelta64) -> np.ndarray:
-    """Clock index of each time, 0 where there is none or it lies before the horizon."""
-    offset = (times.dt.tz_convert("UTC").dt.tz_localize(None) - pd.Timestamp(start)) / pd.Timedelta(step)
-    index: np.ndarray = np.maximum(offset.fillna(0.0).to_numpy(), 0.0).astype(np.int64)
-    return index

@@ -17,6 +17,8 @@ from sites.units import Bools, Floats
 MORE_SHARE: Final = 0.1
 LEFT_OUT: Final = 3
 ROUNDING_KW: Final = 1e-6
+LEAST_PRICE: Final = 5e-4
+"""Money per kWh below which a limit's price is rounding to who reads it."""
 
 
 @dataclass(frozen=True)
@@ -32,6 +34,18 @@ class LeftOut:
 
 
 @dataclass(frozen=True)
+class FullNode:
+    """A node whose limit has a price: what one more kWh of room would save."""
+
+    node: int
+    intervals: int
+    """In how many intervals it has one"""
+    dearest: int
+    """Clock index of the interval in which it is highest"""
+    per_kwh: float
+
+
+@dataclass(frozen=True)
 class Explained:
     """What is told of a choice that meets its request."""
 
@@ -41,6 +55,8 @@ class Explained:
     """Money that MORE_SHARE more in every interval would cost on top; None: it cannot be met, or was not tried"""
     more_tried: bool
     left_out: tuple[LeftOut, ...]
+    full_nodes: tuple[FullNode, ...] = ()
+    """Nodes whose limits hold the choice down, the dearest first"""
 
 
 def explain(
@@ -68,6 +84,18 @@ def explain(
         more_cost=cost,
         more_tried=more is not None,
         left_out=_left_out(allocation, quotes, feeders, below, why, shed, headroom_kw),
+        full_nodes=_full_nodes(prices.importing / step_h),
+    )
+
+
+def _full_nodes(per_kwh: Floats) -> tuple[FullNode, ...]:
+    """Nodes with a price of their limit (J, T) in money per kWh."""
+    at = per_kwh.argmax(axis=1)
+    most = per_kwh.max(axis=1, initial=0.0)
+    order = np.argsort(-most, kind="stable")
+    return tuple(
+        FullNode(int(j), int((per_kwh[j] > LEAST_PRICE).sum()), int(at[j]), float(most[j]))
+        for j in order[most[order] > LEAST_PRICE]
     )
 
 

@@ -9,7 +9,7 @@ import numpy as np
 
 from fleet.calling import Call
 from fleet.desk import Survey
-from fleet.explained import MORE_SHARE
+from fleet.explained import MORE_SHARE, FullNode
 from fleet.wall_time import local_text
 
 EACH_LINE = 6
@@ -32,6 +32,7 @@ def explained_lines(survey: Survey, made: Call) -> list[str]:
             for t, price in zip(ask.interval_starts, prices, strict=True)
         ]
         lines += ["  " + "   ".join(cells[k : k + EACH_LINE]) for k in range(0, len(cells), EACH_LINE)]
+    lines += [_full_line(survey, made, full) for full in why.full_nodes]
     if why.more_cost is not None and why.more_cost < 0.0:
         lines.append(f"{MORE_SHARE:.0%} more would cost less than the gap of this choice")
     elif why.more_cost is not None:
@@ -47,12 +48,24 @@ def explained_lines(survey: Survey, made: Call) -> list[str]:
     return lines
 
 
+def _full_line(survey: Survey, made: Call, full: FullNode) -> str:
+    """Which node's limit holds the choice down, and what more room would save."""
+    node = survey.feeders.node_id[full.node]
+    starts = made.chosen.quoted.quotes.clock.starts
+    when = local_text(starts[full.dearest], survey.folder.settings.timezone)
+    often = "1 interval" if full.intervals == 1 else f"{full.intervals} intervals"
+    return (
+        f"the limit of node {node} binds in {often}: one more kWh of room under it would save up to "
+        f"{full.per_kwh:.3f} {survey.folder.settings.currency} ({when})"
+    )
+
+
 def explained_json(survey: Survey, made: Call) -> dict[str, Any] | None:
     """The same as a document; null where the request is not met."""
     why = made.explained
     if why is None:
         return None
-    ask = made.chosen.request
+    ask, starts = made.chosen.request, made.chosen.quoted.quotes.clock.starts
     site_id = survey.fleet.roster.buildings.site_id
     prices = why.marginal_per_kwh.reshape(len(ask.node_ids), -1)
     return {
@@ -60,6 +73,15 @@ def explained_json(survey: Survey, made: Call) -> dict[str, Any] | None:
             {"node_id": node, "interval_start": f"{np.datetime_as_string(t, 's')}Z", "price": float(price)}
             for node, row in zip(ask.node_ids, prices, strict=True)
             for t, price in zip(ask.interval_starts, row, strict=True)
+        ],
+        "full_nodes": [
+            {
+                "node_id": str(survey.feeders.node_id[one.node]),
+                "intervals": one.intervals,
+                "dearest_interval_start": f"{np.datetime_as_string(starts[one.dearest], 's')}Z",
+                "price": one.per_kwh,
+            }
+            for one in why.full_nodes
         ],
         "more_share": MORE_SHARE,
         "more_cost": why.more_cost,

@@ -114,7 +114,7 @@ def lifted(want: Want) -> dict[str, float]:
         codes = [LIMITED_BY.index(word) for word in words]
         sites = np.isin(quotes.site_limited_by, codes) & want.allowed & other[1]
         if sites.any():
-            changed = ground(other[0].roster, base.outlook, base.standing, base.in_force)
+            changed = ground(other[0].roster, base.outlook, base.standing, base.in_force, base.recovering)
             found |= _again(want, name, changed, terms, sites)
     return found
 
@@ -176,6 +176,7 @@ def _can(want: Want, kw: Floats, event_from: np.datetime64, event_to: np.datetim
     eligible = limits.eligible_sites(resolved, survey.past, utc_timestamp(at), hours, zone)
     edges = clock.index(event_from), clock.index(event_from) + kw.shape[1]
     terms = limits.terms(resolved, eligible, clock, at, edges)
+    terms = replace(terms, recoveries=survey.ask.recoveries or terms.recoveries)
     inside = np.any([survey.feeders.sites_below(name) for name in want.ask.node_ids], axis=0)
     allowed = eligible.allowed & ~want.left_out & inside
     quotes = quote(

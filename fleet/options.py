@@ -17,6 +17,14 @@ Node = Annotated[
 ]
 At = Annotated[str | None, typer.Option("--at", help="When the call is made; default now.")]
 Way = Annotated[str, typer.Option("--direction", help="shed or absorb.")]
+Recovery = Annotated[
+    list[str] | None,
+    typer.Option(
+        "--recovery",
+        help="When tanks are brought back: usual, now, delayed, night, midday, capped or every; repeat it. Default: "
+        "usual, and every one where a feeder's limit or a billed peak could be met.",
+    ),
+]
 RequestFile = Annotated[
     Path | None,
     typer.Option("--request", help="CSV or Parquet with interval_start, kw, node_id; no --kw then."),

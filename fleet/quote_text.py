@@ -183,7 +183,7 @@ def _wrapped(cells: list[str], each: int = 6) -> list[str]:
 
 def _notes(survey: Survey) -> list[str]:
     clipped = survey.quoted.ground.here.clipped_count
-    notes = [*survey.folder.notes, *survey.feeders.notes, *survey.headroom.notes]
+    notes = [*survey.notes]
     notes += [note for note in survey.fleet.notes if "plant meter" in note]
     fitted = [one for one in survey.fleet.assumed if one.why.startswith("fitted")]
     notes += assumed_lines(fitted)

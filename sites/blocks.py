@@ -34,6 +34,8 @@ class Terms:
     """False: over a call limit, or already in a call"""
     recoveries: tuple[str, ...] = ("usual",)
     """Which of RECOVERIES each window is offered with"""
+    varied: Bools | None = None
+    """(site,) sites offered all of `recoveries`, the others the first only; None: all sites"""
     two_stages: bool = False
     """Sheds are offered in two stages besides: one machine comes back as the tank's rate falls. A call's record tells
     of one stage only, so calls do not ask for them."""
@@ -80,7 +82,7 @@ def candidates(
             site, first, last = _blocks(terms, has, shortest)
             machine_limit = np.where(off[site], 0.0, limit)
             parts.append((site, first, last, np.full(len(site), limit), machine_limit))
-    found = _sorted(parts, roster.chillers.exists.shape[1], terms.recoveries)
+    found = _sorted(parts, roster.chillers.exists.shape[1], terms)
     return _with_two_stages(found, roster, ready, terms) if terms.two_stages else found
 
 
@@ -102,12 +104,12 @@ def _with_two_stages(found: Candidates, roster: Roster, ready: Bools, terms: Ter
             switch = first + np.round(share * (last - first)).astype(np.int64)
             has = terms.allowed & startable & (count >= off_count) & (last - first >= terms.minimum_intervals)
             has &= (switch - first >= np.maximum(rests, 1)) & (last - switch >= np.maximum(runs, 1))
-            site = np.repeat(np.flatnonzero(has), len(terms.recoveries))
-            codes = np.array([RECOVERIES.index(name) for name in terms.recoveries], dtype=np.int64)
+            site = np.flatnonzero(has)
+            row, recovery = _with_recoveries(site, terms)
+            site = site[row]
             starts, ends = (np.stack(pair, axis=1)[site] for pair in ((first, switch), (switch, last)))
             machine = np.stack([np.where(mask[site], 0.0, 1.0) for mask in (more, fewer)], axis=1)
             stages = Stages(starts, ends, machine)
-            recovery = np.tile(codes, int(has.sum()))
             parts.append(Candidates(site, first[site], last[site], np.ones(len(site)), recovery, stages))
     return _merged(parts)
 
@@ -150,7 +152,7 @@ def _charging(roster: Roster, standing: Standing, terms: Terms) -> Candidates:
         site, first, last = _blocks(terms, has, shortest)
         machine_limit = np.full(ready[site].shape, limit)
         parts.append((site, first, last, np.full(len(site), limit), machine_limit))
-    found = _sorted(parts, chillers.exists.shape[1], terms.recoveries)
+    found = _sorted(parts, chillers.exists.shape[1], terms)
     return replace(
         found, stages=replace(found.stages, charge=np.ones(found.stages.start.shape, dtype=np.bool_))
     )
@@ -176,19 +178,26 @@ def _least_intervals(which: Bools, minutes: Floats, terms: Terms) -> Ints:
     return np.asarray(np.ceil(longest / terms.step_minutes), dtype=np.int64)
 
 
-def _sorted(
-    parts: list[tuple[Ints, Ints, Ints, Floats, Floats]], machines: int, recoveries: tuple[str, ...]
-) -> Candidates:
-    """All candidates in order, each once with every recovery."""
+def _sorted(parts: list[tuple[Ints, Ints, Ints, Floats, Floats]], machines: int, terms: Terms) -> Candidates:
+    """All candidates in order, each once with every recovery that its site is offered."""
     if not parts:
         none = np.zeros(0, dtype=np.int64)
         empty = Stages(none[:, None], none[:, None], np.zeros((0, 1, machines)))
         return Candidates(none, none, none, np.zeros(0), none, empty)
     site, start, end, limit, machine = (np.concatenate(column) for column in zip(*parts, strict=True))
     order = np.lexsort((-limit, (machine == 0.0).sum(axis=1), end, start, site))
-    codes = np.array([RECOVERIES.index(name) for name in recoveries], dtype=np.int64)
-    recovery = np.tile(codes, len(order))
-    order = np.repeat(order, len(codes))
-    site, start, end, limit, machine = (array[order] for array in (site, start, end, limit, machine))
+    row, recovery = _with_recoveries(site[order], terms)
+    site, start, end, limit, machine = (array[order[row]] for array in (site, start, end, limit, machine))
     stages = Stages(start[:, None], end[:, None], machine[:, None, :])
     return Candidates(site, start, end, limit, recovery, stages)
+
+
+def _with_recoveries(site: Ints, terms: Terms) -> tuple[Ints, Ints]:
+    """Rows of `site` (row,), each repeated for every recovery its site is offered, and the recovery of each."""
+    codes = np.array([RECOVERIES.index(name) for name in terms.recoveries], dtype=np.int64)
+    row = np.repeat(np.arange(len(site)), len(codes))
+    place = np.tile(np.arange(len(codes)), len(site))
+    if terms.varied is not None:
+        kept = (place == 0) | terms.varied[site[row]]
+        row, place = row[kept], place[kept]
+    return row, codes[place]

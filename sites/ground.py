@@ -1,6 +1,6 @@
 """What quotes stand on: conditions and the usual case of every site, worked out once for all candidates."""
 
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, fields, replace
 
 import numpy as np
 
@@ -10,9 +10,10 @@ from sites.course import Course
 from sites.dispatch import plant_power_kw, staged_load_kw_th
 from sites.outlook import Outlook
 from sites.plant import at_rest, simulate
+from sites.recovery import USUAL
 from sites.roster import Roster, Standing
 from sites.rows import Plants, plants
-from sites.units import Floats, total
+from sites.units import Floats, Ints, total
 
 STAGE_BAND = 0.03
 """Least width of the band above a machine's start in which it may be off for part of an interval, of the load."""
@@ -38,22 +39,43 @@ class Ground:
     the same reason: tanks held to their limits at the END of each interval have given too little before"""
     in_force: Stages
     """Stages of other calls in force, one row a site: part of the usual case"""
+    recovering: "Recovering | None" = None
+    """How the sites of these calls come back; None: all as usual"""
 
 
-def ground(roster: Roster, outlook: Outlook, standing: Standing, in_force: Stages | None = None) -> Ground:
-    """Work out conditions and the usual case (other calls in force carried out) from best and low inventory."""
+@dataclass(frozen=True)
+class Recovering:
+    """Recoveries of calls in force, each (site,)."""
+
+    recovery: Ints
+    """Index into RECOVERIES"""
+    recover_from: Ints
+    """Clock index at which the call's window ends"""
+    level_kwh_th: Floats
+    """What the tanks would hold together at the horizon's start without the call, NaN where the call has not begun"""
+
+
+def ground(
+    roster: Roster,
+    outlook: Outlook,
+    standing: Standing,
+    in_force: Stages | None = None,
+    recovering: Recovering | None = None,
+) -> Ground:
+    """Work out conditions and the usual case (other calls in force carried out, their recoveries included) from best
+    and low inventory."""
     here = conditions(roster, outlook, standing)
     machines = roster.chillers.exists.shape[1]
     stages = in_force if in_force is not None else no_stages(roster.count, machines)
     rows = plants(roster, here, standing.tank_available, np.arange(roster.count))
     usual, low = (
-        simulate(rows, here, stages, at_rest(start), None)
+        _usual(rows, roster, here, standing, stages, start, recovering)
         for start in (standing.best_kwh_th, standing.low_kwh_th)
     )
     overstated = _by_tank_kw(here, usual) + _by_staging_kw(roster, here, usual)
     overheld = np.cumsum(_withheld_kw_th(here, usual), axis=1) * here.step_h
     overheld = np.pad(overheld, ((0, 0), (1, 0)))[:, :-1]
-    return Ground(roster, outlook, standing, here, rows, usual, low, overstated, overheld, stages)
+    return Ground(roster, outlook, standing, here, rows, usual, low, overstated, overheld, stages, recovering)
 
 
 def usual_course(roster: Roster, outlook: Outlook, standing: Standing, level_from: int = 0) -> Course:
@@ -68,7 +90,39 @@ def usual_course(roster: Roster, outlook: Outlook, standing: Standing, level_fro
 
 def usual_high(base: Ground) -> Course:
     """The usual case from the high inventory, which an absorb is held against."""
-    return simulate(base.plants, base.here, base.in_force, at_rest(base.standing.high_kwh_th), None)
+    start = base.standing.high_kwh_th
+    return _usual(base.plants, base.roster, base.here, base.standing, base.in_force, start, base.recovering)
+
+
+def _usual(
+    rows: Plants,
+    roster: Roster,
+    here: Conditions,
+    standing: Standing,
+    stages: Stages,
+    start: Floats,
+    recovering: Recovering | None = None,
+) -> Course:
+    usual = simulate(rows, here, stages, at_rest(start), None)
+    if recovering is None or not (recovering.recovery != USUAL).any():
+        return usual
+    level = _spread(roster, standing, recovering.level_kwh_th, start)
+    nothing = no_stages(roster.count, roster.chillers.exists.shape[1])
+    without = simulate(rows, here, nothing, at_rest(level), None).as_usual
+    site = np.flatnonzero(recovering.recovery != USUAL)
+    after = (recovering.recovery[site], recovering.recover_from[site])
+    replayed = simulate(rows.pick(site, after), here, stages.take(site), at_rest(start[site]), without)
+    for field in fields(Course):
+        getattr(usual, field.name)[site] = getattr(replayed, field.name)
+    return usual
+
+
+def _spread(roster: Roster, standing: Standing, level_kwh_th: Floats, start: Floats) -> Floats:
+    """Inventory (site, tank) of a level of all tanks together, as a share of capacity; `start` where it is NaN."""
+    capacity = np.where(standing.tank_available & roster.tanks.exists, roster.tanks.capacity_kwh_th, 0.0)
+    whole = total(capacity)
+    share = np.divide(level_kwh_th, whole, out=np.full_like(whole, np.nan), where=whole > 0.0)[:, None]
+    return np.where(np.isnan(share) | (capacity <= 0.0), start, np.minimum(share, 1.0) * capacity)
 
 
 def _withheld_kw_th(here: Conditions, usual: Course) -> Floats:

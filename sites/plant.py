@@ -36,6 +36,8 @@ STOP_CHARGE_AT = 0.985
 PULL_DOWN_H = 1.0
 """Time constant of the ramp that brings a warm zone back; a step would rebound above the normal peak
 (Xu, Haves, Piette, Braun 2004 recommend a ramp; its length is common practice, no source)."""
+LEAST_CHARGE_KW_TH = 1e-6
+"""Less than this is rounding: it starts no pump."""
 SETTLED_K = 0.02
 """Rise below which the zone is brought back at once."""
 APART_FRACTION = 1e-3
@@ -326,7 +328,7 @@ def _plan(
     charging = charging and not_full and not staged
     if event and row.recovery != USUAL and row.recover_from <= t:
         asked = _made_up(hour, usual, row, tanks, step_h)
-        charging = not staged and tanks[2] <= 0.0 and asked > 0.0
+        charging = not staged and tanks[2] <= 0.0 and asked > LEAST_CHARGE_KW_TH
     if made_to:
         return charging or not_full, inf
     return charging, asked

@@ -5,11 +5,14 @@ one). Limits must hold in both; kW and cost are the best estimate's, and a candi
 other inventory is not quoted at all, so that no promise rests on the better level.
 """
 
-from dataclasses import dataclass, fields
+from collections.abc import Iterable
+from dataclasses import dataclass, fields, replace
+from typing import Any
 
 import numpy as np
 
 from sites import blocks
+from sites.candidate import Stages
 from sites.compiled import each
 from sites.cost import cost_parts, lack_price_per_kwh_th
 from sites.course import Course
@@ -22,7 +25,7 @@ from sites.roster import Roster
 from sites.trial import Tried, sides_of, try_all
 from sites.units import AnyArray, Bools, Floats, Ints, Strings
 
-__all__ = ["Ground", "Quoted", "detail", "ground", "quote", "windows_of"]
+__all__ = ["Ground", "Quoted", "detail", "ground", "quote", "together", "windows_of"]
 
 ROWS_AT_ONCE = 8192
 """Candidates run together by one thread: what they need over the horizon stays within tens of MB."""
@@ -152,6 +155,45 @@ def _joined(parts: list[_Part]) -> _Part:
         last = parts.pop().change_kw
         change[end - len(last) : end] = last
     return _Part(change_kw=change, **small)
+
+
+def together(first: Quoted, second: Quoted) -> Quoted:
+    """Quotes of both in order of site, start and end; of one ground, direction and event, no candidate in both.
+
+    What limits a site is told by the quotes that hold its candidate of most energy, the first where they are alike.
+    """
+    one, other = first.quotes, second.quotes
+    order = np.lexsort([np.concatenate([getattr(of, name) for of in (one, other)]) for name in _ORDER])
+
+    def joined(of: Any, more: Any, names: Iterable[str]) -> dict[str, Any]:
+        return {name: np.concatenate([getattr(of, name), getattr(more, name)])[order] for name in names}
+
+    better = _most_energy(other) > _most_energy(one)
+    quotes = replace(
+        one,
+        **joined(one, other, _OF_QUOTES),
+        stages=Stages(**joined(one.stages, other.stages, _OF_STAGES)),
+        site_limited_by=np.where(better, other.site_limited_by, one.site_limited_by),
+    )
+    tried = first.tried + second.tried
+    return replace(first, quotes=quotes, **joined(first, second, _OF_QUOTED), tried=tried)
+
+
+_ORDER = ("window_end", "window_start", "site")
+_OF_STAGES = ("start", "end", "load_limit_fraction", "charge")
+_OF_QUOTES = (
+    *("site", "quote_id", "window_start", "window_end", "expected_kw", "change_kw", "cost", "unmet_kwh_th"),
+    *("end_lack_kwh_th", "end_lack_price_per_kwh_th", "limited_by"),
+)
+_OF_QUOTED = ("load_limit_fraction", "recovery", "inventory_low_start_kwh_th", "peak_rise_k", "full_again")
+"""Fields with a row for each candidate."""
+
+
+def _most_energy(quotes: DenseQuotes) -> Floats:
+    """(N,) sum of expected kW of each site's best candidate, 0 where it has none."""
+    best = np.zeros(quotes.site_count)
+    np.maximum.at(best, quotes.site, quotes.expected_kw.sum(axis=1))
+    return best
 
 
 def detail(quoted: Quoted, candidate: Ints) -> Course:

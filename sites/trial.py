@@ -18,6 +18,7 @@ from sites.direction import Direction
 from sites.ground import Ground, usual_high
 from sites.plant import advance, at_rest, laid, records_of, room, stage
 from sites.quotes import LIMITED_BY
+from sites.recovery import USUAL
 from sites.rows import Plants, usual_hours
 from sites.tally import Tally, add, broken, tally, tank_cause
 from sites.units import AnyArray, Bools, Floats, Ints
@@ -251,7 +252,11 @@ class _Runs:
 
     def rest(self, trial: Trial, index: Ints, side: Side, verdict: Ints) -> None:
         """Run those of the candidates `index` that are not refused yet from the event to the horizon's end, and write
-        refusals into `verdict`."""
+        refusals into `verdict`; a recovery of its own hours that does not bring the tank back after a shed is none."""
         among = np.flatnonzero(verdict[index] == 0)
         trial.run(self.base.plants, side.hours, self.event[1], self.base.outlook.clock.count, among)
-        verdict[index[among]] = self._broken(trial, among, side.course is self.base.usual)
+        found, rows = self._broken(trial, among, side.course is self.base.usual), trial.rows[among]
+        never = (
+            (rows["recovery"] != USUAL) & ~rows["from_above"] & (trial.tally.sums["full_again"][among] < 0)
+        )
+        verdict[index[among]] = np.where((found == 0) & never, LIMITED_BY.index("recovery"), found)

@@ -198,7 +198,7 @@ STOP EARLY (you never need permission to stop): end the charging, undo limits,
 START     One machine at a time, none before its least off time is over or with
           no start left. Load limit 50 % for 15 min, then ramp.
 AFTER     Usual plan again from 18:45; no charging before Thu 23:45, then at any
-          hour, the building's meter within its peak so far, at most T1 5.3
+          hour, but with the building's meter under 294 kW, at most T1 5.3
           kW_th. The tank starts fuller, so less is charged than usual. Full
           early: stop charging and ring; never past full.
 CAUTIONS  Life-safety, process and critical cooling stay on. Machine protections
@@ -230,6 +230,10 @@ ICE_SAYS = (
 
 def test_the_page_of_a_chilled_water_plant(call: CallRecord) -> None:
     assert text(orders(call)[2]) == WATER_PAGE
+    usual, bills = call.frames["usual"], call.frozen["bills"]
+    own = usual[usual["site_id"] == "S04"]
+    peak = max((own["usual_kw"] + own["rest_kw"]).max(), bills.set_index("site_id")["billed_peak_kw"]["S04"])
+    assert int(peak) == 294
 
 
 def test_the_page_of_an_ice_plant(call: CallRecord) -> None:

@@ -84,3 +84,18 @@ def test_a_site_whose_recovery_has_no_room_is_told_so():
     assert found.called.tolist() == [1]
     assert told.left_out[0].site == 0
     assert told.left_out[0].reason == "no room for its load under the limit of node f0"
+
+
+def test_nodes_whose_limit_has_a_price_are_told_the_dearest_first():
+    """0.50 for a kW over a quarter of an hour is 2.00 a kWh; a price that rounds to nothing is not told."""
+    case = Case(hand_quotes([10.0, 10.0, 10.0], [1.0, 2.0, 3.0]), kw=10.0)
+    found = case.run()
+    importing = np.zeros_like(found.prices.importing)
+    importing[0, 0], importing[1, :] = 0.25, [0.5, 1e-5][: importing.shape[1]]
+    found = replace(found, prices=replace(found.prices, importing=importing))
+    below = np.ones(3, dtype=bool)
+    told = explain(found, None, case.quotes, case.feeders, below, {}, case.headroom)
+    assert [(one.node, one.intervals, one.dearest, one.per_kwh) for one in told.full_nodes] == [
+        (1, 1, 0, pytest.approx(2.0)),
+        (0, 1, 0, pytest.approx(1.0)),
+    ]

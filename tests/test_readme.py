@@ -2,6 +2,7 @@
 
 import re
 import shutil
+import subprocess
 from decimal import Decimal
 from pathlib import Path
 
@@ -14,9 +15,23 @@ README = (Path(__file__).resolve().parents[1] / "README.md").read_text(encoding=
 PREFIX = "    .venv/bin/shedwright "
 
 
+EDIT = "    sed "
+
+
 def commands() -> list[str]:
     """Every indented command of the installed program, without its place."""
     return [line.removeprefix(PREFIX) for line in README.split("\n") if line.startswith(PREFIX)]
+
+
+def lines_to_run() -> list[str]:
+    """The same and the edits between them, in order."""
+    lines = [line for line in README.split("\n") if line.startswith((PREFIX, EDIT))]
+    return [line.removeprefix(PREFIX).strip() for line in lines]
+
+
+def shown_of(heading: str) -> list[str]:
+    """Lines of the first output shown below a heading."""
+    return README.split(f"## {heading}\n")[1].split("```text\n")[1].split("\n```")[0].split("\n")
 
 
 def test_the_first_two_commands_are_the_first_two_blocks() -> None:
@@ -36,10 +51,19 @@ def test_every_command_of_the_program_has_an_example(practice: Practice) -> None
 
 def test_readmes_commands_run_one_by_one(practice: Practice, tmp_path: Path) -> None:
     shutil.copytree(practice.fleet, tmp_path / "rehearsal")
-    for line in commands():
+    said = {}
+    for line in lines_to_run():
+        if line.startswith(EDIT.strip()):
+            before = (tmp_path / "rehearsal" / "nodes.csv").read_text()
+            subprocess.run(line, shell=True, cwd=tmp_path, check=True)
+            assert (tmp_path / "rehearsal" / "nodes.csv").read_text() != before
+            continue
         ran = shedwright(*line.split(), cwd=tmp_path)
+        said[line] = ran.stdout
         assert ran.returncode == 0, f"{line}: {ran.stderr}"
         assert ran.stdout
+    sun = next(said[line] for line in said if "--event sun" in line)
+    assert [line for line in shown_of("Absorb") if line not in sun.splitlines()] == []
     assert (tmp_path / "rehearsal" / "events" / "second" / "orders-001").is_dir()
     assert (tmp_path / "rehearsal" / "events" / "practice" / "settlement-002").is_dir()
     assert (tmp_path / "invented" / "rehearsals" / "1" / "events" / "practice" / "call-001").is_dir()

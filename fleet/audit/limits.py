@@ -12,7 +12,7 @@ import pandas as pd
 from fleet.audit.case import Case
 from fleet.audit.evidence import available, utc_naive
 from fleet.audit.findings import Findings
-from fleet.audit.quotes import DEMAND_LIMITS
+from fleet.audit.quotes import DEMAND_LIMITS, recoveries_offered
 from sites.units import Bools, Floats, Ints
 
 COUNTED: Final = ("real", "test")
@@ -53,7 +53,7 @@ def candidates_tried(case: Case, found: Findings) -> None:
 
     Blocks [a, b) of the event from the site's notice on, at least as long as site and machines need, at most as the
     hours left allow. Shed: the last k machines in service off, for each k; three limits where others stay on. Absorb:
-    sites with a tank in service and machines that can charge it; three limits. Each with every recovery.
+    sites with a tank in service and machines that can charge it; three limits. Each with every recovery of its site.
     """
     book = case.evidence
     step = book.clock.step_minutes
@@ -69,13 +69,14 @@ def candidates_tried(case: Case, found: Findings) -> None:
     free &= _left(book.fact("hours_per_season"), used.season_hours) > 0.0
     edges = np.arange(book.event_from, book.event_to + 1)
     first, last = (edge.ravel() for edge in np.meshgrid(edges, edges, indexing="ij"))
+    recoveries, varied = recoveries_offered(case)
+    often = np.where(varied, len(recoveries), 1)
     total = 0.0
     for site, offered, minutes, startable in [_charges(case)] if case.absorb else _stops(case):
         shortest = np.maximum(least[site], np.ceil(minutes / step))
         long_enough = (last - first >= shortest[:, None]) & (last - first <= longest[site][:, None])
         blocks = (long_enough & (first >= soonest[site][:, None])).sum(axis=1)
-        total += float((blocks * offered * (free[site] & startable)).sum())
-    total *= len(book.record.proof.get("recoveries", ["usual"]))
+        total += float((blocks * offered * often[site] * (free[site] & startable)).sum())
     told = book.record.proof["candidates_tried"]
     found.value("candidates tried", f"{book.folder}/proof.json", "candidates_tried", told, total)
 

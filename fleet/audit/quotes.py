@@ -12,7 +12,7 @@ import pandas as pd
 from fleet.audit.case import Case, over_sites
 from fleet.audit.evidence import utc_naive
 from fleet.audit.findings import Findings
-from sites.units import Floats, Ints
+from sites.units import Bools, Floats, Ints
 
 PARTS: Final = ("before", "during", "recovery", "demand", "fee", "comfort")
 DEMAND_LIMITS: Final = (1.0, 0.75, 0.5)
@@ -68,17 +68,28 @@ def machines(case: Case, found: Findings) -> None:
 
 
 def recoveries(case: Case, found: Findings) -> None:
-    """A candidate's recovery is one of those the proof says were offered, and its id ends with it unless usual."""
+    """A candidate's recovery is one of those the proof says its site was offered, and its id ends with it unless
+    usual."""
     sheet = case.evidence.sheets["quotes"]
     code = sheet.frame["recovery"]
-    offered = case.evidence.record.proof.get("recoveries", ["usual"])
-    unknown = ~code.isin(offered).to_numpy()
+    offered, varied = recoveries_offered(case)
+    every = sheet.frame["site_id"].isin(case.evidence.site_id[varied]).to_numpy(dtype=np.bool_)
+    unknown = ~(code == offered[0]).to_numpy() & ~(every & code.isin(offered).to_numpy())
     found.wrong("recovery", sheet, "recovery", unknown, code.to_numpy(), "one of " + ", ".join(offered))
     pairs = zip(sheet.frame["quote_id"], code, strict=True)
     named = np.array([_recovery_of(str(name)) == one for name, one in pairs], dtype=np.bool_)
     found.wrong(
         "recovery", sheet, "quote_id", ~named, sheet.frame["quote_id"].to_numpy(), "an id with its recovery"
     )
+
+
+def recoveries_offered(case: Case) -> tuple[list[str], Bools]:
+    """The recoveries of the call, and the sites (N,) that were offered all of them; the others the first only."""
+    book = case.evidence
+    offered = list(book.record.proof.get("recoveries") or ["usual"])
+    sites = book.record.proof.get("recoveries_sites")
+    every = np.ones(len(book.site_id), dtype=np.bool_)
+    return offered, every if sites is None else np.isin(book.site_id.astype(str), np.array(sites, dtype=str))
 
 
 def windows(case: Case, found: Findings) -> None:

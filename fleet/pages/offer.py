@@ -58,7 +58,7 @@ def offer_page(survey: Survey, offer: Offer, asked_kw: float | None, links: Sequ
         limits=_limit_table(survey, offer),
         out=_out_table(survey, offer),
         assumed=_assumed_table(survey),
-        notes=[plain(note) for note in (*survey.folder.notes, *survey.feeders.notes, *survey.headroom.notes)],
+        notes=[plain(note) for note in survey.notes],
     )
 
 
