@@ -5,7 +5,8 @@ down again and again with kW and money of each copy at 0.5 to 1.5 times. A third
 is asked. Limited nodes hold the sites, drawn at random.
 
 How tight they are: the room of each limited node, in every interval of event and recovery, is `tightness` times the
-largest change of load that its sites cause in the answer without any limit. 1.5 is easy: nothing binds.
+largest change of load that its sites cause in the answer without any limit. 1.5 is easy: nothing binds. 0.9 is
+tight: every feeder has to be kept below what the sites would do by themselves.
 
     .venv/bin/python -m pytest -n 0 -s -m benchmark_run tests/benchmarks/test_allocation_speed.py
 """
@@ -33,6 +34,7 @@ from sites.quotes import LIMITED_BY, DenseQuotes
 WINDOWS = 91
 SHORTFALL, OVER = 2.0, 0.05
 SHARE = 1.0 / 3.0
+EASY, TIGHT = 1.5, 0.9
 LIMITS = {"tank": ("inventory", "discharge_rate", "held_back"), "comfort": ("comfort",), "none": ("none",)}
 
 
@@ -177,8 +179,19 @@ def report(name: str, made: Case, found: Allocation, seconds: float, used: float
 @pytest.mark.benchmark_run
 def test_a_thousand_sites_below_easy_feeders():
     """Target: 0.2 % in 2 s."""
-    made = case(1000, 20, 1.5)
+    made = case(1000, 20, EASY)
     found, seconds, used = made.run()
     gap = checked(made, found)
-    report("tightness 1.5", made, found, seconds, used, gap)
+    report("easy", made, found, seconds, used, gap)
     assert gap <= 0.002
+
+
+@pytest.mark.benchmark_run
+def test_a_thousand_sites_below_tight_feeders():
+    """Target: 1 % in 15 s. The gap is held to what was reached, so that it does not grow unseen."""
+    made = case(1000, 20, TIGHT)
+    found, seconds, used = made.run()
+    gap = checked(made, found)
+    report("tight", made, found, seconds, used, gap)
+    assert (found.prices.importing > 0.0).any(axis=1).sum() >= 10
+    assert gap <= 0.025
