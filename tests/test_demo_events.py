@@ -216,35 +216,3 @@ def test_a_call_of_nobody_is_refused(tmp_path: Path) -> None:
     with pytest.raises(DemoError) as refused:
         events.play(folder, call, tmp_path / "out")
     assert str(refused.value) == f"{call} calls no site; there is nothing to play"
-
-
-def charged(folder: Path, out: Path, site_ids: list[str]) -> Path:
-    """Steps and windows that make tanks charge from 12:00 to 15:00."""
-    tanks = pd.read_csv(folder / "tanks.csv")
-    own = tanks[tanks["site_id"].isin(site_ids)]
-    parts = [
-        own[["site_id", "tank_id"]].assign(at=moment(hour), action=action)
-        for hour, action in ((12, "charge_to"), (15, "charge_end"))
-    ]
-    steps = pd.concat(parts).rename(columns={"tank_id": "unit_id"})
-    out.mkdir(parents=True)
-    steps.assign(event_id="trial", detail="", value=np.nan).to_parquet(out / "steps.parquet")
-    windows = pd.DataFrame({"site_id": site_ids, "window_start": moment(12), "window_end": moment(15)})
-    windows.to_parquet(out / "windows.parquet")
-    return out
-
-
-def test_tanks_charge_from_their_step_to_its_end_and_no_longer(tmp_path: Path) -> None:
-    folder = short_fleet(40).path
-    call = charged(folder, tmp_path / "call", ["office-01"])
-    played = events.play(folder, call, tmp_path / "out")
-    truth = pd.read_parquet(played.truth)
-    own = truth[truth["site_id"] == "office-01"].set_index("interval_start")
-    more = own["inventory_with_event_kwh_th"] - own["inventory_without_event_kwh_th"]
-    assert more[: moment(12) - pd.Timedelta(minutes=15)].abs().max() == 0.0
-    assert more[moment(14.75)] > 100.0
-    rise = (own["plant_with_event_kw"] - own["plant_without_event_kw"])[moment(12) : moment(14.75)]
-    assert rise.iloc[1:].min() > 0.0
-    assert played.true_kwh == pytest.approx(rise.sum() * 0.25)
-    after = own.loc[moment(15.25) : moment(21.75), "inventory_with_event_kwh_th"]
-    assert (after.diff().dropna() <= 1e-6).all()
