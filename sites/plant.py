@@ -305,8 +305,8 @@ def _plan(
 
     Charging mode: in charging hours, from low enough until full; an event row also while its tank lies below the usual
     case's; load levelling whenever load is under the flat rate. Asked for: all there is, or with load levelling what
-    lies under the flat rate, unless the tank is behind the usual case in its charging hours; a levelled tank that is
-    ahead of the usual case waits for it.
+    lies under the flat rate, and in charging hours what brings a tank that is behind the usual case up to it, no
+    further; a levelled tank that is ahead of the usual case waits for it.
     """
     held, capacity = tanks[0], site.capacity_kwh_th
     compared = event and t > 0
@@ -316,8 +316,9 @@ def _plan(
         behind = hour.charge and compared and held < before.held_kwh_th
         below_level = site.level_kw_th - hour.load_kw_th
         charging = below_level > 0.0 or behind
-        if not behind:
-            asked = max(below_level, 0.0)
+        asked = max(below_level, 0.0)
+        if behind:
+            asked = max(asked, (usual.held_kwh_th - held) / step_h + tanks[1])
         if compared and held - before.held_kwh_th > APART_FRACTION * capacity:
             asked = min(asked, max((usual.held_kwh_th - held) / step_h, 0.0))
     else:

@@ -111,6 +111,19 @@ def test_load_levelling_runs_flat_while_its_tank_is_neither_full_nor_empty() -> 
     np.testing.assert_allclose(usual.chiller_kw_th[row][free], level, rtol=1e-9)
 
 
+def test_a_levelled_tank_comes_back_to_the_usual_level_and_not_beyond_it() -> None:
+    """Overshooting it would be waited out in the next interval, and the machines would come and go with each."""
+    run, usual, roster = event_course()
+    row = int(np.flatnonzero(roster.buildings.strategy == STRATEGIES.index("load_levelling"))[0])
+    after = slice(18, None)
+    more = run.power_kw[row, after] - usual.power_kw[row, after]
+    above = run.inventory_kwh_th[row].sum(axis=0)[after] - usual.inventory_kwh_th[row].sum(axis=0)[after]
+    assert more.max() > 20.0
+    assert more.min() > -1.0
+    assert above[0] < -50.0
+    assert above.max() < 1e-6
+
+
 def test_storage_priority_spreads_its_tank_over_the_on_peak_hours() -> None:
     usual, roster, outlook = usual_course()
     row = 2
