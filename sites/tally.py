@@ -108,10 +108,16 @@ def _add_inside(sums: Any, site: Any, now: Any, usual: Any) -> None:
 
 
 def broken(
-    result: Tally, among: Ints, site: Ints, buildings: Buildings, here: Conditions, usual_counts: bool = True
+    result: Tally,
+    among: Ints,
+    site: Ints,
+    buildings: Buildings,
+    here: Conditions,
+    until: int,
+    usual_counts: bool = True,
 ) -> Ints:
     """First limit that each of the rows `among` (row,) breaks, as an index into LIMITED_BY; 0 ("none") where it keeps
-    all. `site` (row,) indexes buildings and conditions.
+    all. `site` (row,) indexes buildings and conditions; the rows have been run as far as interval `until`.
 
     Comfort is the critical load, sites that allow no unmet load, the site's own ceiling and the drift limits
     in occupied hours, and (where `usual_counts`) a window in which the usual plan is short of cooling already:
@@ -122,7 +128,8 @@ def broken(
     sums = result.sums[among]
     warm = sums["occupied_peak_k"] > buildings.rise_limit_k[site]
     moving = np.flatnonzero(sums["highest_k"] - sums["lowest_k"] > LEAST_DRIFT_K)
-    drift = comfort.drift_excess_k(result.rise_k[among[moving]], here.occupied[site[moving]], here.step_h)
+    rise, occupied = result.rise_k[among[moving], :until], here.occupied[site[moving], :until]
+    drift = comfort.drift_excess_k(rise, occupied, here.step_h)
     warm[moving] |= drift > 0.0
     unserved = buildings.no_unmet[site] & (sums["unmet_kwh_th"] > UNMET_TOLERANCE_KW_TH)
     critical = sums["critical_short_kw_th"] > UNMET_TOLERANCE_KW_TH

@@ -218,7 +218,7 @@ class _Runs:
         hour = np.arange(first, last)[None, :]
         inside = (hour >= trial.rows["start"][:, None]) & (hour < trial.rows["end"][:, None])
         least = np.where(inside, expected, np.inf).min(axis=1, initial=np.inf)
-        found = self._broken(trial, everyone, promised is None)
+        found = self._broken(trial, everyone, last, promised is None)
         small, less = least < LEAST_KW, np.zeros(len(index), dtype=np.bool_)
         if promised is not None:
             slack = LOW_TOLERANCE * np.abs(promised) + LEAST_KW
@@ -240,9 +240,9 @@ class _Runs:
         )
         return trial, expected
 
-    def _broken(self, trial: Trial, among: Ints, usual_counts: bool) -> Ints:
+    def _broken(self, trial: Trial, among: Ints, until: int, usual_counts: bool) -> Ints:
         site, base = trial.rows["site"][among], self.base
-        return broken(trial.tally, among, site, base.roster.buildings, base.here, usual_counts)
+        return broken(trial.tally, among, site, base.roster.buildings, base.here, until, usual_counts)
 
     def _overheld(self, trial: Trial) -> Bools:
         """Rows (row,) whose tanks give less than asked, from a level at window start that may be too high."""
@@ -254,8 +254,9 @@ class _Runs:
         """Run those of the candidates `index` that are not refused yet from the event to the horizon's end, and write
         refusals into `verdict`; a recovery of its own hours that does not bring the tank back after a shed is none."""
         among = np.flatnonzero(verdict[index] == 0)
-        trial.run(self.base.plants, side.hours, self.event[1], self.base.outlook.clock.count, among)
-        found, rows = self._broken(trial, among, side.course is self.base.usual), trial.rows[among]
+        end, rows = self.base.outlook.clock.count, trial.rows
+        trial.run(self.base.plants, side.hours, self.event[1], end, among)
+        found, rows = self._broken(trial, among, end, side.course is self.base.usual), rows[among]
         never = (
             (rows["recovery"] != USUAL) & ~rows["from_above"] & (trial.tally.sums["full_again"][among] < 0)
         )
