@@ -96,7 +96,7 @@ def test_the_site_settled_by_hand_comes_out_line_by_line() -> None:
 
 def test_the_site_settled_by_hand_is_the_practised_one(practice: Practice) -> None:
     found = reckon(practice.fleet, "practice", "retail-02")
-    slot = next(one for one in found["slots"] if (one["part"], one["local_time"]) == ("event", "16:00"))
+    slot = next(one for one in found["slots"] if (one["part"], one["local_time"]) == ("event", "18:00"))
     inside = [one for one in found["intervals"] if one["in_window"]]
     energy, adjustment, site = found["energy"], found["adjustment"], found["site"]
     days = " + ".join(f"{kw:.3f}" for kw in slot["kw_by_day"].values())
