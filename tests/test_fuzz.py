@@ -3,7 +3,7 @@
 import pytest
 from fuzz import LONGEST_S, damaged, remembering, tried
 
-ORDINARY, ALL = 200, 10_000
+ORDINARY, ALL = 300, 10_000
 
 
 def run(count: int, base) -> dict[str, int]:
