@@ -10,6 +10,7 @@ compiled anew by each process.
 import functools
 import hashlib
 import os
+import shutil
 import sys
 import tempfile
 import threading
@@ -106,8 +107,9 @@ def _ran(function: Callable[..., None], arguments: tuple[Any, ...]) -> Callable[
         overload(smaller)(lambda a, b: lambda a, b: a if a < b else b)
     while _members:
         register_jitable(**OPTIONS)(_members.pop())
-    folder = next((each for each in _folders() if _writable(each / _name())), None)
+    folder = next((one for one in _folders() if _writable(one / _name())), None)
     if folder is not None:
+        _swept(folder)
         before, numba.config.CACHE_DIR = numba.config.CACHE_DIR, str(folder / _name())
         try:
             kept = numba.njit(nogil=True, cache=True, **OPTIONS)(function)
@@ -126,6 +128,14 @@ def _folders() -> tuple[Path, ...]:
     """Where compiled loops may be kept, best first: beside the code, then in the user's cache."""
     own = os.environ.get("XDG_CACHE_HOME") or os.path.join(os.path.expanduser("~"), ".cache")
     return Path(__file__).parent / "__pycache__", Path(own) / "shedwright"
+
+
+def _swept(folder: Path) -> None:
+    """Loops that an earlier code beside this one left are of no use to anybody; a user's cache serves several codes."""
+    if folder == _folders()[0]:
+        for old in folder.glob(f"compiled-*-{sys.implementation.cache_tag}"):
+            if old.name != _name():
+                shutil.rmtree(old, ignore_errors=True)
 
 
 def _writable(folder: Path) -> bool:

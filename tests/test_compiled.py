@@ -1,6 +1,7 @@
 """The compiled loop over rows: it says what the array-faced models say, and is kept where it can be."""
 
 import errno
+import sys
 from pathlib import Path
 
 import numpy as np
@@ -87,6 +88,19 @@ def test_a_loop_is_kept_in_the_first_folder_that_can_be_written(
     np.testing.assert_array_equal(values, [1.0, 2.0])
     assert compiled.is_kept()
     assert [path.parts[-4:-2] for path in tmp_path.rglob("*.nbi")] == [("own", compiled._name())]
+
+
+def test_loops_of_earlier_code_are_swept_beside_the_code_only(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    beside, users = tmp_path / "beside", tmp_path / "users"
+    earlier = f"compiled-0123456789abcdef-{sys.implementation.cache_tag}"
+    for folder in (beside, users):
+        (folder / earlier).mkdir(parents=True)
+    monkeypatch.setattr(compiled, "_folders", lambda: (beside, users))
+    compiled.loop(tiny)(np.array([0.5, 2.0]))
+    assert [path.name for path in beside.iterdir()] == [compiled._name()]
+    assert [path.name for path in users.iterdir()] == [earlier]
 
 
 def test_a_loop_runs_where_nothing_can_be_kept(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
