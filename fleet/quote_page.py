@@ -165,4 +165,8 @@ def _cost(survey: Survey, c: int) -> Iterator[str]:
     net = float(quotes.net_cost[c])
     yield f"  {'recovery':<10}{after:,.1f} kWh more than usual after the window"
     yield f"  {'cost':<10}{parts}"
-    yield f"  {'':<10}together {money(net, survey)}, {net / shed:,.3f} per kWh"
+    whole = quotes.expected_kw[c].sum() * quotes.clock.step_h
+    back = (
+        f" ({net / whole:,.3f} less what comes back within the event)" if shed - whole > 0.05 < whole else ""
+    )
+    yield f"  {'':<10}together {money(net, survey)}, {net / shed:,.3f} per kWh{back}"

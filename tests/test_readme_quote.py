@@ -116,7 +116,7 @@ def test_shed_and_cost_add_up(site: str) -> None:
     length = float(re.search(r"mean x ([\d.]+) h", shown(site)).group(1))
     assert mean * length == pytest.approx(energy, abs=0.06 * length)
     (*parts,) = line(site, "  cost ")
-    together, each = line(site, "together")
+    together, each = line(site, "together")[:2]
     assert sum(parts) == pytest.approx(together, abs=0.031)
     assert together / energy == pytest.approx(each, abs=0.0006)
     assert not hours or hours == [length]
