@@ -167,7 +167,10 @@ def stop(site: CalledSite) -> tuple[str, ...]:
         levels.append(f"tanks down to {site.level(facts.held_back_kwh_th)}: that much is held back")
     elif site.tanks:
         levels.append("tanks used up")
-    levels.append(f"supply over {say.temperature(facts.supply_c + SUPPLY_MARGIN_K)} for {SUPPLY_MINUTES} min")
+    warmest_c = facts.supply_c + SUPPLY_MARGIN_K
+    if pd.notna(facts.supply_cap_c):
+        warmest_c = min(warmest_c, facts.supply_cap_c)
+    levels.append(f"supply over {say.temperature(warmest_c)} for {SUPPLY_MINUTES} min")
     levels.append(f"a zone more than {say.rise(facts.rise_limit_k)} over its set-point")
     if facts.critical_kw_th > 0.0:
         levels.append(f"critical cooling ({say.cooling(facts.critical_kw_th)}) not fully served")

@@ -115,6 +115,8 @@ def _buildings(sites: pd.DataFrame) -> Buildings:
     }
     names = [name for name in Buildings.__dataclass_fields__ if name not in special]
     numbers = {name: sites[name].to_numpy(dtype=np.float64) for name in names}
+    cap_c = numbers["supply_cap_c"]
+    numbers["supply_cap_c"] = np.where(np.isnan(cap_c), np.inf, cap_c)
     return Buildings(**special, **numbers)
 
 

@@ -247,12 +247,13 @@ def _order_of_values(frames: Frames, files: Mapping[str, str]) -> list[Problem]:
     for name, low, high, strict in (
         ("bills", "cycle_start", "cycle_end", False),
         ("sites", "supply_c", "return_c", True),
+        ("sites", "supply_c", "supply_cap_c", False),
     ):
         frame = frames[name]
         below, above = (frame[column].fillna(_default(name, column)) for column in (low, high))
         wrong = below >= above if strict else below > above
         for row in frame.index[np.asarray(wrong, dtype=bool)]:
-            word = "below" if strict else "not after"
+            word = "below" if strict else "not after" if isinstance(below[row], pd.Timestamp) else "at most"
             came = f"{_shown(below[row])} and {_shown(above[row])}"
             problems.append(
                 Problem(files[name], int(row), low, came, f"{low} {word} {high}", "correct one of the two")
@@ -261,9 +262,10 @@ def _order_of_values(frames: Frames, files: Mapping[str, str]) -> list[Problem]:
 
 
 def _default(table_name: str, column: str) -> Any:
-    """The column's default, with which an empty cell will be filled later; NaT for days, which have none."""
-    default = table("fleet", table_name).column(column).default
-    return pd.NaT if default is None else default
+    """The column's default, with which an empty cell will be filled later; NaT or NaN where there is none."""
+    known = table("fleet", table_name).column(column)
+    nothing = pd.NaT if known.type == "day" else np.nan
+    return nothing if known.default is None else known.default
 
 
 def _shown(value: object) -> str:

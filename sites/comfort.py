@@ -11,7 +11,7 @@ from typing import Final
 
 import numpy as np
 
-from sites.compiled import Number, shared
+from sites.compiled import Number, larger, shared
 from sites.errors import SitesError
 from sites.roster import Buildings, Rows
 from sites.units import Bools, Floats
@@ -76,6 +76,15 @@ def two_node(buildings: Buildings, step_h: float) -> TwoNode:
         mean_air=once[:, 0, :] / step_h,
         mean_air_gain_k_per_kw=twice[:, 0, 0] / air / step_h,
     )
+
+
+@shared
+def mean_supply_c(supply_c: Number, return_c: Number, load_kw_th: Number, unmet_kw_th: Number) -> Number:
+    """Temperature (row,) of the water a building gets when part of its load goes unmet and its flow is not cut: what is
+    cooled to supply_c mixes with what returns, supply + (return - supply) x unmet / load. A flow that is cut keeps the
+    water colder, so this is the cautious side.
+    """
+    return supply_c + (return_c - supply_c) * unmet_kw_th / larger(load_kw_th, 1e-9)
 
 
 def advance(zone: TwoNode, air_k: Floats, mass_k: Floats, net_kw_th: Floats) -> tuple[Floats, Floats, Floats]:

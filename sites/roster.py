@@ -74,6 +74,8 @@ class Buildings(Rows):
     envelope_kw_per_k: Floats
     rise_limit_k: Floats
     """The site's own ceiling, as a rise above its set-point."""
+    supply_cap_c: Floats
+    """Warmest the building's supply water may become in a window, inf = no cap: where humidity ends an event first."""
     shared_aux_kw: Floats
     """Pumps and fans that run whenever the plant cools, whichever machines are on."""
     tank_pump_kw: Floats

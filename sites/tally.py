@@ -25,18 +25,22 @@ FULL_AGAIN_FRACTION = 1e-3
 LEAST_DRIFT_K: Final = min(limit for _, limit in comfort.DRIFT_LIMITS)
 """No limit on drifts is broken by a row whose rise never moves by more than this."""
 
+SUPPLY_TOLERANCE_K: Final = 1e-6
+"""Rounding of a supply temperature held against its cap."""
+
 SUMS: Final = np.dtype(
     [
         *((name, "f8") for name in ("unmet_kwh_th", "unmet_after_kw_th", "critical_short_kw_th")),
         *((name, "f8") for name in ("at_start_kwh_th", "at_end_kwh_th", "lack_kwh_th")),
-        *((name, "f8") for name in ("occupied_peak_k", "highest_k", "lowest_k")),
+        *((name, "f8") for name in ("occupied_peak_k", "highest_k", "lowest_k", "warmest_c")),
         ("full_again", "i8"),
         *((name, "?") for name in ("usual_short", "rate_bound", "stock_bound", "ran_out", "reserve_bound")),
     ],
     align=True,
 )
 """Sums and peaks of one row. unmet: beyond the usual case, over the whole horizon, and the worst of it after the
-window; critical_short: worst lack against the critical load, with the largest running machine lost; at_start, at_end:
+window; critical_short: worst lack against the critical load, with the largest running machine lost; warmest: the
+building's supply water in the window; at_start, at_end:
 in all tanks at the window's ends; lack: how far the row ends below the usual case; full_again: clock index of the first
 interval after the window at whose end the inventory is back, -1 = never. In the window: load goes unmet in the usual
 case already; tanks were asked for more than their rate with inventory left, or than their inventory; they ran empty in
@@ -92,6 +96,8 @@ def add(sums: Any, row: Any, site: Any, hour: Any, now: Any, usual: Any, t: int,
 def _add_inside(sums: Any, site: Any, now: Any, usual: Any) -> None:
     """What counts inside the window: the usual case's own lack, the critical load, and what bound the tanks."""
     sums.usual_short = sums.usual_short or usual.unmet_kw_th > UNMET_TOLERANCE_KW_TH
+    supply = comfort.mean_supply_c(site.supply_c, site.return_c, now.load_kw_th, now.unmet_kw_th)
+    sums.warmest_c = max(sums.warmest_c, supply)
     critical = min(site.critical_kw_th, now.load_kw_th)
     lack = max(critical - now.firm_kw_th, critical - (now.load_kw_th - now.unmet_kw_th))
     sums.critical_short_kw_th = max(sums.critical_short_kw_th, lack)
@@ -119,14 +125,15 @@ def broken(
     """First limit that each of the rows `among` (row,) breaks, as an index into LIMITED_BY; 0 ("none") where it keeps
     all. `site` (row,) indexes buildings and conditions; the rows have been run as far as interval `until`.
 
-    Comfort is the critical load, sites that allow no unmet load, the site's own ceiling and the drift limits
-    in occupied hours, and (where `usual_counts`) a window in which the usual plan is short of cooling already:
+    Comfort is the critical load, sites that allow no unmet load, a cap on the supply water, the site's own ceiling and
+    the drift limits in occupied hours, and (where `usual_counts`) a window in which the usual plan is short already:
     what it would have drawn then hangs on the minute the tank runs out. So does the zone of a tank that runs out
     in the middle of a window's interval: inventory. Recovery is load left unmet after the window because the tank
     is low.
     """
     sums = result.sums[among]
     warm = sums["occupied_peak_k"] > buildings.rise_limit_k[site]
+    warm |= sums["warmest_c"] > buildings.supply_cap_c[site] + SUPPLY_TOLERANCE_K
     moving = np.flatnonzero(sums["highest_k"] - sums["lowest_k"] > LEAST_DRIFT_K)
     rise, occupied = result.rise_k[among[moving], :until], here.occupied[site[moving], :until]
     drift = comfort.drift_excess_k(rise, occupied, here.step_h)

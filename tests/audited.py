@@ -165,6 +165,7 @@ def frozen_frames(roster: Roster, outlook: Outlook) -> dict[str, pd.DataFrame]:
     sites = pd.DataFrame({name: value for name, value in asdict(buildings).items()})
     sites["strategy"] = np.array(STRATEGIES, dtype=object)[buildings.strategy]
     sites["layout"] = np.array(LAYOUTS, dtype=object)[buildings.layout]
+    sites["supply_cap_c"] = sites["supply_cap_c"].replace(np.inf, np.nan)
     sites["station_id"] = sites["tariff_id"] = sites["site_id"]
     sites["calls_per_season"], sites["calls_per_week"], sites["hours_per_season"] = 12, 3, 40.0
     starts = pd.DatetimeIndex(outlook.clock.starts).tz_localize("UTC")

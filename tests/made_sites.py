@@ -92,6 +92,7 @@ def made_roster(rows: tuple[int, ...] = tuple(range(len(SITES))), **changes: obj
         coupling_kw_per_k=area * 0.009,
         envelope_kw_per_k=area * 0.001,
         rise_limit_k=named("rise_limit_k", 2.0),
+        supply_cap_c=named("supply_cap_c", np.inf),
         shared_aux_kw=0.015 * peak * float(changes.get("aux", 1.0)),  # type: ignore[arg-type]
         tank_pump_kw=0.008 * peak * float(changes.get("aux", 1.0)),  # type: ignore[arg-type]
         notice_minutes=named("notice_minutes", 120.0),

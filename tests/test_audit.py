@@ -318,6 +318,7 @@ LIMITS = [
     ("sites", "calls_per_week", 0, "call limits"),
     ("sites", "hours_per_season", 0.5, "call limits"),
     ("sites", "rise_limit_k", 0.05, "zone ceiling"),
+    ("sites", "supply_cap_c", 5.01, "supply cap"),
     ("sites", "no_unmet", True, "unmet load"),
     ("sites", "critical_kw_th", 900.0, "critical load"),
     ("sites", "held_back_kwh_th", 1900.0, "held-back inventory"),

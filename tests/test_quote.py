@@ -11,7 +11,7 @@ from sites import blocks, plant, trial
 from sites import quote as quoting
 from sites.compiled import cores
 from sites.outlook import Outlook
-from sites.quote import Ground, Quoted, detail, ground, quote
+from sites.quote import Ground, Quoted, detail, ground, quote, windows_of
 from sites.quotes import LIMITED_BY, Answer
 from sites.roster import CHILLER_KINDS, Roster
 
@@ -58,6 +58,28 @@ def test_every_quoted_candidate_keeps_its_limits_in_its_whole_course() -> None:
     assert (run.discharge_kw_th <= run.discharge_limit_kw_th + 1e-9).all()
     np.testing.assert_allclose(
         run.power_kw - quoted.ground.usual.power_kw[site], quoted.quotes.change_kw[pick], atol=1e-9
+    )
+
+
+def test_a_cap_on_the_supply_water_holds_what_may_go_unmet() -> None:
+    """By hand: water at 5 degC mixed with a share s that returns at 13 comes to 5 + 8 s; 6.6 degC allow s = 0.2."""
+    roster = made_roster()
+    capped = replace(roster, buildings=replace(roster.buildings, supply_cap_c=np.full(6, 6.6)))
+    outlook, standing = made_outlook(roster), made_standing(roster)
+    np.testing.assert_allclose(roster.buildings.supply_c + 8.0, roster.buildings.return_c)
+    free, held = (quote(ground(one, outlook, standing), made_terms(6)) for one in (roster, capped))
+
+    def worst(quoted: Quoted) -> np.ndarray:
+        run = detail(quoted, np.arange(len(quoted.quotes.site)))
+        inside = windows_of(quoted.quotes, np.arange(len(quoted.quotes.site)))
+        return np.where(inside, run.unmet_kw_th / np.maximum(run.load_kw_th, 1e-9), 0.0).max(axis=1)
+
+    assert worst(free).max() > 0.25
+    assert 0.1 < worst(held).max() <= 0.2 + 1e-6
+    kept = set(free.quotes.quote_id[worst(free) <= 0.2 + 1e-7])
+    assert set(held.quotes.quote_id) <= kept
+    assert len(kept) - len(held.quotes.quote_id) < 4, (
+        "more goes unmet from the low inventory, which must hold too"
     )
 
 

@@ -15,6 +15,8 @@ from sites.roster import Buildings
 from sites.units import Floats
 
 UNMET_KW_TH = 1e-6
+SUPPLY_KW_TH = 1e-3
+"""Rounding of unmet load held against a cap on the supply water."""
 """Load left unmet below this is rounding."""
 
 
@@ -37,6 +39,16 @@ def ceiling(case: Case, found: Findings) -> None:
     book, sheet = case.evidence, case.evidence.sheets["intervals"]
     limit = np.where(case.occupied[book.called], book.fact("rise_limit_k", book.called)[:, None], np.inf)
     found.most("zone ceiling", sheet, "zone_rise_k", limit.ravel())
+
+
+def supply(case: Case, found: Findings) -> None:
+    """The cap on the building's supply water, in the window: water that is cooled mixed with water that is not."""
+    book, sheet = case.evidence, case.evidence.sheets["intervals"]
+    cap, load = book.fact("supply_cap_c", book.called), book.grid("intervals", "cooling_load_kw_th")
+    cold, back = (book.fact(name, book.called)[:, None] for name in ("supply_c", "return_c"))
+    share = np.divide(cap[:, None] - cold, back - cold, out=np.full_like(cold, np.inf), where=back > cold)
+    most = np.where(book.inside() & ~np.isnan(cap)[:, None], share * load + SUPPLY_KW_TH, np.inf)
+    found.most("supply cap", sheet, "unmet_kw_th", most.ravel())
 
 
 def drift(case: Case, found: Findings) -> None:
@@ -88,4 +100,4 @@ def _buildings(case: Case) -> Buildings:
     return Buildings(**(other | zone))
 
 
-RULES = (zone_rise, ceiling, drift, unmet_where_none_may_be, pull_down_outside)
+RULES = (zone_rise, ceiling, supply, drift, unmet_where_none_may_be, pull_down_outside)
