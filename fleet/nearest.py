@@ -107,7 +107,7 @@ def lifted(want: Want) -> dict[str, float]:
     prompt = replace(terms, earliest=np.zeros_like(terms.earliest))
     found |= _again(want, "notice", base, prompt, (terms.earliest > terms.event_from) & want.allowed)
     for name, words, fields in (
-        ("comfort limits", ("comfort",), {"rise_limit_k": FAR_K}),
+        ("comfort limits", ("comfort",), {"rise_limit_k": FAR_K, "supply_cap_c": np.inf}),
         ("storage held back", ("held_back", "inventory"), {"held_back_kwh_th": 0.0}),
     ):
         other = _with(base, fields)

@@ -16,7 +16,7 @@ WHOLE = EVENT[1] - EVENT[0]
 
 @cache
 def quoted(two_stages: bool) -> Quoted:
-    """Two plants of three machines of 300 kW_th, external-melt tanks of 1,700 and 2,000 kWh_th, nearly full; only the
+    """Two plants of three machines of 300 kW_th, external-melt tanks of 1,700 and 1,900 kWh_th, nearly full; only the
     whole event of three hours is offered."""
     roster = made_roster((1, 1))
     kind = np.full((2, 2), TANK_KINDS.index("ice_external_melt"))
@@ -31,7 +31,7 @@ def quoted(two_stages: bool) -> Quoted:
             roster.tanks,
             exists=np.array([[True, False]] * 2),
             kind=kind,
-            capacity_kwh_th=np.array([[1700.0, 0.0], [2000.0, 0.0]]),
+            capacity_kwh_th=np.array([[1700.0, 0.0], [1900.0, 0.0]]),
         ),
     )
     base = ground(roster, made_outlook(roster), made_standing(roster, 0.95))
