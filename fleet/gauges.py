@@ -25,7 +25,7 @@ def read_levels(status: pd.DataFrame, site_id: Strings, tank_id: Strings) -> pd.
     times = rows["time"].dt.tz_convert("UTC").dt.tz_localize(None).to_numpy().astype("datetime64[us]")
     frame = pd.DataFrame(
         {
-            "unit": np.flatnonzero(first)[row_unit],
+            "unit": np.append(np.flatnonzero(first), -1)[row_unit],  # -1 is left out below
             "time": times.astype(np.int64),
             **{
                 name: rows[column].to_numpy(dtype=np.float64, na_value=np.nan)

@@ -275,3 +275,23 @@ def test_check_tells_what_plant_meters_say() -> None:
     assert "usual operation beside the plant meters of" in text
     assert "levels of tanks by energy balance of their plant meter since each was last certainly full" in text
     assert "1 apart from what is reported" in text
+
+
+@pytest.mark.parametrize("shape", [(0, 2), (1, 0)])
+def test_levels_of_other_sites_are_none_of_those_asked_for(shape) -> None:
+    """A fleet whose metered plants have no tank, or that has none metered long enough."""
+    status = pd.DataFrame(
+        {
+            "site_id": ["pier"],
+            "unit_id": ["ICE-1"],
+            "time": pd.to_datetime(["2026-07-14T12:00Z"]),
+            "inventory_kwh_th": [800.0],
+            "inventory_low_kwh_th": [np.nan],
+            "inventory_high_kwh_th": [np.nan],
+        }
+    )
+    sites = np.array(["harbour"] * shape[0], dtype=object)
+    read = read_levels(status, sites, np.full(shape, "", dtype=object))
+    assert len(read) == 0
+    at = np.array(["2026-07-14T12:00"], dtype="datetime64[us]")
+    assert levels_at(read, shape[0] * shape[1], at).shape == (shape[0] * shape[1], 1)
