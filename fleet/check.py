@@ -208,7 +208,8 @@ def _by_plant_meters(
         fleet = with_history(folder, bare, past[past["purpose"].isin(COUNTED)])
     except FleetError as error:
         return assumed, [f"plant meters are not looked at: {error}".split("\n")[0]]
-    said = {(one.table, one.key, one.column): one for one in fleet.assumed if one not in bare.assumed}
+    known = set(bare.assumed)
+    said = {(one.table, one.key, one.column): one for one in fleet.assumed if one not in known}
     changed = [said.pop((one.table, one.key, one.column), one) for one in assumed]
     return (*changed, *said.values()), [note for note in fleet.notes if note not in bare.notes]
 
