@@ -22,8 +22,8 @@ SIZES = [int(size) for size in os.environ.get("SHEDWRIGHT_SIZES", "100 1000 5000
 SHARE = 0.6
 """Of what the fleet can sustain, that much is asked."""
 PARTS = (
-    "desk.open_folder", "desk.assemble", "desk.ground", "desk.recharge.quoted", "calling._allocate", "calling.event.chosen",
-    "calling.event.frames", "calling.steps", "calling.records.write_call",
+    "desk.open_folder", "desk.assemble", "desk.ground", "desk.recharge.quoted", "calling._allocate",
+    "calling.event.chosen", "calling.event.frames", "calling.steps", "calling.records.write_call",
 )  # fmt: skip
 """Functions that make up a call, as the modules that use them name them."""
 
